@@ -1,0 +1,218 @@
+"""The arguments and options that commands share, and the way from them to a recording."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Annotated, TypeAlias
+
+import typer
+
+from kernelfit.errors import ArgumentError
+from kernelfit.recording.recording import Recording
+from kernelfit.recording.tables import read_recording
+
+TIME_UNITS = ("s", "ms", "us", "samples")
+LENGTH_UNITS = ("um", "mm")
+DECIMALS = (".", ",")
+
+SpikesArgument: TypeAlias = Annotated[
+    Path,
+    typer.Argument(metavar="SPIKES", show_default=False, help="Table of spikes: columns unit, time_s."),
+]
+SitesArgument: TypeAlias = Annotated[
+    Path,
+    typer.Argument(
+        metavar="SITES", show_default=False, help="Table of sites: columns unit, x_um, optional y_um, z_um, group."
+    ),
+]
+WindowsOption: TypeAlias = Annotated[
+    Path | None,
+    typer.Option("--windows", metavar="FILE", help="Observed stretches: columns start_s, stop_s."),
+]
+ExclusionsOption: TypeAlias = Annotated[
+    Path | None,
+    typer.Option("--exclusions", metavar="FILE", help="Stretches that are not data: columns start_s, stop_s."),
+]
+ExcludePairsOption: TypeAlias = Annotated[
+    Path | None,
+    typer.Option("--exclude-pairs", metavar="FILE", help="Pairs left out of the kernel: columns unit_a, unit_b."),
+]
+TimeUnitOption: TypeAlias = Annotated[
+    str, typer.Option("--time-unit", metavar="UNIT", help="Unit of all times: s, ms, us or samples.")
+]
+SamplingRateOption: TypeAlias = Annotated[
+    float | None,
+    typer.Option("--sampling-rate-hz", metavar="HZ", help="Samples per second, for times in samples."),
+]
+LengthUnitOption: TypeAlias = Annotated[
+    str, typer.Option("--length-unit", metavar="UNIT", help="Unit of all positions: um or mm.")
+]
+DecimalOption: TypeAlias = Annotated[
+    str, typer.Option("--decimal", metavar="MARK", help="Decimal mark in the tables: . or ,")
+]
+DropDuplicatesOption: TypeAlias = Annotated[
+    bool, typer.Option("--drop-duplicates", help="Drop exact duplicate spikes of a unit instead of refusing them.")
+]
+MinSpikesOption: TypeAlias = Annotated[
+    int | None, typer.Option("--min-spikes", metavar="N", help="Leave out units with fewer spikes in the windows.")
+]
+StartOption: TypeAlias = Annotated[
+    float | None, typer.Option("--start-s", metavar="S", help="Use the recording from this time on (seconds).")
+]
+StopOption: TypeAlias = Annotated[
+    float | None, typer.Option("--stop-s", metavar="S", help="Use the recording up to this time (seconds).")
+]
+UnitsOption: TypeAlias = Annotated[
+    list[str] | None,
+    typer.Option("--units", metavar="IDS", help="Keep only these units: ids with commas between; may be repeated."),
+]
+SourceOnlyOption: TypeAlias = Annotated[
+    list[str] | None,
+    typer.Option(
+        "--source-only", metavar="IDS", help="Units that drive others and are not explained; as for --units."
+    ),
+]
+OverwriteOption: TypeAlias = Annotated[
+    bool, typer.Option("--overwrite", help="Replace earlier results in the output folder.")
+]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class TableOptions:
+    """How the tables are to be read; the meaning is that of `kernelfit.read_recording`."""
+
+    windows: Path | None = None
+    exclusions: Path | None = None
+    exclude_pairs: Path | None = None
+    time_unit: str = "s"
+    sampling_rate_hz: float | None = None
+    length_unit: str = "um"
+    decimal: str = "."
+    drop_duplicates: bool = False
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Selection:
+    """Which part of the recording is used; the meaning is that of `Recording.select`.
+
+    `units` and `source_only` are as typed: each entry an id, or several with commas between.
+    """
+
+    min_spikes: int | None = None
+    start_s: float | None = None
+    stop_s: float | None = None
+    units: Sequence[str] = ()
+    source_only: Sequence[str] = ()
+
+
+def read_inputs(
+    spikes: Path, sites: Path, tables: TableOptions | None = None, selection: Selection | None = None
+) -> Recording:
+    """The recording that the arguments and options of a command describe.
+
+    Raises
+    ------
+    ArgumentError : an option is out of its range; the message names the option as typed
+    TableError, RecordingError : the tables cannot be used, or the selection leaves nothing
+    """
+    tables = TableOptions() if tables is None else tables
+    selection = Selection() if selection is None else selection
+    _check(tables, selection)
+    recording = read_recording(
+        spikes,
+        sites,
+        tables.windows,
+        exclusions=tables.exclusions,
+        exclude_pairs=tables.exclude_pairs,
+        time_unit=tables.time_unit,
+        sampling_rate_hz=tables.sampling_rate_hz,
+        length_unit=tables.length_unit,
+        decimal=tables.decimal,
+        drop_duplicates=tables.drop_duplicates,
+    )
+    return recording.select(
+        units=_ids(selection.units, recording) or None,
+        min_spikes=selection.min_spikes,
+        start_s=selection.start_s,
+        stop_s=selection.stop_s,
+        source_only=_ids(selection.source_only, recording) or None,
+    )
+
+
+def _check(tables: TableOptions, selection: Selection) -> None:
+    one_of("--time-unit", tables.time_unit, TIME_UNITS)
+    one_of("--length-unit", tables.length_unit, LENGTH_UNITS)
+    one_of("--decimal", tables.decimal, DECIMALS)
+    if tables.sampling_rate_hz is not None:
+        positive("--sampling-rate-hz", tables.sampling_rate_hz, "samples per second, such as 20000")
+    if tables.time_unit == "samples" and tables.sampling_rate_hz is None:
+        raise ArgumentError(
+            "--time-unit samples: without the sampling rate samples are no times. Add --sampling-rate-hz, "
+            "such as --sampling-rate-hz 20000."
+        )
+    if tables.time_unit != "samples" and tables.sampling_rate_hz is not None:
+        raise ArgumentError(
+            f"--sampling-rate-hz: has no effect on times in {tables.time_unit}. Add --time-unit samples, "
+            "or leave the rate out."
+        )
+    if selection.min_spikes is not None and selection.min_spikes < 0:
+        raise ArgumentError(f"--min-spikes: {selection.min_spikes} is not a count. Give a whole number, 0 or more.")
+    for name, value in (("--start-s", selection.start_s), ("--stop-s", selection.stop_s)):
+        if value is not None and not math.isfinite(value):
+            raise ArgumentError(f"{name}: {value} is not a time. Give seconds on the recording's clock.")
+    if selection.start_s is not None and selection.stop_s is not None and selection.stop_s <= selection.start_s:
+        raise ArgumentError(
+            f"--stop-s: {selection.stop_s:g} is not after --start-s {selection.start_s:g}. Give a later stop."
+        )
+
+
+def _ids(typed: Iterable[str], recording: Recording) -> list[str]:
+    """Unit ids from entries with commas between. An entry that is an id as it stands is that id."""
+    known = set(recording.unit_ids)
+    found: list[str] = []
+    for entry in typed:
+        found += [entry] if entry in known else [part.strip() for part in entry.split(",") if part.strip()]
+    return found
+
+
+# --- checks that name the option as typed ---------------------------------------------------------------
+
+
+def one_of(option: str, value: str, choices: Iterable[str]) -> str:
+    """`value`, if it is one of `choices`.
+
+    Raises
+    ------
+    ArgumentError : it is not; the message lists them
+    """
+    listed = list(choices)
+    if value not in listed:
+        raise ArgumentError(f"{option}: {value!r} is not known. Give one of {', '.join(listed)}.")
+    return value
+
+
+def positive(option: str, value: float, what: str) -> float:
+    """`value`, if it is a finite number above 0. `what` completes "Give ..." with unit and example.
+
+    Raises
+    ------
+    ArgumentError : it is not
+    """
+    if not (math.isfinite(value) and value > 0):
+        raise ArgumentError(f"{option}: {value:g} is out of range. Give a number above 0: {what}.")
+    return value
+
+
+def at_least_zero(option: str, value: float, what: str) -> float:
+    """`value`, if it is a finite number, 0 or more. `what` completes "Give ..." with unit and example.
+
+    Raises
+    ------
+    ArgumentError : it is not
+    """
+    if not (math.isfinite(value) and value >= 0):
+        raise ArgumentError(f"{option}: {value:g} is out of range. Give 0 or more: {what}.")
+    return value

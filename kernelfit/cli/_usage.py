@@ -1,0 +1,79 @@
+"""Calls that the command line cannot take, in plain lines: what is wrong, and what to type instead."""
+
+from __future__ import annotations
+
+from difflib import get_close_matches
+from typing import Any
+
+import typer
+
+# The option parser lives in a package of its own or inside typer, depending on typer's version; its root of
+# wrong calls is reached through the one class that typer has always exported.
+USAGE_ERROR: type[Exception] = typer.BadParameter.__mro__[1]
+
+
+def usage_lines(error: Exception) -> list[str]:
+    """One line naming the command, the argument and the fault, one with the remedy."""
+    context: Any = getattr(error, "ctx", None)
+    command = "kernelfit" if context is None else str(context.command_path)
+    return [f"{command}: {line}" for line in _problem(error, context)] + [f"All options: {command} --help"]
+
+
+def _problem(error: Any, context: Any) -> list[str]:
+    kind = type(error).__name__
+    message = str(error.message or "").strip()
+    parameter = getattr(error, "param", None)
+    if kind == "MissingParameter" and parameter is not None:
+        return [f"{_shown(parameter)} is missing. Type: {_synopsis(context)}"]
+    if kind == "NoSuchOption":
+        return [f"there is no option {error.option_name}. {_closest(error.option_name, _options(context))}"]
+    if kind == "BadOptionUsage":
+        return [f"{error.option_name} needs a value after it. See what it takes in the list of options."]
+    if parameter is not None:
+        return [f"{_shown(parameter)}: {_sentence(message)} {_wanted(parameter)}"]
+    commands = _commands(context)
+    if message.startswith("No such command") and commands:
+        typed = message.removeprefix("No such command").split("'")[1]
+        return [f"there is no command {typed!r}. The commands are {', '.join(commands)}."]
+    if commands:
+        return [f"a command is missing. The commands are {', '.join(commands)}; to begin: kernelfit demo"]
+    if "unexpected extra argument" in message:
+        extra = message[message.find("(") + 1 : message.rfind(")")]
+        return [f"too many arguments: {extra}. Type: {_synopsis(context)}. A name with blanks needs quotes."]
+    return [_sentence(message)]
+
+
+def _shown(parameter: Any) -> str:
+    """An argument as its placeholder, an option as it is typed."""
+    if parameter.param_type_name == "argument":
+        return str(parameter.metavar or parameter.name)
+    return str(max(parameter.opts, key=len))
+
+
+def _wanted(parameter: Any) -> str:
+    wanted = {"float": "Give a number with a decimal point.", "integer": "Give a whole number."}
+    return wanted.get(parameter.type.name, "Give another value.")
+
+
+def _sentence(message: str) -> str:
+    return message if message.endswith(".") else f"{message}."
+
+
+def _synopsis(context: Any) -> str:
+    names = [p.metavar or p.name for p in context.command.params if p.param_type_name == "argument"]
+    return " ".join([str(context.command_path), *map(str, names)])
+
+
+def _options(context: Any) -> list[str]:
+    if context is None:
+        return []
+    return [name for p in context.command.params if p.param_type_name == "option" for name in p.opts]
+
+
+def _commands(context: Any) -> list[str]:
+    return list(getattr(getattr(context, "command", None), "commands", ()))
+
+
+def _closest(typed: str, known: list[str]) -> str:
+    close = get_close_matches(typed, known, n=2, cutoff=0.5)
+    return f"Did you mean {' or '.join(close)}?" if close else "Leave it out, or look for the right one."
