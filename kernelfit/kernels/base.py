@@ -1,8 +1,9 @@
-"""What a distance law is: names, J(d), its derivatives, bounds and starts. Objects hold options, never parameters.
+"""What a distance law is: names, J(d), its derivatives, bounds and starts.
 
-A new family is a subclass of `Kernel` with a name, `parameters`, `value` and `gradient`; everything else has a default
-that follows from the parameters. Parameters travel on their **working scale** (amplitudes as they are, lengths and
-exponents as logarithms); `natural` turns them into what a reader wants.
+Objects hold options, never parameters. A new family is a subclass of `Kernel` with a name, `parameters`,
+`value` and `gradient`; everything else has a default that follows from the parameters. Parameters travel on
+their **working scale** (amplitudes as they are, lengths and exponents as logarithms); `natural` turns them
+into what a reader wants.
 """
 
 from __future__ import annotations
@@ -15,13 +16,14 @@ from typing import ClassVar, Literal
 import numpy as np
 from numpy.typing import ArrayLike
 
-from kernelfit._typing import FloatArray
+from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.errors import ArgumentError, NotIdentifiedError
 
-SHORTEST_IN_REFERENCES = 0.2  # lengths are bounded to [d_ref / 5, 5 x largest distance] (MODEL.md section 5)
+SHORTEST_IN_REFERENCES = 0.2  # lengths are bounded to [d_ref / 5, 5 x largest distance]
 LONGEST_IN_LARGEST = 5.0
-START_AMPLITUDE = 0.01  # per spike; a start at exactly 0 would leave the shape parameters without a derivative
-START_SEPARATION = np.log(2.0)  # starts closer than this in every shape parameter would end in the same optimum
+START_AMPLITUDE = 0.01  # per spike; a start at 0 would leave the shape without a derivative
+START_SEPARATION = np.log(2.0)  # starts closer than a factor of two would end in the same optimum
+SAME_DISTANCE_UM = 1e-6  # distances closer than this are one: equal ones on a grid differ by rounding
 GRID_POINTS = {1: 24, 2: 12}  # points per shape parameter on the coarse grid; more than two parameters: 6
 EXPONENT_CEILING = 600.0  # exp of more overflows; reached only by lengths far below the bounds
 
@@ -38,7 +40,7 @@ class DistanceRange:
 
     Raises
     ------
-    ArgumentError : a reference that is not above zero, or distances that are negative, not finite or out of order
+    ArgumentError : a reference not above zero; distances negative, not finite or out of order
     """
 
     reference_um: float
@@ -50,8 +52,8 @@ class DistanceRange:
         require_positive("reference_um", self.reference_um)
         if not 0.0 <= self.smallest_um <= self.largest_um < np.inf:
             raise ArgumentError(
-                f"smallest_um={self.smallest_um}, largest_um={self.largest_um}: the range of distances must be finite, "
-                "not negative, and in this order. Check the positions."
+                f"smallest_um={self.smallest_um}, largest_um={self.largest_um}: the range of distances must "
+                "be finite, not negative, and in this order. Check the positions."
             )
         if self.n_coordinates not in (1, 2, 3):
             raise ArgumentError(f"n_coordinates={self.n_coordinates}: a position has 1, 2 or 3 coordinates.")
@@ -73,10 +75,10 @@ class Parameter:
     name : as it stands in tables, with the unit of length in it ("length_um")
     unit : "per spike", "µm" or ""
     scale : how the working value maps to the natural one: "linear" (as it is) or "log" (its exponential)
-    shape : True where J is not linear in it; the others are amplitudes, found by least squares given the shape
-    discrete : True where J jumps in it, so that it is profiled over candidates; its derivative is stated as zero
-    lower, upper : bounds on the natural scale. None: no bound for a linear parameter; `DistanceRange.length_limits`
-        for a log one in µm. Any other shape parameter must be given both.
+    shape : True where J is not linear in it; the others are found by least squares given the shape
+    discrete : True where J jumps in it: it is profiled over candidates, and its derivative is stated as zero
+    lower, upper : bounds on the natural scale. None: no bound for a linear parameter, and
+        `DistanceRange.length_limits` for a log one in µm. Any other shape parameter must be given both.
 
     Raises
     ------
@@ -94,11 +96,17 @@ class Parameter:
     def __post_init__(self) -> None:
         bounded = self.lower is not None and self.upper is not None
         if self.shape and not bounded and not self.is_length:
-            raise ArgumentError(f"parameter {self.name!r}: a shape parameter needs finite bounds. Give lower and upper.")
+            raise ArgumentError(
+                f"parameter {self.name!r}: a shape parameter needs bounds. Give lower and upper."
+            )
         if self.lower is not None and self.upper is not None and not self.lower < self.upper:
-            raise ArgumentError(f"parameter {self.name!r}: lower={self.lower} is not below upper={self.upper}.")
+            raise ArgumentError(
+                f"parameter {self.name!r}: lower={self.lower} is not under upper={self.upper}."
+            )
         if self.scale == "log" and self.lower is not None and self.lower <= 0:
-            raise ArgumentError(f"parameter {self.name!r}: lower={self.lower} has no logarithm. Give a value above 0.")
+            raise ArgumentError(
+                f"parameter {self.name!r}: lower={self.lower} has no logarithm; take one above 0."
+            )
 
     @property
     def is_length(self) -> bool:
@@ -131,8 +139,8 @@ LENGTH = Parameter("length_um", "µm", scale="log", shape=True)
 class Kernel(ABC):
     """Coupling J against distance d (µm). Subclasses are frozen dataclasses whose fields are options.
 
-    K is the number of parameters, m the number of distances. `theta` is always on the working scale, `span` says
-    which distances the kernel is asked about and where amplitudes are stated.
+    K is the number of parameters, m the number of distances. `theta` is always on the working scale; `span`
+    says which distances the kernel is asked about and where amplitudes are stated.
     """
 
     name: ClassVar[str]
@@ -179,13 +187,13 @@ class Kernel(ABC):
             return f"{parameter.name} has no bound on this side"
         if parameter.is_length and upper:
             return (
-                f"longer than {limit:.4g} µm, five times the largest distance of the array: cannot be told from a "
-                "kernel that does not change with distance"
+                f"longer than {limit:.4g} µm, five times the largest distance of the array: cannot be told "
+                "from a kernel that does not change with distance"
             )
         if parameter.is_length:
             return (
-                f"shorter than {limit:.4g} µm, a fifth of the reference distance: the array has no pairs close "
-                "enough to see the kernel fall"
+                f"shorter than {limit:.4g} µm, a fifth of the reference distance: the array has no pairs "
+                "close enough to see the kernel fall"
             )
         return f"{'above' if upper else 'below'} {limit:.4g}, where the family's own range ends"
 
@@ -194,8 +202,8 @@ class Kernel(ABC):
     def shape_grid(self, span: DistanceRange) -> FloatArray:
         """(G, K) coarse grid of working thetas over the shape parameters; amplitudes are placeholders.
 
-        Lengths run from half the reference to twice the largest distance, other shape parameters between their
-        bounds; without shape parameters the grid is one row.
+        Lengths run from half the reference to twice the largest distance, other shape parameters between
+        their bounds; without shape parameters the grid is one row.
         """
         parameters = self.parameters(span)
         n_points = GRID_POINTS.get(sum(p.shape for p in parameters), 6)
@@ -211,19 +219,24 @@ class Kernel(ABC):
         return np.array(list(product(*axes)), dtype=np.float64)
 
     def starts(
-        self, distance_um: FloatArray, coupling: FloatArray, weight: FloatArray, span: DistanceRange, n: int = 3
+        self,
+        distance_um: FloatArray,
+        coupling: FloatArray,
+        weight: FloatArray,
+        span: DistanceRange,
+        n: int = 3,
     ) -> list[FloatArray]:
-        """Start values from an empirical kernel: for each shape on the coarse grid the best amplitudes, best shapes first.
+        """Start values from an empirical kernel: each shape on the coarse grid with its best amplitudes.
 
         Parameters
         ----------
-        distance_um, coupling, weight : (m,) distances, rough estimates of J there, and their inverse variances;
+        distance_um, coupling, weight : (m,) distances, rough estimates of J there, their inverse variances;
             points that are not finite or have no weight are left out
         n : how many starts at most; they differ by a factor of two in at least one shape parameter
 
         Returns
         -------
-        At least one theta (K,) on the working scale, within the bounds.
+        At least one theta (K,) on the working scale, within the bounds, the best fit first.
         """
         keep = np.isfinite(distance_um) & np.isfinite(coupling) & np.isfinite(weight) & (weight > 0)
         d, target = distance_um[keep], coupling[keep]
@@ -263,8 +276,8 @@ class Kernel(ABC):
         shown = ", ".join(f"{d:.4g}" for d in distinct_um)
         raise NotIdentifiedError(
             f"The kernel {self.name!r} has {n_parameters} parameters, and the pairs in it have only "
-            f"{distinct_um.size} distinct distance{'s' * (distinct_um.size != 1)} ({shown} µm): its shape cannot be "
-            "estimated. Use kernel='flat', raise max_distance, or record from more sites."
+            f"{distinct_um.size} distinct distance{'s' * (distinct_um.size != 1)} ({shown} µm): its shape "
+            "cannot be estimated. Use kernel='flat', raise max_distance, or record from more sites."
         )
 
     def radius_candidates(self, distinct_um: FloatArray) -> FloatArray | None:
@@ -281,7 +294,7 @@ class Kernel(ABC):
         """The options by name, ready for JSON; `kernel_from_description` reads them back."""
         return {f.name: getattr(self, f.name) for f in fields(self)}
 
-    def _is_log(self, span: DistanceRange) -> np.ndarray[tuple[int], np.dtype[np.bool_]]:
+    def _is_log(self, span: DistanceRange) -> BoolArray:
         return np.array([p.scale == "log" for p in self.parameters(span)])
 
 
@@ -363,14 +376,14 @@ def exponential(x: FloatArray) -> FloatArray:
     return np.asarray(np.exp(np.minimum(x, EXPONENT_CEILING)), dtype=np.float64)
 
 
-def _part(penalty: FloatArray | None, linear: np.ndarray[tuple[int], np.dtype[np.bool_]]) -> FloatArray | None:
+def _part(penalty: FloatArray | None, linear: BoolArray) -> FloatArray | None:
     return None if penalty is None else penalty[np.ix_(linear, linear)]
 
 
 def _least_squares(
     basis: FloatArray, target: FloatArray, root_weight: FloatArray, penalty: FloatArray | None
 ) -> tuple[FloatArray, float]:
-    """Weighted (penalised) least squares: coefficients and residual sum of squares. Deficient rank is fine."""
+    """Weighted (penalised) least squares: coefficients and residual sum of squares. Any rank will do."""
     design, y = basis * root_weight[:, None], target * root_weight
     if penalty is not None:
         value, vector = np.linalg.eigh(penalty)
@@ -383,9 +396,7 @@ def _least_squares(
     return coefficients, float(np.sum((y - design @ coefficients) ** 2))
 
 
-def _apart(
-    ranked: list[FloatArray], shape: np.ndarray[tuple[int], np.dtype[np.bool_]], n: int
-) -> list[FloatArray]:
+def _apart(ranked: list[FloatArray], shape: BoolArray, n: int) -> list[FloatArray]:
     """The first n that differ from every better one by `START_SEPARATION` in some shape parameter."""
     chosen = ranked[:1]
     for theta in ranked[1:]:

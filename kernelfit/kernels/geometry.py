@@ -14,10 +14,8 @@ from scipy.spatial.distance import cdist
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.errors import ArgumentError, ModelError
-from kernelfit.kernels.base import DistanceRange, require_positive
+from kernelfit.kernels.base import SAME_DISTANCE_UM, DistanceRange, require_positive
 from kernelfit.recording.recording import SAME_SITE_UM
-
-SAME_DISTANCE_UM = 1e-6  # distances closer than this are one: a grid's equal distances differ by rounding only
 
 SameSite = Literal["exclude", "own", "kernel"]
 
@@ -55,7 +53,7 @@ class PairGeometry:
 
     @property
     def pairs_by_distance(self) -> pd.DataFrame:
-        """distance_um, n_pairs: unordered pairs in the kernel (in either direction), per distinct distance."""
+        """distance_um, n_pairs: unordered pairs in the kernel (in one direction at least) per distance."""
         index = np.maximum(self.distance_index, self.distance_index.T)  # -1 where one direction is not kept
         counted = index[np.triu_indices_from(index, k=1)]
         n_pairs = np.bincount(counted[counted >= 0], minlength=self.distinct_um.size)
@@ -100,8 +98,8 @@ def pair_geometry(
     ----------
     positions : (n, 1 to 3) µm, or (n,) along a line
     max_distance_um : pairs farther apart are left out; None: no limit
-    same_site : pairs on one site are left out ("exclude"), left out of the kernel and marked in `own_site` for a
-        coefficient of their own ("own"), or kept in the kernel at their tiny distance ("kernel")
+    same_site : pairs on one site are left out ("exclude"), left out of the kernel and marked in `own_site`
+        for a coefficient of their own ("own"), or kept in the kernel at their tiny distance ("kernel")
     excluded_pairs : (n, n) [target, source], True where the pair is left out
     targets : (n,) units that are explained; the others only drive
 
@@ -117,12 +115,12 @@ def pair_geometry(
     if max_distance_um is not None:
         require_positive("max_distance", max_distance_um)
     if n < 2:
-        raise ModelError(f"A coupling kernel needs at least two units; there {_are(n, 'unit')}. Select more units.")
+        raise ModelError(f"A coupling kernel needs at least two units; there {_are(n, 'unit')}. Select more.")
     site = same_site_labels(points)
     if site.max() == 0:
         raise ModelError(
-            f"All {n} units lie on one site (no two are {SAME_SITE_UM:g} µm or more apart), so coupling cannot be "
-            "related to distance. Check the positions and their unit of length (length_unit='mm'?)."
+            f"All {n} units lie on one site (no two are {SAME_SITE_UM:g} µm or more apart), so coupling "
+            "cannot be related to distance. Check the positions and their unit of length (length_unit='mm'?)."
         )
 
     distance = cdist(points, points)
@@ -135,7 +133,8 @@ def pair_geometry(
         allowed &= _of_shape("targets", targets, (n,))[:, None]
 
     candidates = allowed if same_site == "kernel" else allowed & ~together
-    kept = candidates if max_distance_um is None else candidates & (distance <= max_distance_um + SAME_DISTANCE_UM)
+    limit = np.inf if max_distance_um is None else max_distance_um + SAME_DISTANCE_UM
+    kept = candidates & (distance <= limit)
     if not kept.any():
         raise ModelError(_nothing_kept(distance, candidates, max_distance_um))
     distinct, index = _distinct(distance, kept)
@@ -156,7 +155,9 @@ def _checked(positions: FloatArray) -> FloatArray:
     if points.ndim == 1:
         points = points[:, None]
     if points.ndim != 2 or points.shape[1] not in (1, 2, 3):
-        raise ArgumentError(f"positions of shape {points.shape}: need one row per unit with 1, 2 or 3 coordinates (µm).")
+        raise ArgumentError(
+            f"positions of shape {points.shape}: need a row per unit with 1 to 3 coordinates (µm)."
+        )
     bad = ~np.isfinite(points).all(axis=1)
     if bad.any():
         k = int(np.flatnonzero(bad)[0])
@@ -177,7 +178,7 @@ def _reference(points: FloatArray, site: IntArray) -> float:
     centre = np.column_stack([np.bincount(site, weights=axis) / size for axis in points.T])
     nearest, _ = cKDTree(centre).query(centre, k=2)
     # sites are this far apart by definition; only the means of interlocking chains can come closer
-    return max(float(np.median(nearest[:, 1])), SAME_SITE_UM)
+    return max(float(np.median(np.asarray(nearest)[:, 1])), SAME_SITE_UM)
 
 
 def _distinct(distance: FloatArray, kept: BoolArray) -> tuple[FloatArray, IntArray]:
@@ -197,12 +198,12 @@ def _nothing_kept(distance: FloatArray, candidates: BoolArray, max_distance_um: 
     if candidates.any():
         closest = float(distance[candidates].min())
         return (
-            f"No pair of units lies within max_distance = {max_distance_um:g} µm: the smallest distance in the array is "
-            f"{closest:.4g} µm. Raise max_distance above it, or leave it out."
+            f"No pair of units lies within max_distance = {max_distance_um:g} µm: the smallest distance in "
+            f"the array is {closest:.4g} µm. Raise max_distance above it, or leave it out."
         )
     return (
-        "No pair of units is left for the kernel: every one is excluded, on one site, or drives a unit that is not "
-        "explained. Take back some of the excluded pairs or source-only units, or select more units."
+        "No pair of units is left for the kernel: every one is excluded, on one site, or drives a unit that "
+        "is not explained. Take back some of the excluded pairs or source-only units, or select more units."
     )
 
 

@@ -1,7 +1,7 @@
 """Distance laws of one amplitude that fall off, or do not: flat, exponential, gaussian, power-law.
 
-Formulas: MODEL.md section 5. Every amplitude is J at the reference distance, because J(0) is an extrapolation on most
-arrays. d is a distance, r the reference distance, s a length, all in µm.
+Every amplitude is J at the reference distance, because J(0) is an extrapolation on most arrays. In the
+formulas d is a distance, r the reference distance, s a length, all in µm.
 """
 
 from __future__ import annotations
@@ -100,7 +100,8 @@ class PowerLaw(Kernel):
 
     Parameters
     ----------
-    fit_scale : fit s as `length_um`. s and p lie on a ridge (both large is an exponential): expect wide intervals.
+    fit_scale : fit s too, as `length_um`. s and p lie on a ridge (both large: an exponential), so expect
+        wide intervals.
     """
 
     name: ClassVar[str] = "power-law"
@@ -138,12 +139,12 @@ class PowerLaw(Kernel):
     def at(
         self, *, amplitude: float, exponent: float, reference_um: float, length_um: float | None = None
     ) -> KernelCurve:
-        """The kernel with `amplitude` (per spike) at `reference_um`; `length_um` is s, for fit_scale=True only."""
+        """The kernel with `amplitude` (per spike) at `reference_um`; `length_um` is s where it is fitted."""
         require_positive("exponent", exponent)
         if (length_um is not None) != self.fit_scale:
             raise ArgumentError(
-                f"length_um={length_um}: PowerLaw(fit_scale=True) needs a length, and PowerLaw() takes the reference "
-                "distance instead."
+                f"length_um={length_um}: PowerLaw(fit_scale=True) needs a length, and PowerLaw() takes "
+                "the reference distance instead."
             )
         theta = [amplitude, np.log(exponent)]
         if length_um is not None:
