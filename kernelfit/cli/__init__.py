@@ -1,7 +1,7 @@
 """The command line. `main` is what the command `kernelfit` calls.
 
-Exit status: 0 done; 1 a fault of kernelfit itself; 2 the input or the call is wrong; 3 the fit did not converge and
-everything found is written; 130 interrupted.
+Exit status: 0 done; 1 a fault of kernelfit itself; 2 the input or the call is wrong; 3 the fit did not
+converge and everything found is written; 130 interrupted.
 """
 
 from __future__ import annotations
@@ -27,7 +27,9 @@ __all__ = ["app", "main"]
 
 DONE, OWN_FAULT, WRONG_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 1, 2, 3, 130
 
-app = typer.Typer(name="kernelfit", add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False)
+app = typer.Typer(
+    name="kernelfit", add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False
+)
 app.command("inspect")(inspect_command)
 app.command("fit")(fit_command)
 app.command("demo")(demo_command)
@@ -44,7 +46,8 @@ def _show_version(asked: bool) -> None:
 @app.callback(epilog="Functional coupling, not synapses. For research; not for clinical decisions.")
 def _kernelfit(
     version: Annotated[
-        bool, typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version and stop.")
+        bool,
+        typer.Option("--version", callback=_show_version, is_eager=True, help="Show the version and stop."),
     ] = False,
 ) -> None:
     """How strongly, how far and for how long a spike at one site changes firing at others.
@@ -88,7 +91,7 @@ def main(argv: Sequence[str] | None = None) -> int:
 
 
 def _run(arguments: list[str]) -> int:
-    # Not `command.main`: it prints boxes, and turns an interruption and a closed pipe into statuses of its own.
+    # Not `command.main`, which prints boxes and has its own statuses for interruptions and closed pipes.
     command: Any = get_command(app)
     with command.make_context("kernelfit", arguments) as context:
         status = command.invoke(context)
@@ -122,5 +125,5 @@ def _own_fault_lines(error: Exception, arguments: Sequence[str]) -> list[str]:
     return [
         first,
         f"The full record is in {path}",
-        "Please report it to the maintainers with that file; it holds your command line and no spikes.",
+        "Please report it to the maintainers with that file; it holds your command line, so read it first.",
     ]

@@ -1,7 +1,7 @@
 """What the commands print: results to standard output, everything else to standard error.
 
-On a terminal progress is one line that rewrites itself; elsewhere it is a plain line now and then. A reader who
-closes the pipe early (`kernelfit fit ... | head`) ends the printing and not the work.
+On a terminal progress is one line that rewrites itself; elsewhere it is a plain line now and then. A reader
+who closes the pipe early (`kernelfit fit ... | head`) ends the printing and not the work.
 """
 
 from __future__ import annotations
@@ -19,7 +19,7 @@ from rich.progress import BarColumn, Progress, ProgressColumn, Task, TextColumn
 from rich.text import Text
 
 from kernelfit.errors import FitWarning, KernelfitWarning
-from kernelfit.report.look import duration_text
+from kernelfit.report.numbers import duration_text
 
 PLAIN_INTERVAL_S = 10.0  # between two progress lines where the line cannot rewrite itself
 MIN_ELAPSED_S = 1.0  # before this no rate of progress is worth a prediction
@@ -45,7 +45,7 @@ def _write(stream: TextIO, lines: tuple[str, ...]) -> None:
 
 
 def _printable(line: str, stream: TextIO) -> str:
-    """The line without what this stream cannot carry: its encoding's gaps, control characters of file names."""
+    """The line without what this stream cannot carry: gaps of its encoding, control characters."""
     kept = "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in line)
     encoding = stream.encoding or "utf-8"
     return kept.encode(encoding, errors="backslashreplace").decode(encoding)
@@ -62,7 +62,7 @@ def silence(stream: TextIO) -> None:
 
 @contextmanager
 def warnings_as_lines() -> Iterator[None]:
-    """Show the package's warnings as plain lines; those of a fit are left to its notes, which hold them all."""
+    """Show the package's warnings as plain lines; those of a fit are left to the notes of the fit."""
     with warnings.catch_warnings():  # puts the caller's way of showing them back
         usual = warnings.showwarning
 

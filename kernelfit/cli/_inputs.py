@@ -25,7 +25,9 @@ SpikesArgument: TypeAlias = Annotated[
 SitesArgument: TypeAlias = Annotated[
     Path,
     typer.Argument(
-        metavar="SITES", show_default=False, help="Table of sites: columns unit, x_um, optional y_um, z_um, group."
+        metavar="SITES",
+        show_default=False,
+        help="Table of sites: columns unit, x_um, optional y_um, z_um, group.",
     ),
 ]
 WindowsOption: TypeAlias = Annotated[
@@ -34,11 +36,15 @@ WindowsOption: TypeAlias = Annotated[
 ]
 ExclusionsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option("--exclusions", metavar="FILE", help="Stretches that are not data: columns start_s, stop_s."),
+    typer.Option(
+        "--exclusions", metavar="FILE", help="Stretches that are not data: columns start_s, stop_s."
+    ),
 ]
 ExcludePairsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option("--exclude-pairs", metavar="FILE", help="Pairs left out of the kernel: columns unit_a, unit_b."),
+    typer.Option(
+        "--exclude-pairs", metavar="FILE", help="Pairs left out of the kernel: columns unit_a, unit_b."
+    ),
 ]
 TimeUnitOption: TypeAlias = Annotated[
     str, typer.Option("--time-unit", metavar="UNIT", help="Unit of all times: s, ms, us or samples.")
@@ -54,20 +60,25 @@ DecimalOption: TypeAlias = Annotated[
     str, typer.Option("--decimal", metavar="MARK", help="Decimal mark in the tables: . or ,")
 ]
 DropDuplicatesOption: TypeAlias = Annotated[
-    bool, typer.Option("--drop-duplicates", help="Drop exact duplicate spikes of a unit instead of refusing them.")
+    bool,
+    typer.Option("--drop-duplicates", help="Drop exact duplicate spikes of a unit instead of refusing them."),
 ]
 MinSpikesOption: TypeAlias = Annotated[
-    int | None, typer.Option("--min-spikes", metavar="N", help="Leave out units with fewer spikes in the windows.")
+    int | None,
+    typer.Option("--min-spikes", metavar="N", help="Leave out units with fewer spikes in the windows."),
 ]
 StartOption: TypeAlias = Annotated[
-    float | None, typer.Option("--start-s", metavar="S", help="Use the recording from this time on (seconds).")
+    float | None,
+    typer.Option("--start-s", metavar="S", help="Use the recording from this time on (seconds)."),
 ]
 StopOption: TypeAlias = Annotated[
     float | None, typer.Option("--stop-s", metavar="S", help="Use the recording up to this time (seconds).")
 ]
 UnitsOption: TypeAlias = Annotated[
     list[str] | None,
-    typer.Option("--units", metavar="IDS", help="Keep only these units: ids with commas between; may be repeated."),
+    typer.Option(
+        "--units", metavar="IDS", help="Keep only these units: ids with commas between; may be repeated."
+    ),
 ]
 SourceOnlyOption: TypeAlias = Annotated[
     list[str] | None,
@@ -159,11 +170,17 @@ def _check(tables: TableOptions, selection: Selection) -> None:
             "or leave the rate out."
         )
     if selection.min_spikes is not None and selection.min_spikes < 0:
-        raise ArgumentError(f"--min-spikes: {selection.min_spikes} is not a count. Give a whole number, 0 or more.")
+        raise ArgumentError(
+            f"--min-spikes: {selection.min_spikes} is not a count. Give a whole number, 0 or more."
+        )
     for name, value in (("--start-s", selection.start_s), ("--stop-s", selection.stop_s)):
         if value is not None and not math.isfinite(value):
             raise ArgumentError(f"{name}: {value} is not a time. Give seconds on the recording's clock.")
-    if selection.start_s is not None and selection.stop_s is not None and selection.stop_s <= selection.start_s:
+    if (
+        selection.start_s is not None
+        and selection.stop_s is not None
+        and selection.stop_s <= selection.start_s
+    ):
         raise ArgumentError(
             f"--stop-s: {selection.stop_s:g} is not after --start-s {selection.start_s:g}. Give a later stop."
         )

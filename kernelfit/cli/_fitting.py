@@ -1,0 +1,53 @@
+"""What `fit` and `demo` share: fit with progress, write the results, print them in five lines."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+
+from kernelfit.cli._console import ProgressLine, say, tell
+from kernelfit.demo import DemoTruth
+from kernelfit.model.coupling import CouplingModel
+from kernelfit.recording.recording import Recording
+from kernelfit.report.fit_page import write_results
+from kernelfit.report.readings import result_lines
+
+DONE, NOT_CONVERGED = 0, 3
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Job:
+    """How a fit is made and where its results go.
+
+    Parameters
+    ----------
+    out : the results folder
+    overwrite : replace earlier results there
+    covariance : "robust" or "model", of the headline intervals
+    threads : None: as many as there are cores
+    seed : of the randomised goodness-of-fit test
+    truth : what a simulated recording was made from
+    """
+
+    out: Path
+    overwrite: bool = False
+    covariance: str = "robust"
+    threads: int | None = None
+    seed: int = 0
+    truth: DemoTruth | None = None
+
+
+def fit_and_write(recording: Recording, model: CouplingModel, job: Job) -> int:
+    """Fit, write the results folder, print the result, and return the exit status."""
+    with ProgressLine() as progress:
+        fit = model.fit(recording, covariance=job.covariance, threads=job.threads, progress=progress)
+        progress(1.0, "Testing the fit and writing the report")
+        goodness = fit.goodness(seed=job.seed)
+        written = write_results(
+            job.out, fit, recording, goodness=goodness, truth=job.truth, overwrite=job.overwrite
+        )
+    for note in fit.notes:
+        tell(f"{note.severity}: {note.what} ({note.where}) {note.remedy}".rstrip())
+    say(*result_lines(fit, goodness))
+    say(*written)
+    return DONE if fit.converged else NOT_CONVERGED
