@@ -116,4 +116,6 @@ def _table(name: str) -> Path:
     for folder in (package / "demo_data", package.parent / "datasets"):
         if (folder / name).is_file():
             return folder / name
-    raise StorageError(f"{name}: the demo's files are not in this installation of kernelfit. Install it again.")
+    raise StorageError(
+        f"{name}: not in this installation of kernelfit, which lacks the demo. Install it again."
+    )
