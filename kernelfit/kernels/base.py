@@ -218,6 +218,10 @@ class Kernel(ABC):
             axes.append(np.linspace(low, high, n_points))
         return np.array(list(product(*axes)), dtype=np.float64)
 
+    def start_shapes(self, distance_um: FloatArray, span: DistanceRange) -> FloatArray:
+        """(G, K) working thetas whose shapes `starts` tries, given the distances (µm) of its points."""
+        return self.shape_grid(span)
+
     def starts(
         self,
         distance_um: FloatArray,
@@ -244,7 +248,7 @@ class Kernel(ABC):
         linear = np.array([not p.shape for p in self.parameters(span)])
         penalty = self.penalty(span)
         candidates: list[tuple[float, FloatArray]] = []
-        for row in self.shape_grid(span):
+        for row in self.start_shapes(d, span):
             theta = row.copy()
             residual = 0.0
             if d.size:

@@ -11,6 +11,7 @@ from kernelfit._typing import FloatArray
 from kernelfit.kernels.base import (
     AMPLITUDE,
     SAME_DISTANCE_UM,
+    START_AMPLITUDE,
     DistanceRange,
     Kernel,
     KernelCurve,
@@ -54,7 +55,16 @@ class Disc(Kernel):
             return "a disc that holds every pair of the array: cannot be told from a flat kernel"
         return "a disc that holds no pair of the array: there is nothing to estimate its amplitude from"
 
-    def radius_candidates(self, distinct_um: FloatArray) -> FloatArray | None:
+    def start_shapes(self, distance_um: FloatArray, span: DistanceRange) -> FloatArray:
+        """One radius between each two distances that have points, so that no split is passed over."""
+        radii = self.radius_candidates(np.unique(distance_um))
+        low, high = np.exp(self.bounds(span)[1])
+        inside = radii[(radii > low) & (radii < high)]
+        if not inside.size:
+            return self.shape_grid(span)
+        return np.column_stack([np.full(inside.size, START_AMPLITUDE), np.log(inside)])
+
+    def radius_candidates(self, distinct_um: FloatArray) -> FloatArray:
         """(D - 1,) radii in µm, half way between consecutive distinct distances: every split there is.
 
         The radius beyond the largest distance is left out: that is the flat kernel.

@@ -39,7 +39,7 @@ def kernel_from(kernel: str | Kernel) -> Kernel:
     if isinstance(kernel, type) and issubclass(kernel, Kernel):
         raise ArgumentError(f"kernel={kernel.__name__}: a class; make an object: {kernel.__name__}().")
     raise ArgumentError(
-        f"kernel={kernel!r}: need a name ({', '.join(KERNELS)}) or an object like kernels.Gaussian()."
+        f"kernel={kernel!r}: need a name ({', '.join(KERNELS)}) or an object: kernels.Gaussian()."
     )
 
 
@@ -55,7 +55,7 @@ def kernel_from_description(name: str, options: Mapping[str, float | int | str])
     unknown = sorted(set(options) - set(known))
     if unknown:
         raise ArgumentError(
-            f"kernel {name!r}: no option {unknown[0]!r}. Its options: {', '.join(known) if known else 'none'}."
+            f"kernel {name!r}: no option {unknown[0]!r}. Its options: {', '.join(known) or 'none'}."
         )
     return family(**options)
 
