@@ -74,7 +74,7 @@ def main(argv: Sequence[str] | None = None) -> int:
     except typer.Exit as end:  # --help and --version
         return int(end.exit_code)
     except USAGE_ERROR as error:
-        tell(*usage_lines(error))
+        tell(*usage_lines(error, _command_typed(arguments)))
         return WRONG_INPUT
     except KernelfitError as error:
         tell(*str(error).splitlines(), *_options_for(error))
@@ -97,6 +97,11 @@ def _run(arguments: list[str]) -> int:
         status = command.invoke(context)
     sys.stdout.flush()
     return DONE if status is None else int(status)
+
+
+def _command_typed(arguments: Sequence[str]) -> str:
+    known = [command.name for command in app.registered_commands]
+    return " ".join(["kernelfit", *(a for a in arguments[:1] if a in known)])
 
 
 def _options_for(error: KernelfitError) -> list[str]:

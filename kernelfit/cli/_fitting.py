@@ -6,11 +6,11 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from kernelfit.cli._console import ProgressLine, say, tell
-from kernelfit.demo import DemoTruth
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.recording.recording import Recording
 from kernelfit.report.fit_page import write_results
 from kernelfit.report.readings import result_lines
+from kernelfit.report.truth import Truth
 
 DONE, NOT_CONVERGED = 0, 3
 
@@ -34,7 +34,7 @@ class Job:
     covariance: str = "robust"
     threads: int | None = None
     seed: int = 0
-    truth: DemoTruth | None = None
+    truth: Truth | None = None
 
 
 def fit_and_write(recording: Recording, model: CouplingModel, job: Job) -> int:

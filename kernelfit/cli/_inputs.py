@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -10,6 +9,7 @@ from typing import Annotated, TypeAlias
 
 import typer
 
+from kernelfit.cli._parsing import above_zero, number, one_of, whole
 from kernelfit.errors import ArgumentError
 from kernelfit.recording.recording import Recording
 from kernelfit.recording.tables import read_recording
@@ -17,6 +17,7 @@ from kernelfit.recording.tables import read_recording
 TIME_UNITS = ("s", "ms", "us", "samples")
 LENGTH_UNITS = ("um", "mm")
 DECIMALS = (".", ",")
+CLOCK = "seconds on the recording's clock, such as 60"
 
 SpikesArgument: TypeAlias = Annotated[
     Path,
@@ -36,9 +37,7 @@ WindowsOption: TypeAlias = Annotated[
 ]
 ExclusionsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option(
-        "--exclusions", metavar="FILE", help="Stretches that are not data: columns start_s, stop_s."
-    ),
+    typer.Option("--exclusions", metavar="FILE", help="Stretches that are no data: columns start_s, stop_s."),
 ]
 ExcludePairsOption: TypeAlias = Annotated[
     Path | None,
@@ -47,44 +46,73 @@ ExcludePairsOption: TypeAlias = Annotated[
     ),
 ]
 TimeUnitOption: TypeAlias = Annotated[
-    str, typer.Option("--time-unit", metavar="UNIT", help="Unit of all times: s, ms, us or samples.")
+    str,
+    typer.Option(
+        "--time-unit",
+        metavar="UNIT",
+        parser=one_of("--time-unit", TIME_UNITS),
+        help="Unit of all times in the tables: s, ms, us or samples.",
+    ),
 ]
 SamplingRateOption: TypeAlias = Annotated[
     float | None,
-    typer.Option("--sampling-rate-hz", metavar="HZ", help="Samples per second, for times in samples."),
+    typer.Option(
+        "--sampling-rate-hz",
+        metavar="HZ",
+        parser=above_zero("--sampling-rate-hz", "samples per second, such as 20000"),
+        help="Samples per second, for times in samples.",
+    ),
 ]
 LengthUnitOption: TypeAlias = Annotated[
-    str, typer.Option("--length-unit", metavar="UNIT", help="Unit of all positions: um or mm.")
+    str,
+    typer.Option(
+        "--length-unit",
+        metavar="UNIT",
+        parser=one_of("--length-unit", LENGTH_UNITS),
+        help="Unit of all positions in the tables: um or mm.",
+    ),
 ]
 DecimalOption: TypeAlias = Annotated[
-    str, typer.Option("--decimal", metavar="MARK", help="Decimal mark in the tables: . or ,")
+    str,
+    typer.Option(
+        "--decimal",
+        metavar="MARK",
+        parser=one_of("--decimal", DECIMALS),
+        help="Decimal mark in the tables: . or ,",
+    ),
 ]
 DropDuplicatesOption: TypeAlias = Annotated[
     bool,
-    typer.Option("--drop-duplicates", help="Drop exact duplicate spikes of a unit instead of refusing them."),
+    typer.Option("--drop-duplicates", help="Drop exact repeats of a spike instead of refusing them."),
 ]
 MinSpikesOption: TypeAlias = Annotated[
     int | None,
-    typer.Option("--min-spikes", metavar="N", help="Leave out units with fewer spikes in the windows."),
+    typer.Option(
+        "--min-spikes",
+        metavar="N",
+        parser=whole("--min-spikes", 0),
+        help="Leave out units with fewer spikes in the windows.",
+    ),
 ]
 StartOption: TypeAlias = Annotated[
     float | None,
-    typer.Option("--start-s", metavar="S", help="Use the recording from this time on (seconds)."),
+    typer.Option(
+        "--start-s", metavar="S", parser=number("--start-s", CLOCK), help="Use the windows from this time on."
+    ),
 ]
 StopOption: TypeAlias = Annotated[
-    float | None, typer.Option("--stop-s", metavar="S", help="Use the recording up to this time (seconds).")
+    float | None,
+    typer.Option(
+        "--stop-s", metavar="S", parser=number("--stop-s", CLOCK), help="Use the windows up to this time."
+    ),
 ]
 UnitsOption: TypeAlias = Annotated[
     list[str] | None,
-    typer.Option(
-        "--units", metavar="IDS", help="Keep only these units: ids with commas between; may be repeated."
-    ),
+    typer.Option("--units", metavar="IDS", help="Keep only these: ids with commas between; may be repeated."),
 ]
 SourceOnlyOption: TypeAlias = Annotated[
     list[str] | None,
-    typer.Option(
-        "--source-only", metavar="IDS", help="Units that drive others and are not explained; as for --units."
-    ),
+    typer.Option("--source-only", metavar="IDS", help="Units that drive others and are not explained."),
 ]
 OverwriteOption: TypeAlias = Annotated[
     bool, typer.Option("--overwrite", help="Replace earlier results in the output folder.")
@@ -126,7 +154,7 @@ def read_inputs(
 
     Raises
     ------
-    ArgumentError : an option is out of its range; the message names the option as typed
+    ArgumentError : options that do not go together; the message names them as typed
     TableError, RecordingError : the tables cannot be used, or the selection leaves nothing
     """
     tables = TableOptions() if tables is None else tables
@@ -154,11 +182,7 @@ def read_inputs(
 
 
 def _check(tables: TableOptions, selection: Selection) -> None:
-    one_of("--time-unit", tables.time_unit, TIME_UNITS)
-    one_of("--length-unit", tables.length_unit, LENGTH_UNITS)
-    one_of("--decimal", tables.decimal, DECIMALS)
-    if tables.sampling_rate_hz is not None:
-        positive("--sampling-rate-hz", tables.sampling_rate_hz, "samples per second, such as 20000")
+    """Options that do not go together; each alone has been checked where it was parsed."""
     if tables.time_unit == "samples" and tables.sampling_rate_hz is None:
         raise ArgumentError(
             "--time-unit samples: without the sampling rate samples are no times. Add --sampling-rate-hz, "
@@ -169,21 +193,9 @@ def _check(tables: TableOptions, selection: Selection) -> None:
             f"--sampling-rate-hz: has no effect on times in {tables.time_unit}. Add --time-unit samples, "
             "or leave the rate out."
         )
-    if selection.min_spikes is not None and selection.min_spikes < 0:
-        raise ArgumentError(
-            f"--min-spikes: {selection.min_spikes} is not a count. Give a whole number, 0 or more."
-        )
-    for name, value in (("--start-s", selection.start_s), ("--stop-s", selection.stop_s)):
-        if value is not None and not math.isfinite(value):
-            raise ArgumentError(f"{name}: {value} is not a time. Give seconds on the recording's clock.")
-    if (
-        selection.start_s is not None
-        and selection.stop_s is not None
-        and selection.stop_s <= selection.start_s
-    ):
-        raise ArgumentError(
-            f"--stop-s: {selection.stop_s:g} is not after --start-s {selection.start_s:g}. Give a later stop."
-        )
+    start, stop = selection.start_s, selection.stop_s
+    if start is not None and stop is not None and stop <= start:
+        raise ArgumentError(f"--stop-s: {stop:g} is not after --start-s {start:g}. Give a later stop.")
 
 
 def _ids(typed: Iterable[str], recording: Recording) -> list[str]:
@@ -193,43 +205,3 @@ def _ids(typed: Iterable[str], recording: Recording) -> list[str]:
     for entry in typed:
         found += [entry] if entry in known else [part.strip() for part in entry.split(",") if part.strip()]
     return found
-
-
-# --- checks that name the option as typed ---------------------------------------------------------------
-
-
-def one_of(option: str, value: str, choices: Iterable[str]) -> str:
-    """`value`, if it is one of `choices`.
-
-    Raises
-    ------
-    ArgumentError : it is not; the message lists them
-    """
-    listed = list(choices)
-    if value not in listed:
-        raise ArgumentError(f"{option}: {value!r} is not known. Give one of {', '.join(listed)}.")
-    return value
-
-
-def positive(option: str, value: float, what: str) -> float:
-    """`value`, if it is a finite number above 0. `what` completes "Give ..." with unit and example.
-
-    Raises
-    ------
-    ArgumentError : it is not
-    """
-    if not (math.isfinite(value) and value > 0):
-        raise ArgumentError(f"{option}: {value:g} is out of range. Give a number above 0: {what}.")
-    return value
-
-
-def at_least_zero(option: str, value: float, what: str) -> float:
-    """`value`, if it is a finite number, 0 or more. `what` completes "Give ..." with unit and example.
-
-    Raises
-    ------
-    ArgumentError : it is not
-    """
-    if not (math.isfinite(value) and value >= 0):
-        raise ArgumentError(f"{option}: {value:g} is out of range. Give 0 or more: {what}.")
-    return value

@@ -12,10 +12,10 @@ import typer
 USAGE_ERROR: type[Exception] = typer.BadParameter.__mro__[1]
 
 
-def usage_lines(error: Exception) -> list[str]:
-    """One line naming the command, the argument and the fault, one with the remedy."""
+def usage_lines(error: Exception, typed: str) -> list[str]:
+    """What is wrong and how to find what is right; `typed` is the command as typed, "kernelfit fit"."""
     context: Any = getattr(error, "ctx", None)
-    command = "kernelfit" if context is None else str(context.command_path)
+    command = typed if context is None else str(context.command_path)
     return [f"{command}: {line}" for line in _problem(error, context)] + [f"All options: {command} --help"]
 
 
@@ -30,7 +30,7 @@ def _problem(error: Any, context: Any) -> list[str]:
     if kind == "BadOptionUsage":
         return [f"{error.option_name} needs a value after it. See what it takes in the list of options."]
     if parameter is not None:
-        return [f"{_shown(parameter)}: {_sentence(message)} {_wanted(parameter)}"]
+        return [f"{_shown(parameter)}: {_sentence(message)} Give another value."]
     commands = _commands(context)
     if message.startswith("No such command") and commands:
         typed = message.removeprefix("No such command").split("'")[1]
@@ -38,7 +38,7 @@ def _problem(error: Any, context: Any) -> list[str]:
     if commands:
         return [f"a command is missing. The commands are {', '.join(commands)}; to begin: kernelfit demo"]
     if "unexpected extra argument" in message:
-        extra = message[message.find("(") + 1 : message.rfind(")")]
+        extra = message[message.rfind("(") + 1 : message.rfind(")")]
         return [f"too many arguments: {extra}. Type: {_synopsis(context)}. A name with blanks needs quotes."]
     return [_sentence(message)]
 
@@ -48,11 +48,6 @@ def _shown(parameter: Any) -> str:
     if parameter.param_type_name == "argument":
         return str(parameter.metavar or parameter.name)
     return str(max(parameter.opts, key=len))
-
-
-def _wanted(parameter: Any) -> str:
-    wanted = {"float": "Give a number with a decimal point.", "integer": "Give a whole number."}
-    return wanted.get(parameter.type.name, "Give another value.")
 
 
 def _sentence(message: str) -> str:
@@ -75,5 +70,5 @@ def _commands(context: Any) -> list[str]:
 
 
 def _closest(typed: str, known: list[str]) -> str:
-    close = get_close_matches(typed, known, n=2, cutoff=0.5)
-    return f"Did you mean {' or '.join(close)}?" if close else "Leave it out, or look for the right one."
+    close = get_close_matches(typed, known, n=1, cutoff=0.5)
+    return f"Did you mean {close[0]}?" if close else "Leave it out, or look for the right one."

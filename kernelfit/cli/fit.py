@@ -27,11 +27,9 @@ from kernelfit.cli._inputs import (
     TimeUnitOption,
     UnitsOption,
     WindowsOption,
-    at_least_zero,
-    one_of,
-    positive,
     read_inputs,
 )
+from kernelfit.cli._parsing import above_zero, from_zero, one_of, whole
 from kernelfit.errors import ArgumentError
 from kernelfit.kernels.base import Kernel
 from kernelfit.kernels.registry import KERNELS
@@ -58,46 +56,103 @@ def fit_command(
     ] = DEFAULT_OUT,
     overwrite: OverwriteOption = False,
     kernel: Annotated[
-        str, typer.Option("--kernel", metavar="NAME", help=f"Distance law: {', '.join(KERNELS)}.")
+        str,
+        typer.Option(
+            "--kernel",
+            metavar="NAME",
+            parser=one_of("--kernel", KERNELS),
+            help=f"Distance law: {', '.join(KERNELS)}.",
+        ),
     ] = "gaussian",
     spline_basis: Annotated[
-        int | None, typer.Option("--spline-basis", metavar="N", help="Number of coefficients of the spline.")
+        int | None,
+        typer.Option(
+            "--spline-basis",
+            metavar="N",
+            parser=whole("--spline-basis", 4),
+            help="Number of coefficients of the spline.",
+        ),
     ] = None,
     smoothing: Annotated[
         float | None,
-        typer.Option("--smoothing", metavar="X", help="Weight of the spline's difference penalty; 0: none."),
+        typer.Option(
+            "--smoothing",
+            metavar="X",
+            parser=from_zero("--smoothing", "the weight of the penalty, such as 10"),
+            help="Weight of the spline's penalty on differences of neighbouring coefficients.",
+        ),
     ] = None,
     bin_ms: Annotated[
-        float, typer.Option("--bin-ms", metavar="MS", help="Bin width; `kernelfit inspect` suggests one.")
+        float,
+        typer.Option(
+            "--bin-ms",
+            metavar="MS",
+            parser=above_zero("--bin-ms", "milliseconds, such as 1"),
+            help="Bin width; `kernelfit inspect` suggests one.",
+        ),
     ] = 1.0,
     link: Annotated[
-        str, typer.Option("--link", metavar="NAME", help=f"From drive to rate: {', '.join(LINKS)}.")
+        str,
+        typer.Option(
+            "--link",
+            metavar="NAME",
+            parser=one_of("--link", LINKS),
+            help=f"From drive to rate: {', '.join(LINKS)}.",
+        ),
     ] = "exp",
     leak_rate: Annotated[
-        float | None, typer.Option("--leak-rate", metavar="PER_S", help="Fix the leak rate instead of fitting it.")
+        float | None,
+        typer.Option(
+            "--leak-rate",
+            metavar="PER_S",
+            parser=above_zero("--leak-rate", "1/s, such as 50 for a time constant of 20 ms"),
+            help="Fix the leak rate (1/s) instead of fitting it.",
+        ),
     ] = None,
     max_distance_um: Annotated[
-        float | None, typer.Option("--max-distance-um", metavar="UM", help="Leave out pairs further apart.")
+        float | None,
+        typer.Option(
+            "--max-distance-um",
+            metavar="UM",
+            parser=above_zero("--max-distance-um", "micrometres, such as 800"),
+            help="Leave out pairs further apart.",
+        ),
     ] = None,
     same_site: Annotated[
         str,
         typer.Option(
             "--same-site",
             metavar="HOW",
+            parser=one_of("--same-site", SAME_SITE),
             help="Pairs on one site: exclude, own (a coefficient of their own) or kernel (like any pair).",
         ),
     ] = "exclude",
     after_spike: Annotated[
         str,
-        typer.Option("--after-spike", metavar="HOW", help="A unit's effect on itself: basis (fitted) or none."),
+        typer.Option(
+            "--after-spike",
+            metavar="HOW",
+            parser=one_of("--after-spike", AFTER_SPIKE),
+            help="What a spike does to its own unit: basis (fitted) or none.",
+        ),
     ] = "basis",
     warm_up_s: Annotated[
         float,
-        typer.Option("--warm-up-s", metavar="S", help="Leave out this long after each start; it still drives."),
+        typer.Option(
+            "--warm-up-s",
+            metavar="S",
+            parser=from_zero("--warm-up-s", "seconds, such as 1"),
+            help="Leave this long after each start out of the sum; it still drives.",
+        ),
     ] = 0.0,
     covariance: Annotated[
         str,
-        typer.Option("--covariance", metavar="KIND", help="Headline intervals: robust (blocks of time) or model."),
+        typer.Option(
+            "--covariance",
+            metavar="KIND",
+            parser=one_of("--covariance", COVARIANCES),
+            help="Headline intervals: robust (from blocks of time) or model.",
+        ),
     ] = "robust",
     units: UnitsOption = None,
     source_only: SourceOnlyOption = None,
@@ -110,31 +165,33 @@ def fit_command(
     decimal: DecimalOption = ".",
     drop_duplicates: DropDuplicatesOption = False,
     threads: Annotated[
-        int | None, typer.Option("--threads", metavar="N", help="Threads; all cores unless stated.")
+        int | None,
+        typer.Option(
+            "--threads", metavar="N", parser=whole("--threads", 1), help="Threads; all cores unless stated."
+        ),
     ] = None,
-    seed: Annotated[int, typer.Option("--seed", metavar="N", help="Of the randomised test of the fit.")] = 0,
+    seed: Annotated[
+        int,
+        typer.Option("--seed", metavar="N", parser=whole("--seed", 0), help="Of the randomised test."),
+    ] = 0,
 ) -> int:
-    """Fit coupling against distance, leak rate and baselines, and write a folder with report and tables.
+    """Fit coupling against distance; write a report and tables.
 
-    Exit status 0: done. 2: the input or the call is wrong. 3: the fit did not converge; all is written, and marked.
+    What is found: the coupling kernel, the leak rate, a baseline and after-spike effects for every unit.
+
+    Exit status 0: done. 2: the input or the call is wrong. 3: not converged; all is written, and marked.
     """
     model = CouplingModel(
         kernel=_kernel(kernel, spline_basis, smoothing),
-        link=one_of("--link", link, LINKS),
-        bin_width=positive("--bin-ms", bin_ms, "milliseconds, such as 1") / MS_PER_S,
-        leak_rate=_optional("--leak-rate", leak_rate, "per second, such as 50 for a time constant of 20 ms"),
-        max_distance=_optional("--max-distance-um", max_distance_um, "micrometres, such as 800"),
-        same_site=one_of("--same-site", same_site, SAME_SITE),
-        after_spike=one_of("--after-spike", after_spike, AFTER_SPIKE),
-        warm_up_s=at_least_zero("--warm-up-s", warm_up_s, "seconds, such as 1"),
+        link=link,
+        bin_width=bin_ms / MS_PER_S,
+        leak_rate=leak_rate,
+        max_distance=max_distance_um,
+        same_site=same_site,
+        after_spike=after_spike,
+        warm_up_s=warm_up_s,
     )
-    job = Job(
-        out=out,
-        overwrite=overwrite,
-        covariance=one_of("--covariance", covariance, COVARIANCES),
-        threads=_at_least("--threads", threads, 1),
-        seed=_at_least("--seed", seed, 0) or 0,
-    )
+    job = Job(out=out, overwrite=overwrite, covariance=covariance, threads=threads, seed=seed)
     check_folder(out, overwrite=overwrite)  # now, not after the long part
     recording = read_inputs(
         spikes,
@@ -162,7 +219,7 @@ def fit_command(
 
 def _kernel(name: str, spline_basis: int | None, smoothing: float | None) -> Kernel:
     """The kernel object of the options; those of the spline need the spline."""
-    family = KERNELS[one_of("--kernel", name, KERNELS)]
+    family = KERNELS[name]
     if family is not Spline:
         for option, value in (("--spline-basis", spline_basis), ("--smoothing", smoothing)):
             if value is not None:
@@ -173,13 +230,3 @@ def _kernel(name: str, spline_basis: int | None, smoothing: float | None) -> Ker
         n_basis=usual.n_basis if spline_basis is None else spline_basis,
         smoothing=usual.smoothing if smoothing is None else smoothing,
     )
-
-
-def _optional(option: str, value: float | None, what: str) -> float | None:
-    return None if value is None else positive(option, value, what)
-
-
-def _at_least(option: str, value: int | None, smallest: int) -> int | None:
-    if value is not None and value < smallest:
-        raise ArgumentError(f"{option}: {value} is out of range. Give a whole number, {smallest} or more.")
-    return value
