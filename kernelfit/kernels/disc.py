@@ -7,7 +7,7 @@ from typing import ClassVar
 
 import numpy as np
 
-from kernelfit._typing import FloatArray
+from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.kernels.base import (
     AMPLITUDE,
     SAME_DISTANCE_UM,
@@ -19,6 +19,8 @@ from kernelfit.kernels.base import (
     at_reference,
     require_positive,
 )
+
+ROUNDING = 1e-12  # relative: a radius stated as a distance of the array must not take it in by rounding
 
 
 @dataclass(frozen=True)
@@ -42,10 +44,10 @@ class Disc(Kernel):
         )
 
     def value(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> FloatArray:
-        return np.where(d_um < np.exp(theta[1]), theta[0], 0.0)
+        return np.where(_inside(theta, d_um), theta[0], 0.0)
 
     def gradient(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> FloatArray:
-        inside = (d_um < np.exp(theta[1])).astype(np.float64)
+        inside = _inside(theta, d_um).astype(np.float64)
         return np.stack([inside, np.zeros_like(inside)])
 
     def bound_reason(self, k: int, upper: bool, span: DistanceRange) -> str:
@@ -78,3 +80,7 @@ class Disc(Kernel):
         """
         require_positive("length_um", length_um)
         return self.curve(np.array([amplitude, np.log(length_um)]), at_reference(reference_um))
+
+
+def _inside(theta: FloatArray, d_um: FloatArray) -> BoolArray:
+    return np.asarray(d_um < np.exp(theta[1]) * (1.0 - ROUNDING))

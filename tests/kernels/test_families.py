@@ -130,14 +130,16 @@ def test_derivatives_and_values_stay_finite_over_the_bounds(case):
 
 @KERNELS
 def test_starts_recover_a_planted_kernel(case):
-    # 31 distances as on an 8 x 8 array; noise a thirtieth of the largest value; some points carry nothing
+    # 31 distances as on an 8 x 8 array; noise a thirtieth of the largest value; three points carry nothing
     rng = np.random.default_rng(4)
     d = np.linspace(200.0, 1720.0, 31)
     truth = case.kernel.value(case.theta, d, SPAN)
     noise = np.abs(truth).max() / 30
     coupling = truth + rng.normal(0.0, noise, d.size)
     weight = np.full(d.size, noise**-2)
-    coupling[3], weight[5], coupling[5] = np.nan, 0.0, 1e9
+    coupling[3] = np.nan
+    coupling[[14, 8]] = 1e9, 100 * np.abs(truth).max()
+    weight[[14, 8]] = 0.0, 1e-6 * weight[0]
     starts = case.kernel.starts(d, coupling, weight, SPAN)
     assert 1 <= len(starts) <= 3
     best = case.kernel.value(starts[0], d, SPAN)
@@ -257,7 +259,27 @@ def test_disc_radii_split_the_distances_in_every_way():
     assert (bounds[0] < radii).all()
     assert (radii < bounds[1]).all()
     assert kernels.Gaussian().radius_candidates(distinct) is None
-    assert disc.at(amplitude=1.0, length_um=400.0)(400.0) == 0.0  # d < R, not d <= R
+
+
+def test_a_disc_does_not_reach_its_own_radius():
+    # d < R; R travels as a logarithm, whose rounding must not decide
+    for radius in np.linspace(10.0, 2000.0, 300):
+        curve = kernels.Disc().at(amplitude=1.0, length_um=radius)
+        assert curve(radius) == 0.0
+        assert curve(radius * (1 - 1e-9)) == 1.0
+
+
+@pytest.mark.parametrize("m", [1, 3])
+def test_gradient_of_the_mexican_hat_in_other_dimensions(m):
+    span = DistanceRange(200.0, 200.0, 1720.0, m)
+    hat, theta, step = kernels.MexicanHat(), np.array([0.4, np.log(400.0)]), np.array([0.0, 1e-5])
+    ahead, behind = (hat.value(theta + s, DISTANCES, span) for s in (step, -step))
+    slope = (ahead - behind) / 2e-5
+    np.testing.assert_allclose(hat.gradient(theta, DISTANCES, span)[1], slope, rtol=1e-6, atol=1e-9)
+
+
+def test_a_length_far_below_the_reference_does_not_overflow():
+    assert np.isfinite(kernels.Gaussian().at(amplitude=0.1, length_um=1.0, reference_um=200.0)(0.0))
 
 
 def test_mexican_hat_is_balanced_in_its_own_dimension():
