@@ -168,9 +168,7 @@ class ResultsFolder:
 
     def _failed(self, error: OSError) -> OutputError:
         place = self._asked if error.filename is None else f"{self._asked} ({error.filename})"
-        return OutputError(
-            f"{place}: cannot write there: {error.strerror}. Give another folder or free space."
-        )
+        return OutputError(f"{place}: cannot write there: {error.strerror}. Give another folder or free space.")
 
     def _write_contents(self) -> None:
         with open(self._work / CONTENTS_FILE, "w", encoding="utf-8", newline="") as handle:

@@ -8,7 +8,6 @@ from __future__ import annotations
 
 import html
 import io
-import math
 import re
 from collections.abc import Iterator
 from contextlib import contextmanager
@@ -19,6 +18,51 @@ import matplotlib as mpl
 from matplotlib.axes import Axes
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
+
+from kernelfit.report.numbers import (
+    COULD_NOT,
+    count_text,
+    distance_label,
+    duration_text,
+    fixed_text,
+    interval_text,
+    number_text,
+    p_sentence,
+    p_text,
+    spaced_unit,
+    time_text,
+)
+
+__all__ = [
+    "AMOUNTS",
+    "BAND_ALPHA",
+    "COULD_NOT",
+    "DATA",
+    "FURTHER",
+    "GRID",
+    "INK",
+    "LOWERING",
+    "NULL",
+    "ONE_COLUMN_MM",
+    "RAISING",
+    "SIGNED",
+    "TWO_COLUMNS_MM",
+    "count_text",
+    "distance_label",
+    "duration_text",
+    "fixed_text",
+    "inline_svg",
+    "interval_text",
+    "look",
+    "new_figure",
+    "number_text",
+    "p_sentence",
+    "p_text",
+    "save_figure",
+    "spaced_unit",
+    "time_text",
+    "zero_line",
+]
 
 # Safe for the common colour-vision types, and never the only carrier of a meaning: line style, shape or a
 # label says the same.
@@ -83,6 +127,7 @@ _PARAMETERS: dict[Any, Any] = {  # matplotlib types its keys as one long list of
     "figure.facecolor": "white",
     "savefig.facecolor": "white",
     "savefig.dpi": PNG_DPI,
+    "text.parse_math": False,  # a unit may be called "$1"
     "svg.fonttype": "none",  # text stays text: it can be searched, read aloud and edited
     "path.simplify": True,
 }
@@ -169,126 +214,3 @@ def inline_svg(figure: Figure, name: str, alt: str) -> str:
     return text.replace(
         "<svg ", f'<svg role="img" aria-label="{label}" stroke-linejoin="round" stroke-linecap="butt" ', 1
     )
-
-
-# --- writing numbers ------------------------------------------------------------------------------------
-
-COULD_NOT = "could not be estimated"
-PROSE_DECIMALS = 3
-MINUS = "\N{MINUS SIGN}"
-
-
-def fixed_text(value: float, decimals: int) -> str:
-    """`value` with that many decimals (negative: to tens, hundreds...), thousands apart, a true minus."""
-    rounded = round(value, decimals)
-    if rounded == 0.0:
-        rounded = 0.0  # no "-0"
-    return f"{rounded:,.{max(decimals, 0)}f}".replace("-", MINUS)
-
-
-def decimals_for(half_width: float, digits: int = 2) -> int:
-    """Decimals that show `digits` significant digits of a half-width; negative for tens, hundreds..."""
-    if not math.isfinite(half_width) or half_width <= 0.0:
-        return PROSE_DECIMALS
-    place = math.floor(math.log10(half_width))
-    if round(half_width, digits - 1 - place) >= 10.0 ** (place + 1):
-        place += 1  # 0.0996 has two digits as 0.10, not as 0.100
-    return digits - 1 - place
-
-
-def number_text(value: float, digits: int = 3, *, max_decimals: int = PROSE_DECIMALS) -> str:
-    """A lone number to `digits` significant digits, never more than `max_decimals` decimals.
-
-    Integer digits are never rounded away: 90145 stays 90,145.
-    """
-    if math.isnan(value):
-        return "not known"
-    if math.isinf(value):
-        return "infinite" if value > 0 else f"{MINUS}infinite"
-    if value == 0.0:
-        return "0"
-    return fixed_text(value, min(max(decimals_for(abs(value), digits), 0), max_decimals))
-
-
-def count_text(value: float) -> str:
-    """A count: "90,145"."""
-    return f"{round(value):,}"
-
-
-def spaced_unit(unit: str) -> str:
-    """The unit as it follows a number: a no-break space before it, nothing for pure numbers."""
-    return f"\N{NO-BREAK SPACE}{unit}" if unit else ""
-
-
-def interval_text(
-    estimate: float, lower: float, upper: float, unit: str = "", *, max_decimals: int = PROSE_DECIMALS
-) -> str:
-    """Estimate with its interval: "12 % (9 to 15)".
-
-    Two significant digits of the half-width decide the rounding of all three; decimals that are zero in all
-    three are left out. `max_decimals` is the limit for prose; tables may ask for more.
-
-    Parameters
-    ----------
-    estimate, lower, upper : same unit; an infinite end is "at least" or "at most", missing ends leave the
-        estimate alone, a missing estimate says that it could not be had
-    unit : written once, after the estimate
-    """
-    if math.isnan(estimate):
-        return COULD_NOT
-    mark = spaced_unit(unit)
-    low_known, high_known = math.isfinite(lower), math.isfinite(upper)
-    if not low_known and not high_known:
-        return f"{number_text(estimate, max_decimals=max_decimals)}{mark}"
-    one_sided = abs((upper if high_known else lower) - estimate)
-    half_width = (upper - lower) / 2.0 if low_known and high_known else one_sided
-    decimals = min(decimals_for(half_width), max_decimals)
-    shown = [estimate, *([lower] if low_known else []), *([upper] if high_known else [])]
-    while decimals > 0 and all(fixed_text(v, decimals).endswith("0") for v in shown):
-        decimals -= 1
-    middle = fixed_text(estimate, decimals)
-    if not high_known:
-        return f"{middle}{mark} (at least {fixed_text(lower, decimals)})"
-    if not low_known:
-        return f"{middle}{mark} (at most {fixed_text(upper, decimals)})"
-    return f"{middle}{mark} ({fixed_text(lower, decimals)} to {fixed_text(upper, decimals)})"
-
-
-def p_text(p_value: float) -> str:
-    """A p-value to two digits, "< 0.001" below: "0.042", "0.30"."""
-    if math.isnan(p_value):
-        return COULD_NOT
-    if p_value < 0.001:
-        return "< 0.001"
-    return f"{p_value:.{min(decimals_for(p_value), 4) if p_value < 0.995 else 2}f}"
-
-
-def p_sentence(p_value: float) -> str:
-    """A p-value with its letter: "p = 0.042", "p < 0.001"."""
-    text = p_text(p_value)
-    return f"p {text}" if text.startswith("<") else f"p = {text}"
-
-
-def time_unit_for(seconds: float) -> tuple[float, str]:
-    """Factor and unit for a time: ms below 1 s, s from there."""
-    return (1e3, "ms") if math.isfinite(seconds) and abs(seconds) < 1.0 else (1.0, "s")
-
-
-def time_text(seconds: float, lower_s: float = math.nan, upper_s: float = math.nan) -> str:
-    """A time with its interval, in ms below 1 s: "13 ms (11 to 15)"."""
-    factor, unit = time_unit_for(seconds)
-    return interval_text(seconds * factor, lower_s * factor, upper_s * factor, unit)
-
-
-def duration_text(seconds: float) -> str:
-    """A stretch of time as people say it: "45 s", "29 min 42 s", "2 h 1 min"."""
-    if seconds < 1.0:
-        return time_text(seconds)
-    if seconds < 120.0:
-        return f"{number_text(seconds)}{spaced_unit('s')}"
-    whole = round(seconds)
-    hours, rest = divmod(whole, 3600)
-    minutes, left = divmod(rest, 60)
-    if hours:
-        return f"{hours} h {minutes} min" if minutes else f"{hours} h"
-    return f"{minutes} min {left} s" if left else f"{minutes} min"

@@ -1,0 +1,444 @@
+"""From a fit and its recording to the data of each figure. All computing for figures happens here."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit.errors import Unavailable
+from kernelfit.recording.recording import SAME_SITE_UM, Recording
+from kernelfit.report.figure_data import (
+    AfterSpikeData,
+    ArrayData,
+    CourseData,
+    CourseLine,
+    KernelData,
+    KsData,
+    KsGlanceData,
+    KsPanel,
+    PairCounts,
+    RasterData,
+)
+from kernelfit.report.numbers import (
+    count_text,
+    distance_label,
+    duration_text,
+    number_text,
+    p_sentence,
+    time_text,
+)
+from kernelfit.report.readings import (
+    LEVEL,
+    change_text,
+    coupling_at,
+    is_exp,
+    time_constant_of,
+)
+from kernelfit.report.words import listed, percent_of_rate
+
+if TYPE_CHECKING:
+    from kernelfit.diagnostics.goodness import Goodness, KsCurve
+    from kernelfit.fitting.result import CouplingFit
+
+CURVE_POINTS = 240
+GAP_IN_SPACINGS = 1.5  # a stretch of distances without pairs, this many reference distances long, breaks the curve
+MAX_BARS = 70  # more distinct distances than this are collected in stretches
+COURSE_IN_TIME_CONSTANTS = 5.0
+FAINT_UNITS = 6
+KS_POINTS = 400
+RASTER_SPIKES = 6000  # a stretch of about so many spikes can still be read
+RASTER_SHORTEST_S, RASTER_LONGEST_S = 20.0, 60.0
+RASTER_CELLS = 4_000_000  # bins times units of the fitted rate held at once
+RATE_POINTS = 150
+LOG_SCALE_FROM = 20.0  # amounts further apart than this factor need a log scale
+DROPPED_ID = 18  # characters of a unit id that fit a panel's title
+
+
+# --- coupling -------------------------------------------------------------------------------------------
+
+
+def kernel_data(fit: CouplingFit) -> KernelData | Unavailable:
+    """The kernel over the distances at which the array has pairs, broken where it has none."""
+    pairs = fit.pairs_by_distance
+    distances = pairs["distance_um"].to_numpy(dtype=np.float64)
+    if distances.size == 0:
+        return Unavailable("no pair of units is covered by the kernel")
+    grid = curve_grid(distances, GAP_IN_SPACINGS * fit.reference_distance_um)
+    known = np.isfinite(grid)
+    band = fit.kernel_band(grid[known], level=LEVEL)
+    curve = np.full((3, grid.size), np.nan)
+    curve[:, known] = band[["estimate", "lower", "upper"]].to_numpy(dtype=np.float64).T
+    if not np.isfinite(curve[0]).any():
+        return Unavailable("the kernel has no finite value at any distance")
+    return KernelData(
+        title=kernel_title(fit, distances),
+        distance_um=grid,
+        jump=curve[0],
+        lower=curve[1],
+        upper=curve[2],
+        in_percent=is_exp(fit),
+        reference_um=fit.reference_distance_um,
+        level=LEVEL,
+        pairs=pair_counts(pairs),
+        reach_um=1.04 * float(distances[-1]),
+    )
+
+
+def curve_grid(distances_um: FloatArray, widest_gap_um: float) -> FloatArray:
+    """Distances to draw a curve at, all within the sorted `distances_um`; NaN where a gap is too wide."""
+    low, high = float(distances_um[0]), float(distances_um[-1])
+    if high <= low:
+        return np.array([low])
+    grid = np.unique(np.concatenate([np.linspace(low, high, CURVE_POINTS), distances_um]))
+    starts = np.flatnonzero(np.diff(distances_um) > max(widest_gap_um, 0.05 * (high - low)))
+    for k in starts:
+        left, right = distances_um[k], distances_um[k + 1]
+        grid = np.where((grid > left) & (grid < right), np.nan, grid)
+    # One NaN per gap is enough to lift the pen.
+    missing = np.isnan(grid)
+    return np.asarray(grid[~(missing & np.roll(missing, 1))])
+
+
+def pair_counts(pairs: pd.DataFrame) -> PairCounts:
+    """Bars for the number of pairs; distances are collected in stretches where they are many."""
+    distance = pairs["distance_um"].to_numpy(dtype=np.float64)
+    count = pairs["n_pairs"].to_numpy(dtype=np.float64)
+    span = float(distance[-1]) if distance[-1] > 0.0 else 1.0
+    if distance.size <= MAX_BARS:
+        closest = float(np.min(np.diff(distance))) if distance.size > 1 else span
+        return PairCounts(distance, count, float(np.clip(0.8 * closest, 0.008 * span, 0.03 * span)), False)
+    edges = np.linspace(float(distance[0]), float(distance[-1]), MAX_BARS + 1)
+    collected, _ = np.histogram(distance, bins=edges, weights=count)
+    middle = 0.5 * (edges[1:] + edges[:-1])
+    return PairCounts(middle, collected.astype(np.float64), float(edges[1] - edges[0]), True)
+
+
+def kernel_title(fit: CouplingFit, distances_um: FloatArray) -> str:
+    """The finding of the kernel figure."""
+    if not fit.verdict.found:
+        return "No coupling to describe"
+    near = coupling_at(fit, fit.reference_distance_um)
+    far_um = float(distances_um[-1])
+    far = coupling_at(fit, far_um)
+    if not near.known:
+        return "The kernel could not be estimated"
+    first = f"One spike {change_text(near.value, fit)} at {distance_label(fit.reference_distance_um)}"
+    if not far.known or far_um < 1.5 * fit.reference_distance_um:
+        return first
+    return f"{first}; {change_text(far.value, fit, verb=False)} at {distance_label(far_um)}"
+
+
+def course_data(fit: CouplingFit) -> CourseData | Unavailable:
+    """Effect of one spike against time at the reference distance (with a band) and at two further distances.
+
+    The band carries the interval of the leak rate alone; the size of the effect is held at its estimate.
+    """
+    tau = time_constant_of(fit)
+    if not tau.known or tau.value <= 0.0:
+        return Unavailable(f"the time constant is not known ({tau.reason})")
+    lag = np.linspace(0.0, COURSE_IN_TIME_CONSTANTS * tau.value, 200)
+    distances = fit.pairs_by_distance["distance_um"].to_numpy(dtype=np.float64)
+    reference = fit.reference_distance_um
+    others = [d for d in (float(np.median(distances)), float(distances[-1])) if abs(d - reference) > 0.2 * reference]
+    jumps = fit.kernel(np.array([reference, *others]))
+    if not np.isfinite(jumps[0]):
+        return Unavailable("the kernel has no finite value at the reference distance")
+
+    def effect(jump: float, time_constant_s: float) -> FloatArray:
+        if not math.isfinite(time_constant_s) or time_constant_s <= 0.0:
+            return np.full(lag.size, np.nan)
+        drive = jump * np.exp(-lag / time_constant_s)
+        return percent_of_rate(drive) if is_exp(fit) else drive
+
+    lines = [
+        CourseLine(
+            reference,
+            effect(jumps[0], tau.value),
+            effect(jumps[0], tau.lower),
+            effect(jumps[0], tau.upper),
+            main=True,
+        )
+    ]
+    blank = np.full(lag.size, np.nan)
+    lines += [
+        CourseLine(d, effect(j, tau.value), blank, blank, main=False) for d, j in zip(others, jumps[1:], strict=True)
+    ]
+    shown = time_text(tau.value, tau.lower, tau.upper)
+    fixed = " (given)" if fit.model.leak_rate is not None else ""
+    return CourseData(
+        title=f"One spike's effect fades with a time constant of {shown}{fixed}",
+        lag_s=lag,
+        lines=tuple(lines),
+        in_percent=is_exp(fit),
+        time_constant_s=tau.value,
+        level=LEVEL,
+    )
+
+
+# --- after-spike ----------------------------------------------------------------------------------------
+
+
+def after_spike_data(fit: CouplingFit, longest_s: float) -> AfterSpikeData | Unavailable:
+    """After-spike curves over the units that have one, from one bin to `longest_s`."""
+    if fit.after_spike_test is not None:
+        return Unavailable('the model has no after-spike term (after_spike="none")')
+    lag = np.geomspace(fit.model.bin_width, max(longest_s, 10.0 * fit.model.bin_width), 140)
+    curves = fit.after_spike_curves(lag)
+    curves = curves[np.isfinite(curves).all(axis=1)]
+    if curves.shape[0] == 0:
+        return Unavailable("no unit has an after-spike curve")
+    low, middle, high = np.quantile(curves, [0.25, 0.5, 0.75], axis=0)
+    chosen = np.unique(np.linspace(0, curves.shape[0] - 1, min(FAINT_UNITS, curves.shape[0])).astype(np.int64))
+    return AfterSpikeData(
+        title=after_spike_title(lag, middle),
+        lag_s=lag,
+        median=middle,
+        lower_quartile=low,
+        upper_quartile=high,
+        few=curves[chosen],
+        n_units=int(curves.shape[0]),
+    )
+
+
+def after_spike_title(lag_s: FloatArray, median: FloatArray) -> str:
+    """The finding of the after-spike figure: the multiplier at the first lag, and its largest change."""
+    size = np.abs(np.log(np.maximum(median, 1e-12)))
+    largest = int(np.argmax(size))
+    places = [0] if largest == 0 or size[largest] < 1.2 * size[0] else [0, largest]
+    parts = [f"{number_text(float(median[k]), 2)} times after {time_text(float(lag_s[k]))}" for k in places]
+    return f"A typical unit's own spike changes its rate: {listed(parts)}"
+
+
+# --- quality of the fit -----------------------------------------------------------------------------------
+
+
+def ks_data(goodness: Goodness) -> KsData | Unavailable:
+    """KS plots of the best, middle and worst unit and of all together; all units' statistics at a glance."""
+    table = goodness.units
+    tested = table["p_value"].notna().to_numpy()
+    if not tested.any():
+        return Unavailable("no unit has enough spikes for a test")
+    units = table[tested]
+    curves = {str(u): goodness.ks_curve(str(u)) for u in units.index}
+    critical = np.array([curve.critical_half_width for curve in curves.values()])
+    ratio = units["ks_statistic"].to_numpy(dtype=np.float64) / critical
+    rejected = units["p_adjusted"].to_numpy(dtype=np.float64) < 1.0 - goodness.level
+    order = np.argsort(ratio, kind="stable")
+    places = {int(order[-1]): "worst", int(order[order.size // 2]): "middle", int(order[0]): "best"}
+    panels = []
+    for k, word in sorted(places.items(), key=lambda item: ratio[item[0]]):
+        unit = str(units.index[k])
+        label = f"{word}: unit {short_id(unit)}"
+        panels.append(ks_panel(label, curves[unit], float(units["p_adjusted"].iloc[k])))
+    pooled_p = float(goodness.pooled["p_value"].iloc[0])
+    if math.isfinite(pooled_p):
+        panels.append(ks_panel("all units together", goodness.ks_curve(), pooled_p))
+    kept, total = int((~rejected).sum()), int(rejected.size)
+    return KsData(
+        title=f"The model describes the spike times of {count_text(kept)} of {count_text(total)} units",
+        panels=tuple(panels),
+        glance=KsGlanceData(ratio=ratio[order], rejected=rejected[order], level=1.0 - goodness.level),
+    )
+
+
+def short_id(unit: str) -> str:
+    """A unit id cut to what a panel's title can hold."""
+    return unit if len(unit) <= DROPPED_ID else f"{unit[: DROPPED_ID - 1]}…"
+
+
+def ks_panel(label: str, curve: KsCurve, p_value: float) -> KsPanel:
+    """One KS plot, thinned to the points a plot can show."""
+    n = curve.z.size
+    keep = np.unique(np.linspace(0, n - 1, min(n, KS_POINTS)).astype(np.int64))
+    return KsPanel(
+        title=f"{label}\n{count_text(n)} intervals, {p_sentence(p_value)}",
+        expected=curve.z[keep],
+        observed=curve.share[keep],
+        test_band=curve.critical_half_width,
+        free_band=curve.dkw_half_width,
+        n_intervals=n,
+        rejected=p_value < 1.0 - curve.level,
+    )
+
+
+# --- the recording ----------------------------------------------------------------------------------------
+
+
+def array_data(positions_um: FloatArray, value: FloatArray, title: str, quantity: str) -> ArrayData:
+    """Amounts at their sites, units of one site side by side around it.
+
+    Parameters
+    ----------
+    positions_um : (n_units, 1 to 3); a third coordinate is not drawn
+    value : (n_units,) NaN or not positive where there is nothing to show
+    """
+    plane = np.zeros((positions_um.shape[0], 2))
+    plane[:, : min(2, positions_um.shape[1])] = positions_um[:, :2]
+    site_of = sites_of(positions_um)
+    n_sites = int(site_of.max()) + 1
+    first = np.array([np.flatnonzero(site_of == s)[0] for s in range(n_sites)])
+    sites = plane[first]
+    spacing = neighbour_spacing(sites)
+    place = plane.copy()
+    n_shared = 0
+    for site in range(n_sites):
+        members = np.flatnonzero(site_of == site)
+        if members.size > 1:
+            n_shared += members.size
+            angle = 2.0 * np.pi * np.arange(members.size) / members.size
+            place[members] += 0.24 * spacing * np.column_stack([np.cos(angle), np.sin(angle)])
+    shown = np.where(value > 0.0, value, np.nan)
+    known = shown[np.isfinite(shown)]
+    extent = float(np.ptp(sites, axis=0).max()) if n_sites > 1 else spacing
+    return ArrayData(
+        title=title,
+        quantity=quantity,
+        place_um=place,
+        site_um=sites,
+        value=shown,
+        on_log_scale=bool(known.size and known.max() > LOG_SCALE_FROM * known.min()),
+        spacing_um=spacing,
+        scale_bar_um=round_length(0.3 * max(extent, spacing)),
+        n_shared=n_shared,
+    )
+
+
+def sites_of(positions_um: FloatArray) -> IntArray:
+    """(n_units,) index of each unit's site; positions closer than 1 µm are one site."""
+    from scipy.spatial import cKDTree
+
+    site = np.full(positions_um.shape[0], -1, dtype=np.int64)
+    tree = cKDTree(positions_um)
+    count = 0
+    for k in range(positions_um.shape[0]):
+        if site[k] < 0:
+            near = [j for j in tree.query_ball_point(positions_um[k], SAME_SITE_UM) if site[j] < 0]
+            site[near] = count
+            count += 1
+    return site
+
+
+def neighbour_spacing(sites_um: FloatArray) -> float:
+    """Median distance from a site to its nearest neighbour; 100 µm for a lone site."""
+    from scipy.spatial import cKDTree
+
+    if sites_um.shape[0] < 2:
+        return 100.0
+    nearest = np.asarray(cKDTree(sites_um).query(sites_um, k=2)[0])
+    spacing = float(np.median(nearest[:, 1]))
+    return spacing if spacing > 0.0 else 100.0
+
+
+def round_length(length_um: float) -> float:
+    """The largest of 1, 2, 5, 10, 20... that is not longer."""
+    decade = 10.0 ** math.floor(math.log10(length_um))
+    return float(max(m * decade for m in (1.0, 2.0, 5.0) if m * decade <= length_um * (1 + 1e-9)))
+
+
+def baseline_data(fit: CouplingFit) -> ArrayData:
+    """The array map of baseline rates."""
+    rate = fit.baselines["rate_hz"].to_numpy(dtype=np.float64)
+    known = rate[np.isfinite(rate) & (rate > 0.0)]
+    if known.size == 0:
+        title = "No baseline rate could be estimated"
+    else:
+        low, high = number_text(float(known.min()), 2), number_text(float(known.max()), 2)
+        title = f"Baseline rates run from {low} to {high} Hz"
+    return array_data(fit.positions, rate, title, "baseline rate (Hz)")
+
+
+def raster_data(fit: CouplingFit, recording: Recording) -> RasterData | Unavailable:
+    """A stretch with about the mean number of spikes, and the observed and fitted rate in it."""
+    longest = RASTER_CELLS * fit.model.bin_width / recording.n_units
+    wanted = RASTER_SPIKES * recording.duration / max(recording.n_spikes, 1)
+    length = min(float(np.clip(wanted, RASTER_SHORTEST_S, RASTER_LONGEST_S)), max(longest, 2.0))
+    stretch = representative_stretch(recording, length)
+    if stretch is None:
+        return Unavailable("the recording holds no stretch of a second without exclusions")
+    start, stop = stretch
+    rates = fit.fitted_rates(start, stop, recording)
+    per_point = max(1, round((stop - start) / RATE_POINTS / fit.model.bin_width))
+    n_points = rates.time_s.size // per_point
+    if n_points == 0:
+        return Unavailable("the stretch holds no bin that counts")
+
+    explained = rates.rate_hz.sum(axis=0) > 0.0
+
+    def averaged(values: FloatArray) -> FloatArray:
+        used = values[: n_points * per_point]
+        return np.asarray(used.reshape(n_points, per_point).mean(axis=1))
+
+    observed = averaged(mean_over(rates.counts, explained) / fit.model.bin_width)
+    fitted = averaged(mean_over(rates.rate_hz, explained))
+    order = np.lexsort(tuple(recording.positions.T))
+    rows = tuple(_between(recording.trains[k], start, stop) for k in order)
+    return RasterData(
+        title=raster_title(observed, fitted, stop - start),
+        rows=rows,
+        start_s=start,
+        stop_s=stop,
+        time_s=averaged(rates.time_s),
+        observed_hz=observed,
+        fitted_hz=fitted,
+        averaged_s=per_point * fit.model.bin_width,
+    )
+
+
+def mean_over(values: FloatArray, units: BoolArray) -> FloatArray:
+    """(n_bins,) mean over the chosen units, zeros where none is chosen."""
+    if not units.any():
+        return np.zeros(values.shape[0])
+    return np.asarray(values[:, units].mean(axis=1), dtype=np.float64)
+
+
+def raster_title(observed_hz: FloatArray, fitted_hz: FloatArray, length_s: float) -> str:
+    """The finding of the raster: how closely the fitted rate follows."""
+    stretch = duration_text(length_s)
+    if np.ptp(observed_hz) == 0.0 or np.ptp(fitted_hz) == 0.0:
+        return f"{stretch} of the recording with the fitted rate"
+    r = float(np.corrcoef(observed_hz, fitted_hz)[0, 1])
+    return f"Over {stretch}, fitted and observed rate of the array have a correlation of {number_text(r, 2)}"
+
+
+def _between(times_s: FloatArray, start_s: float, stop_s: float) -> FloatArray:
+    return times_s[np.searchsorted(times_s, start_s) : np.searchsorted(times_s, stop_s)]
+
+
+def representative_stretch(recording: Recording, length_s: float) -> tuple[float, float] | None:
+    """The stretch of that length, inside a window and clear of exclusions, nearest the mean spike count.
+
+    Where no window is that long the longest clear piece is taken; None where no piece lasts a second.
+    """
+    pieces = clear_pieces(recording)
+    if pieces.shape[0] == 0:
+        return None
+    lengths = pieces[:, 1] - pieces[:, 0]
+    longest = float(lengths.max())
+    if longest < length_s:
+        k = int(np.argmax(lengths))
+        return (float(pieces[k, 0]), float(pieces[k, 1])) if longest >= 1.0 else None
+    starts = np.concatenate([a + length_s * np.arange(int((b - a) / length_s + 1e-9)) for a, b in pieces])
+    times = np.sort(np.concatenate(recording.trains))
+    counts = np.searchsorted(times, starts + length_s) - np.searchsorted(times, starts)
+    k = int(np.argmin(np.abs(counts - counts.mean())))
+    return float(starts[k]), float(starts[k] + length_s)
+
+
+def clear_pieces(recording: Recording) -> FloatArray:
+    """(n, 2) what is left of the windows without the exclusions, seconds."""
+    pieces = []
+    for start, stop in recording.window_bounds:
+        left = float(start)
+        for a, b in recording.exclusion_bounds:
+            if b <= left or a >= stop:
+                continue
+            if a > left:
+                pieces.append((left, float(a)))
+            left = max(left, float(b))
+        if left < stop:
+            pieces.append((left, float(stop)))
+    return np.reshape(np.array(pieces, dtype=np.float64), (-1, 2))

@@ -1,0 +1,357 @@
+"""From a fit and its recording to the tables of the page."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from kernelfit.errors import Unavailable
+from kernelfit.kernels.registry import kernel_from
+from kernelfit.recording.recording import Recording
+from kernelfit.report.numbers import (
+    count_text,
+    distance_label,
+    duration_text,
+    interval_text,
+    number_text,
+    p_text,
+    spaced_unit,
+    time_text,
+)
+from kernelfit.report.page import Cell, Column, Definition, Table
+from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, link_name, time_constant_of
+from kernelfit.report.truth import Truth
+from kernelfit.report.words import level_text
+
+if TYPE_CHECKING:
+    from kernelfit.diagnostics.goodness import Goodness
+    from kernelfit.fitting.result import CouplingFit
+
+TABLE_DECIMALS = 6
+HASH_SHOWN = 12
+
+_MEANINGS = {
+    "amplitude": "effect J of one spike at {reference}",
+    "length_um": "length of the kernel",
+    "exponent": "exponent of the power law",
+    "narrow_amplitude": "narrow part, J at {reference}",
+    "narrow_length_um": "narrow part, length",
+    "wide_amplitude": "wide part, J at {reference}",
+    "wide_length_um": "wide part, length",
+    "radius_um": "radius of the disc",
+    "same_site": "effect J of one spike on the same site",
+    LEAK: "leak rate, 1 / time constant",
+}
+
+
+def meaning(name: str, reference_um: float) -> str:
+    """A parameter in words; its own name where there are none."""
+    if name.startswith("coefficient_"):
+        return f"coefficient {name.removeprefix('coefficient_')} of the spline"
+    return _MEANINGS.get(name, name).format(reference=distance_label(reference_um))
+
+
+def value_cell(value: float, digits: int = 3, *, unit: str = "") -> Cell:
+    """A number in a table, with more decimals than prose has; words where it is missing."""
+    if not math.isfinite(value):
+        return Cell("not estimable")
+    return Cell(f"{number_text(value, digits, max_decimals=TABLE_DECIMALS)}{spaced_unit(unit)}", value)
+
+
+def parameter_table(fit: CouplingFit) -> Table:
+    """Every shared parameter with its interval in words that fit a table."""
+    rows = []
+    for name, row in fit.parameters.iterrows():
+        estimate, lower, upper = (float(row[c]) for c in ("estimate", "lower", "upper"))
+        shown = interval_text(estimate, lower, upper, max_decimals=TABLE_DECIMALS)
+        rows.append(
+            (
+                Cell(str(name)),
+                Cell(meaning(str(name), fit.reference_distance_um)),
+                Cell(shown, estimate if math.isfinite(estimate) else None),
+                Cell(_unit_shown(str(row["unit"]))),
+                Cell(str(row["note"])),
+            )
+        )
+    tau = time_constant_of(fit)
+    rows.append(
+        (
+            Cell("time constant"),
+            Cell("how long the effect of a spike lasts"),
+            Cell(time_text(tau.value, tau.lower, tau.upper), tau.value) if tau.known else Cell(tau.text()),
+            Cell(""),
+            Cell("given by the leak rate"),
+        )
+    )
+    return Table(
+        caption=f"Parameters with {level_text(LEVEL)} intervals ({_kind(fit)})",
+        columns=(
+            Column("name", numeric=False),
+            Column("what it is", numeric=False),
+            Column("estimate (interval)"),
+            Column("unit", numeric=False),
+            Column("note", numeric=False),
+        ),
+        rows=tuple(rows),
+        file="parameters.csv",
+    )
+
+
+def _unit_shown(unit: str) -> str:
+    return "" if unit in {"1", "nan"} else unit
+
+
+def _kind(fit: CouplingFit) -> str:
+    return "robust" if fit.covariance_kind == "robust" else "model-based"
+
+
+def std_error_table(fit: CouplingFit) -> Table:
+    """Both kinds of standard errors and intervals side by side, with the ratio."""
+    kinds = {kind: fit.with_covariance(kind).parameters for kind in ("model", "robust")}
+    rows = []
+    for name, row in fit.std_errors.iterrows():
+        intervals = []
+        for kind in ("model", "robust"):
+            own = kinds[kind].loc[name]
+            lower, upper = float(own["lower"]), float(own["upper"])
+            bounded = math.isfinite(lower) and math.isfinite(upper)
+            text = interval_text(float(own["estimate"]), lower, upper, max_decimals=TABLE_DECIMALS)
+            intervals.append(Cell(text if bounded else str(own["note"]) or "not estimable"))
+        rows.append(
+            (
+                Cell(str(name)),
+                *intervals,
+                value_cell(float(row["model"]), 2),
+                value_cell(float(row["robust"]), 2),
+                value_cell(float(row["ratio"]), 2),
+            )
+        )
+    return Table(
+        caption="Intervals and standard errors of both kinds",
+        columns=(
+            Column("name", numeric=False),
+            Column("model-based interval"),
+            Column("robust interval"),
+            Column("std. error, model-based"),
+            Column("std. error, robust"),
+            Column("ratio"),
+        ),
+        rows=tuple(rows),
+        file="std_errors.csv",
+    )
+
+
+def goodness_table(goodness: Goodness) -> Table:
+    """KS test of every unit and of all together."""
+    rows = [_goodness_row("all units together", goodness.pooled.iloc[0])]
+    rows += [_goodness_row(str(unit), row) for unit, row in goodness.units.iterrows()]
+    return Table(
+        caption="Test of the model per unit",
+        columns=(
+            Column("unit", numeric=False),
+            Column("spikes"),
+            Column("KS statistic"),
+            Column("p"),
+            Column("p, corrected"),
+            Column("p, plain"),
+            Column("verdict", numeric=False),
+            Column("note", numeric=False),
+        ),
+        rows=tuple(rows),
+        file="goodness.csv",
+    )
+
+
+def _goodness_row(name: str, row: pd.Series) -> tuple[Cell, ...]:
+    def p_cell(column: str) -> Cell:
+        p = float(row[column])
+        return Cell(p_text(p), p) if math.isfinite(p) else Cell("")
+
+    decided = float(row["p_adjusted"])
+    if not math.isfinite(decided):
+        decided = float(row["p_value"])
+    verdict = "" if not math.isfinite(decided) else ("not described" if decided < TEST_LEVEL else "described")
+    statistic = float(row["ks_statistic"])
+    return (
+        Cell(name),
+        Cell(count_text(float(row["n_spikes"])), float(row["n_spikes"])),
+        Cell(f"{statistic:.3f}", statistic) if math.isfinite(statistic) else Cell(""),
+        p_cell("p_value"),
+        p_cell("p_adjusted"),
+        p_cell("p_value_plain"),
+        Cell(verdict),
+        Cell(_note(row["note"])),
+    )
+
+
+def _note(value: object) -> str:
+    return "" if value is None or value != value else str(value)
+
+
+def unit_table(fit: CouplingFit, recording: Recording) -> Table:
+    """Every unit: place, spikes, observed rate, baseline."""
+    units = recording.units
+    rows = []
+    for unit, row in fit.baselines.iterrows():
+        known = units.loc[unit]
+        place = ", ".join(number_text(float(known[c])) for c in ("x_um", "y_um", "z_um") if c in units.columns)
+        estimate, error = float(row["estimate"]), float(row["std_error"])
+        estimable = math.isfinite(estimate)
+        rows.append(
+            (
+                Cell(str(unit)),
+                Cell(place),
+                Cell(count_text(float(known["n_spikes"])), float(known["n_spikes"])),
+                value_cell(float(known["rate_hz"])),
+                value_cell(float(row["rate_hz"])) if estimable else Cell(""),
+                value_cell(estimate) if estimable else Cell(""),
+                value_cell(error, 2) if math.isfinite(error) else Cell(""),
+                Cell(_note(row["note"])),
+            )
+        )
+    return Table(
+        caption="Units: what was observed, and the baseline without coupling",
+        columns=(
+            Column("unit", numeric=False),
+            Column("position (µm)", numeric=False),
+            Column("spikes"),
+            Column("observed rate (Hz)"),
+            Column("baseline rate (Hz)"),
+            Column("baseline b"),
+            Column("std. error of b"),
+            Column("note", numeric=False),
+        ),
+        rows=tuple(rows),
+        file="baselines.csv",
+    )
+
+
+def truth_table(fit: CouplingFit, truth: Truth) -> Table:
+    """Estimates beside the truth an invented recording was made from."""
+    parameters = fit.parameters
+    rows = []
+    for value in truth.values:
+        if value.name in parameters.index:
+            row = parameters.loc[value.name]
+            estimate, lower, upper = (float(row[c]) for c in ("estimate", "lower", "upper"))
+            shown = interval_text(estimate, lower, upper, max_decimals=TABLE_DECIMALS)
+            bounded = math.isfinite(lower) and math.isfinite(upper)
+            inside = ("yes" if lower <= value.value <= upper else "no") if bounded else "no interval"
+        else:
+            shown, inside = "not a parameter of this model", ""
+        rows.append(
+            (
+                Cell(meaning(value.name, fit.reference_distance_um)),
+                value_cell(value.value),
+                Cell(shown),
+                Cell(inside),
+                Cell(_unit_shown(value.unit)),
+            )
+        )
+    return Table(
+        caption="How the estimates compare with the truth the recording was made from",
+        columns=(
+            Column("what", numeric=False),
+            Column("truth"),
+            Column(f"estimate ({level_text(LEVEL)} interval)"),
+            Column("truth inside the interval", numeric=False),
+            Column("unit", numeric=False),
+        ),
+        rows=tuple(rows),
+    )
+
+
+# --- facts and settings -----------------------------------------------------------------------------------
+
+
+def recording_facts(fit: CouplingFit, recording: Recording) -> Definition:
+    """What was recorded and what of it entered the fit."""
+    origin = fit.origin
+    bounds = recording.window_bounds
+    rows = [(f"file, {f.role}", f"{f.name} (SHA-256 {f.sha256[:HASH_SHOWN]}...)") for f in origin.files]
+    rows.append(("units", count_text(recording.n_units)))
+    silent = int((recording.counts == 0).sum())
+    if silent:
+        rows.append(("silent units", f"{count_text(silent)}; not explained, kept as sources"))
+    if recording.source_only:
+        rows.append(("source-only units", count_text(len(recording.source_only))))
+    outside = int(sum(t.size for t in recording.trains)) - recording.n_spikes
+    rows.append(("spikes in the windows", count_text(recording.n_spikes)))
+    if outside:
+        rows.append(("spikes outside the windows", f"{count_text(outside)}; kept as history"))
+    first, last = float(bounds[0, 0]), float(bounds[-1, 1])
+    span = f"{number_text(first)} to {number_text(last)} s on the recording's clock"
+    count = "1 window" if bounds.shape[0] == 1 else f"{count_text(bounds.shape[0])} windows"
+    rows.append(("windows", f"{count}, {duration_text(recording.duration)} in all, {span}"))
+    if not origin.windows_stated:
+        rows.append(
+            (
+                "where the window comes from",
+                "no windows were given: from the floor of the first spike to the first whole second after the last",
+            )
+        )
+    excluded = recording.exclusion_bounds
+    if excluded.shape[0]:
+        seconds = float(np.sum(excluded[:, 1] - excluded[:, 0]))
+        rows.append(("exclusions", f"{count_text(excluded.shape[0])} stretches, {number_text(seconds)} s in all"))
+    if recording.excluded_pairs:
+        rows.append(("pairs left out", count_text(len(recording.excluded_pairs))))
+    rows.append(("time in the likelihood", f"{duration_text(fit.duration_s)} ({count_text(fit.n_bins)} bins)"))
+    rows.append(("spikes in the likelihood", count_text(fit.n_spikes)))
+    rows += [("changed on reading", note) for note in origin.notes]
+    return Definition(rows=tuple(rows), caption="The recording")
+
+
+def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
+    """Every setting a rerun needs."""
+    model = fit.model
+    leak = "estimated" if model.leak_rate is None else f"held at {number_text(model.leak_rate)} per second"
+    kernel = kernel_from(model.kernel)
+    reach = "none" if model.max_distance is None else distance_label(model.max_distance)
+    blocks = f"{count_text(fit.n_blocks)} blocks of {time_text(fit.block_length_s)}"
+    rows = (
+        ("kernel", repr(kernel) if repr(kernel) != f"{type(kernel).__name__}()" else kernel.name),
+        ("link", link_name(fit)),
+        ("bin width", time_text(model.bin_width)),
+        ("leak rate", leak),
+        ("largest distance", reach),
+        (
+            "pairs on one site",
+            {"exclude": "left out", "own": "one coefficient of their own"}.get(model.same_site, "in the kernel"),
+        ),
+        ("after-spike term", str(model.after_spike)),
+        ("course of the rate", str(model.rate_course)),
+        ("warm-up", time_text(model.warm_up_s) if model.warm_up_s else "none"),
+        ("reference distance", distance_label(fit.reference_distance_um)),
+        (
+            "intervals",
+            f"{level_text(LEVEL)}, {_kind(fit)}" + (f", {blocks}" if _kind(fit) == "robust" else ""),
+        ),
+        ("seed of the goodness test", str(goodness.seed)),
+        ("kernelfit", f"version {fit.version}, {fit.created}"),
+    )
+    return Definition(rows=rows, caption="Settings", headings=("setting", "value"))
+
+
+def _or_reason(value: float | Unavailable, factor: float, unit: str) -> str:
+    return str(value) if isinstance(value, Unavailable) else f"{number_text(factor * value)}{spaced_unit(unit)}"
+
+
+def fit_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
+    """The fit in numbers."""
+    solver = fit.solver
+    ended = "converged" if fit.converged else "did not converge"
+    rows = (
+        ("log-likelihood", f"{number_text(fit.log_likelihood, 3)} nats"),
+        ("with constant rates", f"{number_text(fit.null_log_likelihood, 3)} nats"),
+        ("deviance explained", _or_reason(goodness.deviance_explained, 100.0, "%")),
+        ("bits per spike", _or_reason(goodness.bits_per_spike, 1.0, "")),
+        ("parameters", count_text(fit.n_parameters)),
+        ("AIC, BIC", f"{number_text(fit.aic, 3)}, {number_text(fit.bic, 3)}"),
+        ("optimiser", f"{ended} after {count_text(solver.n_iterations)} steps: {solver.message}"),
+        ("computing time", duration_text(fit.seconds)),
+    )
+    return Definition(rows=rows, caption="The fit in numbers")

@@ -1,0 +1,142 @@
+"""Readings of a fit that figures, tables and sentences share: estimates with reasons, effects in words."""
+
+from __future__ import annotations
+
+import math
+from typing import TYPE_CHECKING
+
+import numpy as np
+
+from kernelfit.kernels.registry import kernel_from
+from kernelfit.report.numbers import number_text, p_sentence, spaced_unit
+from kernelfit.report.words import (
+    MULTIPLES_FROM,
+    Estimate,
+    distances_sentence,
+    explained_sentence,
+    goodness_sentence,
+    one_spike_sentence,
+    percent_of_rate,
+    sureness_sentence,
+)
+
+if TYPE_CHECKING:
+    from kernelfit.diagnostics.goodness import Goodness
+    from kernelfit.fitting.result import CouplingFit
+
+LEVEL = 0.95  # of every interval in a report
+TEST_LEVEL = 0.05  # of every test in a report
+LEAK = "leak_rate"
+
+
+def is_exp(fit: CouplingFit) -> bool:
+    """True where a coupling can be read as a change of the rate in per cent."""
+    return link_name(fit) == "exp"
+
+
+def link_name(fit: CouplingFit) -> str:
+    """Name of the rate link."""
+    return str(fit.model.link)
+
+
+def kernel_name(fit: CouplingFit) -> str:
+    """Name of the kernel family."""
+    return kernel_from(fit.model.kernel).name
+
+
+def parameter_of(fit: CouplingFit, name: str) -> Estimate | None:
+    """A parameter with its interval, or None where the model has none of that name."""
+    table = fit.parameters
+    if name not in table.index:
+        return None
+    row = table.loc[name]
+    return Estimate(float(row["estimate"]), float(row["lower"]), float(row["upper"]), str(row["note"]))
+
+
+def coupling_at(fit: CouplingFit, distance_um: float) -> Estimate:
+    """J at one distance with its pointwise interval."""
+    row = fit.kernel_band(np.array([distance_um]), level=LEVEL).iloc[0]
+    value = float(row["estimate"])
+    reason = "" if math.isfinite(value) else f"the kernel has no value at {number_text(distance_um)} µm"
+    return Estimate(value, float(row["lower"]), float(row["upper"]), reason)
+
+
+def time_constant_of(fit: CouplingFit) -> Estimate:
+    """1 / leak rate, with the ends of the leak rate's interval turned round. Seconds."""
+    leak = parameter_of(fit, LEAK)
+    if leak is None or not leak.known or leak.value <= 0.0:
+        return Estimate(math.nan, reason="" if leak is None else leak.reason)
+    lower = 1.0 / leak.upper if leak.upper > 0.0 else math.nan
+    upper = 1.0 / leak.lower if leak.lower > 0.0 else math.nan
+    return Estimate(1.0 / leak.value, lower, upper, leak.reason)
+
+
+def change_text(jump: float, fit: CouplingFit, *, verb: bool = True) -> str:
+    """A jump as short words for a title: "raises the rate by 12 %"; without verb "12 %"."""
+    if not is_exp(fit):
+        size = number_text(abs(jump) if verb else jump, 2)
+        return f"{'lowers' if jump < 0 else 'raises'} the drive by {size}" if verb else size
+    if jump > math.log1p(MULTIPLES_FROM):
+        size = number_text(math.exp(jump), 2)
+        return f"multiplies the rate by {size}" if verb else f"{size} times"
+    percent = float(percent_of_rate(np.array([jump]))[0])
+    size = f"{number_text(abs(percent) if verb else percent, 2)}{spaced_unit('%')}"
+    return f"{'lowers' if jump < 0 else 'raises'} the rate by {size}" if verb else size
+
+
+# --- the findings in a sentence each ------------------------------------------------------------------
+
+
+def headline(fit: CouplingFit) -> str:
+    """What one spike does, in one sentence."""
+    if not fit.verdict.found:
+        return f"No coupling to describe ({p_sentence(fit.verdict.p_value)}): {fit.verdict.sentence}"
+    return one_spike_sentence(
+        fit.reference_distance_um,
+        coupling_at(fit, fit.reference_distance_um),
+        time_constant_of(fit),
+        link=link_name(fit),
+        level=LEVEL,
+        leak_fixed=fit.model.leak_rate is not None,
+    )
+
+
+def distance_sentence(fit: CouplingFit) -> str:
+    """How the effect depends on distance, at the nearest, the middle and the farthest pairs."""
+    pairs = fit.pairs_by_distance
+    distance = pairs["distance_um"].to_numpy(dtype=np.float64)
+    if distance.size == 0:
+        return "No pair of units is covered by the kernel."
+    upto = np.cumsum(pairs["n_pairs"].to_numpy(dtype=np.float64))
+    middle = float(distance[np.searchsorted(upto, 0.5 * upto[-1])])
+    chosen = np.unique([float(distance[0]), middle, float(distance[-1])])
+    jumps = tuple(coupling_at(fit, float(d)) for d in chosen)
+    return distances_sentence(chosen, jumps, link_name(fit))
+
+
+def described_sentence(goodness: Goodness) -> str:
+    """Whether the model describes the recording."""
+    return goodness_sentence(
+        goodness.n_tested,
+        goodness.n_rejected,
+        float(goodness.pooled["p_value"].iloc[0]),
+        1.0 - goodness.level,
+    )
+
+
+def sure_lead(fit: CouplingFit) -> str:
+    """How sure: the first sentence."""
+    ratios = fit.std_errors["ratio"].to_numpy(dtype=np.float64)
+    return sureness_sentence(fit.n_blocks, fit.block_length_s, ratios)
+
+
+def result_lines(fit: CouplingFit, goodness: Goodness) -> tuple[str, ...]:
+    """The result in five lines, for a console: effect, distance, sureness, description, gain."""
+    marked = "" if fit.converged else "The fit did not converge; this is where it stopped. "
+    return (
+        f"{marked}{headline(fit)}",
+        distance_sentence(fit),
+        sure_lead(fit),
+        described_sentence(goodness),
+        explained_sentence(goodness.deviance_explained, goodness.bits_per_spike),
+    )
