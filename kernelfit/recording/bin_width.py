@@ -154,11 +154,9 @@ def advise(
         reasons.append("Neighbours show no excess of coincidences over chance to go by.")
     else:
         wished = min(fall_s / _PART_OF_FALL, _WIDEST_S)
-        takes = (
-            "does not fall to half in 5 s" if np.isinf(fall_s) else f"takes {seconds(fall_s)} to fall to half"
-        )
+        takes = f"takes {seconds(fall_s)} to fall to half" if np.isfinite(fall_s) else "outlasts 5 s"
         if fall_s / _PART_OF_FALL > _WIDEST_S:
-            follow = f"{seconds(_WIDEST_S)} bins follow it; in wider ones the travel time from site to site is lost."
+            follow = f"{seconds(_WIDEST_S)} bins follow it; wider ones lose the travel time between sites."
         else:
             follow = "bins of about a tenth of that follow it."
         reasons.append(f"The excess of spike pairs between neighbours {takes}: {follow}")

@@ -40,12 +40,12 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
     yield Finding(
         "whole_array_events",
         "warning",
-        f"{counted(len(events.bounds), 'moment')} at which {events.threshold} or more of {events.n_active} active "
-        f"units fire within 1 ms of one spike (median {number(float(np.median(most)))}, at most {int(most.max())}); "
-        f"trains shifted by up to 50 ms give {_few(events.expected_by_chance)}. "
+        f"{counted(len(events.bounds), 'moment')} at which {events.threshold} or more of {events.n_active} "
+        f"active units fire within 1 ms of one spike (median {number(float(np.median(most)))}, at most "
+        f"{int(most.max())}); trains shifted by up to 50 ms give {_few(events.expected_by_chance)}. "
         f"{percent(share)} of the spikes lie there and make distant units look coupled.",
         f"{_stretch(events.bounds)}; see proposed_exclusions",
-        f"Leave them out: rec.with_exclusions(inspection.proposed_exclusions), or "
+        "Leave them out: rec.with_exclusions(inspection.proposed_exclusions), or "
         f"--exclusions proposed_exclusions.csv.{doubt}",
     )
     counts = e.train.counts()

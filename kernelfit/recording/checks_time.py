@@ -88,6 +88,5 @@ def _events(e: Evidence) -> Iterator[Finding]:
         f"{counted(burst.n_events, 'population event')} (runs of seconds above twice the mean).",
         "whole recording",
         "The effective sample is the number of events, not of spikes: trust the robust intervals, not the "
-        "model-based "
-        "ones" + (", and do not read much into a sample this small." if few else "."),
+        "model-based ones" + (", and do not read much into a sample this small." if few else "."),
     )
