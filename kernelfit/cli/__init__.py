@@ -27,9 +27,7 @@ __all__ = ["app", "main"]
 
 DONE, OWN_FAULT, WRONG_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 1, 2, 3, 130
 
-app = typer.Typer(
-    name="kernelfit", add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False
-)
+app = typer.Typer(name="kernelfit", add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False)
 app.command("inspect")(inspect_command)
 app.command("fit")(fit_command)
 app.command("demo")(demo_command)

@@ -22,6 +22,8 @@ from kernelfit.errors import FitWarning, KernelfitWarning
 from kernelfit.report.numbers import duration_text
 
 PLAIN_INTERVAL_S = 10.0  # between two progress lines where the line cannot rewrite itself
+NO_BREAK_SPACE = "\N{NO-BREAK SPACE}"
+SECONDS_UP_TO_S = 120.0  # from there on minutes
 MIN_ELAPSED_S = 1.0  # before this no rate of progress is worth a prediction
 
 
@@ -46,6 +48,7 @@ def _write(stream: TextIO, lines: tuple[str, ...]) -> None:
 
 def _printable(line: str, stream: TextIO) -> str:
     """The line without what this stream cannot carry: gaps of its encoding, control characters."""
+    line = line.replace(NO_BREAK_SPACE, " ")  # a line of a page may hold some; these lines are never broken
     kept = "".join(c if c.isprintable() else c.encode("unicode_escape").decode("ascii") for c in line)
     encoding = stream.encoding or "utf-8"
     return kept.encode(encoding, errors="backslashreplace").decode(encoding)
@@ -90,7 +93,7 @@ class _TimeLeft(ProgressColumn):
 
     def render(self, task: Task) -> Text:
         left = time_left_s(task.completed, task.elapsed or 0.0)
-        return Text("" if left is None else f"{duration_text(max(left, 1.0))} left")
+        return Text("" if left is None else f"{_whole_seconds(left)} left")
 
 
 def time_left_s(done: float, elapsed_s: float) -> float | None:
@@ -98,6 +101,10 @@ def time_left_s(done: float, elapsed_s: float) -> float | None:
     if done <= 0.0 or elapsed_s < MIN_ELAPSED_S:
         return None
     return elapsed_s * (1.0 - min(done, 1.0)) / done
+
+
+def _whole_seconds(left_s: float) -> str:
+    return f"{max(round(left_s), 1)} s" if left_s < SECONDS_UP_TO_S else duration_text(left_s)
 
 
 class ProgressLine:
@@ -140,5 +147,5 @@ class ProgressLine:
             return
         self._last_shown = now
         left = time_left_s(done, now - self._started)
-        rest = "" if left is None else f", about {duration_text(max(left, 1.0))} left"
+        rest = "" if left is None else f", about {_whole_seconds(left)} left"
         _write(self._stream, (f"{what}: {100 * done:.0f} %{rest}",))

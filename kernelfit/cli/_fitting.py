@@ -43,9 +43,7 @@ def fit_and_write(recording: Recording, model: CouplingModel, job: Job) -> int:
         fit = model.fit(recording, covariance=job.covariance, threads=job.threads, progress=progress)
         progress(1.0, "Testing the fit and writing the report")
         goodness = fit.goodness(seed=job.seed)
-        written = write_results(
-            job.out, fit, recording, goodness=goodness, truth=job.truth, overwrite=job.overwrite
-        )
+        written = write_results(job.out, fit, recording, goodness=goodness, truth=job.truth, overwrite=job.overwrite)
     for note in fit.notes:
         tell(f"{note.severity}: {note.what} ({note.where}) {note.remedy}".rstrip())
     say(*result_lines(fit, goodness))

@@ -41,9 +41,7 @@ ExclusionsOption: TypeAlias = Annotated[
 ]
 ExcludePairsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option(
-        "--exclude-pairs", metavar="FILE", help="Pairs left out of the kernel: columns unit_a, unit_b."
-    ),
+    typer.Option("--exclude-pairs", metavar="FILE", help="Pairs left out of the kernel: columns unit_a, unit_b."),
 ]
 TimeUnitOption: TypeAlias = Annotated[
     str,
@@ -102,9 +100,7 @@ StartOption: TypeAlias = Annotated[
 ]
 StopOption: TypeAlias = Annotated[
     float | None,
-    typer.Option(
-        "--stop-s", metavar="S", parser=number("--stop-s", CLOCK), help="Use the windows up to this time."
-    ),
+    typer.Option("--stop-s", metavar="S", parser=number("--stop-s", CLOCK), help="Use the windows up to this time."),
 ]
 UnitsOption: TypeAlias = Annotated[
     list[str] | None,

@@ -166,9 +166,7 @@ def fit_command(
     drop_duplicates: DropDuplicatesOption = False,
     threads: Annotated[
         int | None,
-        typer.Option(
-            "--threads", metavar="N", parser=whole("--threads", 1), help="Threads; all cores unless stated."
-        ),
+        typer.Option("--threads", metavar="N", parser=whole("--threads", 1), help="Threads; all cores unless stated."),
     ] = None,
     seed: Annotated[
         int,
