@@ -1,0 +1,159 @@
+"""What the sweep carries from bin to bin, and how it moves: the recursions of MODEL.md sections 3 and 4.
+
+A block of target units ("lanes") is swept at a time. `States.coupling` holds U and its derivatives P_k just after a bin's
+spikes were added; the next bin starts by decaying them. Named tuples, because compiled code takes them apart for nothing.
+"""
+
+from __future__ import annotations
+
+import math
+from typing import NamedTuple
+
+from kernelfit._typing import FloatArray, IntArray
+from kernelfit.engine.compiled import compiled, inlined
+
+
+class Events(NamedTuple):
+    """Non-empty (bin, unit) of a recording by bin, and which units are lanes of this block.
+
+    active_bin (A,) bins that hold a spike; active_first (A + 1,) their first row in unit and count; unit (E,) source index;
+    count (E,) spikes; lane_of_unit (n_units,) lane, or -1 where the unit is not a target of this block.
+    """
+
+    active_bin: IntArray
+    active_first: IntArray
+    unit: IntArray
+    count: FloatArray
+    lane_of_unit: IntArray
+
+
+class Dynamics(NamedTuple):
+    """leak (1/s), bin_width (s), trace_decay (M,) decay per bin of each after-spike trace, tables (1 + K, n_units, lanes):
+    the jump of U, then of each P_k, that a spike of the unit causes in the lane."""
+
+    leak: float
+    bin_width: float
+    trace_decay: FloatArray
+    tables: FloatArray
+
+
+class States(NamedTuple):
+    """coupling (1 + K, lanes): U and P_k; leak (lanes,) or empty: A = dU/dalpha; traces (M, lanes): own after-spike traces."""
+
+    coupling: FloatArray
+    leak: FloatArray
+    traces: FloatArray
+
+
+@compiled
+def decay(n_bins: int, dynamics: Dynamics, states: States) -> None:
+    """Let the states run `n_bins` bins without a spike: U by gamma^g, A to gamma^g (A - g D U), traces by their own decay."""
+    factor = math.exp(-dynamics.leak * dynamics.bin_width * n_bins)
+    u = states.coupling[0]
+    for i in range(states.leak.size):
+        states.leak[i] = factor * (states.leak[i] - n_bins * dynamics.bin_width * u[i])
+    for k in range(states.coupling.shape[0]):
+        row = states.coupling[k]
+        for i in range(row.size):
+            row[i] *= factor
+    for m in range(states.traces.shape[0]):
+        row = states.traces[m]
+        factor = dynamics.trace_decay[m] ** n_bins
+        for i in range(row.size):
+            row[i] *= factor
+
+
+@inlined
+def jump(active: int, events: Events, dynamics: Dynamics, states: States) -> None:
+    """Add the spikes of one active bin to the states: a row of each table per source, and one to own traces."""
+    for e in range(events.active_first[active], events.active_first[active + 1]):
+        unit = events.unit[e]
+        count = events.count[e]
+        for k in range(states.coupling.shape[0]):
+            row = states.coupling[k]
+            jumps = dynamics.tables[k, unit]
+            for i in range(row.size):
+                row[i] += count * jumps[i]
+        lane = events.lane_of_unit[unit]
+        if lane >= 0:
+            for m in range(states.traces.shape[0]):
+                states.traces[m, lane] += count
+
+
+@compiled
+def advance(at: int, stop: int, active: int, events: Events, dynamics: Dynamics, states: States) -> int:
+    """Carry the states from bin `at` to bin `stop - 1`, spikes on the way included; returns the next active bin's index."""
+    while active < events.active_bin.size and events.active_bin[active] < stop:
+        decay(events.active_bin[active] - at, dynamics, states)
+        at = events.active_bin[active]
+        jump(active, events, dynamics, states)
+        active += 1
+    if stop - 1 > at:
+        decay(stop - 1 - at, dynamics, states)
+    return active
+
+
+@inlined
+def fill_rows(
+    t0: int,
+    n_bins: int,
+    active: int,
+    events: Events,
+    dynamics: Dynamics,
+    states: States,
+    rows: FloatArray,
+    first_trace_row: int,
+) -> int:
+    """Fill a tile of `n_bins` bins from bin `t0` on with the states (rows U, P_k, A; then the traces).
+
+    Each bin decays every state, writes it into its row of the tile and then adds the bin's own spikes. Returns the next
+    active bin's index. The decay is written out here: a call a bin would cost as much as the bin.
+    """
+    gamma = math.exp(-dynamics.leak * dynamics.bin_width)
+    width = dynamics.bin_width
+    coupling, leak, traces, trace_decay = states.coupling, states.leak, states.traces, dynamics.trace_decay
+    lanes = coupling.shape[1]
+    next_bin = events.active_bin[active] if active < events.active_bin.size else -1
+    for t in range(n_bins):
+        for k in range(coupling.shape[0]):
+            s = coupling[k]
+            row = rows[k][t * lanes : (t + 1) * lanes]
+            for i in range(lanes):
+                s[i] *= gamma
+                row[i] = s[i]
+        if leak.size > 0:
+            u = coupling[0]
+            row = rows[coupling.shape[0]][t * lanes : (t + 1) * lanes]
+            for i in range(lanes):
+                leak[i] = gamma * leak[i] - width * u[i]
+                row[i] = leak[i]
+        for m in range(traces.shape[0]):
+            s = traces[m]
+            row = rows[first_trace_row + m][t * lanes : (t + 1) * lanes]
+            g = trace_decay[m]
+            for i in range(lanes):
+                s[i] *= g
+                row[i] = s[i]
+        if next_bin == t0 + t:
+            jump(active, events, dynamics, states)
+            active += 1
+            next_bin = events.active_bin[active] if active < events.active_bin.size else -1
+    return active
+
+
+@inlined
+def predictor_into(
+    baseline: FloatArray, coefficient: FloatArray, rows: FloatArray, first_trace_row: int, eta: FloatArray
+) -> None:
+    """eta = b + U + sum_m c_m S_m over a tile; coefficient (M, lanes)."""
+    lanes = baseline.size
+    for t in range(eta.size // lanes):
+        u = rows[0][t * lanes : (t + 1) * lanes]
+        out = eta[t * lanes : (t + 1) * lanes]
+        for i in range(lanes):
+            out[i] = baseline[i] + u[i]
+        for m in range(coefficient.shape[0]):
+            c = coefficient[m]
+            s = rows[first_trace_row + m][t * lanes : (t + 1) * lanes]
+            for i in range(lanes):
+                out[i] += c[i] * s[i]

@@ -1,0 +1,200 @@
+"""Windows and bins: from spike times to sparse sorted counts on one timeline (MODEL.md sections 1 and 3).
+
+All windows of a recording lie on one timeline of bins. Bin 0 starts with the first window; each further window starts
+on a whole bin, the gap before it rounded up. A spike in a window falls into bin floor((t - start)/width + 1e-6) of
+that window; a spike between windows is history, counted back from the start of the next one.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit.errors import GridError
+from kernelfit.recording.recording import Recording
+
+EDGE_TOLERANCE = 1e-6  # of a bin; times that lie on bin edges fall the same way on every machine
+MAX_BINS = 2**40
+
+
+@dataclass(frozen=True, eq=False)
+class Grid:
+    """Sparse counts of a recording at one bin width.
+
+    Parameters
+    ----------
+    bin_width : seconds
+    n_units : units of the recording, all of them
+    event_bin : (n_events,) timeline bin of each non-empty (bin, unit); negative before the first window
+    event_unit : (n_events,) unit index; events are sorted by bin, then unit
+    event_count : (n_events,) spikes in it
+    stretches : (n_stretches, 2) timeline bins [start, stop) that count in the likelihood
+    window_of_stretch : (n_stretches,) index of the window each stretch lies in
+    window_first_bin, window_n_bins : (n_windows,) where each window lies on the timeline
+    window_start_s : (n_windows,) start of each window, seconds
+    counts_in_sum : (n_units,) spikes in bins that count
+    n_outside : spikes of the recording outside all windows (kept as history where they come before one)
+    n_excluded : spikes inside exclusions, which drive nothing
+    """
+
+    bin_width: float
+    n_units: int
+    event_bin: IntArray = field(repr=False)
+    event_unit: IntArray = field(repr=False)
+    event_count: IntArray = field(repr=False)
+    stretches: IntArray = field(repr=False)
+    window_of_stretch: IntArray = field(repr=False)
+    window_first_bin: IntArray = field(repr=False)
+    window_n_bins: IntArray = field(repr=False)
+    window_start_s: FloatArray = field(repr=False)
+    counts_in_sum: IntArray = field(repr=False)
+    n_outside: int
+    n_excluded: int
+
+    @property
+    def n_bins(self) -> int:
+        """Bins that count in the likelihood."""
+        return int(np.sum(self.stretches[:, 1] - self.stretches[:, 0]))
+
+    @property
+    def duration_s(self) -> float:
+        """Time that counts in the likelihood, seconds."""
+        return self.n_bins * self.bin_width
+
+    def bins_in_sum(self, bins: IntArray) -> BoolArray:
+        """(n,) True where a timeline bin counts in the likelihood."""
+        k = np.searchsorted(self.stretches[:, 0], bins, side="right") - 1
+        return np.asarray((k >= 0) & (bins < self.stretches[np.maximum(k, 0), 1]), dtype=bool)
+
+
+def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0) -> Grid:
+    """Counts of `recording` in bins of `bin_width` seconds.
+
+    Parameters
+    ----------
+    recording : what was recorded
+    bin_width : seconds; an incomplete last bin of a window is left out
+    warm_up_s : seconds after every window start and every exclusion that feed the state but leave the sum
+
+    Raises
+    ------
+    GridError : the width is not a positive number, is wider than a window, or leaves no bin to sum over
+    """
+    _check_width(recording, bin_width, warm_up_s)
+    bounds = recording.window_bounds
+    n_bins = np.floor((bounds[:, 1] - bounds[:, 0]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+    _check_windows(recording, bin_width, n_bins)
+    steps = np.ceil(np.diff(bounds[:, 0]) / bin_width - EDGE_TOLERANCE).astype(np.int64)
+    first_bin = np.concatenate([[0], np.cumsum(steps)]).astype(np.int64)
+
+    stretches, window_of = _stretches(recording, bin_width, warm_up_s, first_bin, n_bins)
+    if len(stretches) == 0:
+        raise GridError(
+            f"{recording.origin.name('exclusions')}: with bins of {bin_width:g} s, exclusions and a warm-up of {warm_up_s:g} s "
+            "leave no bin of any window. Use fewer exclusions, a shorter warm-up or narrower bins."
+        )
+    event_bin, event_unit, event_count, n_outside, n_excluded = _events(recording, bin_width, first_bin, n_bins)
+    grid = Grid(
+        bin_width=float(bin_width),
+        n_units=recording.n_units,
+        event_bin=event_bin,
+        event_unit=event_unit,
+        event_count=event_count,
+        stretches=stretches,
+        window_of_stretch=window_of,
+        window_first_bin=first_bin,
+        window_n_bins=n_bins,
+        window_start_s=np.array(bounds[:, 0]),
+        counts_in_sum=np.zeros(recording.n_units, dtype=np.int64),
+        n_outside=n_outside,
+        n_excluded=n_excluded,
+    )
+    inside = grid.bins_in_sum(event_bin)
+    np.add.at(grid.counts_in_sum, event_unit[inside], event_count[inside])
+    return grid
+
+
+def _check_width(recording: Recording, bin_width: float, warm_up_s: float) -> None:
+    if not (math.isfinite(bin_width) and bin_width > 0):
+        raise GridError(f"bin_width={bin_width} is not a width. Give a positive number of seconds, such as 0.001.")
+    if not (math.isfinite(warm_up_s) and warm_up_s >= 0):
+        raise GridError(f"warm_up_s={warm_up_s} is not a time. Give seconds, 0 or more.")
+    if recording.duration / bin_width > MAX_BINS:
+        raise GridError(
+            f"bin_width={bin_width:g} s cuts {recording.duration:g} s into more than {MAX_BINS} bins. "
+            "Is the width in seconds? 1 ms is 0.001."
+        )
+
+
+def _check_windows(recording: Recording, bin_width: float, n_bins: IntArray) -> None:
+    if (n_bins > 0).all():
+        return
+    k = int(np.flatnonzero(n_bins == 0)[0])
+    start, stop = recording.window_bounds[k]
+    raise GridError(
+        f"{recording.origin.name('windows')}: bin_width={bin_width:g} s is wider than window {k + 1} "
+        f"({start:g} to {stop:g} s). Use bins of at most {stop - start:g} s. Is the width in seconds? 10 ms is 0.01."
+    )
+
+
+def _stretches(
+    recording: Recording, bin_width: float, warm_up_s: float, first_bin: IntArray, n_bins: IntArray
+) -> tuple[IntArray, IntArray]:
+    """Windows less exclusions and warm-up: (n, 2) timeline bins and the window of each."""
+    warm = math.ceil(warm_up_s / bin_width - EDGE_TOLERANCE)
+    rows: list[tuple[int, int]] = []
+    owner: list[int] = []
+    for w, (start, stop) in enumerate(recording.window_bounds):
+        at = warm
+        cut = recording.exclusion_bounds
+        cut = cut[(cut[:, 1] > start) & (cut[:, 0] < stop)]
+        low = np.floor((cut[:, 0] - start) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+        high = np.ceil((cut[:, 1] - start) / bin_width - EDGE_TOLERANCE).astype(np.int64)
+        for a, b in zip([*low, n_bins[w]], [*high, n_bins[w]], strict=True):
+            end = min(int(a), int(n_bins[w]))
+            if end > at:
+                rows.append((int(first_bin[w]) + at, int(first_bin[w]) + end))
+                owner.append(w)
+            at = max(at, int(b) + warm)
+    return np.array(rows, dtype=np.int64).reshape(-1, 2), np.array(owner, dtype=np.int64)
+
+
+def _events(
+    recording: Recording, bin_width: float, first_bin: IntArray, n_bins: IntArray
+) -> tuple[IntArray, IntArray, IntArray, int, int]:
+    """Non-empty (bin, unit) with their counts, and how many spikes lay outside windows and inside exclusions."""
+    unit = np.repeat(np.arange(recording.n_units, dtype=np.int64), [t.size for t in recording.trains])
+    time_s = np.concatenate(recording.trains)
+    outside = int(time_s.size) - recording.n_spikes
+
+    cut = recording.exclusion_bounds
+    k = np.searchsorted(cut[:, 0], time_s, side="right") - 1
+    excluded = (k >= 0) & (time_s < cut[np.maximum(k, 0), 1]) if len(cut) else np.zeros(time_s.size, dtype=bool)
+    unit, time_s = unit[~excluded], time_s[~excluded]
+
+    start = recording.window_bounds[:, 0]
+    w = np.searchsorted(start, time_s, side="right") - 1
+    within = np.floor((time_s - start[np.maximum(w, 0)]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+    inside = (w >= 0) & (within < n_bins[np.maximum(w, 0)])
+    following = np.minimum(w + 1, len(start) - 1)
+    back = np.floor((time_s - start[following]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+    bins = np.where(
+        inside, first_bin[np.maximum(w, 0)] + within, first_bin[following] + np.minimum(back, -1)
+    )
+    useful = inside | (w + 1 < len(start))  # after the last window nothing is left to drive
+    bins, unit = bins[useful], unit[useful]
+    if bins.size == 0:
+        empty = np.empty(0, dtype=np.int64)
+        return empty, empty, empty, outside, int(excluded.sum())
+    low = bins.min()
+    key, count = np.unique((bins - low) * recording.n_units + unit, return_counts=True)
+    return (
+        key // recording.n_units + low,
+        key % recording.n_units,
+        count.astype(np.int64),
+        outside,
+        int(excluded.sum()),
+    )
