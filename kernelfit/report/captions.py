@@ -5,6 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from kernelfit.errors import Unavailable
 from kernelfit.recording.recording import Recording
 from kernelfit.report.figure_data import ArrayData, KernelData, RasterData
@@ -96,9 +98,10 @@ def _array(array: ArrayData) -> str:
         else ""
     )
     scale = " Logarithmic colours." if array.on_log_scale else ""
+    silent = " Open marks: units without spikes, not estimable." if not np.isfinite(array.value).all() else ""
     return (
         "Baseline rate of each unit, the rate it would have without any coupling and own spikes, at its site "
-        f"(crosses: sites as recorded).{scale}{shared} Open marks: units without spikes, not estimable."
+        f"(crosses: sites as recorded).{scale}{shared}{silent}"
     )
 
 

@@ -226,7 +226,8 @@ def notices(fit: CouplingFit) -> tuple[Notice, ...]:
             *marked[:NOTICES_SHOWN],
             Notice(
                 "info",
-                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How sure\N{RIGHT DOUBLE QUOTATION MARK}.",
+                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How "
+                "sure\N{RIGHT DOUBLE QUOTATION MARK}.",
             ),
         ]
     return tuple(marked)

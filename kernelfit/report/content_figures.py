@@ -37,6 +37,7 @@ from kernelfit.report.readings import (
     coupling_at,
     is_exp,
     time_constant_of,
+    told_distances,
 )
 from kernelfit.report.words import listed, percent_of_rate
 
@@ -75,7 +76,7 @@ def kernel_data(fit: CouplingFit) -> KernelData | Unavailable:
     if not np.isfinite(curve[0]).any():
         return Unavailable("the kernel has no finite value at any distance")
     return KernelData(
-        title=kernel_title(fit, distances),
+        title=kernel_title(fit),
         distance_um=grid,
         jump=curve[0],
         lower=curve[1],
@@ -117,19 +118,18 @@ def pair_counts(pairs: pd.DataFrame) -> PairCounts:
     return PairCounts(middle, collected.astype(np.float64), float(edges[1] - edges[0]), True)
 
 
-def kernel_title(fit: CouplingFit, distances_um: FloatArray) -> str:
+def kernel_title(fit: CouplingFit) -> str:
     """The finding of the kernel figure."""
     if not fit.verdict.found:
         return "No coupling to describe"
     near = coupling_at(fit, fit.reference_distance_um)
-    far_um = float(distances_um[-1])
-    far = coupling_at(fit, far_um)
     if not near.known:
         return "The kernel could not be estimated"
     first = f"One spike {change_text(near.value, fit)} at {distance_label(fit.reference_distance_um)}"
-    if not far.known or far_um < 1.5 * fit.reference_distance_um:
+    farther = [d for d in told_distances(fit) if d > 1.5 * fit.reference_distance_um]
+    if not farther or not (far := coupling_at(fit, float(farther[0]))).known:
         return first
-    return f"{first}; {change_text(far.value, fit, verb=False)} at {distance_label(far_um)}"
+    return f"{first}, {change_text(far.value, fit, verb=False)} at {distance_label(float(farther[0]))}"
 
 
 def course_data(fit: CouplingFit) -> CourseData | Unavailable:
@@ -141,9 +141,8 @@ def course_data(fit: CouplingFit) -> CourseData | Unavailable:
     if not tau.known or tau.value <= 0.0:
         return Unavailable(f"the time constant is not known ({tau.reason})")
     lag = np.linspace(0.0, COURSE_IN_TIME_CONSTANTS * tau.value, 200)
-    distances = fit.pairs_by_distance["distance_um"].to_numpy(dtype=np.float64)
     reference = fit.reference_distance_um
-    others = [d for d in (float(np.median(distances)), float(distances[-1])) if abs(d - reference) > 0.2 * reference]
+    others = [float(d) for d in told_distances(fit) if abs(d - reference) > 0.2 * reference]
     jumps = fit.kernel(np.array([reference, *others]))
     if not np.isfinite(jumps[0]):
         return Unavailable("the kernel has no finite value at the reference distance")
@@ -339,6 +338,12 @@ def round_length(length_um: float) -> float:
     return float(max(m * decade for m in (1.0, 2.0, 5.0) if m * decade <= length_um * (1 + 1e-9)))
 
 
+def round_up(value: float) -> float:
+    """The smallest of ... 0.1, 0.2, 0.5, 1, 2, 5 ... that is not smaller."""
+    decade = 10.0 ** math.floor(math.log10(value))
+    return float(min(m * decade for m in (1.0, 2.0, 5.0, 10.0) if m * decade >= value * (1 - 1e-9)))
+
+
 def baseline_data(fit: CouplingFit) -> ArrayData:
     """The array map of baseline rates."""
     rate = fit.baselines["rate_hz"].to_numpy(dtype=np.float64)
@@ -361,7 +366,7 @@ def raster_data(fit: CouplingFit, recording: Recording) -> RasterData | Unavaila
         return Unavailable("the recording holds no stretch of a second without exclusions")
     start, stop = stretch
     rates = fit.fitted_rates(start, stop, recording)
-    per_point = max(1, round((stop - start) / RATE_POINTS / fit.model.bin_width))
+    per_point = max(1, round(round_up((stop - start) / RATE_POINTS) / fit.model.bin_width))
     n_points = rates.time_s.size // per_point
     if n_points == 0:
         return Unavailable("the stretch holds no bin that counts")

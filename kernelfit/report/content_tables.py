@@ -43,7 +43,7 @@ _MEANINGS = {
     "wide_length_um": "wide part, length",
     "radius_um": "radius of the disc",
     "same_site": "effect J of one spike on the same site",
-    LEAK: "leak rate, 1 / time constant",
+    LEAK: "leak rate",
 }
 
 
@@ -58,7 +58,7 @@ def value_cell(value: float, digits: int = 3, *, unit: str = "") -> Cell:
     """A number in a table, with more decimals than prose has; words where it is missing."""
     if not math.isfinite(value):
         return Cell("not estimable")
-    return Cell(f"{number_text(value, digits, max_decimals=TABLE_DECIMALS)}{spaced_unit(unit)}", value)
+    return Cell(f"{number_text(value, digits, max_decimals=TABLE_DECIMALS, keep_zeros=True)}{spaced_unit(unit)}", value)
 
 
 def parameter_table(fit: CouplingFit) -> Table:
@@ -70,10 +70,9 @@ def parameter_table(fit: CouplingFit) -> Table:
         rows.append(
             (
                 Cell(str(name)),
-                Cell(meaning(str(name), fit.reference_distance_um)),
+                Cell(f"{meaning(str(name), fit.reference_distance_um)}{_unit_shown(str(row['unit']))}"),
                 Cell(shown, estimate if math.isfinite(estimate) else None),
-                Cell(_unit_shown(str(row["unit"]))),
-                Cell(str(row["note"])),
+                Cell(_note(row["note"])),
             )
         )
     tau = time_constant_of(fit)
@@ -82,18 +81,16 @@ def parameter_table(fit: CouplingFit) -> Table:
             Cell("time constant"),
             Cell("how long the effect of a spike lasts"),
             Cell(time_text(tau.value, tau.lower, tau.upper), tau.value) if tau.known else Cell(tau.text()),
-            Cell(""),
-            Cell("given by the leak rate"),
+            Cell("1 / leak rate"),
         )
     )
     return Table(
         caption=f"Parameters with {level_text(LEVEL)} intervals ({_kind(fit)})",
         columns=(
             Column("name", numeric=False),
-            Column("what it is", numeric=False),
+            Column("what it is", numeric=False, wraps=True),
             Column("estimate (interval)"),
-            Column("unit", numeric=False),
-            Column("note", numeric=False),
+            Column("note", numeric=False, wraps=True),
         ),
         rows=tuple(rows),
         file="parameters.csv",
@@ -101,7 +98,7 @@ def parameter_table(fit: CouplingFit) -> Table:
 
 
 def _unit_shown(unit: str) -> str:
-    return "" if unit in {"1", "nan"} else unit
+    return "" if unit in {"", "1", "nan"} else f" ({unit})"
 
 
 def _kind(fit: CouplingFit) -> str:
@@ -158,7 +155,7 @@ def goodness_table(goodness: Goodness) -> Table:
             Column("p, corrected"),
             Column("p, plain"),
             Column("verdict", numeric=False),
-            Column("note", numeric=False),
+            Column("note", numeric=False, wraps=True),
         ),
         rows=tuple(rows),
         file="goodness.csv",
@@ -222,7 +219,7 @@ def unit_table(fit: CouplingFit, recording: Recording) -> Table:
             Column("baseline rate (Hz)"),
             Column("baseline b"),
             Column("std. error of b"),
-            Column("note", numeric=False),
+            Column("note", numeric=False, wraps=True),
         ),
         rows=tuple(rows),
         file="baselines.csv",
@@ -244,11 +241,10 @@ def truth_table(fit: CouplingFit, truth: Truth) -> Table:
             shown, inside = "not a parameter of this model", ""
         rows.append(
             (
-                Cell(meaning(value.name, fit.reference_distance_um)),
-                value_cell(value.value),
+                Cell(f"{meaning(value.name, fit.reference_distance_um)}{_unit_shown(value.unit)}"),
+                Cell(number_text(value.value, 4, max_decimals=TABLE_DECIMALS), value.value),
                 Cell(shown),
                 Cell(inside),
-                Cell(_unit_shown(value.unit)),
             )
         )
     return Table(
@@ -258,7 +254,6 @@ def truth_table(fit: CouplingFit, truth: Truth) -> Table:
             Column("truth"),
             Column(f"estimate ({level_text(LEVEL)} interval)"),
             Column("truth inside the interval", numeric=False),
-            Column("unit", numeric=False),
         ),
         rows=tuple(rows),
     )
@@ -290,7 +285,8 @@ def recording_facts(fit: CouplingFit, recording: Recording) -> Definition:
         rows.append(
             (
                 "where the window comes from",
-                "no windows were given: from the floor of the first spike to the first whole second after the last",
+                "no windows were given: from the floor of the first spike to the first whole second after "
+                "the last",
             )
         )
     excluded = recording.exclusion_bounds

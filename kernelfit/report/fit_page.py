@@ -265,7 +265,8 @@ def _kernel(content: FitContent, pictures: dict[str, Picture]) -> Section:
         "The kernel",
         content.coupling_lead,
         blocks,
-        beside=_shown(pictures, "kernel", "time-course", "after-spike"),
+        beside=_shown(pictures, "kernel"),
+        below=_shown(pictures, "time-course", "after-spike"),
     )
 
 

@@ -95,9 +95,10 @@ def _data_sentence(fit: CouplingFit, recording: Recording) -> str:
     if recording.excluded_pairs:
         left_out.append(f"{count_text(len(recording.excluded_pairs))} pairs of units")
     silent = int((recording.counts == 0).sum())
-    if silent:
-        left_out.append(f"{count_text(silent)} silent {'unit' if silent == 1 else 'units'} as targets")
     without = f"; {listed(left_out)} were left out" if left_out else ""
+    if silent:
+        units = "one silent unit was" if silent == 1 else f"{count_text(silent)} silent units were"
+        without += f"; {units} not explained"
     return (
         f"Spike trains of {count_text(recording.n_units)} units ({count_text(fit.n_spikes)} spikes in "
         f"{count_text(fit.duration_s)} s{in_windows}{without}) were described by a mutually exciting point "
@@ -133,7 +134,8 @@ def _model_sentences(fit: CouplingFit) -> list[str]:
     ]
     if fit.after_spike_test is None:
         sentences.append(
-            "Effects of a unit's own earlier spikes were modelled per unit on a basis of logarithmically spaced lags."
+            "Effects of a unit's own earlier spikes were modelled per unit on a basis of logarithmically "
+            "spaced lags."
         )
     if model.warm_up_s > 0.0:
         sentences.append(

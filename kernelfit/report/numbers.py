@@ -31,10 +31,11 @@ def decimals_for(half_width: float, digits: int = 2) -> int:
     return digits - 1 - place
 
 
-def number_text(value: float, digits: int = 3, *, max_decimals: int = PROSE_DECIMALS) -> str:
+def number_text(value: float, digits: int = 3, *, max_decimals: int = PROSE_DECIMALS, keep_zeros: bool = False) -> str:
     """A lone number to `digits` significant digits, never more than `max_decimals` decimals.
 
-    Integer digits are never rounded away: 90145 stays 90,145.
+    Integer digits are never rounded away: 90145 stays 90,145. Zeros at the end of the decimals are left out, so
+    that 5 ms is not "5.00 ms", unless `keep_zeros` asks for them (columns of figures).
     """
     if math.isnan(value):
         return "not known"
@@ -42,7 +43,8 @@ def number_text(value: float, digits: int = 3, *, max_decimals: int = PROSE_DECI
         return "infinite" if value > 0 else f"{MINUS}infinite"
     if value == 0.0:
         return "0"
-    return fixed_text(value, min(max(decimals_for(abs(value), digits), 0), max_decimals))
+    text = fixed_text(value, min(max(decimals_for(abs(value), digits), 0), max_decimals))
+    return text if keep_zeros or "." not in text else text.rstrip("0").rstrip(".")
 
 
 def count_text(value: float) -> str:

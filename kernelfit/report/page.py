@@ -68,10 +68,16 @@ class Cell:
 
 @dataclass(frozen=True, slots=True)
 class Column:
-    """Heading of a column; figures stand to the right."""
+    """Heading of a column; figures stand to the right, and only columns of text that `wraps` break lines."""
 
     title: str
     numeric: bool = True
+    wraps: bool = False
+
+    @property
+    def style(self) -> str:
+        """Classes of its cells."""
+        return " ".join(w for w, wanted in (("number", self.numeric), ("wraps", self.wraps)) if wanted)
 
 
 @dataclass(frozen=True, slots=True)

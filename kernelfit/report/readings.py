@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from kernelfit._typing import FloatArray
 from kernelfit.kernels.registry import kernel_from
 from kernelfit.report.numbers import number_text, p_sentence, spaced_unit
 from kernelfit.report.words import (
@@ -101,17 +102,21 @@ def headline(fit: CouplingFit) -> str:
     )
 
 
-def distance_sentence(fit: CouplingFit) -> str:
-    """How the effect depends on distance, at the nearest, the middle and the farthest pairs."""
-    pairs = fit.pairs_by_distance
-    distance = pairs["distance_um"].to_numpy(dtype=np.float64)
+def told_distances(fit: CouplingFit) -> FloatArray:
+    """Distances with pairs nearest to one, two and four times the reference distance: where effects are told."""
+    distance = fit.pairs_by_distance["distance_um"].to_numpy(dtype=np.float64)
     if distance.size == 0:
+        return distance
+    wanted = fit.reference_distance_um * np.array([1.0, 2.0, 4.0])
+    return np.asarray(np.unique([distance[np.argmin(np.abs(distance - w))] for w in wanted]))
+
+
+def distance_sentence(fit: CouplingFit) -> str:
+    """How the effect depends on distance, at about one, two and four times the reference distance."""
+    chosen = told_distances(fit)
+    if chosen.size == 0:
         return "No pair of units is covered by the kernel."
-    upto = np.cumsum(pairs["n_pairs"].to_numpy(dtype=np.float64))
-    middle = float(distance[np.searchsorted(upto, 0.5 * upto[-1])])
-    chosen = np.unique([float(distance[0]), middle, float(distance[-1])])
-    jumps = tuple(coupling_at(fit, float(d)) for d in chosen)
-    return distances_sentence(chosen, jumps, link_name(fit))
+    return distances_sentence(chosen, tuple(coupling_at(fit, float(d)) for d in chosen), link_name(fit))
 
 
 def described_sentence(goodness: Goodness) -> str:

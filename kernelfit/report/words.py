@@ -27,6 +27,7 @@ from kernelfit.report.numbers import (
 
 MULTIPLES_FROM = 2.0  # a rate that triples is "multiplied by 3.0", not "raised by 200 %"
 RATIO_WORTH_SAYING = 1.2
+NOTHING_PERCENT = 0.1  # an effect all of whose interval is smaller is "below 0.1 %"
 
 
 @dataclass(frozen=True, slots=True)
@@ -162,17 +163,22 @@ def distances_sentence(distances_um: FloatArray, jumps: tuple[Estimate, ...], li
     """
     parts = []
     for distance, jump in zip(distances_um, jumps, strict=True):
-        if not jump.known:
-            continue
-        ends = np.array([jump.value, jump.lower, jump.upper])
-        if link == "exp":
-            ends = percent_of_rate(ends)
-        shown = interval_text(float(ends[0]), float(ends[1]), float(ends[2]), "%" if link == "exp" else "")
-        parts.append(f"{shown} at {distance_label(float(distance))}")
+        if jump.known:
+            parts.append(f"{_size_text(jump, link)} at {distance_label(float(distance))}")
     if not parts:
         return ""
     subject = "The change of the rate is" if link == "exp" else "The jump of the drive is"
     return f"{subject} {listed(parts)}."
+
+
+def _size_text(jump: Estimate, link: str) -> str:
+    """The effect with its interval, "below 0.1 %" where all of it is."""
+    if link != "exp":
+        return interval_text(jump.value, jump.lower, jump.upper)
+    ends = percent_of_rate(np.array([jump.value, jump.lower, jump.upper]))
+    if np.nanmax(np.abs(ends)) < NOTHING_PERCENT:
+        return f"below {number_text(NOTHING_PERCENT)}{spaced_unit('%')}"
+    return interval_text(float(ends[0]), float(ends[1]), float(ends[2]), "%", max_decimals=2)
 
 
 def length_sentence(kernel_name: str, length_um: Estimate) -> str:
@@ -259,9 +265,9 @@ def goodness_sentence(n_tested: int, n_rejected: int, pooled_p: float, level: fl
     if math.isnan(pooled_p):
         return f"{first} ({how})."
     if pooled_p < level:
-        together = f"all units taken together, it is rejected ({p_sentence(pooled_p)})"
+        together = f"taken together, the units speak against it ({p_sentence(pooled_p)})"
     else:
-        together = f"all units taken together, nothing speaks against it ({p_sentence(pooled_p)})"
+        together = f"taken together, nothing speaks against it ({p_sentence(pooled_p)})"
     return f"{first} ({how}); {together}."
 
 
