@@ -1,4 +1,4 @@
-"""Does the model describe the recording? KS tests by unit and of all units together; gain on constant rates."""
+"""Does the model describe the recording? KS tests of each unit and of all together; gain on constant rates."""
 
 from __future__ import annotations
 
@@ -79,16 +79,18 @@ class Goodness:
     def z(self, unit: str) -> FloatArray:
         """(n_gaps,) sorted z of one unit: 1 - exp(-gap / mean gap), uniform where the model is right.
 
+        Empty where there is no gap or the expected counts are zero or not finite.
+
         Raises
         ------
         RecordingError : no such unit
         """
-        return np.sort(_normalised(self._train(unit).gaps))
+        return np.sort(_z(self._train(unit)))
 
     @property
     def pooled_z(self) -> FloatArray:
         """(n_gaps,) sorted z of all units taken as one process."""
-        return np.sort(_normalised(self.pooled_train.gaps))
+        return np.sort(_z(self.pooled_train))
 
     def ks_curve(self, unit: str | None = None) -> KsCurve:
         """Data of the KS plot of one unit, or of all units taken as one process.
@@ -109,9 +111,7 @@ class Goodness:
             level=self.level,
         )
 
-    def serial_independence(
-        self, unit: str | None = None, *, n_lags: int = 10
-    ) -> SerialIndependence | Unavailable:
+    def serial_independence(self, unit: str | None = None, *, n_lags: int = 10) -> SerialIndependence | Unavailable:
         """Whether successive gaps of a unit (or of all units as one process) are independent, by Ljung-Box.
 
         Raises
@@ -120,7 +120,7 @@ class Goodness:
         ArgumentError : n_lags below 1
         """
         train = self.pooled_train if unit is None else self._train(unit)
-        return serial_independence(_normalised(train.gaps), n_lags=n_lags)
+        return serial_independence(_z(train), n_lags=n_lags)
 
     @property
     def n_tested(self) -> int:
@@ -137,9 +137,7 @@ class Goodness:
             place = self.units.index.get_loc(unit)
         except KeyError:
             known = ", ".join(map(repr, list(self.units.index[:3])))
-            raise RecordingError(
-                f"No unit {unit!r} in this fit. Ids are text; the first are {known}."
-            ) from None
+            raise RecordingError(f"No unit {unit!r} in this fit. Ids are text; the first are {known}.") from None
         if not isinstance(place, int):
             raise RecordingError(f"Unit {unit!r} is listed more than once.")
         return self.trains[place]
@@ -200,19 +198,21 @@ def goodness_of_fit(
     )
 
 
-def _normalised(gaps: FloatArray) -> FloatArray:
-    """z of gaps divided by their own mean; shape as `gaps`."""
-    mean = float(np.mean(gaps)) if gaps.size else 0.0
-    return uniform_scale(gaps / mean) if mean > 0.0 else np.zeros(gaps.shape)
+def _z(train: RescaledTrain) -> FloatArray:
+    """(n_gaps,) z of gaps divided by their own mean, in time order; empty where they have none."""
+    if _no_clock(train):
+        return np.empty(0)
+    gaps = train.gaps
+    return uniform_scale(gaps / np.mean(gaps))
 
 
 def _test(train: RescaledTrain) -> tuple[int, float, float, float, float, str]:
     """One row of the table; p_adjusted is left open."""
-    gaps = train.gaps
     reason = _no_test(train)
     if reason:
         return train.n_spikes, np.nan, np.nan, np.nan, np.nan, reason
-    distance = ks.ks_distance(_normalised(gaps))
+    gaps = train.gaps
+    distance = ks.ks_distance(_z(train))
     p_value = ks.estimated_mean_p_value(distance, gaps.size)
     plain = ks.known_p_value(ks.ks_distance(uniform_scale(gaps)), gaps.size)
     note = f"p-value is {ks.SMALLEST_P_VALUE:g} or less" if p_value <= ks.SMALLEST_P_VALUE else ""
@@ -226,6 +226,13 @@ def _no_test(train: RescaledTrain) -> str:
     if train.n_spikes <= ks.SMALLEST_SAMPLE:
         spikes = "1 spike" if train.n_spikes == 1 else f"{train.n_spikes} spikes"
         return f"{spikes} in the likelihood: too few to test, {ks.SMALLEST_SAMPLE + 1} are needed"
+    return _no_clock(train)
+
+
+def _no_clock(train: RescaledTrain) -> str:
+    """Why a process has no gaps to divide by their mean, or an empty text."""
+    if train.n_spikes < 2:
+        return "no two spikes, no gap"
     if not np.all(np.isfinite(train.times)):
         return "the expected counts are not finite: the model has run away, see the fit's notes"
     if train.times[-1] <= train.times[0]:

@@ -52,9 +52,7 @@ def serial_independence(values: FloatArray, *, n_lags: int = 10) -> SerialIndepe
     if n_lags < 1:
         raise ArgumentError(f"n_lags={n_lags} is not a number of lags. Use 1 or more; 10 is usual.")
     if values.size < VALUES_PER_LAG * n_lags:
-        return Unavailable(
-            f"{values.size} gaps are too few for {n_lags} lags; {VALUES_PER_LAG * n_lags} are needed."
-        )
+        return Unavailable(f"{values.size} gaps are too few for {n_lags} lags; {VALUES_PER_LAG * n_lags} are needed.")
     if np.ptp(values) == 0:
         return Unavailable("all gaps are equal, so there is no autocorrelation.")
     row = acorr_ljungbox(values, lags=[n_lags]).iloc[0]

@@ -57,7 +57,7 @@ def known_p_value(distance: float, n: int) -> float:
 
 
 def known_critical_distance(n: int, level: float = 0.95) -> float:
-    """Distance that n values of a known law stay below with probability `level` (Miller 1956, JASA 51, 111)."""
+    """Distance that n values of a known law stay below with this probability (Miller 1956, JASA 51, 111)."""
     _check_level(level)
     return float(kstwo.isf(1.0 - level, n))
 
@@ -75,8 +75,8 @@ def estimated_mean_p_value(distance: float, n: int) -> float:
 
     Returns
     -------
-    p-value, within 0.1 % of its value for p < 0.5; never below `SMALLEST_P_VALUE`, which stands for "this
-    or less"
+    p-value, within 0.1 % of its value where that is above 1e-5 and within 5 % below; never below
+    `SMALLEST_P_VALUE`, which stands for "this or less"
 
     Raises
     ------

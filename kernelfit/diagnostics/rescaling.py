@@ -47,9 +47,7 @@ class RescaledTrain:
         return np.diff(self.times)
 
 
-def place_events(
-    before: FloatArray, within: FloatArray, count: IntArray, rng: np.random.Generator
-) -> FloatArray:
+def place_events(before: FloatArray, within: FloatArray, count: IntArray, rng: np.random.Generator) -> FloatArray:
     """Times of single events on the rescaled clock, spread at random inside their bins.
 
     Parameters
@@ -93,9 +91,7 @@ def rescale(compensator: Compensator, *, seed: int) -> tuple[tuple[RescaledTrain
         times = place_events(compensator.before[rows], compensator.within[rows], compensator.count[rows], rng)
         units.append(RescaledTrain(times=times, total=float(compensator.total[k])))
     pooled = RescaledTrain(
-        times=place_events(
-            compensator.pooled_before, compensator.pooled_within, compensator.pooled_count, pooled_rng
-        ),
+        times=place_events(compensator.pooled_before, compensator.pooled_within, compensator.pooled_count, pooled_rng),
         total=compensator.pooled_total,
     )
     return tuple(units), pooled
@@ -135,9 +131,7 @@ def bernoulli_rescale(probability: FloatArray, spiked: BoolArray, draws: FloatAr
             f"{np.count_nonzero(spiked)} spikes do not fit. Give one probability per bin, one draw per spike."
         )
     if not np.all((probability >= 0) & (probability < 1)):
-        raise ArgumentError(
-            "A probability lies outside [0, 1). For clipped counts, use 1 - exp(-expected count)."
-        )
+        raise ArgumentError("A probability lies outside [0, 1). For clipped counts, use 1 - exp(-expected count).")
     at = np.flatnonzero(spiked)
     elapsed = np.concatenate([[0.0], np.cumsum(-np.log1p(-probability))])  # at the edges of the bins
     start = np.concatenate([[0.0], elapsed[at + 1]])[: at.size]  # the end of the bin of the spike before
