@@ -35,10 +35,10 @@ from kernelfit.kernels.base import Kernel
 from kernelfit.kernels.registry import KERNELS
 from kernelfit.kernels.spline import Spline
 from kernelfit.model.coupling import CouplingModel
+from kernelfit.model.links import LINKS
 from kernelfit.report.folder import check_folder
 
 DEFAULT_OUT = Path("kernelfit-results")
-LINKS = ("exp",)
 SAME_SITE = ("exclude", "own", "kernel")
 AFTER_SPIKE = ("basis", "none")
 COVARIANCES = ("robust", "model")

@@ -1,0 +1,45 @@
+"""What the documents say can be run, runs; what they point to, exists."""
+
+from __future__ import annotations
+
+import importlib
+import re
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from kernelfit.kernels.base import DistanceRange
+
+ROOT = Path(__file__).resolve().parent.parent
+GUIDE = ROOT / "DEVELOPERS.md"
+PATHS = re.compile(r"`((?:kernelfit|tests|scripts|datasets|docs|\.ci)/[\w./-]*|[\w-]+\.(?:md|toml))`")
+
+
+def test_the_example_of_a_kernel_family_is_a_kernel_with_the_right_derivative(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Source of the expected derivative: central differences, good to about 1e-9 at this step."""
+    (example,) = re.findall(r"```python\n(.*?)```", GUIDE.read_text(encoding="utf-8"), flags=re.DOTALL)
+    (tmp_path / "guide_example.py").write_text(example, encoding="utf-8")
+    monkeypatch.syspath_prepend(tmp_path)
+    family = importlib.import_module("guide_example").Bell()
+    span = DistanceRange(reference_um=60.0, smallest_um=30.0, largest_um=400.0)
+    distance = np.linspace(30.0, 400.0, 9)
+    theta, step = np.array([0.2, np.log(120.0)]), 1e-5
+    assert family.value(theta, np.array([60.0]), span) == pytest.approx([0.2])
+    for k, row in enumerate(family.gradient(theta, distance, span)):
+        move = step * np.eye(2)[k]
+        rise = family.value(theta + move, distance, span) - family.value(theta - move, distance, span)
+        np.testing.assert_allclose(row, rise / (2 * step), atol=1e-8)
+
+
+@pytest.mark.parametrize("document", sorted(ROOT.glob("*.md")), ids=lambda p: p.name)
+def test_what_a_document_points_to_exists(document: Path) -> None:
+    for name in PATHS.findall(document.read_text(encoding="utf-8")):
+        assert (ROOT / name).exists(), f"{document.name} speaks of {name}"
+
+
+@pytest.mark.parametrize("name", ["scripts/demo", "scripts/test", ".ci/run", "scripts/make_demo_recording"])
+def test_scripts_can_be_run(name: str) -> None:
+    assert (ROOT / name).stat().st_mode & 0o111, f"{name} is not executable"
