@@ -59,7 +59,7 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit, Note
 
 NOTICES_SHOWN = 8  # at the top of the page; all notes stand in the section on how sure the numbers are
-AFTER_SPIKE_LONGEST_S = 1.0
+AFTER_SPIKE_SHOWN = 2.0  # longest lag of the after-spike figure, in longest time constants of its basis
 
 
 @dataclass(frozen=True, eq=False)
@@ -143,7 +143,7 @@ def build_content(
     figures = FitFigures(
         kernel=kernel_data(fit),
         course=course_data(fit),
-        after_spike=after_spike_data(fit, AFTER_SPIKE_LONGEST_S),
+        after_spike=after_spike_data(fit, AFTER_SPIKE_SHOWN),
         array=baseline_data(fit),
         ks=ks_data(goodness),
         raster=raster_data(fit, recording),
@@ -226,8 +226,7 @@ def notices(fit: CouplingFit) -> tuple[Notice, ...]:
             *marked[:NOTICES_SHOWN],
             Notice(
                 "info",
-                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How "
-                "sure\N{RIGHT DOUBLE QUOTATION MARK}.",
+                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How sure\N{RIGHT DOUBLE QUOTATION MARK}.",
             ),
         ]
     return tuple(marked)

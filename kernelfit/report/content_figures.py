@@ -181,11 +181,13 @@ def course_data(fit: CouplingFit) -> CourseData | Unavailable:
 # --- after-spike ----------------------------------------------------------------------------------------
 
 
-def after_spike_data(fit: CouplingFit, longest_s: float) -> AfterSpikeData | Unavailable:
-    """After-spike curves over the units that have one, from one bin to `longest_s`."""
-    if fit.after_spike_test is not None:
+def after_spike_data(fit: CouplingFit, shown: float) -> AfterSpikeData | Unavailable:
+    """After-spike curves over the units that have one, up to `shown` times the longest time constant."""
+    constants = fit.model.after_spike.constants(fit.model.bin_width)
+    if constants.size == 0:
         return Unavailable('the model has no after-spike term (after_spike="none")')
-    lag = np.geomspace(fit.model.bin_width, max(longest_s, 10.0 * fit.model.bin_width), 140)
+    longest = max(shown * float(constants[-1]), 10.0 * fit.model.bin_width)
+    lag = np.geomspace(fit.model.bin_width, longest, 140)
     curves = fit.after_spike_curves(lag)
     curves = curves[np.isfinite(curves).all(axis=1)]
     if curves.shape[0] == 0:

@@ -9,7 +9,8 @@ import numpy as np
 import pandas as pd
 
 from kernelfit.errors import Unavailable
-from kernelfit.kernels.registry import kernel_from
+from kernelfit.kernels.base import Kernel
+from kernelfit.model.terms import AfterSpikeTerm
 from kernelfit.recording.recording import Recording
 from kernelfit.report.numbers import (
     count_text,
@@ -285,8 +286,7 @@ def recording_facts(fit: CouplingFit, recording: Recording) -> Definition:
         rows.append(
             (
                 "where the window comes from",
-                "no windows were given: from the floor of the first spike to the first whole second after "
-                "the last",
+                "no windows were given: from the floor of the first spike to the first whole second after the last",
             )
         )
     excluded = recording.exclusion_bounds
@@ -301,15 +301,29 @@ def recording_facts(fit: CouplingFit, recording: Recording) -> Definition:
     return Definition(rows=tuple(rows), caption="The recording")
 
 
+def kernel_setting(kernel: Kernel) -> str:
+    """The family with its options: "spline (n_basis 10, smoothing 0)"."""
+    options = ", ".join(f"{name} {value}" for name, value in kernel.describe().items())
+    return f"{kernel.name} ({options})" if options else kernel.name
+
+
+def _after_spike_setting(term: AfterSpikeTerm, bin_width: float) -> str:
+    constants = term.constants(bin_width)
+    if constants.size == 0:
+        return term.name
+    listing = ", ".join(time_text(float(c)) for c in constants)
+    return f"{term.name}: exponential traces per unit, time constants {listing}; ridge {number_text(term.ridge)}"
+
+
 def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
     """Every setting a rerun needs."""
     model = fit.model
     leak = "estimated" if model.leak_rate is None else f"held at {number_text(model.leak_rate)} per second"
-    kernel = kernel_from(model.kernel)
+    kernel = model.kernel
     reach = "none" if model.max_distance is None else distance_label(model.max_distance)
     blocks = f"{count_text(fit.n_blocks)} blocks of {time_text(fit.block_length_s)}"
     rows = (
-        ("kernel", repr(kernel) if repr(kernel) != f"{type(kernel).__name__}()" else kernel.name),
+        ("kernel", kernel_setting(kernel)),
         ("link", link_name(fit)),
         ("bin width", time_text(model.bin_width)),
         ("leak rate", leak),
@@ -318,8 +332,8 @@ def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
             "pairs on one site",
             {"exclude": "left out", "own": "one coefficient of their own"}.get(model.same_site, "in the kernel"),
         ),
-        ("after-spike term", str(model.after_spike)),
-        ("course of the rate", str(model.rate_course)),
+        ("after-spike term", _after_spike_setting(model.after_spike, model.bin_width)),
+        ("course of the rate", model.rate_course.name),
         ("warm-up", time_text(model.warm_up_s) if model.warm_up_s else "none"),
         ("reference distance", distance_label(fit.reference_distance_um)),
         (

@@ -7,7 +7,6 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from kernelfit.kernels.registry import kernel_from
 from kernelfit.kernels.spline import Spline
 from kernelfit.recording.recording import Recording
 from kernelfit.report.numbers import (
@@ -72,7 +71,7 @@ def methods(fit: CouplingFit, recording: Recording, goodness: Goodness) -> Metho
         f"Computations were done with kernelfit {fit.version}.",
     ]
     references = [HAWKES, TRUCCOLO]
-    if isinstance(kernel_from(fit.model.kernel), Spline):
+    if isinstance(fit.model.kernel, Spline):
         references.append(EILERS)
     if fit.covariance_kind == "robust":
         references += [WHITE, LIANG]
@@ -109,7 +108,7 @@ def _data_sentence(fit: CouplingFit, recording: Recording) -> str:
 
 def _model_sentences(fit: CouplingFit) -> list[str]:
     model = fit.model
-    kernel = kernel_from(model.kernel)
+    kernel = model.kernel
     link = link_name(fit)
     leak = (
         f"with a leak rate held at {number_text(model.leak_rate)} per second"
@@ -132,10 +131,12 @@ def _model_sentences(fit: CouplingFit) -> list[str]:
         f"{distance_label(fit.reference_distance_um)}, the median distance between neighbouring sites.",
         same_site,
     ]
-    if fit.after_spike_test is None:
+    constants = model.after_spike.constants(model.bin_width)
+    if constants.size:
         sentences.append(
-            "Effects of a unit's own earlier spikes were modelled per unit on a basis of logarithmically "
-            "spaced lags."
+            f"Effects of a unit's own earlier spikes were modelled per unit by {count_text(constants.size)} "
+            f"exponential traces with time constants from {time_text(float(constants[0]))} to "
+            f"{time_text(float(constants[-1]))}."
         )
     if model.warm_up_s > 0.0:
         sentences.append(
@@ -146,9 +147,15 @@ def _model_sentences(fit: CouplingFit) -> list[str]:
 
 
 def _estimation_sentences(fit: CouplingFit) -> list[str]:
-    sentences = ["All parameters were estimated jointly by maximum likelihood."]
-    if isinstance(kernel_from(fit.model.kernel), Spline):
-        sentences = ["All parameters were estimated jointly by (penalised) maximum likelihood."]
+    penalties = []
+    if isinstance(fit.model.kernel, Spline) and fit.model.kernel.smoothing > 0.0:
+        penalties.append(f"a difference penalty of {number_text(fit.model.kernel.smoothing)} on the spline")
+    if fit.model.after_spike.ridge > 0.0:
+        penalties.append(
+            f"a ridge penalty of {number_text(fit.model.after_spike.ridge)} on the coefficients of own spikes"
+        )
+    by = f"penalised maximum likelihood ({listed(penalties)})" if penalties else "maximum likelihood"
+    sentences = [f"All parameters were estimated jointly by {by}."]
     if not fit.converged:
         sentences.append("The estimation did not converge.")
     if fit.covariance_kind == "robust":

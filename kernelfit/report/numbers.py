@@ -63,7 +63,8 @@ def interval_text(
     """Estimate with its interval: "12 % (9 to 15)".
 
     Two significant digits of the half-width decide the rounding of all three; decimals that are zero in all
-    three are left out. `max_decimals` is the limit for prose; tables may ask for more.
+    three are left out unless the limit has cut them. `max_decimals` is the limit for prose; tables may have
+    more.
 
     Parameters
     ----------
@@ -79,9 +80,10 @@ def interval_text(
         return f"{number_text(estimate, max_decimals=max_decimals)}{mark}"
     one_sided = abs((upper if high_known else lower) - estimate)
     half_width = (upper - lower) / 2.0 if low_known and high_known else one_sided
-    decimals = min(decimals_for(half_width), max_decimals)
+    wanted = decimals_for(half_width)
+    decimals = min(wanted, max_decimals)
     shown = [estimate, *([lower] if low_known else []), *([upper] if high_known else [])]
-    while decimals > 0 and all(fixed_text(v, decimals).endswith("0") for v in shown):
+    while 0 < decimals <= wanted <= max_decimals and all(fixed_text(v, decimals).endswith("0") for v in shown):
         decimals -= 1
     middle = fixed_text(estimate, decimals)
     if not high_known:

@@ -8,7 +8,6 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from kernelfit._typing import FloatArray
-from kernelfit.kernels.registry import kernel_from
 from kernelfit.report.numbers import number_text, p_sentence, spaced_unit
 from kernelfit.report.words import (
     MULTIPLES_FROM,
@@ -37,12 +36,12 @@ def is_exp(fit: CouplingFit) -> bool:
 
 def link_name(fit: CouplingFit) -> str:
     """Name of the rate link."""
-    return str(fit.model.link)
+    return fit.model.link.name
 
 
 def kernel_name(fit: CouplingFit) -> str:
     """Name of the kernel family."""
-    return kernel_from(fit.model.kernel).name
+    return fit.model.kernel.name
 
 
 def parameter_of(fit: CouplingFit, name: str) -> Estimate | None:

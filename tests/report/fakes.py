@@ -16,26 +16,15 @@ from kernelfit.diagnostics.goodness import Goodness, goodness_of_fit
 from kernelfit.engine.compensator import Compensator
 from kernelfit.errors import Unavailable
 from kernelfit.kernels.parametric import Gaussian
+from kernelfit.model.coupling import CouplingModel
 from kernelfit.recording.recording import Origin, Recording, SourceFile
 
 PITCH_UM = 200.0
 DURATION_S = 240.0
 AMPLITUDE, AMPLITUDE_LOW, AMPLITUDE_HIGH = 0.1133, 0.0862, 0.1398  # 12.0 % (9.0 to 15.0) of the rate
 LENGTH, LENGTH_LOW, LENGTH_HIGH = 262.0, 221.0, 311.0
+MODEL = CouplingModel(kernel="gaussian", bin_width=0.005)
 LEAK, LEAK_LOW, LEAK_HIGH = 76.9, 66.7, 90.9  # 13.0 ms (11.0 to 15.0)
-
-
-@dataclass(frozen=True)
-class FakeModel:
-    kernel: str = "gaussian"
-    link: str = "exp"
-    bin_width: float = 0.005
-    leak_rate: float | None = None
-    max_distance: float | None = None
-    same_site: str = "exclude"
-    after_spike: str = "basis"
-    rate_course: str = "none"
-    warm_up_s: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -80,7 +69,7 @@ class FakeRates:
 @dataclass(frozen=True, eq=False)
 class FakeFit:
     recording: Recording
-    model: FakeModel = FakeModel()
+    model: CouplingModel = MODEL
     converged: bool = True
     verdict: FakeVerdict = FakeVerdict()
     notes: tuple[FakeNote, ...] = ()
@@ -196,9 +185,7 @@ class FakeFit:
         d = np.asarray(distances_um, dtype=float)
         estimate = self.kernel(d)
         ends = np.stack([self._curve(self.sign * a)(d) for a in (AMPLITUDE_LOW, AMPLITUDE_HIGH)])
-        return pd.DataFrame(
-            {"distance_um": d, "estimate": estimate, "lower": ends.min(0), "upper": ends.max(0)}
-        )
+        return pd.DataFrame({"distance_um": d, "estimate": estimate, "lower": ends.min(0), "upper": ends.max(0)})
 
     @property
     def pairs_by_distance(self):
