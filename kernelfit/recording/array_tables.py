@@ -37,9 +37,7 @@ def recording_from_arrays(
     """
     if not isinstance(spike_times_s, Mapping):
         kind = type(spike_times_s).__name__
-        raise RecordingError(
-            f"spike_times_s is a {kind}. Give a mapping from unit id to spike times in seconds."
-        )
+        raise RecordingError(f"spike_times_s is a {kind}. Give a mapping from unit id to spike times in seconds.")
     faults: list[Fault] = []
     ids = _array_ids(list(spike_times_s), faults)
     positions = _array_positions(positions_um, len(ids), faults)
@@ -65,9 +63,7 @@ def recording_from_arrays(
 
 def _array_ids(keys: list[object], faults: list[Fault]) -> list[str]:
     ids, bad = read_labels(keys)
-    faults.extend(
-        Fault("spike_times_s", b.problem, b.remedy, column="unit", value=str(keys[b.at])) for b in bad
-    )
+    faults.extend(Fault("spike_times_s", b.problem, b.remedy, column="unit", value=str(keys[b.at])) for b in bad)
     seen: set[str] = set()
     for unit in ids:
         if unit in seen and unit:
@@ -123,9 +119,7 @@ def _array_groups(groups: Sequence[str] | None, n_units: int, faults: list[Fault
     return tuple(labels)
 
 
-def _array_train(
-    unit: str, times: object, drop_duplicates: bool, faults: list[Fault]
-) -> tuple[FloatArray, int]:
+def _array_train(unit: str, times: object, drop_duplicates: bool, faults: list[Fault]) -> tuple[FloatArray, int]:
     name = f"spike_times_s[{unit!r}]"
     time_s = _float_array(times, name)
     if time_s.ndim != 1:
@@ -134,9 +128,7 @@ def _array_train(
     bad = ~(np.abs(time_s) <= MAX_TIME_S)
     for k in np.flatnonzero(bad).tolist():
         problem = f"Not a finite time within {MAX_TIME_S:.0e} s."
-        faults.append(
-            Fault(place, problem, "Correct it, or take it out.", row=k, value=repr(float(time_s[k])))
-        )
+        faults.append(Fault(place, problem, "Correct it, or take it out.", row=k, value=repr(float(time_s[k]))))
     order = np.argsort(time_s, kind="stable")
     order = order[~bad[order]]
     train = time_s[order]
@@ -169,9 +161,7 @@ def _pair_table(given: Iterable[tuple[str, str]]) -> RawTable | None:
     pairs = list(given)
     for pair in pairs:
         if isinstance(pair, str) or not isinstance(pair, Sequence) or len(pair) != 2:
-            raise ArgumentError(
-                f"exclude_pairs holds {pair!r}. Give pairs of unit ids such as ('u01', 'u02')."
-            )
+            raise ArgumentError(f"exclude_pairs holds {pair!r}. Give pairs of unit ids such as ('u01', 'u02').")
     if not pairs:
         return None
     columns = {"unit_a": [a for a, _ in pairs], "unit_b": [b for _, b in pairs]}

@@ -81,12 +81,8 @@ def assembled(parts: Parts, origin: Origin) -> Recording:
     if n_outside:
         notes.append(f"{n_outside} of {n_spikes} spikes lie outside the windows and are kept as history")
     if exclusions is not None and len(exclusions.bounds) and not _any_touches(exclusions.bounds, bounds):
-        notes.append(
-            f"none of the {len(exclusions.bounds)} exclusions touches a window: check their unit of time"
-        )
-    return replace(
-        recording, origin=Origin(origin.files, windows_stated=windows is not None, notes=tuple(notes))
-    )
+        notes.append(f"none of the {len(exclusions.bounds)} exclusions touches a window: check their unit of time")
+    return replace(recording, origin=Origin(origin.files, windows_stated=windows is not None, notes=tuple(notes)))
 
 
 def _any_touches(stretches: FloatArray, windows: FloatArray) -> bool:

@@ -23,9 +23,7 @@ _NUMBER = re.compile(r"[+-]?(?:[0-9]+\.?[0-9]*|\.[0-9]+)(?:[eE][+-]?[0-9]+)?")
 _GROUPED = re.compile(r"[+-]?[0-9]{1,3}(?:[ ,.'_’\u00a0\u202f][0-9]{3})+(?:[.,][0-9]*)?")
 _WITH_UNIT = re.compile(r"[+-]?[0-9.,]+\s*(?:s|ms|us|µs|μs|sec|min|h|um|µm|μm|mm|Hz)", re.IGNORECASE)
 _CLOCK = re.compile(r"[0-9]+:[0-9]{1,2}(?::[0-9]{1,2})?(?:[.,][0-9]*)?")
-_NO_VALUE = frozenset(
-    {"", "na", "n/a", "nan", "null", "none", "nil", "-", "--", "?", "#n/a", "#value!", "missing"}
-)
+_NO_VALUE = frozenset({"", "na", "n/a", "nan", "null", "none", "nil", "-", "--", "?", "#n/a", "#value!", "missing"})
 _FAST_CHARACTERS = frozenset("0123456789+-.eE ")
 _MINUS_SIGNS = "\u2212\u2013\u2014"
 
@@ -213,9 +211,7 @@ def read_labels(cells: Cells, *, required: bool = True) -> tuple[list[str], list
             elif isinstance(cell, (int, np.integer)) and not isinstance(cell, bool):
                 labels[k] = str(int(cell))
             elif not is_missing(cell):
-                bad.append(
-                    BadCell(k, f"A {type(cell).__name__}, and ids are text.", "Turn the column into text.")
-                )
+                bad.append(BadCell(k, f"A {type(cell).__name__}, and ids are text.", "Turn the column into text."))
     refused = {label for label in set(labels) if _is_refused(label)}
     if refused or (required and "" in set(labels)):
         known = {b.at for b in bad}

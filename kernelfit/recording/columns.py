@@ -10,7 +10,7 @@ import numpy as np
 from kernelfit._typing import FloatArray
 from kernelfit.errors import ArgumentError, Fault
 from kernelfit.recording.cells import BadCell, read_labels, read_numbers, written
-from kernelfit.recording.raw_table import LENGTH_UNITS, TIME_UNITS, RawTable
+from kernelfit.recording.raw_table import KNOWN_COLUMNS, LENGTH_UNITS, TIME_UNITS, RawTable
 
 # Beyond these a number is a slip or in another unit, and squares and bin numbers would overflow later.
 MAX_TIME_S = 1e10
@@ -33,17 +33,13 @@ class Measures:
             (self.decimal, (".", ","), "decimal"),
         ):
             if not isinstance(value, str) or value not in allowed:
-                raise ArgumentError(
-                    f"{option}={value!r} is not known. Use one of {', '.join(map(repr, allowed))}."
-                )
+                raise ArgumentError(f"{option}={value!r} is not known. Use one of {', '.join(map(repr, allowed))}.")
         rate = self.sampling_rate_hz
         if self.time_unit == "samples":
             if rate is None:
                 raise ArgumentError("time_unit='samples' needs sampling_rate_hz, the samples per second.")
             if isinstance(rate, bool) or not isinstance(rate, (int, float, np.integer, np.floating)):
-                raise ArgumentError(
-                    f"sampling_rate_hz={rate!r} is not a number. Give the samples per second."
-                )
+                raise ArgumentError(f"sampling_rate_hz={rate!r} is not a number. Give the samples per second.")
             if not 0 < rate < np.inf:
                 raise ArgumentError(
                     f"sampling_rate_hz={rate!r} must be above 0 and finite. Give the samples per second."
@@ -83,14 +79,16 @@ def _missing(table: RawTable, wanted: str, remedy: str) -> Fault:
 
 
 def _closest_column(table: RawTable, wanted: str) -> str | None:
+    """A column that may have been meant: not one that has a meaning of its own."""
     from difflib import get_close_matches
 
-    lower = {n.casefold(): n for n in reversed(table.names)}
+    free = [n for n in table.names if n not in KNOWN_COLUMNS[table.source.role]]
+    lower = {n.casefold(): n for n in reversed(free)}
     close = get_close_matches(wanted.casefold(), lower, n=1, cutoff=0.5)
     if close:
         return lower[close[0]]
     stem = wanted.partition("_")[0]
-    return next((n for n in table.names if stem in n.casefold().replace("_", " ").split()), None)
+    return next((n for n in free if stem in n.casefold().replace("_", " ").split()), None)
 
 
 def find(table: RawTable, wanted: str, faults: list[Fault]) -> str | None:
@@ -98,7 +96,9 @@ def find(table: RawTable, wanted: str, faults: list[Fault]) -> str | None:
     if wanted not in table.names:
         close = _closest_column(table, wanted)
         rename = (
-            f"Rename column {close!r} to {wanted!r} if that is it" if close else f"Call the column {wanted!r}"
+            f"Rename column {close!r} to {wanted!r} if that is it"
+            if close
+            else f"Call the column that holds it {wanted!r}"
         )
         faults.append(_missing(table, wanted, f"{rename}; names must match exactly."))
         return None
@@ -121,9 +121,7 @@ def find_length(table: RawTable, stem: str, measures: Measures, faults: list[Fau
     return _find_measured(table, stem, (measures.length_unit, *LENGTH_UNITS), "length_unit", faults)
 
 
-def _find_measured(
-    table: RawTable, stem: str, units: Sequence[str], option: str, faults: list[Fault]
-) -> str | None:
+def _find_measured(table: RawTable, stem: str, units: Sequence[str], option: str, faults: list[Fault]) -> str | None:
     """`units`: the unit asked for, the standard unit, then all others."""
     plain = f"{stem}_{units[1]}"
     for name in (f"{stem}_{units[0]}", plain):
@@ -141,9 +139,7 @@ def _find_measured(
 def add_bad(table: RawTable, column: str, bad: Iterable[BadCell], faults: list[Fault]) -> None:
     """Bad cells of a column as faults of the table."""
     cells = table.column(column)
-    faults.extend(
-        table.fault(b.problem, b.remedy, at=b.at, column=column, value=written(cells, b.at)) for b in bad
-    )
+    faults.extend(table.fault(b.problem, b.remedy, at=b.at, column=column, value=written(cells, b.at)) for b in bad)
 
 
 def times_of(table: RawTable, column: str, measures: Measures, faults: list[Fault]) -> FloatArray:

@@ -151,9 +151,7 @@ def _body(
         problem = f"The row has {len(row)} cell{'s' * (len(row) != 1)}, the header {len(names)}."
         faults.append(Fault(source.name, problem, remedy, row=line))
     sound = list(compress(rows, full))
-    columns: tuple[Cells, ...] = (
-        tuple(map(list, zip(*sound, strict=True))) if sound else tuple([] for _ in names)
-    )
+    columns: tuple[Cells, ...] = tuple(map(list, zip(*sound, strict=True))) if sound else tuple([] for _ in names)
     return _Body(names, columns, list(compress(lines, full)), tuple(faults))
 
 
@@ -251,9 +249,7 @@ def parse_delimited(data: bytes, source: SourceFile, *, gzip_expected: bool = Fa
     kept = [line[:1].isalnum() or not _is_skipped(line) for line in lines]
     if True not in kept:
         state = "empty" if not any(map(str.strip, lines)) else "nothing but comments"
-        raise _refused(
-            source, f"The file is {state}.", f"It needs a header with the columns of a {source.role} table."
-        )
+        raise _refused(source, f"The file is {state}.", f"It needs a header with the columns of a {source.role} table.")
     first = kept.index(True)
     delimiter = _sniffed(lines[first], known)
     body = _split(lines, kept, delimiter, source)
@@ -268,9 +264,7 @@ def parse_delimited(data: bytes, source: SourceFile, *, gzip_expected: bool = Fa
     )
 
 
-def _comment_notes(
-    lines: list[str], kept: list[bool], first: int, n_fields: int, delimiter: str
-) -> tuple[str, ...]:
+def _comment_notes(lines: list[str], kept: list[bool], first: int, n_fields: int, delimiter: str) -> tuple[str, ...]:
     """Say so when a skipped comment looks like a row: an id that starts with # would vanish unseen."""
     if n_fields < 2:
         return ()
@@ -280,9 +274,7 @@ def _comment_notes(
         return len(fields) == n_fields and any(f.strip()[:1].isdigit() for f in fields[1:])
 
     n = sum(not keep and like_a_row(line) for line, keep in zip(lines[first:], kept[first:], strict=True))
-    return (
-        (f"{n} commented line{'s' * (n != 1)} (#) that look{'s' * (n == 1)} like rows skipped",) if n else ()
-    )
+    return (f"{n} commented line{'s' * (n != 1)} (#) that look{'s' * (n == 1)} like rows skipped",) if n else ()
 
 
 def _header_hint(lines: list[str], first: int, names: tuple[str, ...], known: tuple[str, ...]) -> str:

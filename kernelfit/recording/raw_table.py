@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import hashlib
-import io
 import os
 from dataclasses import dataclass
 from pathlib import Path
@@ -161,9 +160,7 @@ def read_file(path: Path, role: str, name: str) -> bytes:
     except FileNotFoundError:
         raise refused(f"There is no file {str(path)!r}.", _missing_file_remedy(path, role)) from None
     except IsADirectoryError:
-        raise refused(
-            f"{str(path)!r} is a folder, not a table.", f"Name the file with the {role} in it."
-        ) from None
+        raise refused(f"{str(path)!r} is a folder, not a table.", f"Name the file with the {role} in it.") from None
     except (OSError, ValueError) as error:  # ValueError: a zero byte in the name
         reason = error.strerror if isinstance(error, OSError) and error.strerror else str(error)
         raise refused(f"The file cannot be read: {reason}.", "Check its permissions and the disk.") from None
@@ -177,9 +174,7 @@ def _missing_file_remedy(path: Path, role: str) -> str:
     except (OSError, ValueError):
         return f"There is no folder {str(path.parent)!r} either: check the path of the {role} table."
     close = get_close_matches(path.name, there, n=1, cutoff=0.6)
-    return (
-        f"Did you mean {close[0]!r} in the same folder?" if close else f"Check the path of the {role} table."
-    )
+    return f"Did you mean {close[0]!r} in the same folder?" if close else f"Check the path of the {role} table."
 
 
 def load_table(given: TableSource, role: str, name: str) -> RawTable:
@@ -213,11 +208,14 @@ def load_table(given: TableSource, role: str, name: str) -> RawTable:
 def _parse_parquet(data: bytes, source: SourceFile) -> RawTable:
     try:
         import pyarrow as pa
+        from pyarrow import parquet
     except ImportError:
         remedy = "Install it with: pip install 'kernelfit[parquet]', or save the table as CSV."
         raise TableError([Fault(source.name, "Reading Parquet needs the library pyarrow.", remedy)]) from None
     try:
-        frame = pd.read_parquet(io.BytesIO(data), engine="pyarrow")
+        table = parquet.read_table(pa.BufferReader(data))
+        table.validate(full=True)  # damage inside the values would show only later
+        frame = table.to_pandas()
     except (pa.ArrowException, OSError, ValueError, TypeError, KeyError, OverflowError) as error:
         reason = (str(error).splitlines() or ["no reason given"])[0].rstrip(".")
         problem = f"Not a readable Parquet file ({reason})."

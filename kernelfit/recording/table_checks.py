@@ -13,7 +13,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.errors import MAX_FAULTS_SHOWN, Fault
-from kernelfit.recording.cells import BadCell, closest_note, written
+from kernelfit.recording.cells import BadCell, closest_note, read_labels, written
 from kernelfit.recording.columns import (
     Measures,
     add_bad,
@@ -71,17 +71,12 @@ def check_sites(table: RawTable, measures: Measures, faults: list[Fault]) -> Sit
     for k, column in enumerate(axes):
         positions[:, k] = coordinates_of(table, column, measures, faults)
     groups = optional_labels_of(table, "group", faults)
-    marks = optional_labels_of(table, "source_only", faults)
-    if unit is None:
+    if unit is None or table.n_rows == 0:
         return None
     ids = labels_of(table, unit, faults, required=True)
     _find_repeated_units(table, ids, faults)
-    return Sites(
-        tuple(ids),
-        positions,
-        None if groups is None else tuple(groups),
-        _source_only(table, ids, marks, faults) if marks is not None else frozenset(),
-    )
+    source_only = _source_only(table, ids, faults)
+    return Sites(tuple(ids), positions, None if groups is None else tuple(groups), source_only)
 
 
 def _coordinate_columns(table: RawTable, measures: Measures, faults: list[Fault]) -> list[str]:
@@ -102,9 +97,7 @@ def _coordinate_columns(table: RawTable, measures: Measures, faults: list[Fault]
     endings = {c.partition("_")[2] for c in columns}
     if len(endings) > 1:
         remedy = "Convert them to one unit of measure and name them alike."
-        faults.append(
-            table.fault(f"The coordinates {', '.join(columns)} are named in different units.", remedy)
-        )
+        faults.append(table.fault(f"The coordinates {', '.join(columns)} are named in different units.", remedy))
     return columns
 
 
@@ -116,15 +109,18 @@ def _find_repeated_units(table: RawTable, ids: list[str], faults: list[Fault]) -
             faults.append(table.fault(problem, "List each unit once.", at=k, column="unit", value=unit))
 
 
-def _source_only(table: RawTable, ids: list[str], marks: list[str], faults: list[Fault]) -> frozenset[str]:
-    bad = [
-        BadCell(
-            k, "Neither yes nor no.", "Write yes for units that drive others and are not explained, else no."
-        )
-        for k, mark in enumerate(marks)
-        if mark.casefold() not in _YES | _NO
+def _source_only(table: RawTable, ids: list[str], faults: list[Fault]) -> frozenset[str]:
+    """Ids marked yes; empty where there is no such column. A DataFrame may hold truth values."""
+    column = "source_only"
+    if column not in table.names or find(table, column, faults) is None:
+        return frozenset()
+    cells = [str(c) if isinstance(c, (bool, np.bool_)) else c for c in table.column(column)]
+    marks, bad = read_labels(cells, required=False)
+    remedy = "Write yes for units that drive others and are not explained, else no."
+    bad += [
+        BadCell(k, "Neither yes nor no.", remedy) for k, mark in enumerate(marks) if mark.casefold() not in _YES | _NO
     ]
-    add_bad(table, "source_only", bad, faults)
+    add_bad(table, column, bad, faults)
     return frozenset(u for u, mark in zip(ids, marks, strict=True) if mark.casefold() in _YES)
 
 
@@ -185,9 +181,7 @@ def find_repeated_spikes(
         unit = sites.ids[int(spikes.unit[row])]
         problem = f"Unit {unit!r} has a spike at this time already in {table.row_name(earlier)}."
         remedy = "Delete one of them, or load with drop_duplicates=True."
-        faults.append(
-            table.fault(problem, remedy, at=row, column=spikes.time_column, value=written(cells, row))
-        )
+        faults.append(table.fault(problem, remedy, at=row, column=spikes.time_column, value=written(cells, row)))
 
 
 def check_stretches(table: RawTable, measures: Measures, faults: list[Fault]) -> Stretches | None:
@@ -224,9 +218,7 @@ def _reordered(labels: list[str] | None, order: IntArray) -> tuple[str, ...] | N
     return None if labels is None else tuple(labels[k] for k in order.tolist())
 
 
-def _find_overlaps(
-    table: RawTable, start: str, bounds: FloatArray, order: IntArray, faults: list[Fault]
-) -> None:
+def _find_overlaps(table: RawTable, start: str, bounds: FloatArray, order: IntArray, faults: list[Fault]) -> None:
     latest = 0  # the window that reaches furthest so far
     for k in range(1, len(bounds)):
         if bounds[k, 0] < bounds[latest, 1]:
@@ -234,9 +226,7 @@ def _find_overlaps(
             until = f"({float(bounds[latest, 1])!r} s)"
             problem = f"The window starts before the one in {table.row_name(other)} stops {until}."
             remedy = "Cut or join them: each moment belongs to one window."
-            faults.append(
-                table.fault(problem, remedy, at=at, column=start, value=written(table.column(start), at))
-            )
+            faults.append(table.fault(problem, remedy, at=at, column=start, value=written(table.column(start), at)))
         if bounds[k, 1] > bounds[latest, 1]:
             latest = k
 

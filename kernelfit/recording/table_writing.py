@@ -110,10 +110,7 @@ def _table_lines(recording: Recording) -> Iterable[list[str]]:
         ["start_s,stop_s", *_number_rows(recording.exclusion_bounds)],
         [
             "unit_a,unit_b",
-            *(
-                f"{ids[recording.index_of(a)]},{ids[recording.index_of(b)]}"
-                for a, b in recording.excluded_pairs
-            ),
+            *(f"{ids[recording.index_of(a)]},{ids[recording.index_of(b)]}" for a, b in recording.excluded_pairs),
         ],
     )
 
