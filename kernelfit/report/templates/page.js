@@ -7,12 +7,11 @@ document.querySelectorAll("table.sortable").forEach(function (table) {
     var text = given === null ? cell.textContent.trim() : given, number = parseFloat(text);
     return given !== null && !isNaN(number) && isFinite(text) ? number : text;
   }
-  function compare(a, b) {
-    var numbers = typeof a === "number" && typeof b === "number";
-    if (numbers) { return a - b; }
-    if (typeof a === "number") { return -1; }
-    if (typeof b === "number") { return 1; }
-    return a.localeCompare(b, "en", { numeric: true });
+  function compare(a, b, turn) {
+    if (typeof a === "number" && typeof b === "number") { return turn * (a - b); }
+    if (a === "" || typeof b === "number") { return a === b ? 0 : 1; }  // cells without a value stay last
+    if (b === "" || typeof a === "number") { return -1; }
+    return turn * a.localeCompare(b, "en", { numeric: true });
   }
   Array.prototype.forEach.call(heads, function (head, k) {
     var button = document.createElement("button");
@@ -26,8 +25,8 @@ document.querySelectorAll("table.sortable").forEach(function (table) {
       head.setAttribute("aria-sort", next);
       var rows = original.slice();
       if (next !== "none") {
-        rows.sort(function (a, b) { return compare(key(a, k), key(b, k)); });
-        if (next === "descending") { rows.reverse(); }
+        var turn = next === "ascending" ? 1 : -1;
+        rows.sort(function (a, b) { return compare(key(a, k), key(b, k), turn); });
       }
       rows.forEach(function (row) { body.appendChild(row); });
     });
