@@ -56,7 +56,7 @@ def captions(
             f"stays on the diagonal. Grey band: {level_text(0.95)} of right models stay inside when the "
             "mean is estimated, as here (the test used); thin lines: the same for a model known "
             "beforehand. Bottom: every unit's KS statistic divided by its critical value at "
-            "5\N{NO-BREAK SPACE}%; above the dashed line the single test rejects; the marks say what holds "
+            "5 %; above the dashed line the single test rejects; the marks say what holds "
             f"after the correction for many tests. {based_on}"
         ),
         raster=_raster(recording, raster),
@@ -72,10 +72,10 @@ def _kernel(fit: CouplingFit, kernel: KernelData | Unavailable, kind: str, level
         else "pairs of units at each distance"
     )
     readings = ", left as jump J of the drive, right as change of the rate" if kernel.in_percent else ""
-    shape = "Line" if kernel.distance_um.size > 1 else "Point"
+    shape, span = ("Line", "band") if kernel.distance_um.size > 1 else ("Point", "bar")
     return (
         f"Effect of one spike on another unit against the distance between them{readings}, at the moment of "
-        f"the spike. {shape}: estimate ({kernel_name(fit)} kernel); band: pointwise {level} interval, "
+        f"the spike. {shape}: estimate ({kernel_name(fit)} kernel); {span}: pointwise {level} interval, "
         f"{kind}. Dashed: reference distance. Nothing is drawn where the array has no pairs. Below: {bars}. "
         f"{based_on}"
     )
@@ -88,7 +88,7 @@ def _course(fit: CouplingFit, level: str, kind: str, based_on: str) -> str:
         else f"Band of the solid line: {level} interval of the leak rate ({kind}), with the size of the effect "
         "held at its estimate."
     )
-    return f"Effect of one spike against the time since it, at three distances. {band} {based_on}"
+    return f"Effect of one spike against the time since it, at the distances named. {band} {based_on}"
 
 
 def _array(array: ArrayData) -> str:

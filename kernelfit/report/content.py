@@ -56,7 +56,8 @@ from kernelfit.report.truth import Truth
 
 if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness
-    from kernelfit.fitting.result import CouplingFit, Note
+    from kernelfit.fitting.outcome import Note
+    from kernelfit.fitting.result import CouplingFit
 
 NOTICES_SHOWN = 8  # at the top of the page; all notes stand in the section on how sure the numbers are
 AFTER_SPIKE_SHOWN = 2.0  # longest lag of the after-spike figure, in longest time constants of its basis

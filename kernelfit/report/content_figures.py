@@ -129,7 +129,9 @@ def kernel_title(fit: CouplingFit) -> str:
     farther = [d for d in told_distances(fit) if d > 1.5 * fit.reference_distance_um]
     if not farther or not (far := coupling_at(fit, float(farther[0]))).known:
         return first
-    return f"{first}, {change_text(far.value, fit, verb=False)} at {distance_label(float(farther[0]))}"
+    same_way = (far.value < 0.0) == (near.value < 0.0)
+    second = f"by {change_text(far.value, fit, verb=False)}" if same_way else change_text(far.value, fit)
+    return f"{first} and {second} at {distance_label(float(farther[0]))}"
 
 
 def course_data(fit: CouplingFit) -> CourseData | Unavailable:
@@ -189,6 +191,8 @@ def after_spike_data(fit: CouplingFit, shown: float) -> AfterSpikeData | Unavail
     longest = max(shown * float(constants[-1]), 10.0 * fit.model.bin_width)
     lag = np.geomspace(fit.model.bin_width, longest, 140)
     curves = fit.after_spike_curves(lag)
+    if isinstance(curves, Unavailable):
+        return curves
     curves = curves[np.isfinite(curves).all(axis=1)]
     if curves.shape[0] == 0:
         return Unavailable("no unit has an after-spike curve")
@@ -388,7 +392,7 @@ def raster_data(fit: CouplingFit, recording: Recording) -> RasterData | Unavaila
         rows=rows,
         start_s=start,
         stop_s=stop,
-        time_s=averaged(rates.time_s),
+        time_s=averaged(rates.time_s) + 0.5 * fit.model.bin_width,  # bins are named by their start
         observed_hz=observed,
         fitted_hz=fitted,
         averaged_s=per_point * fit.model.bin_width,

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -11,7 +12,7 @@ import pandas as pd
 from kernelfit.errors import Unavailable
 from kernelfit.kernels.base import Kernel
 from kernelfit.model.terms import AfterSpikeTerm
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import COORDINATES, Recording
 from kernelfit.report.numbers import (
     count_text,
     distance_label,
@@ -23,9 +24,9 @@ from kernelfit.report.numbers import (
     time_text,
 )
 from kernelfit.report.page import Cell, Column, Definition, Table
-from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, link_name, time_constant_of
+from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, link_name, parameter_of, time_constant_of
 from kernelfit.report.truth import Truth
-from kernelfit.report.words import level_text
+from kernelfit.report.words import Estimate, level_text
 
 if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness
@@ -80,12 +81,12 @@ def parameter_table(fit: CouplingFit) -> Table:
     rows.append(
         (
             Cell("time constant"),
-            Cell("how long the effect of a spike lasts"),
+            Cell("how long the effect of a spike lasts, 1 / leak rate"),
             Cell(time_text(tau.value, tau.lower, tau.upper), tau.value) if tau.known else Cell(tau.text()),
-            Cell("1 / leak rate"),
+            Cell(""),
         )
     )
-    return Table(
+    table = Table(
         caption=f"Parameters with {level_text(LEVEL)} intervals ({_kind(fit)})",
         columns=(
             Column("name", numeric=False),
@@ -96,6 +97,7 @@ def parameter_table(fit: CouplingFit) -> Table:
         rows=tuple(rows),
         file="parameters.csv",
     )
+    return without_empty_notes(table)
 
 
 def _unit_shown(unit: str) -> str:
@@ -108,16 +110,10 @@ def _kind(fit: CouplingFit) -> str:
 
 def std_error_table(fit: CouplingFit) -> Table:
     """Both kinds of standard errors and intervals side by side, with the ratio."""
-    kinds = {kind: fit.with_covariance(kind).parameters for kind in ("model", "robust")}
+    both = (fit.with_covariance("model"), fit.with_covariance("robust"))
     rows = []
     for name, row in fit.std_errors.iterrows():
-        intervals = []
-        for kind in ("model", "robust"):
-            own = kinds[kind].loc[name]
-            lower, upper = float(own["lower"]), float(own["upper"])
-            bounded = math.isfinite(lower) and math.isfinite(upper)
-            text = interval_text(float(own["estimate"]), lower, upper, max_decimals=TABLE_DECIMALS)
-            intervals.append(Cell(text if bounded else str(own["note"]) or "not estimable"))
+        intervals = [_interval_cell(parameter_of(kind, str(name))) for kind in both]
         rows.append(
             (
                 Cell(str(name)),
@@ -142,11 +138,18 @@ def std_error_table(fit: CouplingFit) -> Table:
     )
 
 
+def _interval_cell(estimate: Estimate | None) -> Cell:
+    if estimate is None or not estimate.bounded:
+        return Cell((estimate.reason if estimate else "") or "not estimable")
+    text = interval_text(estimate.value, estimate.lower, estimate.upper, max_decimals=TABLE_DECIMALS)
+    return Cell(text, estimate.value)
+
+
 def goodness_table(goodness: Goodness) -> Table:
     """KS test of every unit and of all together."""
     rows = [_goodness_row("all units together", goodness.pooled.iloc[0])]
     rows += [_goodness_row(str(unit), row) for unit, row in goodness.units.iterrows()]
-    return Table(
+    table = Table(
         caption="Test of the model per unit",
         columns=(
             Column("unit", numeric=False),
@@ -161,6 +164,7 @@ def goodness_table(goodness: Goodness) -> Table:
         rows=tuple(rows),
         file="goodness.csv",
     )
+    return without_empty_notes(table)
 
 
 def _goodness_row(name: str, row: pd.Series) -> tuple[Cell, ...]:
@@ -185,6 +189,13 @@ def _goodness_row(name: str, row: pd.Series) -> tuple[Cell, ...]:
     )
 
 
+def without_empty_notes(table: Table) -> Table:
+    """The table without its last column, the notes, where no row has one."""
+    if any(row[-1].text for row in table.rows):
+        return table
+    return replace(table, columns=table.columns[:-1], rows=tuple(row[:-1] for row in table.rows))
+
+
 def _note(value: object) -> str:
     return "" if value is None or value != value else str(value)
 
@@ -192,32 +203,35 @@ def _note(value: object) -> str:
 def unit_table(fit: CouplingFit, recording: Recording) -> Table:
     """Every unit: place, spikes, observed rate, baseline."""
     units = recording.units
+    axes = [c for c in COORDINATES if c in units.columns]
+    rate_of = fit.model.link.rate
     rows = []
-    for unit, row in fit.baselines.iterrows():
-        known = units.loc[unit]
-        place = ", ".join(number_text(float(known[c])) for c in ("x_um", "y_um", "z_um") if c in units.columns)
+    for (unit, row), (_, known) in zip(fit.baselines.iterrows(), units.iterrows(), strict=True):
         estimate, error = float(row["estimate"]), float(row["std_error"])
         estimable = math.isfinite(estimate)
+        ends = rate_of(np.array([float(row["lower"]), float(row["upper"])]))
+        rate = float(row["rate_hz"])
+        shown = interval_text(rate, float(ends[0]), float(ends[1]), max_decimals=TABLE_DECIMALS)
         rows.append(
             (
                 Cell(str(unit)),
-                Cell(place),
+                Cell(", ".join(number_text(float(known[c])) for c in axes)),
                 Cell(count_text(float(known["n_spikes"])), float(known["n_spikes"])),
                 value_cell(float(known["rate_hz"])),
-                value_cell(float(row["rate_hz"])) if estimable else Cell(""),
+                Cell(shown, rate) if estimable else Cell(""),
                 value_cell(estimate) if estimable else Cell(""),
                 value_cell(error, 2) if math.isfinite(error) else Cell(""),
                 Cell(_note(row["note"])),
             )
         )
-    return Table(
+    table = Table(
         caption="Units: what was observed, and the baseline without coupling",
         columns=(
             Column("unit", numeric=False),
             Column("position (µm)", numeric=False),
             Column("spikes"),
             Column("observed rate (Hz)"),
-            Column("baseline rate (Hz)"),
+            Column(f"baseline rate (Hz, {level_text(LEVEL)} interval)"),
             Column("baseline b"),
             Column("std. error of b"),
             Column("note", numeric=False, wraps=True),
@@ -225,21 +239,20 @@ def unit_table(fit: CouplingFit, recording: Recording) -> Table:
         rows=tuple(rows),
         file="baselines.csv",
     )
+    return without_empty_notes(table)
 
 
 def truth_table(fit: CouplingFit, truth: Truth) -> Table:
     """Estimates beside the truth an invented recording was made from."""
-    parameters = fit.parameters
     rows = []
     for value in truth.values:
-        if value.name in parameters.index:
-            row = parameters.loc[value.name]
-            estimate, lower, upper = (float(row[c]) for c in ("estimate", "lower", "upper"))
-            shown = interval_text(estimate, lower, upper, max_decimals=TABLE_DECIMALS)
-            bounded = math.isfinite(lower) and math.isfinite(upper)
-            inside = ("yes" if lower <= value.value <= upper else "no") if bounded else "no interval"
-        else:
+        estimate = parameter_of(fit, value.name)
+        if estimate is None:
             shown, inside = "not a parameter of this model", ""
+        else:
+            shown = interval_text(estimate.value, estimate.lower, estimate.upper, max_decimals=TABLE_DECIMALS)
+            holds = estimate.lower <= value.value <= estimate.upper
+            inside = ("yes" if holds else "no") if estimate.bounded else "no interval"
         rows.append(
             (
                 Cell(f"{meaning(value.name, fit.reference_distance_um)}{_unit_shown(value.unit)}"),
@@ -340,6 +353,7 @@ def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
             "intervals",
             f"{level_text(LEVEL)}, {_kind(fit)}" + (f", {blocks}" if _kind(fit) == "robust" else ""),
         ),
+        ("seed of the coupling test", str(fit.seed)),
         ("seed of the goodness test", str(goodness.seed)),
         ("kernelfit", f"version {fit.version}, {fit.created}"),
     )

@@ -17,6 +17,7 @@ from kernelfit.report.look import (
     ONE_COLUMN_MM,
     RAISING,
     TWO_COLUMNS_MM,
+    count_text,
     distance_label,
     look,
     new_figure,
@@ -136,7 +137,7 @@ def draw_raster(data: RasterData) -> Figure:
         top.grid(False)
         top.spines["bottom"].set_visible(False)
         top.tick_params(bottom=False)
-        top.set_ylabel(f"{n_rows} units" if n_rows != 1 else "1 unit")
+        top.set_ylabel(f"{count_text(n_rows)} units" if n_rows != 1 else "1 unit")
         title(top, data.title, characters=100)
         under.fill_between(
             data.time_s,

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
-from matplotlib.ticker import FixedLocator, FuncFormatter, NullFormatter
+from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullFormatter
 
 from kernelfit.report.figure_data import AfterSpikeData, KsData, KsGlanceData, KsPanel
 from kernelfit.report.figures_kernel import title
@@ -120,6 +120,11 @@ def _ks_glance(ax: Axes, data: KsGlanceData) -> None:
     ax.axhline(1.0, color=NULL, linestyle="--", linewidth=0.8)
     ax.set_xlim(0.0, data.ratio.size + 1.0)
     ax.set_ylim(0.0, max(1.5, float(data.ratio.max()) * 1.08))
+    ax.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True))
     ax.set_xlabel("units, best described first")
     ax.set_ylabel("KS statistic / critical value")
-    ax.legend(loc="upper left", title=f"after correction for {data.ratio.size} tests", alignment="left")
+    ax.legend(
+        loc="upper left",
+        title=f"after correction for {data.ratio.size} test{'s' * (data.ratio.size != 1)}",
+        alignment="left",
+    )

@@ -54,7 +54,7 @@ def draw_kernel(data: KernelData) -> Figure:
             ends = np.abs(np.vstack([data.jump - data.lower, data.upper - data.jump]))
             top.errorbar(data.distance_um, data.jump, yerr=ends, color=colour, fmt="o", capsize=2.5)
         zero_line(top)
-        _reference_mark(top, data.reference_um)
+        _reference_mark(top, data.reference_um, on_left=data.reference_um > 0.6 * data.reach_um, low=colour == LOWERING)
         top.set_ylabel("J, effect of one spike on the drive")
         if data.in_percent:
             percent = top.secondary_yaxis("right", functions=(_to_percent, _from_percent))
@@ -68,15 +68,16 @@ def draw_kernel(data: KernelData) -> Figure:
         return figure
 
 
-def _reference_mark(ax: Axes, reference_um: float) -> None:
+def _reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool) -> None:
     ax.axvline(reference_um, color=NULL, linestyle="--", linewidth=0.8, zorder=0)
     ax.annotate(
         f"reference {distance_label(reference_um)}",
-        xy=(reference_um, 1.0),
+        xy=(reference_um, 0.0 if low else 1.0),
         xycoords=("data", "axes fraction"),
-        xytext=(3, -2),
+        xytext=(-3 if on_left else 3, 2 if low else -2),
         textcoords="offset points",
-        va="top",
+        ha="right" if on_left else "left",
+        va="bottom" if low else "top",
         fontsize=7,
         color=INK,
     )

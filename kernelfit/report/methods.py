@@ -26,6 +26,7 @@ HAWKES = "Hawkes AG (1971) Biometrika 58: 83-90."
 TRUCCOLO = "Truccolo W, Eden UT, Fellows MR, Donoghue JP, Brown EN (2005) J Neurophysiol 93: 1074-1089."
 WHITE = "White H (1982) Econometrica 50: 1-25."
 LIANG = "Liang KY, Zeger SL (1986) Biometrika 73: 13-22."
+HANSEN = "Hansen BE (1996) Econometrica 64: 413-430."
 RAO = "Rao CR (1948) Math Proc Camb Philos Soc 44: 50-57."
 EILERS = "Eilers PHC, Marx BD (1996) Stat Sci 11: 89-121."
 BROWN = "Brown EN, Barbieri R, Ventura V, Kass RE, Frank LM (2002) Neural Comput 14: 325-346."
@@ -73,6 +74,7 @@ def methods(fit: CouplingFit, recording: Recording, goodness: Goodness) -> Metho
     references = [HAWKES, TRUCCOLO]
     if isinstance(fit.model.kernel, Spline):
         references.append(EILERS)
+    references.append(HANSEN)
     if fit.covariance_kind == "robust":
         references += [WHITE, LIANG]
     if fit.after_spike_test is not None:
@@ -156,6 +158,10 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
         )
     by = f"penalised maximum likelihood ({listed(penalties)})" if penalties else "maximum likelihood"
     sentences = [f"All parameters were estimated jointly by {by}."]
+    sentences.append(
+        "Whether there is any coupling was tested on the scores of the fit without it, over a grid of leak rates, by "
+        f"random sign flips of {count_text(fit.n_blocks)} blocks of time (Hansen 1996; seed {fit.seed})."
+    )
     if not fit.converged:
         sentences.append("The estimation did not converge.")
     if fit.covariance_kind == "robust":
@@ -180,7 +186,7 @@ def _test_sentences(fit: CouplingFit, goodness: Goodness) -> list[str]:
         f"within bins (Haslinger et al. 2010; seed {goodness.seed}); rescaled intervals of each unit were "
         "compared with an exponential distribution of estimated mean by the Kolmogorov-Smirnov statistic "
         "(Lilliefors 1969), at a false discovery rate of "
-        f"{number_text(100 * TEST_LEVEL)}\N{NO-BREAK SPACE}% over units (Benjamini & Hochberg 1995), and "
+        f"{number_text(100 * TEST_LEVEL)} % over units (Benjamini & Hochberg 1995), and "
         "those of all units taken together likewise (Gerhard et al. 2011); bands of the plots follow "
         "Massart (1990)."
     ]

@@ -53,8 +53,8 @@ def count_text(value: float) -> str:
 
 
 def spaced_unit(unit: str) -> str:
-    """The unit as it follows a number: a no-break space before it, nothing for pure numbers."""
-    return f"\N{NO-BREAK SPACE}{unit}" if unit else ""
+    """The unit as it follows a number, nothing for pure numbers. Pages keep the two on one line."""
+    return f" {unit}" if unit else ""
 
 
 def interval_text(

@@ -8,6 +8,7 @@ the pictures that `look.inline_svg` made.
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 from typing import ClassVar, TypeAlias
 
@@ -178,12 +179,23 @@ class Page:
     footer: str = ""
 
 
+# A number and its unit, and a p with its value, stay on one line.
+_TIES = re.compile(r"(?<=\d) (?=(?:%|µm|mm|ms|s|min|h|Hz)(?![\w]))|(?<=\bp) (?=[=<] )|(?<=\bp [=<]) (?=[\d<])")
+
+
+def _tied(value: object) -> object:
+    if isinstance(value, str) and not isinstance(value, Markup):
+        return _TIES.sub("\N{NO-BREAK SPACE}", value)
+    return value
+
+
 def render_page(page: Page) -> str:
     """The page as one self-contained HTML document: styles, scripts and pictures inside, no network."""
     environment = jinja2.Environment(
         loader=jinja2.PackageLoader("kernelfit.report", "templates"),
         autoescape=True,
         undefined=jinja2.StrictUndefined,
+        finalize=_tied,
         trim_blocks=True,
         lstrip_blocks=True,
         keep_trailing_newline=True,

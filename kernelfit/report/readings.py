@@ -8,9 +8,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from kernelfit._typing import FloatArray
-from kernelfit.report.numbers import number_text, p_sentence, spaced_unit
+from kernelfit.report.numbers import number_text
 from kernelfit.report.words import (
-    MULTIPLES_FROM,
+    NOTHING_PERCENT,
     Estimate,
     distances_sentence,
     explained_sentence,
@@ -49,8 +49,9 @@ def parameter_of(fit: CouplingFit, name: str) -> Estimate | None:
     table = fit.parameters
     if name not in table.index:
         return None
-    row = table.loc[name]
-    return Estimate(float(row["estimate"]), float(row["lower"]), float(row["upper"]), str(row["note"]))
+    value, lower, upper = table.loc[[name], ["estimate", "lower", "upper"]].to_numpy(dtype=np.float64)[0]
+    note = table["note"].to_dict()[name]
+    return Estimate(float(value), float(lower), float(upper), str(note or ""))
 
 
 def coupling_at(fit: CouplingFit, distance_um: float) -> Estimate:
@@ -72,15 +73,13 @@ def time_constant_of(fit: CouplingFit) -> Estimate:
 
 
 def change_text(jump: float, fit: CouplingFit, *, verb: bool = True) -> str:
-    """A jump as short words for a title: "raises the rate by 12 %"; without verb "12 %"."""
+    """A jump as short words for a title: "raises the rate by 12 %"; without verb its size alone, "12 %"."""
     if not is_exp(fit):
-        size = number_text(abs(jump) if verb else jump, 2)
+        size = number_text(abs(jump), 2)
         return f"{'lowers' if jump < 0 else 'raises'} the drive by {size}" if verb else size
-    if jump > math.log1p(MULTIPLES_FROM):
-        size = number_text(math.exp(jump), 2)
-        return f"multiplies the rate by {size}" if verb else f"{size} times"
-    percent = float(percent_of_rate(np.array([jump]))[0])
-    size = f"{number_text(abs(percent) if verb else percent, 2)}{spaced_unit('%')}"
+    percent = abs(float(percent_of_rate(np.array([jump]))[0]))
+    small = percent < NOTHING_PERCENT
+    size = f"below {number_text(NOTHING_PERCENT)} %" if small else f"{number_text(percent, 2)} %"
     return f"{'lowers' if jump < 0 else 'raises'} the rate by {size}" if verb else size
 
 
@@ -88,9 +87,15 @@ def change_text(jump: float, fit: CouplingFit, *, verb: bool = True) -> str:
 
 
 def headline(fit: CouplingFit) -> str:
-    """What one spike does, in one sentence."""
+    """What one spike does, in one sentence; marked where the fit did not converge."""
+    if not fit.converged:
+        return f"The fit did not converge. Where it stopped: {_headline(fit)}"
+    return _headline(fit)
+
+
+def _headline(fit: CouplingFit) -> str:
     if not fit.verdict.found:
-        return f"No coupling to describe ({p_sentence(fit.verdict.p_value)}): {fit.verdict.sentence}"
+        return fit.verdict.sentence
     return one_spike_sentence(
         fit.reference_distance_um,
         coupling_at(fit, fit.reference_distance_um),
@@ -131,14 +136,18 @@ def described_sentence(goodness: Goodness) -> str:
 def sure_lead(fit: CouplingFit) -> str:
     """How sure: the first sentence."""
     ratios = fit.std_errors["ratio"].to_numpy(dtype=np.float64)
-    return sureness_sentence(fit.n_blocks, fit.block_length_s, ratios)
+    return sureness_sentence(
+        fit.n_blocks,
+        fit.block_length_s,
+        ratios,
+        headline="robust" if fit.covariance_kind == "robust" else "model-based",
+    )
 
 
 def result_lines(fit: CouplingFit, goodness: Goodness) -> tuple[str, ...]:
     """The result in five lines, for a console: effect, distance, sureness, description, gain."""
-    marked = "" if fit.converged else "The fit did not converge; this is where it stopped. "
     return (
-        f"{marked}{headline(fit)}",
+        headline(fit),
         distance_sentence(fit),
         sure_lead(fit),
         described_sentence(goodness),

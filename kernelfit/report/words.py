@@ -198,13 +198,14 @@ def listed(parts: list[str]) -> str:
 # --- how sure -------------------------------------------------------------------------------------------
 
 
-def sureness_sentence(n_blocks: int, block_length_s: float, ratios: FloatArray) -> str:
+def sureness_sentence(n_blocks: int, block_length_s: float, ratios: FloatArray, *, headline: str = "robust") -> str:
     """What the two kinds of standard errors say together.
 
     Parameters
     ----------
     n_blocks, block_length_s : the blocks of time behind the robust kind
     ratios : robust over model-based standard error, one per parameter that has both
+    headline : the kind that the page's intervals are of, "robust" or "model-based"
     """
     known = ratios[np.isfinite(ratios)]
     blocks = f"{count_text(n_blocks)} blocks of {block_text(block_length_s)}"
@@ -220,7 +221,7 @@ def sureness_sentence(n_blocks: int, block_length_s: float, ratios: FloatArray) 
         )
     return (
         f"Robust standard errors, from {blocks}, are {times} times those that take the model at its word; "
-        "the intervals of this page use the robust ones."
+        f"the intervals of this page are {headline}."
     )
 
 

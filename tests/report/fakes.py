@@ -56,6 +56,7 @@ class FakeScoreTest:
     statistic: float = 812.4
     df: int = 300
     p_value: float = 1e-12
+    bits_per_spike: float = 0.05
     sentence: str = "After-spike terms would improve the fit"
 
 
@@ -86,6 +87,7 @@ class FakeFit:
     n_blocks: int = 100
     spectral_radius: float = 0.42
     seconds: float = 3.2
+    seed: int = 0
     reference_distance_um: float = PITCH_UM
     extra_parameters: tuple[tuple[str, float, float, float, str, str], ...] = field(default=())
 
@@ -170,6 +172,8 @@ class FakeFit:
             {
                 "estimate": estimate,
                 "std_error": pd.Series(0.05, index=rate.index).where(~silent, np.nan),
+                "lower": (estimate - 0.1).where(~silent, np.nan),
+                "upper": (estimate + 0.1).where(~silent, np.nan),
                 "rate_hz": rate,
                 "note": ["silent: not estimable" if s else "" for s in silent],
             }
@@ -218,7 +222,7 @@ class FakeFit:
         for k in range(1, n):
             trace[k] = decay * (trace[k - 1] + counts[k - 1].sum() / counts.shape[1])
         rate = self.recording.units.rate_hz.to_numpy()[None] * (0.4 + 1.4 * trace[:, None])
-        return FakeRates(edges[:-1] + width / 2, rate, counts)
+        return FakeRates(edges[:-1], np.where(rate > 0, rate, np.nan), counts)
 
     def save(self, path):
         Path(path).write_text('{"kernelfit": "0.1.0"}\n', encoding="utf-8")

@@ -75,8 +75,8 @@ def test_effects_at_other_distances_follow_the_kernel(content):
 
 
 def test_no_coupling_found_is_the_headline():
-    found = content_of(verdict=FakeVerdict(False, 0.42, "The fit with coupling is no better than one without."))
-    assert found.verdict[0].startswith("No coupling to describe (p = 0.42): The fit with coupling")
+    found = content_of(verdict=FakeVerdict(False, 0.42, "No coupling to describe: p = 0.42."))
+    assert found.verdict[0].startswith("No coupling to describe: p = 0.42.")
     assert found.figures.kernel.title == "No coupling to describe"
     assert "does not show coupling" in found.coupling_lead
 
