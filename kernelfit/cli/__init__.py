@@ -22,6 +22,7 @@ from kernelfit.cli.demo import demo_command
 from kernelfit.cli.fit import fit_command
 from kernelfit.cli.inspect import inspect_command
 from kernelfit.errors import KernelfitError, NotConvergedError, OutputError
+from kernelfit.version import __version__
 
 __all__ = ["app", "main"]
 
@@ -35,8 +36,6 @@ app.command("demo")(demo_command)
 
 def _show_version(asked: bool) -> None:
     if asked:
-        from kernelfit import __version__  # the package's own __init__ is complete only now
-
         typer.echo(f"kernelfit {__version__}")
         raise typer.Exit
 
@@ -110,8 +109,6 @@ def _options_for(error: KernelfitError) -> list[str]:
 
 
 def _own_fault_lines(error: Exception, arguments: Sequence[str]) -> list[str]:
-    from kernelfit import __version__
-
     said = f"{type(error).__name__}: {error}".splitlines()[0]
     first = f"This is a fault of kernelfit, not of your input: {said}"
     record = [

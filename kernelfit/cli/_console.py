@@ -15,16 +15,19 @@ from contextlib import contextmanager
 from typing import TextIO
 
 from rich.console import Console as RichConsole
-from rich.progress import BarColumn, Progress, ProgressColumn, Task, TextColumn
-from rich.text import Text
+from rich.progress import BarColumn, TextColumn
+from rich.progress import Progress as RichProgress
 
 from kernelfit.errors import FitWarning, KernelfitWarning
+from kernelfit.fitting.progress import Progress
 from kernelfit.report.numbers import duration_text
 
 PLAIN_INTERVAL_S = 10.0  # between two progress lines where the line cannot rewrite itself
 NO_BREAK_SPACE = "\N{NO-BREAK SPACE}"
 SECONDS_UP_TO_S = 120.0  # from there on minutes
-MIN_ELAPSED_S = 1.0  # before this no rate of progress is worth a prediction
+MIN_ELAPSED_S = 1.0  # before this, or this many sweeps, no rate of progress is worth a prediction
+MIN_SWEEPS = 3
+ANNOUNCED_FROM_S = 30.0
 
 
 def say(*lines: str) -> None:
@@ -88,47 +91,32 @@ def warnings_as_lines() -> Iterator[None]:
         yield
 
 
-class _TimeLeft(ProgressColumn):
-    """Time left, from the share of the work that is done."""
-
-    def render(self, task: Task) -> Text:
-        left = time_left_s(task.completed, task.elapsed or 0.0)
-        return Text("" if left is None else f"{_whole_seconds(left)} left")
-
-
-def time_left_s(done: float, elapsed_s: float) -> float | None:
-    """Seconds left when the share `done` (0 to 1) took `elapsed_s`; None while that says nothing yet."""
-    if done <= 0.0 or elapsed_s < MIN_ELAPSED_S:
-        return None
-    return elapsed_s * (1.0 - min(done, 1.0)) / done
-
-
-def _whole_seconds(left_s: float) -> str:
-    return f"{max(round(left_s), 1)} s" if left_s < SECONDS_UP_TO_S else duration_text(left_s)
-
-
 class ProgressLine:
-    """Progress of a long computation on one line, with the time left.
+    """Progress of a fit on one line, with the time left; a long fit is announced with its time and memory.
 
-    Use it as a context manager and call it with the share of the work done, 0 to 1, and a word on what is
-    being done. Nothing of it remains on the screen afterwards.
+    Use it as a context manager and hand it to `CouplingModel.fit`. Nothing of the line remains afterwards.
+
+    Parameters
+    ----------
+    stream : where to show it; None: standard error
     """
 
     def __init__(self, stream: TextIO | None = None) -> None:
         self._stream = sys.stderr if stream is None else stream
         self._live = self._stream.isatty()
-        self._started = time.monotonic()
-        self._last_shown = self._started
-        self._bar = Progress(
+        self._first: tuple[int, float] | None = None  # sweeps and time of the first report
+        self._last_shown = time.monotonic()
+        self._announced = False
+        self._bar = RichProgress(
             TextColumn("{task.description}", markup=False),
             BarColumn(bar_width=24),
             TextColumn("{task.percentage:>3.0f} %"),
-            _TimeLeft(),
+            TextColumn("{task.fields[left]}", markup=False),
             console=RichConsole(file=self._stream),
             transient=True,
             disable=not self._live,
         )
-        self._task = self._bar.add_task("", total=1.0)
+        self._task = self._bar.add_task("reading", total=1.0, left="")
 
     def __enter__(self) -> ProgressLine:
         self._bar.start()
@@ -137,15 +125,44 @@ class ProgressLine:
     def __exit__(self, *_: object) -> None:
         self._bar.stop()
 
-    def __call__(self, done: float, what: str) -> None:
-        """Show that the share `done` is behind us and that `what` is going on."""
-        if self._live:
-            self._bar.update(self._task, completed=min(max(done, 0.0), 1.0), description=what)
-            return
+    def __call__(self, report: Progress) -> None:
+        """Show one report of a fit."""
         now = time.monotonic()
-        if now - self._last_shown < PLAIN_INTERVAL_S:
-            return
-        self._last_shown = now
-        left = time_left_s(done, now - self._started)
-        rest = "" if left is None else f", about {_whole_seconds(left)} left"
-        _write(self._stream, (f"{what}: {100 * done:.0f} %{rest}",))
+        left_s = self._left_s(report, now)
+        left = "" if left_s is None else f"{left_text(left_s)} left"
+        if left_s is not None and left_s > ANNOUNCED_FROM_S and not self._announced:
+            self._announced = True
+            memory = f" and {report.peak_bytes / 1e9:.1f} GB of memory" if report.peak_bytes else ""
+            self._line(f"The fit will take about {left_text(left_s)}{memory}. Ctrl-C stops it cleanly.")
+        share = report.sweeps / max(report.expected_sweeps, 1)
+        if self._live:
+            self._bar.update(self._task, completed=share, description=report.stage, left=left)
+        elif now - self._last_shown >= PLAIN_INTERVAL_S:
+            self._last_shown = now
+            self._line(f"{report.stage}: {100 * share:.0f} %" + (f", about {left}" if left else ""))
+
+    def stage(self, what: str) -> None:
+        """Show that something else than a fit is going on, for which no time can be told."""
+        if self._live:
+            self._bar.update(self._task, total=None, description=what, left="")
+
+    def _left_s(self, report: Progress, now: float) -> float | None:
+        # The first sweep may hold the time of compilation, so time is counted from its end.
+        if self._first is None:
+            self._first = (report.sweeps, now)
+            return None
+        sweeps, elapsed_s = report.sweeps - self._first[0], now - self._first[1]
+        if sweeps < MIN_SWEEPS or elapsed_s < MIN_ELAPSED_S:
+            return None
+        return elapsed_s / sweeps * max(report.expected_sweeps - report.sweeps, 0)
+
+    def _line(self, text: str) -> None:
+        if self._live:
+            self._bar.console.print(text, markup=False, highlight=False, soft_wrap=True)
+        else:
+            _write(self._stream, (text,))
+
+
+def left_text(left_s: float) -> str:
+    """A time left as people say it, in whole seconds."""
+    return f"{max(round(left_s), 1)} s" if left_s < SECONDS_UP_TO_S else duration_text(left_s)

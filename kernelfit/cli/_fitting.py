@@ -6,8 +6,9 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from kernelfit.cli._console import ProgressLine, say, tell
-from kernelfit.model.coupling import CouplingModel
+from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.recording import Recording
+from kernelfit.report.content import note_text
 from kernelfit.report.fit_page import write_results
 from kernelfit.report.readings import result_lines
 from kernelfit.report.truth import Truth
@@ -25,13 +26,13 @@ class Job:
     overwrite : replace earlier results there
     covariance : "robust" or "model", of the headline intervals
     threads : None: as many as there are cores
-    seed : of the randomised goodness-of-fit test
+    seed : of the sign flips of the coupling test and the randomised goodness-of-fit test
     truth : what a simulated recording was made from
     """
 
     out: Path
     overwrite: bool = False
-    covariance: str = "robust"
+    covariance: CovarianceKind = "robust"
     threads: int | None = None
     seed: int = 0
     truth: Truth | None = None
@@ -40,12 +41,13 @@ class Job:
 def fit_and_write(recording: Recording, model: CouplingModel, job: Job) -> int:
     """Fit, write the results folder, print the result, and return the exit status."""
     with ProgressLine() as progress:
-        fit = model.fit(recording, covariance=job.covariance, threads=job.threads, progress=progress)
-        progress(1.0, "Testing the fit and writing the report")
+        fit = model.fit(recording, covariance=job.covariance, threads=job.threads, seed=job.seed, progress=progress)
+        progress.stage("testing the fit, writing the report")
         goodness = fit.goodness(seed=job.seed)
-        written = write_results(job.out, fit, recording, goodness=goodness, truth=job.truth, overwrite=job.overwrite)
+        report = write_results(job.out, fit, recording, goodness=goodness, truth=job.truth, overwrite=job.overwrite)
+    if not fit.converged:
+        tell(f"error: the fit did not converge: {fit.solver.message}")
     for note in fit.notes:
-        tell(f"{note.severity}: {note.what} ({note.where}) {note.remedy}".rstrip())
-    say(*result_lines(fit, goodness))
-    say(*written)
+        tell(f"{note.severity}: {note_text(note)}")
+    say(*result_lines(fit, goodness), "", f"Report: {report}", f"Tables, figures and the fit: {report.parent}")
     return DONE if fit.converged else NOT_CONVERGED

@@ -31,6 +31,7 @@ from kernelfit.cli._inputs import (
 )
 from kernelfit.cli._parsing import above_zero, from_zero, one_of, whole
 from kernelfit.errors import ArgumentError
+from kernelfit.fitting.result import covariance_kind
 from kernelfit.kernels.base import Kernel
 from kernelfit.kernels.registry import KERNELS
 from kernelfit.kernels.spline import Spline
@@ -170,7 +171,7 @@ def fit_command(
     ] = None,
     seed: Annotated[
         int,
-        typer.Option("--seed", metavar="N", parser=whole("--seed", 0), help="Of the randomised test."),
+        typer.Option("--seed", metavar="N", parser=whole("--seed", 0), help="Of the randomised tests."),
     ] = 0,
 ) -> int:
     """Fit coupling against distance; write a report and tables.
@@ -189,7 +190,7 @@ def fit_command(
         after_spike=after_spike,
         warm_up_s=warm_up_s,
     )
-    job = Job(out=out, overwrite=overwrite, covariance=covariance, threads=threads, seed=seed)
+    job = Job(out=out, overwrite=overwrite, covariance=covariance_kind(covariance), threads=threads, seed=seed)
     check_folder(out, overwrite=overwrite)  # now, not after the long part
     recording = read_inputs(
         spikes,

@@ -11,8 +11,7 @@ import math
 from kernelfit._typing import FloatArray
 from kernelfit.engine.arithmetic import exp_into
 from kernelfit.engine.compiled import compiled
-
-EXP = 0  # link codes; kernelfit.model.links maps each link to one
+from kernelfit.model.links import EXP
 
 
 @compiled

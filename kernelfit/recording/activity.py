@@ -13,6 +13,7 @@ from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain
 
 SHORT_S, MEDIUM_S = 0.001, 0.002
 BLOCK_S = 300.0
+BLOCK_SPIKES = 100  # on average at least; blocks of fewer differ by chance alone
 MIN_BLOCKS = 4
 GAP_S = 10.0
 EVENT_TIMES_MEAN = 2.0  # a second is part of an event if it holds more than twice the mean
@@ -72,7 +73,7 @@ def intervals(train: MergedTrain) -> Intervals:
 
 @dataclass(frozen=True, eq=False)
 class Blocks:
-    """Activity in equal blocks of observed time, five minutes each where the recording is long enough.
+    """Activity in equal blocks of observed time, five minutes each where that gives spikes enough.
 
     Parameters
     ----------
@@ -100,7 +101,7 @@ class Blocks:
 def blocks(train: MergedTrain) -> Blocks:
     """Rates over blocks of time; windows and the stretches around exclusions are joined end to end."""
     total = train.duration_s
-    n_blocks = max(MIN_BLOCKS, round(total / BLOCK_S))
+    n_blocks = max(MIN_BLOCKS, min(round(total / BLOCK_S), train.n_spikes // BLOCK_SPIKES))
     length = total / n_blocks
     place = np.minimum((train.observed_time() / max(length, 1e-300)).astype(np.int64), n_blocks - 1)
     counts = np.bincount(place * train.n_units + train.unit, minlength=n_blocks * train.n_units)
@@ -119,9 +120,7 @@ def blocks(train: MergedTrain) -> Blocks:
     tenth = np.minimum((train.observed_time() / max(length, 1e-300) * 10).astype(np.int64), 10 * n_blocks - 1)
     pieces = np.bincount(tenth, minlength=10 * n_blocks).reshape(n_blocks, 10)
     change_p = 1.0 if np.ptp(pieces) == 0 else float(stats.kruskal(*pieces).pvalue)
-    return Blocks(
-        table=table.round({"start_s": 6, "stop_s": 6}), counts=counts, length_s=length, change_p=change_p
-    )
+    return Blocks(table=table.round({"start_s": 6, "stop_s": 6}), counts=counts, length_s=length, change_p=change_p)
 
 
 def come_and_go(activity: Blocks, *, min_spikes: int = 100) -> BoolArray:
@@ -196,7 +195,5 @@ def burstiness(train: MergedTrain) -> Burstiness | None:
 def _even_share(mean: float) -> float:
     """Share of a Poisson variable's sum that its largest tenth of values holds."""
     top = int(stats.poisson.isf(BUSY_SHARE_OF_TIME, mean))
-    above = float(
-        stats.poisson.sf(top, mean)
-    )  # values above `top` are all in the tenth, the rest of it equals `top`
+    above = float(stats.poisson.sf(top, mean))  # values above `top` are all in the tenth, the rest of it equals `top`
     return float(stats.poisson.sf(top - 1, mean)) + (BUSY_SHARE_OF_TIME - above) * top / mean

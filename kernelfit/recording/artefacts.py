@@ -24,9 +24,7 @@ MARGIN_S = 0.01005  # 10 ms and half of a common sampling step, so that no spike
 SHIFT_S = 0.050
 N_SHIFTS = 8
 FALSE_SHARE = 0.01
-_SHRINK = (
-    0.5  # beyond what shifted trains reach, each further unit at least halves the number expected by chance
-)
+_SHRINK = 0.5  # beyond what shifted trains reach, each further unit at least halves the number expected by chance
 
 
 @dataclass(frozen=True, eq=False)
@@ -81,9 +79,7 @@ def whole_array_events(train: MergedTrain, *, rng: np.random.Generator) -> Whole
     return nothing
 
 
-def _shifted_marks(
-    train: MergedTrain, at_least: int, rng: np.random.Generator
-) -> tuple[FloatArray, IntArray]:
+def _shifted_marks(train: MergedTrain, at_least: int, rng: np.random.Generator) -> tuple[FloatArray, IntArray]:
     """Times of marked spikes, and units at once, after a shift of every train by up to 50 ms."""
     time_s = train.time_s + rng.uniform(-SHIFT_S, SHIFT_S, train.n_units)[train.unit]
     order = np.argsort(time_s, kind="stable")

@@ -135,14 +135,10 @@ def advise(
     at_least = LADDER_S[0]
     if step_s is not None and step_s > LADDER_S[0] / 2:
         at_least = max(at_least, 2.0 * step_s)
-        reasons.append(
-            f"Times are stored in steps of {seconds(step_s)}; narrower bins than two steps show the steps."
-        )
+        reasons.append(f"Times are stored in steps of {seconds(step_s)}; narrower bins than two steps show the steps.")
     if share_short > 0.05:
         disturbed_s = max(disturbed_s, 0.001)
-        reasons.append(
-            f"{100 * share_short:.0f} % of intervals within units are below 1 ms: spikes counted twice."
-        )
+        reasons.append(f"{100 * share_short:.0f} % of intervals within units are below 1 ms: spikes counted twice.")
     if disturbed_s > 0.0:
         at_least = max(at_least, _TIMES_DISTURBED * disturbed_s)
         reasons.append(
@@ -164,9 +160,7 @@ def advise(
     if width < at_least * (1 - 1e-9):
         width = min((w for w in LADDER_S if w >= at_least * (1 - 1e-9)), default=at_least)
         if width > wished:
-            reasons.append(
-                "The two limits cross; the lower one was kept, and the fit will be coarse in time."
-            )
+            reasons.append("The two limits cross; the lower one was kept, and the fit will be coarse in time.")
     if artefacts_left_out:
         reasons.append("This holds with the proposed exclusions left out.")
     reasons.append("Repeat the fit at half and at twice this width.")

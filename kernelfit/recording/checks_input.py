@@ -15,7 +15,7 @@ MIN_EXTENT_UM, MAX_EXTENT_UM = 10.0, 50_000.0
 WEEK_S = 7 * 86_400.0
 DAY_S = 86_400.0
 SLOW_RATE_HZ = 0.1  # fastest unit of a recording of more than a day that was perhaps in ms
-REFRACTORY_TIMES_1000_S = 0.1  # no cell leaves out intervals this long; in ms it is a dead time of 0.1 ms
+NO_DEAD_TIME_S = 1.0  # no cell leaves out intervals this long; read as ms it is a dead time of 1 ms
 COARSE_S, VERY_COARSE_S = 0.0005, 0.005
 
 
@@ -73,8 +73,7 @@ def _times(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "longer_than_a_week",
             "error",
-            f"The windows add up to {number(duration / 86_400)} days: times look like milliseconds or "
-            "samples.",
+            f"The windows add up to {number(duration / 86_400)} days: times look like milliseconds or samples.",
             spikes,
             "State the unit of time when reading (time_unit, --time-unit).",
         )
@@ -94,8 +93,8 @@ def _looks_like_ms(e: Evidence) -> bool:
     if e.rate_hz.max() < SLOW_RATE_HZ and e.recording.duration > DAY_S:
         return True
     n = e.intervals.n_per_unit
-    expected = float(np.sum(n * -np.expm1(-e.rate_hz * REFRACTORY_TIMES_1000_S)))
-    observed = int(np.sum(e.intervals.length_s < REFRACTORY_TIMES_1000_S))
+    expected = float(np.sum(n * -np.expm1(-e.rate_hz * NO_DEAD_TIME_S)))
+    observed = int(np.sum(e.intervals.length_s < NO_DEAD_TIME_S))
     return expected >= 10.0 and observed < 0.1 * expected and float(e.rate_hz.max()) < 1.0
 
 
@@ -110,19 +109,16 @@ def _windows(e: Evidence) -> Iterator[Finding]:
             f"{number(bounds[-1, 1])} s, the floor of the first spike to the first whole second after the "
             "last.",
             recording.origin.name("spikes"),
-            "If acquisition started earlier, stopped later or paused, give a windows table: silence is "
-            "data too.",
+            "If acquisition started earlier, stopped later or paused, give a windows table: silence is data too.",
         )
     if e.n_outside:
         total = sum(t.size for t in recording.trains)
         yield Finding(
             "spikes_outside_windows",
             "warning" if e.n_outside > 0.5 * total else "info",
-            f"{counted(e.n_outside, 'spike')} of {total:,} ({percent(e.n_outside / total)}) lie outside the "
-            "windows.",
+            f"{counted(e.n_outside, 'spike')} of {total:,} ({percent(e.n_outside / total)}) lie outside the windows.",
             recording.origin.name("windows"),
-            "They count only as history before a window. If that is not meant, check windows and units of "
-            "time.",
+            "They count only as history before a window. If that is not meant, check windows and units of time.",
         )
     excluded = 1.0 - e.train.duration_s / recording.duration
     if excluded > 0.2:
@@ -152,11 +148,9 @@ def _positions(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "array_too_small",
             "error",
-            f"The whole array measures {number(extent)} µm: positions look like millimetres or electrode "
-            "numbers.",
+            f"The whole array measures {number(extent)} µm: positions look like millimetres or electrode numbers.",
             sites,
-            "State the unit of length when reading (length_unit='mm', --length-unit mm), or give positions "
-            "in µm.",
+            "State the unit of length when reading (length_unit='mm', --length-unit mm), or give positions in µm.",
         )
     if extent > MAX_EXTENT_UM:
         yield Finding(

@@ -32,11 +32,7 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
         return
     share = events.n_spikes_inside / e.train.n_spikes
     most = events.units_at_once
-    doubt = (
-        " That is so much that it may be how this tissue fires: look at the raster first."
-        if share > MUCH
-        else ""
-    )
+    doubt = " That is so much that it may be how this tissue fires: look at the raster first." if share > MUCH else ""
     yield Finding(
         "whole_array_events",
         "warning",
@@ -54,8 +50,7 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "only_in_proposed",
             "warning",
-            f"{counted(int(lost.sum()), 'unit')} with every spike inside these moments: artefact and "
-            "nothing else.",
+            f"{counted(int(lost.sum()), 'unit')} with every spike inside these moments: artefact and nothing else.",
             names(e.units_where(lost)),
             "With the exclusions they fall silent; leave them out with rec.select(units=...).",
         )
@@ -114,9 +109,9 @@ def _pairs(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "one_cell_twice",
             "warning",
-            f"{counted(len(proposed), 'pair')} of {e.excess.n_near_tested:,} neighbouring pairs fire within "
-            f"{seconds(e.fine.width_s)} more than twice as often as their level at 5 to 10 ms: perhaps one "
-            "cell seen twice. In brackets: share of the smaller unit's spikes in excess.",
+            f"Among {e.excess.n_near_tested:,} neighbouring pairs, {len(proposed):,} fire within "
+            f"{seconds(e.fine.width_s)} more than twice as often as their level at 5 to 10 ms asks for: perhaps one "
+            "cell seen twice. In brackets: the excess as a share of the smaller unit's spikes.",
             names(listed, shown=6),
             "Leave the pairs out of the kernel: --exclude-pairs proposed_pairs.csv, or exclude_pairs=... "
             "when reading. Where the share is large, keep one of the units.",

@@ -53,8 +53,7 @@ def _silent(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "nearly_silent_units",
             "info",
-            f"{counted(int(few.sum()), 'unit')} with fewer than {FEW_SPIKES} spikes: their baselines are "
-            "hardly known.",
+            f"{counted(int(few.sum()), 'unit')} with fewer than {FEW_SPIKES} spikes: their baselines are hardly known.",
             names([f"{e.recording.unit_ids[k]} ({counts[k]})" for k in np.flatnonzero(few)]),
             f"To leave them out use rec.select(min_spikes={FEW_SPIKES}), and see what changes.",
         )
@@ -75,8 +74,7 @@ def _short_intervals(e: Evidence) -> Iterator[Finding]:
             f"{percent(float(short))} of all intervals within units are below 1 ms (shortest "
             f"{seconds(float(np.nanmin(held.shortest_s)))}): one spike was often counted twice.",
             listed,
-            "Detect again with a dead time of 1 to 2 ms, or use bins of 5 ms and more and keep the "
-            "after-spike term.",
+            "Detect again with a dead time of 1 to 2 ms, or use bins of 5 ms and more and keep the after-spike term.",
         )
     elif bad.any():
         yield Finding(
@@ -117,8 +115,7 @@ def _same_site(e: Evidence) -> Iterator[Finding]:
     yield Finding(
         "units_on_one_site",
         "info",
-        f"{counted(len(sites), 'site')} of {e.layout.n_sites} hold several units, "
-        f"{counted(n_pairs, 'pair')}{note}.",
+        f"{counted(len(sites), 'site')} of {e.layout.n_sites} hold several units, {counted(n_pairs, 'pair')}{note}.",
         names(sites, shown=6),
         "Such pairs are left out of the kernel by default, because a detector on one site misses "
         "overlapping spikes; same_site='own' gives them a coefficient of their own.",

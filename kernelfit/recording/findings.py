@@ -61,14 +61,15 @@ def percent(share: float) -> str:
 
 
 def seconds(value_s: float) -> str:
-    """A time with its unit: ms below one second, s below two minutes, then minutes or hours."""
+    """A time with its unit: "1.5 ms", "45 s", "29 min 42 s", "2 h 1 min"."""
     if abs(value_s) < 1.0:
         return f"{number(1e3 * value_s)} ms"
     if abs(value_s) < 120.0:
         return f"{number(value_s)} s"
-    if abs(value_s) < 7200.0:
-        return f"{number(value_s / 60.0)} min"
-    return f"{number(value_s / 3600.0)} h"
+    minutes, left = divmod(round(value_s), 60)
+    hours, minutes_left = divmod(minutes, 60)
+    first, second = (f"{hours:,} h", f"{minutes_left} min") if hours else (f"{minutes} min", f"{left} s")
+    return first if second.startswith("0 ") else f"{first} {second}"
 
 
 def counted(n: int, one: str, many: str | None = None) -> str:

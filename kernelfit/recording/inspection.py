@@ -112,9 +112,7 @@ class Inspection:
         proposals = []
         if len(self.proposed_exclusions):
             length = float((self.proposed_exclusions["stop_s"] - self.proposed_exclusions["start_s"]).sum())
-            proposals.append(
-                f"{counted(len(self.proposed_exclusions), 'exclusion')} ({seconds(length)} in all)"
-            )
+            proposals.append(f"{counted(len(self.proposed_exclusions), 'exclusion')} ({seconds(length)} in all)")
         if len(self.proposed_pairs):
             proposals.append(f"{counted(len(self.proposed_pairs), 'pair')} to leave out of the kernel")
         if proposals:

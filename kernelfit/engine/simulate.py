@@ -1,0 +1,251 @@
+"""Simulate the binned process: the model run forward, seeded, and stopped when it explodes."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+
+from kernelfit._typing import FloatArray, IntArray
+from kernelfit.engine.compiled import compiled
+from kernelfit.engine.links import fill_cells
+from kernelfit.errors import ArgumentError, SimulationError
+from kernelfit.kernels import KernelCurve
+from kernelfit.kernels.geometry import same_site_labels
+from kernelfit.model.links import Link, link_from
+from kernelfit.recording.recording import Recording
+
+MOST_PER_BIN = 5.0  # expected spikes of one unit in one bin: no cell fires so, the network has exploded
+CHUNK_BINS = 4096
+FIRST_ROOM = 1024
+
+
+@compiled
+def step_bins(
+    link: int,
+    bin_width: float,
+    leak: float,
+    baseline: FloatArray,
+    table: FloatArray,
+    trace_decay: FloatArray,
+    coefficient: FloatArray,
+    state: FloatArray,
+    traces: FloatArray,
+    uniform: FloatArray,
+    limit: float,
+    event_bin: IntArray,
+    event_unit: IntArray,
+    event_count: IntArray,
+    n_events: int,
+) -> tuple[int, int]:
+    """Run the bins of `uniform` (n_bins, n_units), one uniform number a cell.
+
+    Counts follow from the uniforms by inversion, so they do not depend on how the bins are chunked. Events are written
+    from `n_events` on. Returns bins done and events so far; fewer bins than asked: the event arrays are full, or the
+    expected count of a unit passed `limit` (then the number of bins done is negative, less one).
+    """
+    n_units = baseline.size
+    gamma = math.exp(-leak * bin_width)
+    eta, mean, scratch = np.zeros(n_units), np.zeros(n_units), np.zeros(n_units)
+    slope, weight = np.zeros(n_units), np.zeros(n_units)
+    for t in range(uniform.shape[0]):
+        if n_events + n_units > event_bin.size:
+            return t, n_events
+        for i in range(n_units):
+            state[i] *= gamma
+            eta[i] = baseline[i] + state[i]
+        for m in range(trace_decay.size):
+            for i in range(n_units):
+                traces[m, i] *= trace_decay[m]
+                eta[i] += coefficient[m, i] * traces[m, i]
+        fill_cells(link, eta, bin_width, mean, slope, weight, scratch)
+        first = n_events
+        for i in range(n_units):
+            if not mean[i] <= limit:
+                return -t - 1, n_events
+            left = uniform[t, i]
+            term = math.exp(-mean[i])
+            count = 0
+            while left >= term and count < 1000:
+                left -= term
+                count += 1
+                term *= mean[i] / count
+            if count > 0:
+                event_bin[n_events] = t
+                event_unit[n_events] = i
+                event_count[n_events] = count
+                n_events += 1
+        for e in range(first, n_events):
+            unit, count = event_unit[e], event_count[e]
+            row = table[unit]
+            for i in range(n_units):
+                state[i] += count * row[i]
+            for m in range(trace_decay.size):
+                traces[m, unit] += count
+    return uniform.shape[0], n_events
+
+
+def simulate_counts(
+    link: Link,
+    bin_width: float,
+    leak: float,
+    baseline: FloatArray,
+    table: FloatArray,
+    n_bins: int,
+    rng: np.random.Generator,
+    *,
+    trace_decay: FloatArray | None = None,
+    coefficient: FloatArray | None = None,
+) -> tuple[IntArray, IntArray, IntArray]:
+    """Counts of the binned process from rest (U = 0, no history).
+
+    Parameters
+    ----------
+    link, bin_width (s), leak (1/s) : of the model
+    baseline : (n,) b_i
+    table : (n, n) jump by source (row) and target (column)
+    n_bins : bins to run
+    rng : draws one uniform number a cell, bin by bin
+    trace_decay, coefficient : (M,) decay per bin and (M, n) after-spike coefficients; None: none
+
+    Returns
+    -------
+    event_bin, event_unit, event_count : (n_events,) non-empty (bin, unit), in order
+
+    Raises
+    ------
+    SimulationError : a unit's expected count in a bin passes 5: the network has exploded
+    """
+    n = baseline.size
+    decay = np.empty(0) if trace_decay is None else np.ascontiguousarray(trace_decay)
+    weights = np.empty((0, n)) if coefficient is None else np.ascontiguousarray(coefficient)
+    state, traces = np.zeros(n), np.zeros((decay.size, n))
+    parts: list[tuple[IntArray, IntArray, IntArray]] = []
+    for start in range(0, n_bins, CHUNK_BINS):
+        uniform = rng.random((min(CHUNK_BINS, n_bins - start), n))
+        at = 0
+        while at < len(uniform):
+            room = max(FIRST_ROOM, 4 * n)
+            bins, units, counts = (np.empty(room, dtype=np.int64) for _ in range(3))
+            done, filled = step_bins(
+                link.code, bin_width, leak, baseline, table, decay, weights, state, traces, uniform[at:], MOST_PER_BIN,
+                bins, units, counts, 0,
+            )  # fmt: skip
+            if done < 0:
+                raise SimulationError(_exploded(bin_width, leak, baseline, table, link, (start + at - done - 1) * bin_width))
+            parts.append((bins[:filled] + start + at, units[:filled].copy(), counts[:filled].copy()))
+            at += done
+    if not parts:
+        empty = np.empty(0, dtype=np.int64)
+        return empty, empty, empty
+    event_bin, event_unit, event_count = (np.concatenate(column) for column in zip(*parts, strict=True))
+    return event_bin, event_unit, event_count
+
+
+def _exploded(
+    bin_width: float, leak: float, baseline: FloatArray, table: FloatArray, link: Link, time_s: float
+) -> str:
+    slope = link.slope(baseline)
+    radius = float(np.max(np.abs(np.linalg.eigvals(slope[:, None] * table.T / leak))))
+    why = (
+        f"already at the baselines each spike causes {radius:.2g} others (spectral radius of E[f'] J / alpha, supercritical "
+        "from 1 on)"
+        if radius >= 1
+        else f"a burst carried it out of its stable range (spectral radius {radius:.2g} at the baselines; the exponential "
+        "link has no ceiling)"
+    )
+    return (
+        f"The simulated network exploded at {time_s:.3g} s: a unit was about to fire more than {MOST_PER_BIN:g} times in a bin of "
+        f"{1000 * bin_width:g} ms; {why}. Lower the amplitude or the baselines, or raise the leak rate."
+    )
+
+
+def simulate_recording(
+    positions_um: FloatArray,
+    kernel: KernelCurve,
+    baseline_hz: float | FloatArray,
+    leak_rate: float,
+    duration: float,
+    seed: int | np.random.Generator,
+    *,
+    link: str | Link = "exp",
+    bin_width: float = 0.001,
+    after_spike_constants_s: FloatArray | None = None,
+    after_spike_coefficients: FloatArray | None = None,
+    unit_ids: tuple[str, ...] | None = None,
+) -> Recording:
+    """A recording of a network with a known kernel, run in bins from rest; pairs on one site are not coupled.
+
+    Parameters
+    ----------
+    positions_um : (n, 1 to 3) µm
+    kernel : any callable from distances (µm) to J per spike, such as ``fit.kernel`` or ``kf.kernels.Gaussian().at(...)``
+    baseline_hz : rate without any spike, f(b_i), Hz, one for all or (n,); 0 is a silent unit
+    leak_rate : alpha, 1/s
+    duration : seconds; the window is [0, duration)
+    seed : or a generator; the same seed gives the same bits
+    link, bin_width : of the model, seconds
+    after_spike_constants_s, after_spike_coefficients : (M,) seconds and (M,) or (M, n); None: no after-spike effect
+    unit_ids : names; None: u01, u02, ...
+
+    Returns
+    -------
+    Recording : spikes lie at random inside their bins
+
+    Raises
+    ------
+    ArgumentError : an argument out of range or of the wrong shape
+    SimulationError : the network explodes; the message says why and what to do
+    """
+    positions = np.asarray(positions_um, dtype=np.float64)
+    positions = positions[:, None] if positions.ndim == 1 else positions
+    n = len(positions)
+    the_link = link_from(link)
+    rates = np.broadcast_to(np.asarray(baseline_hz, dtype=np.float64), (n,)) if np.size(baseline_hz) in (1, n) else None
+    if rates is None or not (np.isfinite(rates) & (rates >= 0)).all():
+        raise ArgumentError(f"baseline_hz must be one rate of 0 Hz or more, or {n} of them, one a unit.")
+    for name, value in (("leak_rate", leak_rate), ("duration", duration), ("bin_width", bin_width)):
+        if not (math.isfinite(value) and value > 0):
+            raise ArgumentError(f"{name}={value} must be a positive number.")
+    ids = tuple(f"u{k + 1:0{max(2, len(str(n)))}d}" for k in range(n)) if unit_ids is None else unit_ids
+    if len(ids) != n:
+        raise ArgumentError(f"{len(ids)} unit_ids for {n} positions.")
+    site = same_site_labels(positions)
+    distance = np.sqrt(np.sum((positions[:, None] - positions[None]) ** 2, axis=-1))
+    coupled = site[:, None] != site[None]
+    table = np.zeros((n, n))
+    table[coupled] = np.asarray(kernel(distance[coupled]), dtype=np.float64)
+    if not np.isfinite(table).all():
+        raise ArgumentError("kernel gives values that are not finite at some distance of these positions.")
+    decay, coefficients = _after_spike(after_spike_constants_s, after_spike_coefficients, bin_width, n)
+    rng = np.random.default_rng(seed)
+    n_bins = math.floor(duration / bin_width + 1e-6)
+    event_bin, event_unit, event_count = simulate_counts(
+        the_link, bin_width, leak_rate, the_link.predictor(rates), table, n_bins, rng,
+        trace_decay=decay, coefficient=coefficients,
+    )  # fmt: skip
+    bins, units = np.repeat(event_bin, event_count), np.repeat(event_unit, event_count)
+    # strictly inside the bin, so that no rounding moves a spike over its edge
+    times = (bins + 0.001 + 0.998 * rng.random(bins.size)) * bin_width
+    order = np.lexsort((times, units))
+    edges = np.searchsorted(units[order], np.arange(n + 1))
+    trains = tuple(times[order[a:b]] for a, b in zip(edges[:-1], edges[1:], strict=True))
+    return Recording(ids, positions, trains, np.array([[0.0, duration]]))
+
+
+def _after_spike(
+    constants_s: FloatArray | None, coefficients: FloatArray | None, bin_width: float, n: int
+) -> tuple[FloatArray, FloatArray]:
+    if constants_s is None or coefficients is None:
+        if constants_s is not coefficients:
+            raise ArgumentError("after_spike_constants_s and after_spike_coefficients go together: give both or none.")
+        return np.empty(0), np.empty((0, n))
+    constants = np.atleast_1d(np.asarray(constants_s, dtype=np.float64))
+    weights = np.asarray(coefficients, dtype=np.float64)
+    weights = weights[:, None] if weights.ndim == 1 else weights
+    if weights.shape[0] != constants.size or weights.shape[1] not in (1, n) or not (constants > 0).all():
+        raise ArgumentError(
+            f"after_spike_coefficients of shape {weights.shape} for {constants.size} time constants: give one a time constant, "
+            "for all units or for each; time constants are positive seconds."
+        )
+    return np.exp(-bin_width / constants), np.ascontiguousarray(np.broadcast_to(weights, (constants.size, n)))

@@ -1,0 +1,66 @@
+"""What a term that is not in the model would add, judged by its score at the fit: one sweep, no refit.
+
+Reference
+---------
+Rao (1948), Proceedings of the Cambridge Philosophical Society 44, 50-57; the variance is that of scores by block of time.
+"""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+from scipy.stats import chi2
+
+from kernelfit.engine.time_blocks import time_blocks
+from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.covariance import block_length_s
+from kernelfit.fitting.maximise import Optimum
+from kernelfit.fitting.outcome import ScoreTest
+from kernelfit.fitting.problem import Estimate, Problem
+from kernelfit.model.terms import AfterSpike
+
+
+def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
+    """Score test of a lag basis common to all units at a fit without after-spike effects."""
+    constants = AfterSpike().constants(problem.data.bin_width)
+    n_traces = constants.size
+    here = replace(problem, trace_decay=np.exp(-problem.data.bin_width / constants))
+    own = np.column_stack([optimum.estimate.own, np.zeros((problem.data.n_targets, n_traces))])
+    length_s = block_length_s(problem.grid.duration_s, problem.leak(optimum.estimate.shared))
+    blocks = time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
+    problem.clock.stage = "what an after-spike term would add"
+    sums = here.evaluate(Estimate(own, optimum.estimate.shared), blocks=blocks)
+
+    free = optimum.free
+    corner = np.concatenate(
+        [
+            np.concatenate([sums.own_own[:, 1:, 1:].sum(axis=0), sums.own_shared[:, 1:, free].sum(axis=0)], axis=1),
+            np.concatenate([sums.own_shared[:, 1:, free].sum(axis=0).T, sums.shared_shared[np.ix_(free, free)]], axis=1),
+        ]
+    )
+    cross = np.concatenate([sums.own_own[:, :1, 1:], sums.own_shared[:, :1, free]], axis=2)
+    elimination = eliminate(Arrow(sums.own_own[:, :1, :1], cross, corner))
+    shared_score = np.concatenate(
+        [sums.score[..., 1 : 1 + n_traces], sums.score[..., 1 + n_traces :][..., free]], axis=-1
+    ).sum(axis=1)
+    efficient = elimination.efficient_score(sums.score[..., :1], shared_score)
+    test, rest = np.arange(n_traces), np.arange(n_traces, efficient.shape[1])
+    schur = elimination.schur
+    if rest.size:
+        weights = solve_symmetric(schur[np.ix_(rest, rest)], schur[np.ix_(rest, test)])
+        efficient = efficient[:, test] - efficient[:, rest] @ weights
+        schur = schur[np.ix_(test, test)] - schur[np.ix_(test, rest)] @ weights
+    score = efficient.sum(axis=0)
+    statistic = float(score @ np.linalg.pinv(efficient.T @ efficient, rcond=1e-10, hermitian=True) @ score)
+    p_value = float(chi2.sf(statistic, n_traces))
+    gain = 0.5 * float(score @ np.linalg.pinv(schur, rcond=1e-10, hermitian=True) @ score)
+    bits = gain / (problem.data.n_spikes * np.log(2.0))
+    shown = "p < 0.001" if p_value < 0.001 else f"p = {p_value:.2g}"
+    advice = (
+        f"A unit's own past matters here: an after-spike term would add about {bits:.2g} bits per spike ({shown}). "
+        "Without it the kernel absorbs part of it; fit with after_spike='basis'."
+        if p_value <= 0.05
+        else f"An after-spike term would add little: about {bits:.2g} bits per spike ({shown})."
+    )
+    return ScoreTest(statistic, n_traces, p_value, bits, advice)

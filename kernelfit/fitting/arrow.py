@@ -1,0 +1,77 @@
+"""Linear algebra of an information matrix with an arrow shape: each unit's own block, then the shared parameters.
+
+Eliminating the own blocks first keeps the cost linear in the number of units (MODEL.md section 4).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import scipy.linalg
+
+from kernelfit._typing import BoolArray, FloatArray
+
+
+@dataclass(frozen=True, eq=False)
+class Arrow:
+    """Information matrix in blocks: own (n, P, P), cross (n, P, Q), shared (Q, Q)."""
+
+    own: FloatArray
+    cross: FloatArray
+    shared: FloatArray
+
+    def damped(self, factor: float) -> Arrow:
+        """Every diagonal element times (1 + factor) (Marquardt 1963)."""
+        own, shared = self.own.copy(), self.shared.copy()
+        p, q = np.arange(own.shape[1]), np.arange(shared.shape[0])
+        own[:, p, p] *= 1.0 + factor
+        shared[q, q] *= 1.0 + factor
+        return Arrow(own, self.cross, shared)
+
+    def only(self, free: BoolArray) -> Arrow:
+        """The same with some shared parameters taken out."""
+        return Arrow(self.own, self.cross[..., free], self.shared[np.ix_(free, free)])
+
+
+@dataclass(frozen=True, eq=False)
+class Elimination:
+    """An arrow matrix after eliminating the own blocks.
+
+    own_inverse (n, P, P); reduced (n, P, Q) own_inverse @ cross; schur (Q, Q), the information on the shared parameters
+    that is left once the own ones are estimated too.
+    """
+
+    own_inverse: FloatArray
+    reduced: FloatArray
+    schur: FloatArray
+
+    def efficient_score(self, score_own: FloatArray, score_shared: FloatArray) -> FloatArray:
+        """Shared score less what the own parameters explain of it: (..., n, P) and (..., Q) to (..., Q)."""
+        return score_shared - np.einsum("npq,...np->...q", self.reduced, score_own)
+
+    def solve(self, score_own: FloatArray, score_shared: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Solve H x = score: own (n, P) and shared (Q,) parts of x. Raises numpy's LinAlgError where singular."""
+        shared = solve_symmetric(self.schur, self.efficient_score(score_own, score_shared))
+        own = np.einsum("npk,nk->np", self.own_inverse, score_own) - self.reduced @ shared
+        return own, shared
+
+
+def eliminate(arrow: Arrow) -> Elimination:
+    """Eliminate the own blocks. Raises numpy's LinAlgError where one is singular."""
+    own_inverse = np.linalg.inv(arrow.own)
+    reduced = own_inverse @ arrow.cross
+    schur = arrow.shared - np.einsum("npq,npr->qr", arrow.cross, reduced)
+    return Elimination(own_inverse, reduced, 0.5 * (schur + schur.T))
+
+
+def solve_symmetric(matrix: FloatArray, right: FloatArray) -> FloatArray:
+    """Solve a positive definite system after scaling its diagonal to one; numpy's LinAlgError where it is not."""
+    if matrix.shape[0] == 0:
+        return np.zeros_like(right)
+    diagonal = np.diag(matrix)
+    if not (diagonal > 0).all():
+        raise np.linalg.LinAlgError("a parameter carries no information")
+    scale = 1.0 / np.sqrt(diagonal)
+    factor = scipy.linalg.cho_factor(matrix * scale[:, None] * scale[None, :])
+    return np.asarray((scipy.linalg.cho_solve(factor, (right.T * scale).T).T * scale).T)

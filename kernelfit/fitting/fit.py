@@ -1,0 +1,174 @@
+"""The whole fit, in order: null, coupling or not, search, standard errors, what must be said."""
+
+from __future__ import annotations
+
+import time
+import warnings
+from dataclasses import dataclass
+from datetime import UTC, datetime
+
+import numpy as np
+from scipy.special import gammaln, xlogy
+
+from kernelfit._typing import FloatArray
+from kernelfit.errors import FitWarning
+from kernelfit.fitting.added_term import after_spike_test
+from kernelfit.fitting.covariance import Covariances, covariances
+from kernelfit.fitting.detection import detect_coupling
+from kernelfit.fitting.maximise import Optimum
+from kernelfit.fitting.notes import bound_reasons, fit_notes
+from kernelfit.fitting.null import Null, fit_null
+from kernelfit.fitting.outcome import SolverReport
+from kernelfit.fitting.problem import Problem, make_problem
+from kernelfit.fitting.progress import ProgressCallback
+from kernelfit.fitting.radius import RadiusProfile, discrete_parameter, search_radius
+from kernelfit.fitting.result import CouplingFit, Uncertainty, covariance_kind
+from kernelfit.fitting.search import SearchResult, search
+from kernelfit.model.coupling import CouplingModel, CovarianceKind
+from kernelfit.recording.recording import Recording
+from kernelfit.version import __version__
+
+
+def fit_model(
+    model: CouplingModel,
+    recording: Recording,
+    covariance: CovarianceKind = "robust",
+    *,
+    threads: int | None = None,
+    seed: int = 0,
+    progress: ProgressCallback | None = None,
+) -> CouplingFit:
+    """Estimate a model from a recording; see `CouplingModel.fit`."""
+    kind = covariance_kind(covariance)
+    started = time.monotonic()
+    problem = make_problem(model, recording, threads=threads, progress=progress)
+    null = fit_null(problem)
+    verdict = detect_coupling(null, seed)
+    found, profile = _best(problem, null)
+    optimum = found.best
+    spread = covariances(problem, optimum)
+    added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None
+    notes = fit_notes(problem, recording, optimum, spread, verdict)
+    for note in notes:
+        if note.severity != "info":
+            warnings.warn(f"{note.what} {note.remedy}", FitWarning, stacklevel=3)
+    likelihoods = _reference_likelihoods(problem)
+    by_distance = problem.geometry.pairs_by_distance
+    return CouplingFit(
+        model=model,
+        unit_ids=recording.unit_ids,
+        positions=recording.positions,
+        origin=recording.origin,
+        window_bounds=recording.window_bounds,
+        targets=problem.data.targets,
+        counts=problem.grid.counts_in_sum,
+        n_bins=problem.data.n_bins,
+        own=optimum.estimate.own,
+        shared=optimum.estimate.shared,
+        at_bound=optimum.at_bound,
+        bound_reasons=bound_reasons(problem, optimum.at_bound),
+        span=problem.span,
+        distinct_um=by_distance["distance_um"].to_numpy(),
+        n_pairs=by_distance["n_pairs"].to_numpy(),
+        has_same_site=problem.has_same_site,
+        radius_interval=_radius_interval(problem, profile, spread),
+        uncertainty=Uncertainty(
+            shared_model=spread.shared_model,
+            shared_robust=spread.shared_robust,
+            own_model=spread.own_model,
+            own_robust=spread.own_robust,
+            block_influence=spread.block_influence,
+            n_blocks=spread.n_blocks,
+            block_length_s=spread.block_length_s,
+        ),
+        covariance_kind=kind,
+        log_likelihood=optimum.local.log_likelihood,
+        null_log_likelihood=likelihoods.constant,
+        saturated_log_likelihood=likelihoods.saturated,
+        uncoupled_log_likelihood=null.optimum.local.log_likelihood,
+        spectral_radius=_spectral_radius(problem, optimum),
+        verdict=verdict,
+        notes=notes,
+        solver=_solver_report(found),
+        second_optimum=_second_sentence(problem, found),
+        after_spike_test=added,
+        seed=seed,
+        seconds=time.monotonic() - started,
+        version=__version__,
+        created=datetime.now(UTC).isoformat(timespec="seconds"),
+        recording=recording,
+    )
+
+
+def _best(problem: Problem, null: Null) -> tuple[SearchResult, RadiusProfile | None]:
+    place = discrete_parameter(problem)
+    if place is None:
+        return search(problem, null), None
+    return search_radius(problem, null, place)
+
+
+@dataclass(frozen=True)
+class _Likelihoods:
+    constant: float
+    saturated: float
+
+
+def _reference_likelihoods(problem: Problem) -> _Likelihoods:
+    """Constant rates, and a rate for every bin: what deviance is measured against. Nats, -log y! included."""
+    data = problem.data
+    counts = data.counts.astype(np.float64)
+    constant = float(np.sum(xlogy(counts, counts / data.n_bins) - counts)) - data.log_factorials
+    grid = problem.grid
+    is_target = np.zeros(grid.n_units, dtype=bool)
+    is_target[data.targets] = True
+    y = grid.event_count[grid.bins_in_sum(grid.event_bin) & is_target[grid.event_unit]].astype(np.float64)
+    return _Likelihoods(constant, float(np.sum(xlogy(y, y) - y - gammaln(y + 1.0))))
+
+
+def _spectral_radius(problem: Problem, optimum: Optimum) -> float:
+    """Largest absolute eigenvalue of E[f'_i] J(d_ij) / alpha; E[f'] is the mean rate under the exponential link."""
+    slope = np.zeros(problem.data.n_units)
+    slope[problem.data.targets] = problem.data.counts / (problem.data.n_bins * problem.data.bin_width)
+    table = problem.tables(optimum.estimate.shared)[0]  # source, target
+    square = np.zeros((problem.data.n_units, problem.data.n_units))
+    square[problem.data.targets] = table.T
+    matrix = slope[:, None] * square / problem.leak(optimum.estimate.shared)
+    return float(np.max(np.abs(np.linalg.eigvals(matrix))))
+
+
+def _solver_report(found: SearchResult) -> SolverReport:
+    best = found.best
+    return SolverReport(
+        converged=best.converged,
+        n_iterations=best.n_iterations,
+        max_gradient=float(np.sqrt(max(best.decrement, 0.0))) if np.isfinite(best.decrement) else float("inf"),
+        message=best.message,
+        starts=found.starts,
+    )
+
+
+def _second_sentence(problem: Problem, found: SearchResult) -> str | None:
+    if found.second is None:
+        return None
+
+    def words(shared: FloatArray) -> str:
+        family = problem.kernel.parameters(problem.span)
+        natural = problem.kernel.natural(shared[: problem.n_kernel], problem.span)
+        parts = [f"{p.name} {v:.3g}" for p, v in zip(family, natural, strict=True)]
+        return ", ".join([*parts, f"time constant {1000 / problem.leak(shared):.3g} ms"])
+
+    gap = found.best.local.objective - found.second.local.objective
+    return (
+        f"A second optimum lies only {gap:.2g} log-likelihood units below this one ({words(found.second.estimate.shared)} "
+        f"against {words(found.best.estimate.shared)}): the recording hardly tells them apart."
+    )
+
+
+def _radius_interval(
+    problem: Problem, profile: RadiusProfile | None, spread: Covariances
+) -> tuple[float, float] | None:
+    if profile is None:
+        return None
+    model, robust = spread.shared_model[0, 0], spread.shared_robust[0, 0]
+    inflation = robust / model if model > 0 and np.isfinite(robust / model) else 1.0
+    return profile.interval(0.95, problem.geometry.distinct_um, max(inflation, 1.0))

@@ -1,0 +1,211 @@
+"""Penalised maximum likelihood by Levenberg-Marquardt steps on the expected information.
+
+The information of a step is that of Fisher scoring, which for the exponential link at fixed shapes is the Hessian itself.
+Steps that are too long or lose likelihood raise the damping (Marquardt 1963) instead of being clipped: a clipped Newton
+step wanders where length and leak lie on a ridge.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from kernelfit._typing import BoolArray, FloatArray
+from kernelfit.engine.evaluate import Evaluation
+from kernelfit.fitting.arrow import Arrow, eliminate
+from kernelfit.fitting.problem import Estimate, Problem
+
+TIGHT = 1e-10  # squared length of the next step in standard errors
+LOOSE = 1e-2
+MAX_ITERATIONS = 200
+LONGEST_SHARED_STEP = 1.0  # on the log scale of lengths and leak: no more than a factor e at once
+LONGEST_OWN_STEP = 5.0
+FIRST_DAMPING = 1e-3
+LARGEST_DAMPING = 1e12
+ROUNDING = 1e-14  # of the log-likelihood: a loss smaller than this is no loss
+
+
+@dataclass(frozen=True, eq=False)
+class Local:
+    """Penalised objective and its derivatives at an estimate."""
+
+    estimate: Estimate
+    objective: float
+    log_likelihood: float
+    score_own: FloatArray  # (n, P)
+    score_shared: FloatArray  # (Q,)
+    information: Arrow
+
+
+@dataclass(frozen=True, eq=False)
+class Optimum:
+    """Where the optimiser stopped.
+
+    `free` marks the shared parameters that were estimated; the others were held or sit at `at_bound` (-1 lower, 1 upper).
+    `decrement` is the squared length of the next step in standard errors.
+    """
+
+    local: Local
+    free: BoolArray
+    at_bound: FloatArray
+    converged: bool
+    n_iterations: int
+    decrement: float
+    message: str
+
+    @property
+    def estimate(self) -> Estimate:
+        """The parameters."""
+        return self.local.estimate
+
+
+def penalised(problem: Problem, estimate: Estimate, sums: Evaluation) -> Local:
+    """Add the penalties to the sums of a sweep."""
+    n_own = estimate.own.shape[1]
+    ridge = np.full(n_own, problem.model.after_spike.ridge)
+    ridge[0] = 0.0
+    penalty = problem.penalty
+    total = sums.score.sum(axis=0)
+    log_likelihood = float(sums.log_likelihood.sum()) - problem.data.log_factorials
+    own_cost = float(np.sum(ridge * estimate.own**2))
+    shared_cost = float(estimate.shared @ penalty @ estimate.shared)
+    return Local(
+        estimate=estimate,
+        objective=log_likelihood - 0.5 * (own_cost + shared_cost),
+        log_likelihood=log_likelihood,
+        score_own=total[:, :n_own] - ridge * estimate.own,
+        score_shared=total[:, n_own:].sum(axis=0) - penalty @ estimate.shared,
+        information=Arrow(sums.own_own + np.diag(ridge), sums.own_shared, sums.shared_shared + penalty),
+    )
+
+
+def evaluate_locally(problem: Problem, estimate: Estimate) -> Local:
+    """Penalised objective and derivatives at an estimate: one sweep."""
+    return penalised(problem, estimate, problem.evaluate(estimate))
+
+
+def maximise(
+    problem: Problem,
+    start: Estimate,
+    *,
+    held: BoolArray | None = None,
+    tolerance: float = TIGHT,
+    max_iterations: int = MAX_ITERATIONS,
+) -> Optimum:
+    """Climb from `start` to the nearest optimum of the penalised log-likelihood.
+
+    Parameters
+    ----------
+    problem, start : what to maximise and where from; `start` is moved into the bounds
+    held : (Q,) True for shared parameters that stay where they are
+    tolerance : stop when the next step is shorter than the square root of this, in standard errors
+    max_iterations : steps tried before giving up
+
+    Returns
+    -------
+    Optimum : the best point found, converged or not
+    """
+    bounds = problem.bounds
+    held = np.zeros(problem.n_shared, dtype=bool) if held is None else held
+    inside = np.clip(start.shared, bounds[:, 0], bounds[:, 1]) if problem.n_shared else start.shared
+    local = evaluate_locally(problem, Estimate(start.own, inside))
+    damping, decrement, stale = FIRST_DAMPING, np.inf, 0
+    message, converged, iteration = "", False, 0
+    while iteration < max_iterations:
+        iteration += 1
+        free = ~held & ~_pushed_out(local, bounds)
+        try:
+            step = _solve(local, free, 0.0)
+            decrement = step.gain
+            if decrement < tolerance:
+                converged, message = True, f"the next step is {np.sqrt(max(decrement, 0.0)):.1e} standard errors long"
+                break
+        except np.linalg.LinAlgError:
+            decrement = np.inf
+        trial, damping = _bounded_step(local, free, damping, bounds)
+        if trial is None:
+            message = "no step short enough to trust leads on: the information is singular here"
+            break
+        candidate = evaluate_locally(problem, trial.estimate)
+        slack = ROUNDING * abs(local.objective)
+        gained = candidate.objective - local.objective
+        if np.isfinite(candidate.objective) and gained >= -slack:
+            stale = stale + 1 if gained <= slack else 0
+            damping = _next_damping(damping, gained, trial.predicted)
+            local = candidate
+            if stale >= 3:
+                converged, message = True, "the log-likelihood no longer changes in its last digits"
+                break
+        else:
+            damping = max(damping * 10.0, FIRST_DAMPING)
+            if damping > LARGEST_DAMPING:
+                message = "no step raises the likelihood any more"
+                break
+    else:
+        message = f"stopped after {max_iterations} steps, {np.sqrt(max(decrement, 0.0)):.1e} standard errors from the top"
+    pushed = _pushed_out(local, bounds)
+    at_bound = np.where(pushed, np.where(local.estimate.shared <= bounds[:, 0], -1.0, 1.0), 0.0)
+    return Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message)
+
+
+@dataclass(frozen=True, eq=False)
+class _Step:
+    own: FloatArray
+    shared: FloatArray
+    gain: float  # score . step, twice the gain a quadratic would give
+
+
+@dataclass(frozen=True, eq=False)
+class _Trial:
+    estimate: Estimate
+    predicted: float
+
+
+def _pushed_out(local: Local, bounds: FloatArray) -> BoolArray:
+    """(Q,) True where a parameter sits at a bound and the score points outside."""
+    x, g = local.estimate.shared, local.score_shared
+    if x.size == 0:
+        return np.zeros(0, dtype=bool)
+    return np.asarray(((x <= bounds[:, 0]) & (g < 0)) | ((x >= bounds[:, 1]) & (g > 0)), dtype=bool)
+
+
+def _solve(local: Local, free: BoolArray, damping: float) -> _Step:
+    information = local.information.only(free)
+    if damping > 0:
+        information = information.damped(damping)
+    own, part = eliminate(information).solve(local.score_own, local.score_shared[free])
+    shared = np.zeros(free.size)
+    shared[free] = part
+    gain = float(np.sum(local.score_own * own) + local.score_shared @ shared)
+    if not np.isfinite(gain):
+        raise np.linalg.LinAlgError("the step is not finite")
+    return _Step(own, shared, gain)
+
+
+def _bounded_step(
+    local: Local, free: BoolArray, damping: float, bounds: FloatArray
+) -> tuple[_Trial | None, float]:
+    """The least damped step that is not too long, moved into the bounds, and the damping it took."""
+    bounded = np.isfinite(bounds).all(axis=1) if bounds.size else np.zeros(0, dtype=bool)
+    while damping <= LARGEST_DAMPING:
+        try:
+            step = _solve(local, free, damping)
+        except np.linalg.LinAlgError:
+            damping = max(10.0 * damping, FIRST_DAMPING)
+            continue
+        shared_too_long = np.max(np.abs(step.shared[bounded]), initial=0.0) > LONGEST_SHARED_STEP
+        if shared_too_long or np.max(np.abs(step.own[:, 0]), initial=0.0) > LONGEST_OWN_STEP:
+            damping = max(4.0 * damping, FIRST_DAMPING)
+            continue
+        x = local.estimate.shared + step.shared
+        if x.size:
+            x = np.clip(x, bounds[:, 0], bounds[:, 1])
+        return _Trial(Estimate(local.estimate.own + step.own, x), 0.5 * step.gain), damping
+    return None, damping
+
+
+def _next_damping(damping: float, gained: float, predicted: float) -> float:
+    if predicted <= 0 or gained > 0.75 * predicted:
+        return 0.1 * damping if damping > 1e-9 else 0.0
+    return max(3.0 * damping, FIRST_DAMPING) if gained < 0.25 * predicted else damping

@@ -1,0 +1,154 @@
+"""What the reader of a fit must be told, in words, from what happened while it was made."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from kernelfit._typing import FloatArray
+from kernelfit.fitting.covariance import Covariances
+from kernelfit.fitting.detection import CouplingVerdict
+from kernelfit.fitting.maximise import Optimum
+from kernelfit.fitting.outcome import Note
+from kernelfit.fitting.problem import FASTEST_LEAK_BINS, SLOWEST_LEAK_SHARE, Problem
+from kernelfit.recording.recording import Recording
+
+WIDE_BINS = 0.5  # alpha D above this: the bins are too wide for the leak found (MODEL.md section 3)
+FEW_BLOCKS = 30
+
+
+def shared_names(problem: Problem) -> tuple[str, ...]:
+    """Names of the shared parameters, in order."""
+    names = [p.name for p in problem.kernel.parameters(problem.span)]
+    return (*names, *["same_site"] * problem.has_same_site, *["leak_rate"] * problem.fits_leak)
+
+
+def bound_reasons(problem: Problem, at_bound: FloatArray) -> tuple[str, ...]:
+    """For each shared parameter, why it cannot go past the bound it sits at, or an empty text."""
+    reasons = [""] * problem.n_shared
+    for q in np.flatnonzero(at_bound):
+        upper = at_bound[q] > 0
+        if q < problem.n_kernel:
+            reasons[q] = problem.kernel.bound_reason(int(q), bool(upper), problem.span)
+        elif upper:
+            fastest = 1000.0 * problem.data.bin_width / FASTEST_LEAK_BINS
+            reasons[q] = f"a time constant below {fastest:.3g} ms is faster than a bin: use narrower bins"
+        else:
+            reasons[q] = (
+                f"a time constant above 1/{SLOWEST_LEAK_SHARE:g} of the recording cannot be told from a drifting rate"
+            )
+    return tuple(reasons)
+
+
+def fit_notes(
+    problem: Problem, recording: Recording, optimum: Optimum, spread: Covariances, verdict: CouplingVerdict
+) -> tuple[Note, ...]:
+    """Everything worth saying about a fit, gravest first."""
+    notes: list[Note] = []
+    names = shared_names(problem)
+    if not optimum.converged:
+        notes.append(
+            Note(
+                "error",
+                f"The fit did not converge: {optimum.message}.",
+                "optimiser",
+                "Treat every number with caution. Try a simpler kernel, wider bins, or a fixed leak rate.",
+            )
+        )
+    if not verdict.found:
+        notes.append(Note("warning", verdict.sentence, "coupling", "Record longer, or look at fewer, more active units."))
+    if spread.weak_direction is not None:
+        parts = np.abs(spread.weak_direction)
+        named = [names[q] for q in np.flatnonzero(parts > 0.3 * np.nanmax(parts))]
+        notes.append(
+            Note(
+                "warning",
+                f"The recording cannot tell {' and '.join(named)} apart: some combination of them changes nothing.",
+                ", ".join(named),
+                "Use a kernel with fewer parameters, or fix the leak rate.",
+            )
+        )
+    for q, reason in enumerate(bound_reasons(problem, optimum.at_bound)):
+        if reason and verdict.found:
+            notes.append(
+                Note("warning", f"{names[q]} ran into its bound: {reason}.", names[q], "It has no interval; do not quote it.")
+            )
+    leak = problem.leak(optimum.estimate.shared)
+    if verdict.found and leak * problem.data.bin_width > WIDE_BINS:
+        notes.append(
+            Note(
+                "warning",
+                f"The bins of {1000 * problem.data.bin_width:g} ms are too wide for the time constant found, {1000 / leak:.3g} ms.",
+                "bin_width",
+                f"Refit with bins of at most {1000 * WIDE_BINS / leak:.2g} ms.",
+            )
+        )
+    if spread.n_blocks < FEW_BLOCKS:
+        notes.append(
+            Note(
+                "warning",
+                f"Robust standard errors rest on {spread.n_blocks} blocks of time of {spread.block_length_s:.3g} s; "
+                f"fewer than {FEW_BLOCKS} tend to come out too small.",
+                "covariance",
+                "Record longer; read the intervals as lower limits of the uncertainty.",
+            )
+        )
+    for sentence in problem.kernel.check_identified(problem.geometry.distinct_um, problem.span):
+        notes.append(Note("info", sentence, "kernel", "Use fewer coefficients to let the data speak alone."))
+    notes += _recording_notes(problem, recording)
+    return tuple(notes)
+
+
+def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
+    notes: list[Note] = []
+    silent = np.flatnonzero((problem.grid.counts_in_sum == 0) & ~recording.source_only_mask)
+    if silent.size:
+        ids = [recording.unit_ids[k] for k in silent]
+        shown = ", ".join(ids[:8]) + (f" and {len(ids) - 8} more" if len(ids) > 8 else "")
+        notes.append(
+            Note(
+                "info",
+                f"{len(ids)} unit{'s' * (len(ids) != 1)} without a spike in the bins that count: {shown}.",
+                "units",
+                "Baseline minus infinity, rate 0; not explained, still a source where it fires elsewhere.",
+            )
+        )
+    n_same = int(np.triu(problem.geometry.same_site).sum())
+    if n_same and problem.model.same_site == "exclude":
+        notes.append(
+            Note(
+                "info",
+                f"{n_same} pair{'s' * (n_same != 1)} of units on one site left out of the kernel.",
+                "same_site",
+                "Detection hides coincident spikes there; same_site='own' gives them a coefficient of their own.",
+            )
+        )
+    if not recording.origin.windows_stated:
+        start, stop = recording.window_bounds[0]
+        notes.append(
+            Note(
+                "info",
+                f"No windows were given: the window runs from {start:g} s (floor of the first spike) to {stop:g} s "
+                "(first whole second after the last).",
+                "windows",
+                "Give a windows table where acquisition started earlier or stopped later.",
+            )
+        )
+    if problem.grid.n_outside:
+        notes.append(
+            Note(
+                "info",
+                f"{problem.grid.n_outside} spikes lie outside the windows: those before a window feed its first state.",
+                "windows",
+                "Nothing to do where this is meant.",
+            )
+        )
+    if problem.grid.n_excluded:
+        notes.append(
+            Note(
+                "info",
+                f"{problem.grid.n_excluded} spikes lie inside exclusions: they are not explained and drive nothing.",
+                "exclusions",
+                "Nothing to do where this is meant.",
+            )
+        )
+    return notes

@@ -1,0 +1,247 @@
+"""One recording and one model, ready to be evaluated: tables from kernels, penalties, the scale of the parameters.
+
+Shared parameters stand in the order kernel (working scale), same-site coefficient, log leak rate. Own parameters of a unit
+are its baseline, then its after-spike coefficients.
+"""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass, field, replace
+
+import numpy as np
+
+from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit.engine.evaluate import Evaluation, Point, SweepData, TimeBlocks, evaluate
+from kernelfit.errors import ModelError
+from kernelfit.fitting.progress import Progress, ProgressCallback
+from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
+from kernelfit.model.coupling import CouplingModel
+from kernelfit.recording.grid import Grid, make_grid
+from kernelfit.recording.recording import Recording
+
+FASTEST_LEAK_BINS = 3.0  # alpha D above this leaves 5 % of a jump after one bin: nothing to see of the decay
+SLOWEST_LEAK_SHARE = 20.0  # a time constant above a twentieth of the recording looks like a drifting rate
+EXPECTED_SWEEPS = 60
+
+
+@dataclass(frozen=True, eq=False)
+class Estimate:
+    """A point in parameter space: own (n_targets, 1 + M), shared (Q,)."""
+
+    own: FloatArray
+    shared: FloatArray
+
+
+@dataclass(eq=False)
+class Clock:
+    """Counts sweeps and reports progress; the one thing here that changes while a fit runs."""
+
+    callback: ProgressCallback | None = None
+    stage: str = ""
+    sweeps: int = 0
+    expected_sweeps: int = EXPECTED_SWEEPS
+    peak_bytes: int = 0
+    started: float = field(default_factory=time.monotonic)
+
+    def tick(self) -> None:
+        """One more sweep is done."""
+        self.sweeps += 1
+        if self.callback is None:
+            return
+        self.expected_sweeps = max(self.expected_sweeps, self.sweeps + 5)
+        left = (time.monotonic() - self.started) / self.sweeps * (self.expected_sweeps - self.sweeps)
+        self.callback(Progress(self.stage, self.sweeps, self.expected_sweeps, left, self.peak_bytes))
+
+
+@dataclass(frozen=True, eq=False)
+class Problem:
+    """A model on a recording.
+
+    Parameters
+    ----------
+    model : what is fitted
+    kernel : its distance law (other problems on the same data may use another)
+    data, grid : counts
+    geometry : distances and the pairs kept
+    trace_decay : (M,) decay per bin of the after-spike traces
+    threads : at most this many, or None
+    clock : counts the sweeps
+    """
+
+    model: CouplingModel
+    kernel: Kernel
+    data: SweepData
+    grid: Grid
+    geometry: PairGeometry
+    trace_decay: FloatArray
+    threads: int | None
+    clock: Clock
+
+    @property
+    def span(self) -> DistanceRange:
+        """The distances the kernel is asked about."""
+        return self.geometry.distance_range
+
+    @property
+    def n_kernel(self) -> int:
+        """Parameters of the kernel."""
+        return len(self.kernel.parameters(self.span))
+
+    @property
+    def has_same_site(self) -> bool:
+        """Whether pairs on one site have a coefficient of their own."""
+        return bool(self.geometry.own_site.any())
+
+    @property
+    def fits_leak(self) -> bool:
+        """Whether the leak rate is estimated."""
+        return self.model.leak_rate is None
+
+    @property
+    def n_shared(self) -> int:
+        """Shared parameters, held ones included."""
+        return self.n_kernel + int(self.has_same_site) + int(self.fits_leak)
+
+    @property
+    def leak_limits(self) -> tuple[float, float]:
+        """Slowest and fastest leak rate that can be told, 1/s."""
+        fastest = FASTEST_LEAK_BINS / self.data.bin_width
+        return min(SLOWEST_LEAK_SHARE / (self.data.n_bins * self.data.bin_width), fastest / 10.0), fastest
+
+    @property
+    def bounds(self) -> FloatArray:
+        """(Q, 2) bounds on the working scale."""
+        rows = [*self.kernel.bounds(self.span)]
+        if self.has_same_site:
+            rows.append(np.array([-np.inf, np.inf]))
+        if self.fits_leak:
+            rows.append(np.log(self.leak_limits))
+        return np.array(rows).reshape(-1, 2)
+
+    @property
+    def penalty(self) -> FloatArray:
+        """(Q, Q) quadratic penalty on the shared parameters."""
+        s = np.zeros((self.n_shared, self.n_shared))
+        own = self.kernel.penalty(self.span)
+        if own is not None:
+            s[: self.n_kernel, : self.n_kernel] = own
+        return s
+
+    def leak(self, shared: FloatArray) -> float:
+        """alpha, 1/s."""
+        return float(np.exp(shared[-1])) if self.fits_leak else float(self.model.leak_rate or 0.0)
+
+    def tables(self, shared: FloatArray) -> FloatArray:
+        """(1 + K, n_units, n_targets): J of each pair, then its derivatives, by source and target."""
+        theta = shared[: self.n_kernel]
+        d = self.geometry.distinct_um
+        by_distance = np.zeros((1 + self.n_kernel, d.size + 1))  # a last zero for pairs not kept
+        by_distance[0, :-1] = self.kernel.value(theta, d, self.span)
+        by_distance[1:, :-1] = self.kernel.gradient(theta, d, self.span)
+        tables = by_distance[:, self.geometry.distance_index[self.data.targets].T]
+        if not self.has_same_site:
+            return tables
+        own = self.geometry.own_site[self.data.targets].T.astype(np.float64)
+        tables[0] += shared[self.n_kernel] * own
+        return np.concatenate([tables, own[None]])
+
+    def point(self, estimate: Estimate) -> Point:
+        """The engine's view of an estimate."""
+        return Point(
+            link=self.model.link.code,
+            leak=self.leak(estimate.shared),
+            fit_leak=self.fits_leak,
+            tables=self.tables(estimate.shared),
+            baseline=np.ascontiguousarray(estimate.own[:, 0]),
+            trace_decay=self.trace_decay,
+            coefficient=np.ascontiguousarray(estimate.own[:, 1:].T),
+        )
+
+    def evaluate(self, estimate: Estimate, *, blocks: TimeBlocks | None = None) -> Evaluation:
+        """Sums at an estimate, derivatives by log alpha instead of alpha; penalties not included."""
+        sums = evaluate(self.data, self.point(estimate), blocks=blocks, threads=self.threads)
+        self.clock.tick()
+        if not self.fits_leak:
+            return sums
+        alpha = self.leak(estimate.shared)
+        score, own_shared, shared = sums.score.copy(), sums.own_shared.copy(), sums.shared_shared.copy()
+        score[..., -1] *= alpha
+        own_shared[..., -1] *= alpha
+        shared[-1] *= alpha
+        shared[:, -1] *= alpha
+        return replace(sums, score=score, own_shared=own_shared, shared_shared=shared)
+
+    def with_kernel(self, kernel: Kernel) -> Problem:
+        """The same data with another distance law."""
+        return replace(self, kernel=kernel)
+
+
+def excluded_pair_mask(recording: Recording) -> BoolArray:
+    """(n, n) True for pairs the user left out, both directions."""
+    mask = np.zeros((recording.n_units, recording.n_units), dtype=bool)
+    for a, b in recording.excluded_pairs:
+        i, j = recording.index_of(a), recording.index_of(b)
+        mask[i, j] = mask[j, i] = True
+    return mask
+
+
+def target_units(recording: Recording, grid: Grid) -> IntArray:
+    """Units that are explained: not source-only, and with a spike in the sum."""
+    return np.flatnonzero(~recording.source_only_mask & (grid.counts_in_sum > 0))
+
+
+def geometry_of(model: CouplingModel, recording: Recording, targets: IntArray) -> PairGeometry:
+    """Distances of a recording and the pairs its model keeps; `targets` are unit indices."""
+    is_target = np.zeros(recording.n_units, dtype=bool)
+    is_target[targets] = True
+    return pair_geometry(
+        recording.positions,
+        max_distance_um=model.max_distance,
+        same_site=model.same_site,
+        excluded_pairs=excluded_pair_mask(recording),
+        targets=is_target,
+    )
+
+
+def make_problem(
+    model: CouplingModel, recording: Recording, *, threads: int | None = None, progress: ProgressCallback | None = None
+) -> Problem:
+    """Check that there is something to estimate and set the problem up.
+
+    Raises
+    ------
+    ModelError, GridError, NotIdentifiedError : see `CouplingModel.fit`
+    """
+    grid = make_grid(recording, model.bin_width, warm_up_s=model.warm_up_s)
+    spikes = recording.origin.name("spikes")
+    if recording.n_units < 2:
+        raise ModelError(
+            f"{recording.origin.name('sites')}: one unit ({recording.unit_ids[0]!r}) has no one to be coupled to. "
+            "A kernel needs at least two units at different sites."
+        )
+    targets = target_units(recording, grid)
+    if targets.size == 0:
+        raise ModelError(
+            f"{spikes}: no unit has a spike in the bins that are explained ({grid.duration_s:g} s in windows, "
+            "exclusions and warm-up left out). Check the unit of time (time_unit), the windows and the exclusions."
+        )
+    geometry = geometry_of(model, recording, targets)
+    drives = np.zeros(recording.n_units, dtype=bool)
+    drives[grid.event_unit] = True
+    if not (geometry.kept & drives[None, :]).any():
+        raise ModelError(
+            f"{spikes}: no unit that fires has a partner within the kernel that fires too, so no spike can drive "
+            "anything. Record longer, or widen the selection of units."
+        )
+    model.kernel.check_identified(geometry.distinct_um, geometry.distance_range)
+    return Problem(
+        model=model,
+        kernel=model.kernel,
+        data=SweepData.from_grid(grid, targets),
+        grid=grid,
+        geometry=geometry,
+        trace_decay=np.exp(-model.bin_width / model.after_spike.constants(model.bin_width)),
+        threads=threads,
+        clock=Clock(progress),
+    )

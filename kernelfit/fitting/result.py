@@ -1,0 +1,427 @@
+"""A finished fit: numbers, tables and curves, and nothing that refits, draws or prints."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+from functools import cached_property
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit.engine.evaluate import Point, SweepData, compensate, expected_counts
+from kernelfit.errors import ArgumentError, StorageError, Unavailable
+from kernelfit.fitting.detection import CouplingVerdict
+from kernelfit.fitting.outcome import FittedRates, Note, ScoreTest, SolverReport
+from kernelfit.kernels import DistanceRange, KernelCurve
+from kernelfit.model.coupling import CouplingModel, CovarianceKind
+from kernelfit.recording.grid import Grid, make_grid
+from kernelfit.recording.recording import Origin, Recording
+
+if TYPE_CHECKING:
+    from kernelfit.diagnostics.goodness import Goodness
+
+LEVEL = 0.95
+SAME_SITE_NAME = "same_site"
+LEAK_NAME = "leak_rate"
+
+
+@dataclass(frozen=True, eq=False)
+class Uncertainty:
+    """Both covariances on the working scale. Q shared parameters, P own ones of n targets, G blocks of time.
+
+    shared_model, shared_robust (Q, Q), rows of NaN for what was not estimated; own_model, own_robust (n, P, P);
+    block_influence (G, Q): what each block of time moved the shared estimates by; n_blocks, block_length_s: the clusters.
+    """
+
+    shared_model: FloatArray
+    shared_robust: FloatArray
+    own_model: FloatArray
+    own_robust: FloatArray
+    block_influence: FloatArray
+    n_blocks: int
+    block_length_s: float
+
+    def shared(self, kind: CovarianceKind) -> FloatArray:
+        """(Q, Q) of that kind."""
+        return self.shared_robust if kind == "robust" else self.shared_model
+
+    def own(self, kind: CovarianceKind) -> FloatArray:
+        """(n, P, P) of that kind."""
+        return self.own_robust if kind == "robust" else self.own_model
+
+    def degrees_of_freedom(self, kind: CovarianceKind) -> float:
+        """Blocks less one for the robust kind, infinite for the other."""
+        return float(self.n_blocks - 1) if kind == "robust" else np.inf
+
+
+@dataclass(frozen=True, eq=False)
+class CouplingFit:
+    """A fitted coupling model. Everything an analysis or a report needs; a change is a copy.
+
+    Parameters
+    ----------
+    model : what was fitted
+    unit_ids, positions, origin, window_bounds : of the recording; µm, seconds
+    targets : (n_targets,) indices of the units that were explained
+    counts : (n_units,) spikes in the bins that count
+    n_bins : bins that count
+    own : (n_targets, 1 + M) baseline and after-spike coefficients
+    shared : (Q,) kernel parameters (working scale), same-site coefficient, log leak rate
+    at_bound : (Q,) -1 or 1 where a parameter sits at its lower or upper bound, else 0
+    bound_reasons : what each bound that was reached means
+    span, distinct_um, n_pairs : distances the kernel covers, and unordered pairs at each
+    radius_interval : 95 % likelihood interval of a discrete length, or None
+    uncertainty, covariance_kind : both covariances, and which one the tables use
+    log_likelihood : nats, sum of y log mean - mean - log y!, penalties excluded
+    null_log_likelihood, saturated_log_likelihood, uncoupled_log_likelihood : constant rates; a rate for every bin; the
+        same model without coupling
+    spectral_radius : of the matrix E[f'] J / alpha; 1 and more cannot be stationary
+    verdict, notes, solver, second_optimum, after_spike_test : records
+    seed, seconds, version, created : provenance
+    recording : the recording, where the fit was made in this process
+    """
+
+    model: CouplingModel
+    unit_ids: tuple[str, ...]
+    positions: FloatArray
+    origin: Origin
+    window_bounds: FloatArray
+    targets: IntArray
+    counts: IntArray
+    n_bins: int
+    own: FloatArray
+    shared: FloatArray
+    at_bound: FloatArray
+    bound_reasons: tuple[str, ...]
+    span: DistanceRange
+    distinct_um: FloatArray
+    n_pairs: IntArray
+    has_same_site: bool
+    radius_interval: tuple[float, float] | None
+    uncertainty: Uncertainty
+    covariance_kind: CovarianceKind
+    log_likelihood: float
+    null_log_likelihood: float
+    saturated_log_likelihood: float
+    uncoupled_log_likelihood: float
+    spectral_radius: float
+    verdict: CouplingVerdict
+    notes: tuple[Note, ...]
+    solver: SolverReport
+    second_optimum: str | None
+    after_spike_test: ScoreTest | None
+    seed: int
+    seconds: float
+    version: str
+    created: str
+    recording: Recording | None = field(default=None, repr=False)
+
+    # --- one number -----------------------------------------------------------------------------------
+
+    @property
+    def converged(self) -> bool:
+        """Whether the optimiser reached a top."""
+        return self.solver.converged
+
+    @property
+    def leak_rate(self) -> float:
+        """alpha, 1/s: how fast the effect of a spike fades."""
+        return float(self.model.leak_rate) if self.model.leak_rate is not None else float(np.exp(self.shared[-1]))
+
+    @property
+    def time_constant(self) -> float:
+        """1 / alpha, seconds."""
+        return 1.0 / self.leak_rate
+
+    @property
+    def reference_distance_um(self) -> float:
+        """Distance at which amplitudes are stated, µm: the median distance to the nearest other site."""
+        return self.span.reference_um
+
+    @property
+    def duration_s(self) -> float:
+        """Time in the likelihood, seconds."""
+        return self.n_bins * self.model.bin_width
+
+    @property
+    def n_spikes(self) -> int:
+        """Spikes in the likelihood: those of explained units in bins that count."""
+        return int(self.counts[self.targets].sum())
+
+    @property
+    def n_parameters(self) -> int:
+        """Parameters estimated: own ones of explained units, and shared ones that were not fixed by the model."""
+        return int(self.own.size + self.shared.size)
+
+    @property
+    def aic(self) -> float:
+        """-2 log L + 2 k."""
+        return -2.0 * self.log_likelihood + 2.0 * self.n_parameters
+
+    @property
+    def bic(self) -> float:
+        """-2 log L + k log n, n the number of spikes in the likelihood."""
+        return -2.0 * self.log_likelihood + self.n_parameters * float(np.log(max(self.n_spikes, 1)))
+
+    @property
+    def block_length_s(self) -> float:
+        """Mean length of the blocks of time of the robust covariance, seconds."""
+        return self.uncertainty.block_length_s
+
+    @property
+    def n_blocks(self) -> int:
+        """Blocks of time of the robust covariance."""
+        return self.uncertainty.n_blocks
+
+    # --- tables ---------------------------------------------------------------------------------------
+
+    @cached_property
+    def parameters(self) -> pd.DataFrame:
+        """Shared parameters by name: estimate, std_error, lower, upper (95 %), unit, note. A fresh table per fit."""
+        from kernelfit.inference.parameters import parameter_table  # inference stands above; the contract wants it here
+
+        return parameter_table(self, self.covariance_kind, LEVEL)
+
+    @cached_property
+    def std_errors(self) -> pd.DataFrame:
+        """By parameter name: model, robust and their ratio robust / model."""
+        from kernelfit.inference.parameters import std_error_table
+
+        return std_error_table(self)
+
+    @cached_property
+    def baselines(self) -> pd.DataFrame:
+        """By unit, all units in order: estimate (b_i), std_error, lower, upper, rate_hz = f(b_i), note."""
+        from kernelfit.inference.parameters import baseline_table
+
+        return baseline_table(self, self.covariance_kind, LEVEL)
+
+    @property
+    def pairs_by_distance(self) -> pd.DataFrame:
+        """distance_um, n_pairs: unordered pairs the kernel covers at each distinct distance."""
+        return pd.DataFrame({"distance_um": self.distinct_um.copy(), "n_pairs": self.n_pairs.copy()})
+
+    # --- curves ---------------------------------------------------------------------------------------
+
+    @property
+    def n_kernel(self) -> int:
+        """Parameters of the kernel among the shared ones."""
+        return len(self.model.kernel.parameters(self.span))
+
+    @property
+    def kernel_curve(self) -> KernelCurve:
+        """The fitted kernel as a function of distance."""
+        return self.model.kernel.curve(self.shared[: self.n_kernel], self.span)
+
+    def kernel(self, distances_um: FloatArray) -> FloatArray:
+        """J, the effect of one spike on the predictor, at each distance (µm); same shape as the input."""
+        return self.kernel_curve(distances_um)
+
+    def kernel_band(
+        self, distances_um: FloatArray, level: float = LEVEL, simultaneous: bool = False
+    ) -> pd.DataFrame:
+        """The fitted kernel with a band.
+
+        Parameters
+        ----------
+        distances_um : (m,) µm
+        level : coverage, strictly between 0 and 1
+        simultaneous : True for a sup-t band that covers the whole curve at once
+
+        Returns
+        -------
+        DataFrame : distance_um, estimate, lower, upper; NaN bounds where no coupling was found or nothing was estimated
+
+        Raises
+        ------
+        ArgumentError : a level outside (0, 1)
+        """
+        from kernelfit.inference.parameters import kernel_band
+
+        if not 0.0 < level < 1.0:
+            raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
+        return kernel_band(self, np.atleast_1d(np.asarray(distances_um, dtype=np.float64)), level, simultaneous)
+
+    @property
+    def after_spike_constants_s(self) -> FloatArray:
+        """(M,) time constants of the after-spike traces, seconds."""
+        return self.model.after_spike.constants(self.model.bin_width)
+
+    def after_spike_curves(self, lags_s: FloatArray) -> FloatArray | Unavailable:
+        """(n_units, n_lags) factor by which a unit's own spike multiplies its rate; NaN for units not explained.
+
+        Parameters
+        ----------
+        lags_s : (n_lags,) seconds after the spike; the first bin after a spike is the shortest lag that means anything
+        """
+        if self.own.shape[1] == 1:
+            return Unavailable("the model has no after-spike term")
+        traces = np.exp(-np.asarray(lags_s)[None, :] / self.after_spike_constants_s[:, None])
+        curves = np.full((len(self.unit_ids), traces.shape[1]), np.nan)
+        curves[self.targets] = np.exp(self.own[:, 1:] @ traces)
+        return curves
+
+    def after_spike_band(self, unit: str, lags_s: FloatArray, level: float = LEVEL) -> pd.DataFrame | Unavailable:
+        """One unit's after-spike curve with a pointwise band: lag_s, estimate, lower, upper (rate multipliers).
+
+        Raises
+        ------
+        ArgumentError : no such unit
+        """
+        from kernelfit.inference.parameters import after_spike_band
+
+        if self.own.shape[1] == 1:
+            return Unavailable("the model has no after-spike term")
+        return after_spike_band(self, self._target_of(unit), np.asarray(lags_s), level)
+
+    def _target_of(self, unit: str) -> int:
+        if unit not in self.unit_ids:
+            raise ArgumentError(f"no unit {unit!r} in this fit. Units: {', '.join(self.unit_ids[:5])}, ...")
+        place = np.flatnonzero(self.targets == self.unit_ids.index(unit))
+        if place.size == 0:
+            raise ArgumentError(f"unit {unit!r} was not explained: silent in the bins that count, or source-only.")
+        return int(place[0])
+
+    # --- looking at the recording again -----------------------------------------------------------------
+
+    def point(self, data: SweepData, distance_index: IntArray, own_site: BoolArray) -> Point:
+        """The engine's view of the fit, without derivatives."""
+        by_distance = np.append(self.kernel(self.distinct_um), 0.0)
+        table = by_distance[distance_index[data.targets].T]
+        if self.has_same_site:
+            table = table + self.shared[self.n_kernel] * own_site[data.targets].T
+        return Point(
+            link=self.model.link.code,
+            leak=self.leak_rate,
+            fit_leak=False,
+            tables=table[None],
+            baseline=np.ascontiguousarray(self.own[:, 0]),
+            trace_decay=np.exp(-self.model.bin_width / self.after_spike_constants_s),
+            coefficient=np.ascontiguousarray(self.own[:, 1:].T),
+        )
+
+    def _with_recording(self, recording: Recording | None) -> tuple[Grid, SweepData, Point]:
+        """Grid, data and point for a recording, checked to be the one that was fitted."""
+        from kernelfit.fitting.problem import geometry_of
+
+        recording = self.recording if recording is None else recording
+        if recording is None:
+            raise StorageError(
+                "A loaded fit does not hold the spikes. Pass recording=kf.read_recording(...) with the same tables."
+            )
+        grid = make_grid(recording, self.model.bin_width, warm_up_s=self.model.warm_up_s)
+        if recording.unit_ids != self.unit_ids or not np.array_equal(grid.counts_in_sum, self.counts):
+            raise StorageError(
+                f"{recording.origin.name('spikes')} and {self.origin.name('spikes')}: this recording is not the one that "
+                f"was fitted ({recording.n_units} units and {int(grid.counts_in_sum.sum())} spikes against "
+                f"{len(self.unit_ids)} and {int(self.counts.sum())}). Give the same tables, windows, exclusions and selection."
+            )
+        data = SweepData.from_grid(grid, self.targets)
+        geometry = geometry_of(self.model, recording, self.targets)
+        return grid, data, self.point(data, geometry.distance_index, geometry.own_site)
+
+    def goodness(self, recording: Recording | None = None, seed: int = 0) -> Goodness:
+        """Does the model describe the recording? Time rescaling with the discrete-time correction.
+
+        Parameters
+        ----------
+        recording : needed for a loaded fit; must be the one that was fitted
+        seed : of the random placing of spikes inside their bins
+
+        Raises
+        ------
+        StorageError : no recording, or another one
+        """
+        from kernelfit.diagnostics.goodness import goodness_of_fit  # diagnostics stand above; the contract wants it here
+
+        _, data, point = self._with_recording(recording)
+        return goodness_of_fit(
+            compensate(data, point),
+            self.unit_ids,
+            log_likelihood=self.log_likelihood,
+            null_log_likelihood=self.null_log_likelihood,
+            saturated_log_likelihood=self.saturated_log_likelihood,
+            n_spikes=self.n_spikes,
+            seed=seed,
+        )
+
+    def fitted_rates(self, start_s: float, stop_s: float, recording: Recording | None = None) -> FittedRates:
+        """Fitted rates and observed counts in the bins between two times of one window.
+
+        Parameters
+        ----------
+        start_s, stop_s : on the recording's clock; cut to the window that holds `start_s`
+
+        Raises
+        ------
+        ArgumentError : no window holds `start_s`, or the stretch is empty
+        StorageError : no recording, or another one
+        """
+        grid, data, point = self._with_recording(recording)
+        w = int(np.searchsorted(grid.window_start_s, start_s, side="right")) - 1
+        width = grid.bin_width
+        first = int((start_s - grid.window_start_s[max(w, 0)]) / width + 1e-6)
+        n = min(int(np.ceil((stop_s - start_s) / width - 1e-6)), int(grid.window_n_bins[max(w, 0)]) - first)
+        if w < 0 or n <= 0:
+            raise ArgumentError(f"no window holds the stretch from {start_s:g} s to {stop_s:g} s.")
+        at = int(grid.window_first_bin[w]) + first
+        rate = np.full((n, len(self.unit_ids)), np.nan)
+        rate[:, self.targets] = expected_counts(data, point, at, n) / width
+        counts = np.zeros((n, len(self.unit_ids)))
+        here = (grid.event_bin >= at) & (grid.event_bin < at + n)
+        counts[grid.event_bin[here] - at, grid.event_unit[here]] = grid.event_count[here]
+        return FittedRates(grid.window_start_s[w] + (first + np.arange(n)) * width, rate, counts)
+
+    # --- copies, words, files -------------------------------------------------------------------------
+
+    def with_covariance(self, kind: CovarianceKind) -> CouplingFit:
+        """The same fit with its tables by the other covariance; nothing is refitted.
+
+        Raises
+        ------
+        ArgumentError : neither "robust" nor "model"
+        """
+        return replace(self, covariance_kind=covariance_kind(kind))
+
+    def summary(self) -> str:
+        """The result in plain text."""
+        from kernelfit.inference.summary import summary_text
+
+        return summary_text(self)
+
+    def __repr__(self) -> str:
+        return f"CouplingFit({self.model.kernel.name} kernel, {len(self.targets)} units, {self.n_spikes} spikes)"
+
+    def _repr_html_(self) -> str:
+        from kernelfit.inference.summary import summary_html
+
+        return summary_html(self)
+
+    def save(self, path: str | Path) -> None:
+        """Write the fit as JSON, whole or not at all. It holds no spikes.
+
+        Raises
+        ------
+        OutputError : the file cannot be written
+        """
+        from kernelfit.fitting.storage import save_fit  # storage builds on this module
+
+        save_fit(self, Path(path))
+
+
+def covariance_kind(kind: str) -> CovarianceKind:
+    """Check the name of a covariance.
+
+    Raises
+    ------
+    ArgumentError : neither "robust" nor "model"
+    """
+    if kind not in ("robust", "model"):
+        raise ArgumentError(f"covariance={kind!r} is not known. Say 'robust' or 'model'.")
+    return "robust" if kind == "robust" else "model"
+
+
+__all__ = ["CouplingFit", "Uncertainty", "covariance_kind"]

@@ -1,0 +1,114 @@
+"""From the null fit to the best optimum: starts for each promising leak, the best few climbed to the top."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from kernelfit._typing import BoolArray, FloatArray
+from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, evaluate_locally, maximise
+from kernelfit.fitting.null import Null, NullSweep
+from kernelfit.fitting.problem import Estimate, Problem
+
+N_LEAKS = 3
+N_SHAPES = 2
+WORTH_TRYING = 0.4  # of the best gain promised: poorer leaks only cost sweeps
+LOOSE_ITERATIONS = 25
+CLOSE = 2.0  # log-likelihood units: an optimum this near the best one is reported
+APART = 0.2  # on the log scale: optima nearer than this are one
+
+
+@dataclass(frozen=True)
+class StartRecord:
+    """One start: leak (1/s), the objective it was climbed to and in how many steps."""
+
+    leak: float
+    objective: float
+    n_iterations: int
+
+
+@dataclass(frozen=True, eq=False)
+class SearchResult:
+    """The best optimum, another one that comes close (or None), and every start tried."""
+
+    best: Optimum
+    second: Optimum | None
+    starts: tuple[StartRecord, ...]
+
+
+def promising(sweeps: tuple[NullSweep, ...]) -> list[NullSweep]:
+    """Sweeps whose promised gain is a peak along the grid of leaks, best first, then the best of the rest."""
+    gain = np.array([s.gain for s in sweeps])
+    padded = np.concatenate([[-np.inf], gain, [-np.inf]])
+    peak = (gain >= padded[:-2]) & (gain >= padded[2:])
+    order = sorted(range(len(sweeps)), key=lambda k: (not peak[k], -gain[k]))
+    worth = [k for k in order if gain[k] >= WORTH_TRYING * gain.max()]
+    return [sweeps[k] for k in worth[:N_LEAKS]]
+
+
+def start_estimates(problem: Problem, null: Null, sweep: NullSweep, n: int) -> list[Estimate]:
+    """Starts at a leak: the family's shapes closest to the one-step estimate of J(d)."""
+    variance = np.diag(np.linalg.pinv(sweep.information, rcond=1e-10, hermitian=True))
+    weight = np.where(variance > 0, 1.0 / np.where(variance > 0, variance, 1.0), 0.0)
+    thetas = problem.kernel.starts(null.distance_um, sweep.coupling, weight, problem.span, n=n)
+    rest = [0.0] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)
+    return [Estimate(null.optimum.estimate.own, np.concatenate([theta, rest])) for theta in thetas]
+
+
+def shrunk(problem: Problem, estimate: Estimate, floor: float) -> Estimate:
+    """Halve the coupling of a start until it is not worse than no coupling: one-step estimates overshoot in bursts."""
+    linear = np.array([not p.shape for p in problem.kernel.parameters(problem.span)])
+    shared = estimate.shared.copy()
+    for _ in range(12):
+        trial = Estimate(estimate.own, shared)
+        objective = evaluate_locally(problem, trial).objective
+        if np.isfinite(objective) and objective >= floor:
+            return trial
+        shared = shared.copy()
+        shared[: problem.n_kernel][linear] *= 0.5
+    return Estimate(estimate.own, shared)
+
+
+def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> SearchResult:
+    """Climb from the promising starts and keep the best.
+
+    Parameters
+    ----------
+    problem, null : the model on the recording, and its fit without coupling
+    held : (Q,) shared parameters that stay at their start (a discrete one, profiled elsewhere)
+    """
+    problem.clock.stage = "climbing"
+    floor = null.optimum.local.objective
+    starts: list[Estimate] = []
+    for rank, sweep in enumerate(promising(null.sweeps)):
+        starts += start_estimates(problem, null, sweep, N_SHAPES if rank == 0 else 1)
+    linear = problem.model.leak_rate is not None and not any(
+        p.shape for p in problem.kernel.parameters(problem.span)
+    )
+    climbed = []
+    for start in starts[:1] if linear else starts:
+        begin = shrunk(problem, start, floor)
+        climbed.append(maximise(problem, begin, held=held, tolerance=LOOSE, max_iterations=LOOSE_ITERATIONS))
+    records = tuple(
+        StartRecord(problem.leak(o.estimate.shared), o.local.objective, o.n_iterations) for o in climbed
+    )
+    ranked = sorted(climbed, key=lambda o: -o.local.objective)
+    top = maximise(problem, ranked[0].estimate, held=held, tolerance=TIGHT)
+    second = None
+    for other in ranked[1:]:
+        near = other.local.objective > top.local.objective - 2.0 * CLOSE
+        if near and _apart(problem, other.estimate.shared, top.estimate.shared):
+            finished = maximise(problem, other.estimate, held=held, tolerance=LOOSE)
+            if finished.local.objective > top.local.objective:
+                top, finished = maximise(problem, finished.estimate, held=held, tolerance=TIGHT), top
+            close = finished.local.objective > top.local.objective - CLOSE
+            if close and _apart(problem, finished.estimate.shared, top.estimate.shared):
+                second = finished
+                break
+    return SearchResult(replace(top, n_iterations=top.n_iterations + ranked[0].n_iterations), second, records)
+
+
+def _apart(problem: Problem, a: FloatArray, b: FloatArray) -> bool:
+    bounded = np.isfinite(problem.bounds).all(axis=1)
+    return bool(np.max(np.abs(a - b)[bounded], initial=0.0) > APART)

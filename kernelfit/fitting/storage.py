@@ -1,0 +1,253 @@
+"""Fits on disk: one JSON file, readable by anything, with no code in it. Floating-point numbers come back to the bit."""
+
+from __future__ import annotations
+
+import json
+import math
+import os
+import tempfile
+from collections.abc import Mapping
+from dataclasses import asdict
+from pathlib import Path
+from typing import Any, cast
+
+import numpy as np
+
+from kernelfit._typing import AnyArray, FloatArray, IntArray
+from kernelfit.errors import KernelfitError, OutputError, StorageError
+from kernelfit.fitting.detection import CouplingVerdict
+from kernelfit.fitting.outcome import Note, ScoreTest, SolverReport
+from kernelfit.fitting.result import CouplingFit, Uncertainty, covariance_kind
+from kernelfit.fitting.search import StartRecord
+from kernelfit.kernels import DistanceRange, kernel_from_description
+from kernelfit.model.coupling import CouplingModel
+from kernelfit.model.terms import AfterSpike, NoAfterSpike
+from kernelfit.recording.recording import Origin, SourceFile
+
+FORMAT = "kernelfit fit"
+FORMAT_VERSION = 1
+
+
+def save_fit(fit: CouplingFit, path: Path) -> None:
+    """Write a fit, whole or not at all.
+
+    Raises
+    ------
+    OutputError : the file cannot be written
+    """
+    text = json.dumps(describe_fit(fit), indent=1, allow_nan=False)
+    try:
+        handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
+        try:
+            with os.fdopen(handle, "w", encoding="utf-8") as file:
+                file.write(text)
+            os.chmod(temporary, 0o644)  # mkstemp makes files that only their owner can read
+            os.replace(temporary, path)
+        except BaseException:
+            os.unlink(temporary)
+            raise
+    except OSError as error:
+        raise OutputError(f"{path}: cannot be written ({error.strerror}). Check the folder and its permissions.") from error
+
+
+def load_fit(path: str | Path) -> CouplingFit:
+    """Read a fit that `CouplingFit.save` wrote. It holds no spikes: methods that need them take `recording`.
+
+    Raises
+    ------
+    StorageError : no such file, damaged, not a kernelfit fit, or of a later format
+    """
+    path = Path(path)
+    try:
+        content = json.loads(path.read_text(encoding="utf-8"))
+    except OSError as error:
+        raise StorageError(f"{path}: cannot be read ({error.strerror}). Give the path of a fit.json.") from error
+    except (UnicodeDecodeError, json.JSONDecodeError) as error:
+        raise StorageError(
+            f"{path}: damaged, or not a saved fit ({error}). Fit again, or copy the file again from where it was made."
+        ) from error
+    if not isinstance(content, dict) or content.get("format") != FORMAT:
+        raise StorageError(f"{path}: JSON, but not a fit saved by kernelfit. Give the fit.json of a results folder.")
+    if content.get("format_version") != FORMAT_VERSION:
+        raise StorageError(
+            f"{path}: saved in format {content.get('format_version')!r} by kernelfit {content.get('version')!r}; this version "
+            f"reads format {FORMAT_VERSION}. Load it with the version that wrote it, or fit again."
+        )
+    try:
+        return _restore(content)
+    except (KeyError, TypeError, ValueError, IndexError, AttributeError, KernelfitError) as error:
+        raise StorageError(
+            f"{path}: damaged: {type(error).__name__} at {error}. Fit again, or copy the file again from where it was made."
+        ) from error
+
+
+def describe_fit(fit: CouplingFit) -> dict[str, Any]:
+    """A fit as plain JSON values; NaN becomes null."""
+    model = fit.model
+    spread = fit.uncertainty
+    return {
+        "format": FORMAT,
+        "format_version": FORMAT_VERSION,
+        "version": fit.version,
+        "created": fit.created,
+        "seed": fit.seed,
+        "seconds": fit.seconds,
+        "model": {
+            "kernel": model.kernel.name,
+            "kernel_options": model.kernel.describe(),
+            "link": model.link.name,
+            "bin_width_s": model.bin_width,
+            "leak_rate_hz": model.leak_rate,
+            "max_distance_um": model.max_distance,
+            "same_site": model.same_site,
+            "after_spike": {"name": model.after_spike.name, **asdict(model.after_spike)},
+            "rate_course": model.rate_course.name,
+            "warm_up_s": model.warm_up_s,
+        },
+        "recording": {
+            "files": [asdict(f) for f in fit.origin.files],
+            "windows_stated": fit.origin.windows_stated,
+            "notes": list(fit.origin.notes),
+            "unit_ids": list(fit.unit_ids),
+            "positions_um": _plain(fit.positions),
+            "windows_s": _plain(fit.window_bounds),
+            "counts": _plain(fit.counts),
+            "n_bins": fit.n_bins,
+        },
+        "geometry": {**asdict(fit.span), "distinct_um": _plain(fit.distinct_um), "n_pairs": _plain(fit.n_pairs)},
+        "estimate": {
+            "targets": _plain(fit.targets),
+            "own": _plain(fit.own),
+            "shared": _plain(fit.shared),
+            "at_bound": _plain(fit.at_bound),
+            "bound_reasons": list(fit.bound_reasons),
+            "has_same_site": fit.has_same_site,
+            "radius_interval_um": fit.radius_interval,
+        },
+        "uncertainty": {
+            "covariance": fit.covariance_kind,
+            "shared_model": _plain(spread.shared_model),
+            "shared_robust": _plain(spread.shared_robust),
+            "own_model": _plain(spread.own_model),
+            "own_robust": _plain(spread.own_robust),
+            "block_influence": _plain(spread.block_influence),
+            "n_blocks": spread.n_blocks,
+            "block_length_s": spread.block_length_s,
+        },
+        "log_likelihood": {
+            "fit": fit.log_likelihood,
+            "constant_rates": fit.null_log_likelihood,
+            "saturated": fit.saturated_log_likelihood,
+            "without_coupling": fit.uncoupled_log_likelihood,
+        },
+        "spectral_radius": fit.spectral_radius,
+        "verdict": asdict(fit.verdict),
+        "notes": [asdict(n) for n in fit.notes],
+        "solver": _finite(asdict(fit.solver)),
+        "second_optimum": fit.second_optimum,
+        "after_spike_test": None if fit.after_spike_test is None else asdict(fit.after_spike_test),
+    }
+
+
+def _plain(array: AnyArray) -> Any:
+    """Nested lists, NaN as null."""
+    if array.dtype.kind == "f" and np.isnan(array).any():
+        return np.where(np.isnan(array), None, array.astype(object)).tolist()
+    return array.tolist()
+
+
+def _finite(record: dict[str, Any]) -> dict[str, Any]:
+    return {k: None if isinstance(v, float) and not math.isfinite(v) else v for k, v in record.items()}
+
+
+def _floats(values: Any, *shape: int) -> FloatArray:
+    return np.array(values, dtype=np.float64).reshape(shape)
+
+
+def _whole(values: Any) -> IntArray:
+    return np.array(values, dtype=np.int64)
+
+
+def _restore(c: Mapping[str, Any]) -> CouplingFit:
+    m, r, g, e, u, ll = (
+        c[k] for k in ("model", "recording", "geometry", "estimate", "uncertainty", "log_likelihood")
+    )
+    n_targets, n_shared, n_units = len(e["targets"]), len(e["shared"]), len(r["unit_ids"])
+    n_own = len(e["own"][0])
+    s = c["solver"]
+    return CouplingFit(
+        model=_model(m),
+        unit_ids=tuple(r["unit_ids"]),
+        positions=_floats(r["positions_um"], n_units, -1),
+        origin=Origin(tuple(SourceFile(**f) for f in r["files"]), r["windows_stated"], tuple(r["notes"])),
+        window_bounds=_floats(r["windows_s"], -1, 2),
+        targets=_whole(e["targets"]),
+        counts=_whole(r["counts"]),
+        n_bins=int(r["n_bins"]),
+        own=_floats(e["own"], n_targets, n_own),
+        shared=_floats(e["shared"], n_shared),
+        at_bound=_floats(e["at_bound"], n_shared),
+        bound_reasons=tuple(e["bound_reasons"]),
+        span=DistanceRange(g["reference_um"], g["smallest_um"], g["largest_um"], g["n_coordinates"]),
+        distinct_um=_floats(g["distinct_um"], -1),
+        n_pairs=_whole(g["n_pairs"]),
+        has_same_site=bool(e["has_same_site"]),
+        radius_interval=None if e["radius_interval_um"] is None else _pair(e["radius_interval_um"]),
+        uncertainty=Uncertainty(
+            shared_model=_floats(u["shared_model"], n_shared, n_shared),
+            shared_robust=_floats(u["shared_robust"], n_shared, n_shared),
+            own_model=_floats(u["own_model"], n_targets, n_own, n_own),
+            own_robust=_floats(u["own_robust"], n_targets, n_own, n_own),
+            block_influence=_floats(u["block_influence"], int(u["n_blocks"]), n_shared),
+            n_blocks=int(u["n_blocks"]),
+            block_length_s=float(u["block_length_s"]),
+        ),
+        covariance_kind=covariance_kind(u["covariance"]),
+        log_likelihood=float(ll["fit"]),
+        null_log_likelihood=float(ll["constant_rates"]),
+        saturated_log_likelihood=float(ll["saturated"]),
+        uncoupled_log_likelihood=float(ll["without_coupling"]),
+        spectral_radius=float(c["spectral_radius"]),
+        verdict=CouplingVerdict(**c["verdict"]),
+        notes=tuple(Note(**n) for n in c["notes"]),
+        solver=SolverReport(
+            converged=bool(s["converged"]),
+            n_iterations=int(s["n_iterations"]),
+            max_gradient=float("inf") if s["max_gradient"] is None else float(s["max_gradient"]),
+            message=str(s["message"]),
+            starts=tuple(StartRecord(**start) for start in s["starts"]),
+        ),
+        second_optimum=c["second_optimum"],
+        after_spike_test=None if c["after_spike_test"] is None else ScoreTest(**c["after_spike_test"]),
+        seed=int(c["seed"]),
+        seconds=float(c["seconds"]),
+        version=str(c["version"]),
+        created=str(c["created"]),
+    )
+
+
+def _pair(values: Any) -> tuple[float, float]:
+    return cast(tuple[float, float], tuple(float(v) for v in values))
+
+
+def _model(m: Mapping[str, Any]) -> CouplingModel:
+    after = dict(m["after_spike"])
+    name = after.pop("name")
+    if name == AfterSpike.name:
+        constants = after.pop("time_constants_s")
+        term: AfterSpike | NoAfterSpike = AfterSpike(None if constants is None else tuple(constants), **after)
+    elif name == NoAfterSpike.name:
+        term = NoAfterSpike()
+    else:
+        raise ValueError(f"after_spike {name!r}")
+    return CouplingModel(
+        kernel=kernel_from_description(m["kernel"], m["kernel_options"]),
+        link=m["link"],
+        bin_width=m["bin_width_s"],
+        leak_rate=m["leak_rate_hz"],
+        max_distance=m["max_distance_um"],
+        same_site=m["same_site"],
+        after_spike=term,
+        rate_course=m["rate_course"],
+        warm_up_s=m["warm_up_s"],
+    )

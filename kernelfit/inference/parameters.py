@@ -1,0 +1,169 @@
+"""The tables of a fit: shared parameters, baselines, kernel and after-spike curves, each with its interval and its reason."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+from kernelfit._typing import FloatArray
+from kernelfit.inference.bands import standard_errors, sup_t_critical
+from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
+
+if TYPE_CHECKING:
+    from kernelfit.fitting.result import CouplingFit
+    from kernelfit.model.coupling import CovarianceKind
+
+FIXED = "fixed"
+
+
+def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], FloatArray]:
+    """Natural values (K,), their Jacobian by the working parameters (K, Q), names, units, and which are on the log scale."""
+    kernel, n = fit.model.kernel, fit.n_kernel
+    theta = fit.shared[:n]
+    family = kernel.parameters(fit.span)
+    values = [*kernel.natural(theta, fit.span)]
+    jacobian = np.zeros((fit.shared.size, fit.shared.size))
+    jacobian[:n, :n] = kernel.natural_jacobian(theta, fit.span)
+    names, units = [p.name for p in family], [p.unit for p in family]
+    on_log = [p.shape and p.name != "amplitude" for p in family]
+    if fit.has_same_site:
+        values.append(fit.shared[n])
+        jacobian[n, n] = 1.0
+        names.append("same_site")
+        units.append("per spike")
+        on_log.append(False)
+    if fit.model.leak_rate is None:
+        values.append(fit.leak_rate)
+        jacobian[-1, -1] = fit.leak_rate
+        names.append("leak_rate")
+        units.append("1/s")
+        on_log.append(True)
+    return np.array(values), jacobian, names, units, np.array(on_log, dtype=bool)
+
+
+def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldIntervals:
+    values, jacobian, _, _, on_log = _natural(fit)
+    critical = critical_value(level, fit.uncertainty.degrees_of_freedom(kind))
+    if not fit.verdict.found:  # chosen for its length and leak: the wider interval says so
+        critical = max(critical, fit.verdict.critical_z)
+    return wald_intervals(values, jacobian, fit.uncertainty.shared(kind), on_log, critical)
+
+
+def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.DataFrame:
+    """Shared parameters by name: estimate, std_error, lower, upper, unit, note.
+
+    Where no coupling was found, lengths, exponents and the leak are NaN with the reason, and amplitudes keep an interval
+    widened for the search over length and leak. A fixed leak has NaN and the note "fixed".
+    """
+    _, jacobian, names, units, on_log = _natural(fit)
+    wald = _intervals(fit, kind, level)
+    table = pd.DataFrame(
+        {
+            "estimate": wald.estimate.copy(),
+            "std_error": wald.std_error.copy(),
+            "lower": wald.lower.copy(),
+            "upper": wald.upper.copy(),
+            "unit": units,
+            "note": [_note(fit, row) for row in jacobian],
+        },
+        index=pd.Index(names, name="parameter", dtype=object),
+    )
+    numbers = ["estimate", "std_error", "lower", "upper"]
+    family = fit.model.kernel.parameters(fit.span)
+    discrete = next((p.name for p in family if p.discrete), None)
+    if discrete is not None and fit.radius_interval is not None:
+        table.loc[discrete, ["std_error", "lower", "upper"]] = [np.nan, *fit.radius_interval]
+        table.loc[discrete, "note"] = "profiled over the distances of the array; the interval is a likelihood interval"
+    if not fit.verdict.found:
+        shapes = np.array([*on_log])
+        table.loc[table.index[shapes], numbers] = np.nan
+        table.loc[table.index[shapes], "note"] = "not identified: no coupling to describe"
+        table.loc[table.index[~shapes], "note"] = "no coupling found; interval widened for the search over length and leak"
+    if fit.model.leak_rate is not None:
+        table.loc["leak_rate"] = [fit.model.leak_rate, np.nan, np.nan, np.nan, "1/s", FIXED]
+    return table
+
+
+def _note(fit: CouplingFit, jacobian_row: FloatArray) -> str:
+    """Why a parameter has no standard error, where it has none."""
+    used = np.flatnonzero(jacobian_row)
+    reasons = [fit.bound_reasons[q] for q in used if fit.at_bound[q] != 0]
+    if reasons:
+        return "at its bound: " + "; ".join(reasons)
+    if np.isnan(np.diag(fit.uncertainty.shared_model)[used]).any() and used.size:
+        family = fit.model.kernel.parameters(fit.span)
+        if used[0] < len(family) and family[used[0]].discrete:
+            return ""
+        return "not identified: the recording says nothing about it (see notes)"
+    return ""
+
+
+def std_error_table(fit: CouplingFit) -> pd.DataFrame:
+    """By parameter name: standard errors by both covariances on the natural scale, and robust / model."""
+    _, _, names, _, _ = _natural(fit)
+    model, robust = (_intervals(fit, kind, 0.95).std_error for kind in ("model", "robust"))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        ratio = robust / model
+    index = pd.Index(names, name="parameter", dtype=object)
+    return pd.DataFrame({"model": model, "robust": robust, "ratio": ratio}, index=index)
+
+
+def baseline_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.DataFrame:
+    """By unit, all units in order: estimate (b_i), std_error, lower, upper, rate_hz = f(b_i), note."""
+    n = len(fit.unit_ids)
+    estimate, std_error = np.full(n, np.nan), np.full(n, np.nan)
+    estimate[fit.targets] = fit.own[:, 0]
+    std_error[fit.targets] = np.sqrt(fit.uncertainty.own(kind)[:, 0, 0])
+    half = critical_value(level, fit.uncertainty.degrees_of_freedom(kind)) * std_error
+    rate = np.full(n, np.nan)
+    rate[fit.targets] = fit.model.link.rate(fit.own[:, 0])
+    explained = np.zeros(n, dtype=bool)
+    explained[fit.targets] = True
+    notes = np.array([""] * n, dtype=object)
+    silent = ~explained & (fit.counts == 0)
+    rate[silent] = 0.0
+    notes[silent] = "silent in the bins that count: baseline minus infinity, rate 0; still drives others"
+    notes[~explained & (fit.counts > 0)] = "source only: drives others and is not explained"
+    return pd.DataFrame(
+        {
+            "estimate": estimate,
+            "std_error": std_error,
+            "lower": estimate - half,
+            "upper": estimate + half,
+            "rate_hz": rate,
+            "note": notes,
+        },
+        index=pd.Index(fit.unit_ids, name="unit", dtype=object),
+    )
+
+
+def kernel_band(fit: CouplingFit, d_um: FloatArray, level: float, simultaneous: bool) -> pd.DataFrame:
+    """distance_um, estimate, lower, upper of the fitted kernel; see `CouplingFit.kernel_band`."""
+    n = fit.n_kernel
+    estimate = fit.kernel(d_um)
+    gradient = fit.model.kernel.gradient(fit.shared[:n], d_um, fit.span)
+    covariance = fit.uncertainty.shared(fit.covariance_kind)[:n, :n]
+    freedom = fit.uncertainty.degrees_of_freedom(fit.covariance_kind)
+    critical = critical_value(level, freedom)
+    if simultaneous:
+        critical = sup_t_critical(gradient, covariance, level, freedom)
+    if not fit.verdict.found:
+        critical = max(critical, fit.verdict.critical_z)
+    half = critical * standard_errors(gradient, covariance)
+    return pd.DataFrame(
+        {"distance_um": d_um, "estimate": estimate, "lower": estimate - half, "upper": estimate + half}
+    )
+
+
+def after_spike_band(fit: CouplingFit, target: int, lags_s: FloatArray, level: float) -> pd.DataFrame:
+    """lag_s, estimate, lower, upper of one unit's after-spike rate multiplier."""
+    traces = np.exp(-lags_s[None, :] / fit.after_spike_constants_s[:, None])
+    covariance = fit.uncertainty.own(fit.covariance_kind)[target, 1:, 1:]
+    h = fit.own[target, 1:] @ traces
+    critical = critical_value(level, fit.uncertainty.degrees_of_freedom(fit.covariance_kind))
+    half = critical * standard_errors(traces, covariance)
+    return pd.DataFrame(
+        {"lag_s": lags_s, "estimate": np.exp(h), "lower": np.exp(h - half), "upper": np.exp(h + half)}
+    )

@@ -1,0 +1,49 @@
+"""A fit in plain text, and the same as a small table for notebooks."""
+
+from __future__ import annotations
+
+from html import escape
+from typing import TYPE_CHECKING
+
+import numpy as np
+import pandas as pd
+
+if TYPE_CHECKING:
+    from kernelfit.fitting.result import CouplingFit
+
+CAUTION = (
+    "Functional, not synaptic, coupling: common input and unrecorded cells leave a trace. Research use, not for clinical "
+    "decisions."
+)
+
+
+def _row(name: str, row: pd.Series) -> str:
+    if not np.isfinite(row["estimate"]):
+        return f"  {name:<20} could not be estimated: {row['note']}"
+    interval = f"{row['lower']:.4g} to {row['upper']:.4g}" if np.isfinite(row["lower"]) else row["note"]
+    return f"  {name:<20} {row['estimate']:.4g} {row['unit']} ({interval})"
+
+
+def summary_text(fit: CouplingFit) -> str:
+    """The result in plain text: verdict, parameters with 95 % intervals, what they rest on, notes."""
+    kind = f"{fit.covariance_kind} standard errors, 95 % intervals"
+    lines = [
+        f"{fit.model.kernel.name} kernel, {fit.model.link.name} link, {1000 * fit.model.bin_width:g} ms bins",
+        fit.verdict.sentence,
+        *[_row(str(name), row) for name, row in fit.parameters.iterrows()],
+        f"  time constant {1000 * fit.time_constant:.4g} ms; amplitudes at {fit.reference_distance_um:.4g} µm; {kind}",
+        f"{len(fit.targets)} of {len(fit.unit_ids)} units explained, {fit.n_spikes} spikes, {fit.duration_s:g} s in "
+        f"{fit.n_blocks} blocks of {fit.block_length_s:.3g} s",
+        f"log-likelihood {fit.log_likelihood:.4f}, {fit.n_parameters} parameters, AIC {fit.aic:.2f}, BIC {fit.bic:.2f}; "
+        f"{'converged' if fit.converged else 'NOT CONVERGED'}: {fit.solver.message}",
+        *([fit.second_optimum] if fit.second_optimum else []),
+        *[f"{n.severity}: {n.what} ({n.where}) {n.remedy}" for n in fit.notes],
+        CAUTION,
+    ]
+    return "\n".join(lines)
+
+
+def summary_html(fit: CouplingFit) -> str:
+    """The parameter table and the verdict, escaped, for a notebook."""
+    table = fit.parameters.to_html(float_format=lambda x: f"{x:.4g}", escape=True)
+    return f"<p>{escape(fit.verdict.sentence)}</p>{table}<p>{escape(CAUTION)}</p>"

@@ -1,0 +1,110 @@
+"""Terms beside the coupling (MODEL.md section 6): small immutable objects, with a plain string for the default."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+from typing import ClassVar, Literal
+
+import numpy as np
+
+from kernelfit._typing import FloatArray
+from kernelfit.errors import ArgumentError
+
+STEPS_PER_DECADE = 1.7  # time constants a factor of about four apart: traces overlap, and are told apart
+
+
+@dataclass(frozen=True)
+class AfterSpike:
+    """What a unit's own spikes do to its rate: h_i = sum_m c_im S_im, exponential traces at fixed time constants.
+
+    Each unit has its own coefficients. A trace starts at 1 with the spike and decays; coefficients are on the scale of
+    the predictor, so exp(h) multiplies the rate under the exponential link.
+
+    Parameters
+    ----------
+    time_constants_s : seconds, ascending; None: log-spaced from one bin to `longest_s`
+    longest_s : longest time constant where they are chosen for you
+    ridge : weight r of the penalty r/2 sum c^2; the default, a prior of standard deviation 10, only holds coefficients
+        of lags that a unit with few spikes never showed
+    """
+
+    time_constants_s: tuple[float, ...] | None = None
+    longest_s: float = 1.0
+    ridge: float = 0.01
+    name: ClassVar[str] = "basis"
+
+    def __post_init__(self) -> None:
+        if self.time_constants_s is not None:
+            values = tuple(float(t) for t in self.time_constants_s)
+            object.__setattr__(self, "time_constants_s", values)
+            rising = all(a < b for a, b in zip(values, values[1:], strict=False))
+            if not values or not all(math.isfinite(t) and t > 0 for t in values) or not rising:
+                raise ArgumentError(
+                    f"after_spike: time_constants_s={values} must be positive seconds, each longer than the one before."
+                )
+        if not (math.isfinite(self.longest_s) and self.longest_s > 0):
+            raise ArgumentError(f"after_spike: longest_s={self.longest_s} must be a positive number of seconds.")
+        if not (math.isfinite(self.ridge) and self.ridge >= 0):
+            raise ArgumentError(f"after_spike: ridge={self.ridge} must be 0 or more.")
+
+    def constants(self, bin_width: float) -> FloatArray:
+        """(M,) time constants in seconds at this bin width."""
+        if self.time_constants_s is not None:
+            return np.array(self.time_constants_s)
+        longest = max(self.longest_s, bin_width)
+        n = 1 + math.ceil(STEPS_PER_DECADE * math.log10(longest / bin_width) - 1e-9)
+        return np.geomspace(bin_width, longest, n)
+
+
+@dataclass(frozen=True)
+class NoAfterSpike:
+    """A unit's own spikes leave no trace in its rate."""
+
+    ridge: ClassVar[float] = 0.0
+    name: ClassVar[str] = "none"
+
+    def constants(self, bin_width: float) -> FloatArray:
+        """No time constants."""
+        return np.empty(0)
+
+
+@dataclass(frozen=True)
+class NoRateCourse:
+    """Baselines are constant in time."""
+
+    name: ClassVar[str] = "none"
+
+
+AfterSpikeTerm = AfterSpike | NoAfterSpike
+SameSiteTreatment = Literal["exclude", "own", "kernel"]
+
+
+def after_spike_from(term: str | AfterSpikeTerm) -> AfterSpikeTerm:
+    """The after-spike term of a name.
+
+    Raises
+    ------
+    ArgumentError : no such term
+    """
+    if isinstance(term, (AfterSpike, NoAfterSpike)):
+        return term
+    if term == AfterSpike.name:
+        return AfterSpike()
+    if term == NoAfterSpike.name:
+        return NoAfterSpike()
+    raise ArgumentError(f"after_spike={term!r} is not known. Say 'basis', 'none' or give kf.terms.AfterSpike(...).")
+
+
+def rate_course_from(term: str | NoRateCourse) -> NoRateCourse:
+    """The rate course of a name.
+
+    Raises
+    ------
+    ArgumentError : no such course
+    """
+    if isinstance(term, NoRateCourse):
+        return term
+    if term == NoRateCourse.name:
+        return NoRateCourse()
+    raise ArgumentError(f"rate_course={term!r} is not known. Say 'none'.")
