@@ -13,8 +13,9 @@ import warnings
 import pytest
 
 from kernelfit.cli import _console
-from kernelfit.cli._console import ProgressLine, say, tell, time_left_s, warnings_as_lines
+from kernelfit.cli._console import ProgressLine, say, tell, warnings_as_lines
 from kernelfit.errors import FitWarning, RecordingWarning
+from kernelfit.fitting.progress import Progress
 
 
 class Terminal(io.StringIO):
@@ -55,44 +56,57 @@ def test_closed_pipe_ends_the_printing_only(monkeypatch: pytest.MonkeyPatch) -> 
         say("nor this")
 
 
-# Source: by hand. A quarter in 10 s leaves three quarters, 30 s.
-@pytest.mark.parametrize(
-    ("done", "elapsed_s", "left_s"),
-    [(0.25, 10.0, 30.0), (1.0, 10.0, 0.0), (0.0, 10.0, None), (0.5, 0.2, None), (1.5, 3.0, 0.0)],
-)
-def test_time_left(done: float, elapsed_s: float, left_s: float | None) -> None:
-    assert time_left_s(done, elapsed_s) == pytest.approx(left_s)
+def report(sweeps: int, *, peak_bytes: int = 0, stage: str = "climbing") -> Progress:
+    return Progress(stage=stage, sweeps=sweeps, expected_sweeps=41, seconds_left=0.0, peak_bytes=peak_bytes)
+
+
+def shown_at(times_s: list[float], reports: list[Progress], monkeypatch: pytest.MonkeyPatch) -> list[str]:
+    """Lines off a terminal when the reports come at these times; the first time is that of the start."""
+    clock = iter(times_s)
+    monkeypatch.setattr(_console.time, "monotonic", lambda: next(clock))
+    stream = io.StringIO()
+    progress = ProgressLine(stream)
+    for each in reports:
+        progress(each)
+    return stream.getvalue().splitlines()
 
 
 def test_progress_is_silent_off_a_terminal_when_the_work_is_short(capsys: pytest.CaptureFixture[str]) -> None:
     with ProgressLine() as progress:
-        progress(0.5, "Fitting")
+        progress(report(1))
+        progress(report(2))
     printed = capsys.readouterr()
     assert printed.out + printed.err == ""
 
 
 def test_progress_off_a_terminal_is_a_plain_line_now_and_then(monkeypatch: pytest.MonkeyPatch) -> None:
-    clock = iter([0.0, 11.0, 12.0, 25.0])
-    monkeypatch.setattr(_console.time, "monotonic", lambda: next(clock))
-    stream = io.StringIO()
-    progress = ProgressLine(stream)
-    progress(0.25, "Fitting")  # at 11 s
-    progress(0.26, "Fitting")  # at 12 s: too soon for another line
-    progress(0.50, "Fitting")  # at 25 s
-    assert stream.getvalue().splitlines() == [
-        "Fitting: 25 %, about 33 s left",
-        "Fitting: 50 %, about 25 s left",
+    # Source: by hand. After the first report (its 8 s may be compilation) 10 sweeps take 4 s, so 30 take 12 s.
+    lines = shown_at([0.0, 8.0, 12.0, 13.0, 24.0], [report(1), report(11), report(12), report(36)], monkeypatch)
+    assert lines == ["climbing: 27 %, about 12 s left", "climbing: 88 %, about 2 s left"]
+
+
+def test_a_long_fit_is_announced_once_with_time_and_memory(monkeypatch: pytest.MonkeyPatch) -> None:
+    # Source: by hand. 10 sweeps take 60 s, so 30 take 180 s.
+    reports = [report(1), report(11, peak_bytes=400_000_000), report(12, peak_bytes=400_000_000)]
+    lines = shown_at([0.0, 1.0, 61.0, 66.0], reports, monkeypatch)
+    assert lines == [
+        "The fit will take about 3 min and 0.4 GB of memory. Ctrl-C stops it cleanly.",
+        "climbing: 27 %, about 3 min left",
     ]
+
+
+def test_no_time_is_told_from_a_single_report(monkeypatch: pytest.MonkeyPatch) -> None:
+    assert shown_at([0.0, 300.0], [report(1)], monkeypatch) == ["climbing: 2 %"]
 
 
 def test_progress_on_a_terminal_stays_on_one_line_and_vanishes() -> None:
     stream = Terminal()
     with ProgressLine(stream) as progress:
-        progress(0.5, "Fitting [bold]")
+        progress(report(20, stage="climbing [bold]"))
         progress._bar.refresh()
     shown = stream.getvalue()
-    assert "Fitting [bold]" in shown
-    assert "50 %" in shown
+    assert "climbing [bold]" in shown
+    assert "49 %" in shown
     assert shown.rstrip().endswith("\x1b[2K"), "the line is erased at the end"
 
 
