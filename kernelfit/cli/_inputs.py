@@ -168,13 +168,16 @@ def read_inputs(
         decimal=tables.decimal,
         drop_duplicates=tables.drop_duplicates,
     )
-    return recording.select(
+    chosen = recording.select(
         units=_ids(selection.units, recording) or None,
         min_spikes=selection.min_spikes,
         start_s=selection.start_s,
         stop_s=selection.stop_s,
         source_only=_ids(selection.source_only, recording) or None,
     )
+    if chosen.source_only_mask.all():
+        raise ArgumentError("--source-only: no unit is left to be explained. Name fewer units.")
+    return chosen
 
 
 def _check(tables: TableOptions, selection: Selection) -> None:
