@@ -9,6 +9,8 @@ import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from kernelfit.errors import Unavailable
 from kernelfit.recording.recording import Recording
 from kernelfit.report import captions, words
@@ -293,7 +295,11 @@ def sure_sentences(fit: CouplingFit) -> tuple[str, ...]:
 
 def goodness_sentences(fit: CouplingFit, goodness: Goodness) -> tuple[str, ...]:
     """What the model explains, and what a failed or passed test means."""
-    sentences = [words.explained_sentence(goodness.deviance_explained, goodness.bits_per_spike)]
+    statistics = goodness.units["ks_statistic"].to_numpy(dtype=np.float64)
+    sentences = [
+        words.explained_sentence(goodness.deviance_explained, goodness.bits_per_spike),
+        words.misfit_sentence(statistics),
+    ]
     if goodness.n_rejected:
         sentences.append(
             "Where a unit fails, the model misses something in the timing of its spikes: slow changes of "

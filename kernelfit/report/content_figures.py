@@ -32,6 +32,7 @@ from kernelfit.report.numbers import (
     time_text,
 )
 from kernelfit.report.readings import (
+    FARTHER,
     LEVEL,
     change_text,
     coupling_at,
@@ -39,7 +40,7 @@ from kernelfit.report.readings import (
     time_constant_of,
     told_distances,
 )
-from kernelfit.report.words import listed, percent_of_rate
+from kernelfit.report.words import described_text, listed, percent_of_rate
 
 if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness, KsCurve
@@ -126,7 +127,7 @@ def kernel_title(fit: CouplingFit) -> str:
     if not near.known:
         return "The kernel could not be estimated"
     first = f"One spike {change_text(near.value, fit)} at {distance_label(fit.reference_distance_um)}"
-    farther = [d for d in told_distances(fit) if d > 1.5 * fit.reference_distance_um]
+    farther = [d for d in told_distances(fit) if d > FARTHER * fit.reference_distance_um]
     if not farther or not (far := coupling_at(fit, float(farther[0]))).known:
         return first
     same_way = (far.value < 0.0) == (near.value < 0.0)
@@ -214,8 +215,8 @@ def after_spike_title(lag_s: FloatArray, median: FloatArray) -> str:
     size = np.abs(np.log(np.maximum(median, 1e-12)))
     largest = int(np.argmax(size))
     places = [0] if largest == 0 or size[largest] < 1.2 * size[0] else [0, largest]
-    parts = [f"{number_text(float(median[k]), 2)} times after {time_text(float(lag_s[k]))}" for k in places]
-    return f"A typical unit's own spike changes its rate: {listed(parts)}"
+    parts = [f"{number_text(float(median[k]), 2)} after {number_text(1e3 * float(lag_s[k]), 2)} ms" for k in places]
+    return f"A unit's own spike multiplies its rate by {listed(parts)}"
 
 
 # --- quality of the fit -----------------------------------------------------------------------------------
@@ -242,9 +243,8 @@ def ks_data(goodness: Goodness) -> KsData | Unavailable:
     pooled_p = float(goodness.pooled["p_value"].iloc[0])
     if math.isfinite(pooled_p):
         panels.append(ks_panel("all units together", goodness.ks_curve(), pooled_p))
-    kept, total = int((~rejected).sum()), int(rejected.size)
     return KsData(
-        title=f"The model describes the spike times of {count_text(kept)} of {count_text(total)} units",
+        title=described_text(int(rejected.size), int(rejected.sum())),
         panels=tuple(panels),
         glance=KsGlanceData(ratio=ratio[order], rejected=rejected[order], level=1.0 - goodness.level),
     )

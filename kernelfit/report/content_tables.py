@@ -185,7 +185,7 @@ def _goodness_row(name: str, row: pd.Series) -> tuple[Cell, ...]:
         p_cell("p_adjusted"),
         p_cell("p_value_plain"),
         Cell(verdict),
-        Cell(_note(row["note"])),
+        Cell("" if math.isfinite(statistic) else _note(row["note"])),
     )
 
 
@@ -310,7 +310,8 @@ def recording_facts(fit: CouplingFit, recording: Recording) -> Definition:
         rows.append(("pairs left out", count_text(len(recording.excluded_pairs))))
     rows.append(("time in the likelihood", f"{duration_text(fit.duration_s)} ({count_text(fit.n_bins)} bins)"))
     rows.append(("spikes in the likelihood", count_text(fit.n_spikes)))
-    rows += [("changed on reading", note) for note in origin.notes]
+    said = "windows not stated"  # in a row of its own above
+    rows += [("changed on reading", note) for note in origin.notes if not note.startswith(said)]
     return Definition(rows=tuple(rows), caption="The recording")
 
 

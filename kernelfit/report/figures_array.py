@@ -6,7 +6,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.colors import LogNorm, Normalize
 from matplotlib.figure import Figure
-from matplotlib.ticker import FuncFormatter, NullFormatter
+from matplotlib.ticker import FixedLocator, FuncFormatter, NullFormatter
 
 from kernelfit.report.figure_data import ArrayData, RasterData
 from kernelfit.report.figures_kernel import title
@@ -19,6 +19,7 @@ from kernelfit.report.look import (
     TWO_COLUMNS_MM,
     count_text,
     distance_label,
+    log_ticks,
     look,
     new_figure,
     number_text,
@@ -66,6 +67,7 @@ def draw_array(data: ArrayData) -> Figure:
             bar.set_label(data.quantity)
             bar.outline.set_linewidth(0.4)
             if data.on_log_scale:
+                bar.ax.yaxis.set_major_locator(FixedLocator(log_ticks(*bar.ax.get_ylim())))
                 bar.ax.yaxis.set_major_formatter(FuncFormatter(lambda v, _: number_text(v)))
                 bar.ax.yaxis.set_minor_formatter(NullFormatter())
         ax.scatter(

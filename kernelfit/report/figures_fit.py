@@ -17,13 +17,13 @@ from kernelfit.report.look import (
     ONE_COLUMN_MM,
     RAISING,
     TWO_COLUMNS_MM,
+    log_ticks,
     look,
     new_figure,
     number_text,
 )
 
 _SMALLEST_SHOWN = 0.01  # a refractory trough goes to 0, which a log axis cannot show
-_STEPS = ((1.0, 3.0), (1.0, 2.0, 5.0), (1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 1.1, 1.2, 1.5, 2.0, 5.0, 8.0, 9.0))
 
 
 def draw_after_spike(data: AfterSpikeData) -> Figure:
@@ -45,7 +45,7 @@ def draw_after_spike(data: AfterSpikeData) -> Figure:
         bottom, top = float(np.nanmin(shown)) / 1.2, float(np.nanmax(shown)) * 1.2
         ax.set_ylim(bottom, top)
         ax.set_xlim(lag_ms[0], lag_ms[-1])
-        ax.yaxis.set_major_locator(FixedLocator(_ticks(bottom, top)))
+        ax.yaxis.set_major_locator(FixedLocator(log_ticks(bottom, top)))
         for axis in (ax.xaxis, ax.yaxis):
             axis.set_major_formatter(FuncFormatter(lambda v, _: number_text(v)))
             axis.set_minor_formatter(NullFormatter())
@@ -54,16 +54,6 @@ def draw_after_spike(data: AfterSpikeData) -> Figure:
         ax.legend(loc="best")
         title(ax, data.title)
         return figure
-
-
-def _ticks(bottom: float, top: float) -> list[float]:
-    """At least three round numbers on a log axis, from the coarsest steps that give them."""
-    shown: list[float] = []
-    for steps in _STEPS:
-        shown = [s * 10.0**k for k in range(-3, 5) for s in steps if bottom <= s * 10.0**k <= top]
-        if len(shown) >= 3:
-            break
-    return shown
 
 
 def draw_ks(data: KsData) -> Figure:

@@ -24,14 +24,15 @@ from kernelfit.report.look import (
     new_figure,
     zero_line,
 )
+from kernelfit.report.numbers import tied
 
-TITLE_CHARACTERS = 46
+TITLE_CHARACTERS = 48
 _LINE_STYLES = ("-", (0, (4, 1.5)), (0, (1.5, 1.2)))
 
 
 def title(ax: Axes, text: str, characters: int = TITLE_CHARACTERS) -> None:
     """A finding as the title, broken into lines that fit one column."""
-    ax.set_title("\n".join(textwrap.wrap(text, characters)))
+    ax.set_title("\n".join(textwrap.wrap(tied(text), characters)))
 
 
 def hue(values: FloatArray) -> str:

@@ -53,6 +53,7 @@ __all__ = [
     "fixed_text",
     "inline_svg",
     "interval_text",
+    "log_ticks",
     "look",
     "new_figure",
     "number_text",
@@ -155,6 +156,19 @@ def new_figure(width_mm: float, height_mm: float) -> Figure:
 def zero_line(ax: Axes) -> None:
     """The zero line that every signed axis shows."""
     ax.axhline(0.0, color=INK, linewidth=0.7, zorder=1.5)
+
+
+_LOG_STEPS = ((1.0, 3.0), (1.0, 2.0, 5.0), (1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 1.1, 1.2, 1.5, 2.0, 5.0, 8.0, 9.0))
+
+
+def log_ticks(bottom: float, top: float) -> list[float]:
+    """At least three round numbers on a log axis, from the coarsest steps that give them."""
+    shown: list[float] = []
+    for steps in _LOG_STEPS:
+        shown = [s * 10.0**k for k in range(-3, 5) for s in steps if bottom <= s * 10.0**k <= top]
+        if len(shown) >= 3:
+            break
+    return shown
 
 
 # --- writing figures ------------------------------------------------------------------------------------

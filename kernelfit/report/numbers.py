@@ -7,6 +7,7 @@ are in ms; prose never has more than three decimals; a number that is missing sa
 from __future__ import annotations
 
 import math
+import re
 
 COULD_NOT = "could not be estimated"
 PROSE_DECIMALS = 3
@@ -138,3 +139,12 @@ def duration_text(seconds: float) -> str:
     if hours:
         return f"{hours} h {minutes} min" if minutes else f"{hours} h"
     return f"{minutes} min {left} s" if left else f"{minutes} min"
+
+
+# A number and its unit, and a p with its value, belong on one line.
+_TIES = re.compile(r"(?<=\d) (?=(?:%|µm|mm|ms|s|min|h|Hz)(?!\w))|(?<=\bp) (?=[=<] )|(?<=\bp [=<]) (?=[\d<])")
+
+
+def tied(text: str) -> str:
+    """The text with no-break spaces where a line must not end: before units, inside "p = 0.042"."""
+    return _TIES.sub("\N{NO-BREAK SPACE}", text)

@@ -8,7 +8,6 @@ the pictures that `look.inline_svg` made.
 
 from __future__ import annotations
 
-import re
 from dataclasses import dataclass
 from typing import ClassVar, TypeAlias
 
@@ -17,6 +16,7 @@ from markupsafe import Markup
 from matplotlib.figure import Figure
 
 from kernelfit.report.look import inline_svg
+from kernelfit.report.numbers import tied
 
 PRINTED_ROWS = 40  # a printed table of a thousand units helps nobody; its file holds them all
 SCROLLED_ROWS = 24  # longer tables scroll in a box of their own on the screen
@@ -179,14 +179,8 @@ class Page:
     footer: str = ""
 
 
-# A number and its unit, and a p with its value, stay on one line.
-_TIES = re.compile(r"(?<=\d) (?=(?:%|µm|mm|ms|s|min|h|Hz)(?![\w]))|(?<=\bp) (?=[=<] )|(?<=\bp [=<]) (?=[\d<])")
-
-
-def _tied(value: object) -> object:
-    if isinstance(value, str) and not isinstance(value, Markup):
-        return _TIES.sub("\N{NO-BREAK SPACE}", value)
-    return value
+def _tied_value(value: object) -> object:
+    return tied(value) if isinstance(value, str) and not isinstance(value, Markup) else value
 
 
 def render_page(page: Page) -> str:
@@ -195,7 +189,7 @@ def render_page(page: Page) -> str:
         loader=jinja2.PackageLoader("kernelfit.report", "templates"),
         autoescape=True,
         undefined=jinja2.StrictUndefined,
-        finalize=_tied,
+        finalize=_tied_value,
         trim_blocks=True,
         lstrip_blocks=True,
         keep_trailing_newline=True,

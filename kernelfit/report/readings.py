@@ -27,6 +27,7 @@ if TYPE_CHECKING:
 LEVEL = 0.95  # of every interval in a report
 TEST_LEVEL = 0.05  # of every test in a report
 LEAK = "leak_rate"
+FARTHER = 1.5  # reference distances: what counts as farther away in a sentence
 
 
 def is_exp(fit: CouplingFit) -> bool:
@@ -116,11 +117,16 @@ def told_distances(fit: CouplingFit) -> FloatArray:
 
 
 def distance_sentence(fit: CouplingFit) -> str:
-    """How the effect depends on distance, at about one, two and four times the reference distance."""
-    chosen = told_distances(fit)
-    if chosen.size == 0:
+    """How the effect depends on distance, at about two and four times the reference distance."""
+    told = told_distances(fit)
+    if told.size == 0:
         return "No pair of units is covered by the kernel."
-    return distances_sentence(chosen, tuple(coupling_at(fit, float(d)) for d in chosen), link_name(fit))
+    if not fit.verdict.found:
+        return "The kernel and the parameters below are what the fit ended with; they do not describe coupling."
+    farther = told[told > FARTHER * fit.reference_distance_um]
+    if farther.size == 0:
+        return "No pairs are much farther apart than that, so nothing can be said about distance."
+    return distances_sentence(farther, tuple(coupling_at(fit, float(d)) for d in farther), link_name(fit))
 
 
 def described_sentence(goodness: Goodness) -> str:

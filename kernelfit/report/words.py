@@ -159,7 +159,7 @@ def distances_sentence(distances_um: FloatArray, jumps: tuple[Estimate, ...], li
 
     Returns
     -------
-    "It is 15 % (12 to 18) at 100 µm, 4.1 % (2.2 to 6.0) at 400 µm and ...", "" without distances
+    "Farther away the change of the rate is 4.1 % (2.2 to 6.0) at 400 µm and ...", "" without distances
     """
     parts = []
     for distance, jump in zip(distances_um, jumps, strict=True):
@@ -167,7 +167,7 @@ def distances_sentence(distances_um: FloatArray, jumps: tuple[Estimate, ...], li
             parts.append(f"{_size_text(jump, link)} at {distance_label(float(distance))}")
     if not parts:
         return ""
-    subject = "The change of the rate is" if link == "exp" else "The jump of the drive is"
+    subject = "Farther away the change of the rate is" if link == "exp" else "Farther away the jump of the drive is"
     return f"{subject} {listed(parts)}."
 
 
@@ -243,6 +243,32 @@ def block_text(seconds: float) -> str:
 # --- does the model describe the recording ---------------------------------------------------------------
 
 
+def described_text(n_tested: int, n_rejected: int) -> str:
+    """How many units the model describes, in a clause: "The model describes the spike times of 31 of 35 units"."""
+    kept = n_tested - n_rejected
+    if n_tested == 1:
+        return f"The model {'describes' if kept else 'does not describe'} the spike times of the one unit tested"
+    if kept == 0:
+        return f"The model does not describe the spike times of any of the {count_text(n_tested)} units"
+    if n_rejected == 0:
+        return f"The model describes the spike times of all {count_text(n_tested)} units"
+    return f"The model describes the spike times of {count_text(kept)} of {count_text(n_tested)} units"
+
+
+def misfit_sentence(ks_statistics: FloatArray) -> str:
+    """How far observed and expected shares are apart in the middle unit; "" without a test."""
+    known = ks_statistics[np.isfinite(ks_statistics)]
+    if known.size == 0:
+        return ""
+    middle, largest = number_text(float(np.median(known)), 2), number_text(float(known.max()), 2)
+    if known.size == 1:
+        return f"Observed and expected share of its intervals are at most {largest} apart."
+    return (
+        f"In the middle unit the observed share of intervals is at most {middle} away from the expected one, in the "
+        f"worst {largest}."
+    )
+
+
 def goodness_sentence(n_tested: int, n_rejected: int, pooled_p: float, level: float) -> str:
     """How many units the model describes, and whether it describes them together.
 
@@ -254,14 +280,7 @@ def goodness_sentence(n_tested: int, n_rejected: int, pooled_p: float, level: fl
     """
     if n_tested == 0:
         return "No unit has enough spikes for a test of the model."
-    kept = n_tested - n_rejected
-    units = "the one unit tested" if n_tested == 1 else f"{count_text(kept)} of {count_text(n_tested)} units"
-    if n_tested == 1:
-        first = f"The model {'describes' if kept else 'fails for'} {units}"
-    elif n_rejected == 0:
-        first = f"The model describes the spike times of all {count_text(n_tested)} units"
-    else:
-        first = f"The model describes the spike times of {units} and fails for {count_text(n_rejected)}"
+    first = described_text(n_tested, n_rejected)
     how = f"time rescaling, Kolmogorov-Smirnov, {level_text(level)} after correction for many tests"
     if math.isnan(pooled_p):
         return f"{first} ({how})."

@@ -63,9 +63,9 @@ def test_the_verdict_is_three_sentences_with_the_fits_own_numbers(content):
         "One spike at 200 µm raises the rate by 12 % (95 % interval 9 to 15 %), "
         "fading with a time constant of 13 ms (11 to 15)."
     )
-    assert "at 200 µm" in content.verdict[1]
+    assert "at 400 µm" in content.verdict[1]
     assert "at 800 µm" in content.verdict[1]
-    assert content.verdict[2].startswith("The model describes the spike times of 30 of 59 units and fails for 29")
+    assert content.verdict[2].startswith("The model describes the spike times of 30 of 59 units (")
 
 
 def test_effects_at_other_distances_follow_the_kernel(content):

@@ -70,7 +70,8 @@ def test_effects_at_several_distances():
         np.array([100.0, 400.0, 800.0]), (jump(15, 12, 18), jump(4.1, 2.2, 6.0), jump(0.02, 0.01, 0.04)), "exp"
     )
     assert text == (
-        "The change of the rate is 15 % (12 to 18) at 100 µm, 4.1 % (2.2 to 6.0) at 400 µm and below 0.1 % at 800 µm."
+        "Farther away the change of the rate is 15 % (12 to 18) at 100 µm, 4.1 % (2.2 to 6.0) at 400 µm and "
+        "below 0.1 % at 800 µm."
     )
     assert words.distances_sentence(np.array([100.0]), (Estimate(math.nan),), "exp") == ""
 
@@ -96,12 +97,23 @@ def test_worth_is_the_square_of_the_ratio():
 
 def test_goodness():
     text = words.goodness_sentence(35, 4, 0.042, 0.05)
-    assert text.startswith("The model describes the spike times of 31 of 35 units and fails for 4 (")
+    assert text.startswith("The model describes the spike times of 31 of 35 units (")
     assert "p = 0.042" in text
     assert "all 35 units" in words.goodness_sentence(35, 0, 0.4, 0.05)
     assert "nothing speaks against it" in words.goodness_sentence(35, 0, 0.4, 0.05)
+    assert "does not describe the spike times of any of the 35 units" in words.goodness_sentence(35, 35, 0.0, 0.05)
     assert words.goodness_sentence(0, 0, math.nan, 0.05).startswith("No unit")
-    assert "fails for the one unit tested" in words.goodness_sentence(1, 1, math.nan, 0.05)
+    assert "does not describe the spike times of the one unit" in words.goodness_sentence(1, 1, math.nan, 0.05)
+
+
+def test_the_size_of_the_misfit():
+    # median of 0.1, 0.2, 0.4 is 0.2
+    text = words.misfit_sentence(np.array([0.4, 0.1, math.nan, 0.2]))
+    assert text == (
+        "In the middle unit the observed share of intervals is at most 0.2 away from the expected one, in the "
+        "worst 0.4."
+    )
+    assert words.misfit_sentence(np.array([math.nan])) == ""
 
 
 def test_gain_over_constant_rates():
