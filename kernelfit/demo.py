@@ -36,6 +36,8 @@ class DemoTruth:
     leak_rate : 1/s
     link : name of the rate link
     bin_width : seconds, of the simulation
+    after_spike_constants_s, after_spike_coefficients : (M,) seconds, and what a unit's own spike adds to its
+        drive, fading with them; alike for all units
     seed : of the simulation
     unit_ids : in the order of the sites table
     baseline_hz : (n_units,) rate of each unit without any coupling, Hz; 0 for the unit that never fired
@@ -48,6 +50,8 @@ class DemoTruth:
     leak_rate: float
     link: str
     bin_width: float
+    after_spike_constants_s: FloatArray
+    after_spike_coefficients: FloatArray
     seed: int
     unit_ids: tuple[str, ...]
     baseline_hz: FloatArray
@@ -55,9 +59,7 @@ class DemoTruth:
     @property
     def kernel(self) -> KernelCurve:
         """The true J, a function of the distance in µm."""
-        return Gaussian().at(
-            amplitude=self.amplitude, length_um=self.length_um, reference_um=self.reference_um
-        )
+        return Gaussian().at(amplitude=self.amplitude, length_um=self.length_um, reference_um=self.reference_um)
 
     @property
     def parameters(self) -> pd.DataFrame:
@@ -104,6 +106,8 @@ def load_demo_truth() -> DemoTruth:
         leak_rate=stored["leak_rate"],
         link=stored["link"],
         bin_width=stored["bin_width_s"],
+        after_spike_constants_s=np.array(stored["after_spike"]["time_constants_s"]),
+        after_spike_coefficients=np.array(stored["after_spike"]["coefficients"]),
         seed=stored["seed"],
         unit_ids=tuple(stored["baseline_hz"]),
         baseline_hz=np.array(list(stored["baseline_hz"].values()), dtype=np.float64),
@@ -116,6 +120,4 @@ def _table(name: str) -> Path:
     for folder in (package / "demo_data", package.parent / "datasets"):
         if (folder / name).is_file():
             return folder / name
-    raise StorageError(
-        f"{name}: not in this installation of kernelfit, which lacks the demo. Install it again."
-    )
+    raise StorageError(f"{name}: not in this installation of kernelfit, which lacks the demo. Install it again.")
