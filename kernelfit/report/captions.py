@@ -72,11 +72,13 @@ def _kernel(fit: CouplingFit, kernel: KernelData | Unavailable, kind: str, level
         else "pairs of units at each distance"
     )
     readings = ", left as jump J of the drive, right as change of the rate" if kernel.in_percent else ""
-    shape, span = ("Line", "band") if kernel.distance_um.size > 1 else ("Point", "bar")
+    curve = kernel.found and kernel.distance_um.size > 1
+    shape, span = ("Line", "band") if curve else ("Point", "bar")
+    why = "" if kernel.found else " No curve is drawn: without coupling its shape means nothing."
     return (
         f"Effect of one spike on another unit against the distance between them{readings}, at the moment of "
         f"the spike. {shape}: estimate ({kernel_name(fit)} kernel); {span}: pointwise {level} interval, "
-        f"{kind}. Dashed: reference distance. Nothing is drawn where the array has no pairs. Below: {bars}. "
+        f"{kind}. Dashed: reference distance. Nothing is drawn where the array has no pairs.{why} Below: {bars}. "
         f"{based_on}"
     )
 

@@ -204,6 +204,11 @@ def subtitle(fit: CouplingFit, recording: Recording) -> str:
     )
 
 
+def _said(note: Note, fit: CouplingFit) -> bool:
+    """True where the page's top says so already: no convergence, no coupling."""
+    return note.what == fit.verdict.sentence or (not fit.converged and note.what.startswith("The fit did not converge"))
+
+
 def note_text(note: Note) -> str:
     """One note as a line: what, where, remedy."""
     where = f" Where: {note.where.rstrip('.')}." if note.where else ""
@@ -222,7 +227,7 @@ def notices(fit: CouplingFit) -> tuple[Notice, ...]:
             )
         )
     for severity in ("error", "warning"):
-        marked += [Notice(severity, note_text(n)) for n in fit.notes if n.severity == severity]
+        marked += [Notice(severity, note_text(n)) for n in fit.notes if n.severity == severity and not _said(n, fit)]
     if len(marked) > NOTICES_SHOWN:
         more = len(marked) - NOTICES_SHOWN
         marked = [
@@ -256,7 +261,7 @@ def coupling_sentences(fit: CouplingFit) -> tuple[str, ...]:
     sentences = [
         found,
         "" if same_site is None else words.same_site_sentence(same_site, link=link_name(fit), level=LEVEL),
-        stability_sentence(fit.spectral_radius),
+        stability_sentence(fit.spectral_radius) if fit.verdict.found else "",
     ]
     return tuple(s for s in sentences if s)
 
@@ -320,9 +325,8 @@ def after_spike_sentence(fit: CouplingFit) -> str:
             "model, they would be taken for coupling and bend the kernel's length and the time constant."
         )
     return (
-        f"The model leaves out what a unit's own spikes do to it. {test.sentence.rstrip('.')} (score test, "
-        f"chi-squared {number_text(test.statistic)} with {test.df} degrees of freedom, "
-        f"{p_sentence(test.p_value)})."
+        f"The model leaves out what a unit's own spikes do to it. {test.sentence.rstrip('.')}. Score test: chi-squared "
+        f"{number_text(test.statistic)} with {test.df} degrees of freedom, {p_sentence(test.p_value)}."
     )
 
 

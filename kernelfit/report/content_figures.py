@@ -32,7 +32,6 @@ from kernelfit.report.numbers import (
     time_text,
 )
 from kernelfit.report.readings import (
-    FARTHER,
     LEVEL,
     change_text,
     coupling_at,
@@ -76,6 +75,7 @@ def kernel_data(fit: CouplingFit) -> KernelData | Unavailable:
     curve[:, known] = band[["estimate", "lower", "upper"]].to_numpy(dtype=np.float64).T
     if not np.isfinite(curve[0]).any():
         return Unavailable("the kernel has no finite value at any distance")
+    near = coupling_at(fit, fit.reference_distance_um)
     return KernelData(
         title=kernel_title(fit),
         distance_um=grid,
@@ -87,6 +87,8 @@ def kernel_data(fit: CouplingFit) -> KernelData | Unavailable:
         level=LEVEL,
         pairs=pair_counts(pairs),
         reach_um=1.04 * float(distances[-1]),
+        found=fit.verdict.found,
+        at_reference=(near.value, near.lower, near.upper),
     )
 
 
@@ -123,16 +125,18 @@ def kernel_title(fit: CouplingFit) -> str:
     """The finding of the kernel figure."""
     if not fit.verdict.found:
         return "No coupling to describe"
-    near = coupling_at(fit, fit.reference_distance_um)
-    if not near.known:
-        return "The kernel could not be estimated"
-    first = f"One spike {change_text(near.value, fit)} at {distance_label(fit.reference_distance_um)}"
-    farther = [d for d in told_distances(fit) if d > FARTHER * fit.reference_distance_um]
-    if not farther or not (far := coupling_at(fit, float(farther[0]))).known:
+    told = [(float(d), coupling_at(fit, float(d))) for d in told_distances(fit)]
+    decided = [(d, jump) for d, jump in told if jump.known and not jump.undecided][:2]
+    if not decided:
+        return "The direction of the effect is open at all distances"
+    (near_um, near), *rest = decided
+    first = f"One spike {change_text(near.value, fit)} at {distance_label(near_um)}"
+    if not rest:
         return first
+    far_um, far = rest[0]
     same_way = (far.value < 0.0) == (near.value < 0.0)
     second = f"by {change_text(far.value, fit, verb=False)}" if same_way else change_text(far.value, fit)
-    return f"{first} and {second} at {distance_label(float(farther[0]))}"
+    return f"{first} and {second} at {distance_label(far_um)}"
 
 
 def course_data(fit: CouplingFit) -> CourseData | Unavailable:

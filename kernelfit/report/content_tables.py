@@ -14,6 +14,7 @@ from kernelfit.kernels.base import Kernel
 from kernelfit.model.terms import AfterSpikeTerm
 from kernelfit.recording.recording import COORDINATES, Recording
 from kernelfit.report.numbers import (
+    COULD_NOT,
     count_text,
     distance_label,
     duration_text,
@@ -82,8 +83,8 @@ def parameter_table(fit: CouplingFit) -> Table:
         (
             Cell("time constant"),
             Cell("how long the effect of a spike lasts, 1 / leak rate"),
-            Cell(time_text(tau.value, tau.lower, tau.upper), tau.value) if tau.known else Cell(tau.text()),
-            Cell(""),
+            Cell(time_text(tau.value, tau.lower, tau.upper), tau.value) if tau.known else Cell(COULD_NOT),
+            Cell("" if tau.known else tau.reason),
         )
     )
     table = Table(

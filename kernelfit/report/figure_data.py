@@ -41,6 +41,8 @@ class KernelData:
     level: float
     pairs: PairCounts
     reach_um: float  # right end of the axis
+    found: bool  # False: no coupling to describe; only the reference point is drawn, the shape means nothing
+    at_reference: tuple[float, float, float]  # J at the reference distance, lower, upper
 
     def numbers(self) -> pd.DataFrame:
         """distance_um, estimate, lower, upper; no row where the array has no pairs"""

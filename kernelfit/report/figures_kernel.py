@@ -47,13 +47,14 @@ def draw_kernel(data: KernelData) -> Figure:
     with look():
         figure = new_figure(ONE_COLUMN_MM, 88.0)
         top, under = figure.subplots(2, 1, sharex=True, height_ratios=[3.2, 1.0])
-        colour = hue(data.jump)
-        if np.isfinite(data.jump).sum() > 1:
+        colour = hue(data.jump) if data.found else INK
+        if data.found and np.isfinite(data.jump).sum() > 1:
             top.fill_between(data.distance_um, data.lower, data.upper, color=colour, alpha=BAND_ALPHA, linewidth=0)
             top.plot(data.distance_um, data.jump, color=colour)
-        else:  # all pairs at one distance: a point with its interval, not a curve
-            ends = np.abs(np.vstack([data.jump - data.lower, data.upper - data.jump]))
-            top.errorbar(data.distance_um, data.jump, yerr=ends, color=colour, fmt="o", capsize=2.5)
+        else:  # all pairs at one distance, or no shape to draw: a point with its interval, not a curve
+            value, lower, upper = data.at_reference
+            ends = np.nan_to_num([[value - lower], [upper - value]])
+            top.errorbar([data.reference_um], [value], yerr=ends, color=colour, fmt="o", capsize=2.5)
         zero_line(top)
         _reference_mark(top, data.reference_um, on_left=data.reference_um > 0.6 * data.reach_um, low=colour == LOWERING)
         top.set_ylabel("J, effect of one spike on the drive")

@@ -11,6 +11,7 @@ import re
 
 COULD_NOT = "could not be estimated"
 PROSE_DECIMALS = 3
+DECADES_APART = 30.0
 MINUS = "\N{MINUS SIGN}"
 
 
@@ -64,8 +65,8 @@ def interval_text(
     """Estimate with its interval: "12 % (9 to 15)".
 
     Two significant digits of the half-width decide the rounding of all three; decimals that are zero in all
-    three are left out unless the limit has cut them. `max_decimals` is the limit for prose; tables may have
-    more.
+    three are left out unless the limit has cut them. Where the ends are decades apart, each number keeps two
+    digits of its own. `max_decimals` is the limit for prose; tables may have more.
 
     Parameters
     ----------
@@ -79,6 +80,9 @@ def interval_text(
     low_known, high_known = math.isfinite(lower), math.isfinite(upper)
     if not low_known and not high_known:
         return f"{number_text(estimate, max_decimals=max_decimals)}{mark}"
+    if low_known and high_known and _spans_decades(estimate, lower, upper):
+        each = tuple(fixed_text(v, min(decimals_for(abs(v)), max_decimals)) for v in (estimate, lower, upper))
+        return f"{each[0]}{mark} ({each[1]} to {each[2]})"
     one_sided = abs((upper if high_known else lower) - estimate)
     half_width = (upper - lower) / 2.0 if low_known and high_known else one_sided
     wanted = decimals_for(half_width)
@@ -92,6 +96,12 @@ def interval_text(
     if not low_known:
         return f"{middle}{mark} (at most {fixed_text(upper, decimals)})"
     return f"{middle}{mark} ({fixed_text(lower, decimals)} to {fixed_text(upper, decimals)})"
+
+
+def _spans_decades(estimate: float, lower: float, upper: float) -> bool:
+    """True where the half-width would round a number of the interval away."""
+    ends = sorted(abs(v) for v in (lower, estimate, upper))
+    return lower * upper > 0.0 and ends[2] > DECADES_APART * ends[0]
 
 
 def distance_label(distance_um: float) -> str:

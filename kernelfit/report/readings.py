@@ -15,6 +15,7 @@ from kernelfit.report.words import (
     distances_sentence,
     explained_sentence,
     goodness_sentence,
+    not_ruled_out_sentence,
     one_spike_sentence,
     percent_of_rate,
     sureness_sentence,
@@ -122,7 +123,9 @@ def distance_sentence(fit: CouplingFit) -> str:
     if told.size == 0:
         return "No pair of units is covered by the kernel."
     if not fit.verdict.found:
-        return "The kernel and the parameters below are what the fit ended with; they do not describe coupling."
+        return not_ruled_out_sentence(
+            fit.reference_distance_um, coupling_at(fit, fit.reference_distance_um), link_name(fit), LEVEL
+        )
     farther = told[told > FARTHER * fit.reference_distance_um]
     if farther.size == 0:
         return "No pairs are much farther apart than that, so nothing can be said about distance."

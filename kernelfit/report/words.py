@@ -16,8 +16,11 @@ from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
 from kernelfit.report.numbers import (
     COULD_NOT,
+    PROSE_DECIMALS,
     count_text,
+    decimals_for,
     distance_label,
+    fixed_text,
     interval_text,
     number_text,
     p_sentence,
@@ -179,6 +182,20 @@ def _size_text(jump: Estimate, link: str) -> str:
     if np.nanmax(np.abs(ends)) < NOTHING_PERCENT:
         return f"below {number_text(NOTHING_PERCENT)}{spaced_unit('%')}"
     return interval_text(float(ends[0]), float(ends[1]), float(ends[2]), "%", max_decimals=2)
+
+
+def not_ruled_out_sentence(distance_um: float, jump: Estimate, link: str, level: float) -> str:
+    """Where no coupling was found: how large an effect could still have gone unseen."""
+    if not jump.bounded:
+        return "How large an effect could have gone unseen could not be estimated."
+    ends = np.array([jump.lower, jump.upper])
+    unit, of = ("%", " of the rate") if link == "exp" else ("", " on the drive")
+    low, high = (float(v) for v in (percent_of_rate(ends) if link == "exp" else ends))
+    decimals = min(decimals_for((high - low) / 2.0), PROSE_DECIMALS)
+    return (
+        f"At {distance_label(distance_um)} an effect between {fixed_text(low, decimals)} and "
+        f"{fixed_text(high, decimals)}{spaced_unit(unit)}{of} cannot be ruled out ({level_text(level)} interval)."
+    )
 
 
 def length_sentence(kernel_name: str, length_um: Estimate) -> str:

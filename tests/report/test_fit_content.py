@@ -79,6 +79,12 @@ def test_no_coupling_found_is_the_headline():
     assert found.verdict[0].startswith("No coupling to describe: p = 0.42.")
     assert found.figures.kernel.title == "No coupling to describe"
     assert "does not show coupling" in found.coupling_lead
+    # 100 (e^0.0862 - 1) = 9.0, 100 (e^0.1398 - 1) = 15.0
+    assert (
+        found.verdict[1]
+        == "At 200 µm an effect between 9.0 and 15.0 % of the rate cannot be ruled out (95 % interval)."
+    )
+    assert "No curve is drawn" in found.captions.kernel
 
 
 def test_a_fit_that_did_not_converge_is_marked_everywhere():
@@ -105,7 +111,7 @@ def test_warnings_stand_at_the_top_and_all_notes_in_the_text():
 def test_without_after_spike_terms_the_score_test_speaks():
     model = CouplingModel(bin_width=0.005, after_spike="none")
     found = content_of(model=model, after_spike_test=FakeScoreTest(statistic=812.4, df=300, p_value=1e-12))
-    assert "score test, chi-squared 812 with 300 degrees of freedom, p < 0.001" in found.after_spike
+    assert "Score test: chi-squared 812 with 300 degrees of freedom, p < 0.001" in found.after_spike
     assert isinstance(found.figures.after_spike, Unavailable)
     assert "Rao" in " ".join(found.methods.references)
 

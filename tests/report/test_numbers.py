@@ -35,6 +35,7 @@ MINUS = "\N{MINUS SIGN}"
         ((5.0, 4.005, 5.997), "Hz", "5 Hz (4 to 6)"),  # half-width 0.996 is 1.0 at two digits: one decimal
         ((3.0, -1.0, 7.0), "%", f"3 % ({MINUS}1 to 7)"),
         ((0.0, -0.0004, 0.0004), "", "0.000 (0.000 to 0.000)"),  # no minus before a zero
+        ((1279.1, 1.616, 1_012_220.0), "µm", "1,300 µm (1.6 to 1,000,000)"),  # decades apart: two digits each
         ((13.0, 11.0, INF), "ms", "13 ms (at least 11)"),
         ((13.0, -INF, 15.0), "ms", "13 ms (at most 15)"),
         ((50.0, NAN, NAN), "1/s", "50 1/s"),
