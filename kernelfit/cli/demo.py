@@ -47,4 +47,4 @@ def _shown(truth: DemoTruth) -> Truth:
     """The truth in the words of a report, under the names that the parameters of a fit have."""
     table = truth.parameters
     values = tuple(TruthValue(str(n), float(v), str(u)) for n, v, u in table.itertuples())
-    return Truth(values=values, sentence=truth.scenario)
+    return Truth(values=values, sentence=f"This recording is invented: it was simulated. {truth.scenario}")
