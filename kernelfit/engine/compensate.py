@@ -1,4 +1,5 @@
-"""Passes that read off rates instead of adding up derivatives: expected counts at spikes, and rates of a short stretch."""
+"""Passes that read off rates instead of adding up derivatives: expected counts at spikes, and rates of a short
+stretch."""
 
 from __future__ import annotations
 

@@ -2,7 +2,7 @@
 
 numba keys a kept function by the time stamp of its own file alone. A change in one file of this folder would leave
 callers in other files running the old code, silently, also after an upgrade. So the key here is a digest of every
-source file of the folder.
+source file of the folder, and of the links, whose codes are frozen into the machine code.
 """
 
 from __future__ import annotations
@@ -19,7 +19,8 @@ RELAXED = {"contract", "reassoc", "nsz"}
 
 
 def _digest() -> str:
-    sources = sorted(Path(__file__).parent.glob("*.py"))
+    here = Path(__file__).parent
+    sources = [*sorted(here.glob("*.py")), here.parent / "model" / "links.py"]
     return hashlib.sha256(b"".join(p.read_bytes() for p in sources)).hexdigest()
 
 

@@ -6,6 +6,7 @@ depends on their number alone, so results are the same to the bit for any number
 
 from __future__ import annotations
 
+import itertools
 import os
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
@@ -137,7 +138,8 @@ class TimeBlocks:
 class Evaluation:
     """Sums over time at one point. G blocks of time, n targets, M traces, Q shared parameters; nats and per parameter.
 
-    log_likelihood (G, n), without -log y!; score (G, n, 1 + M + Q), baseline, traces, shared; own_own (n, 1 + M, 1 + M);
+    log_likelihood (G, n), without -log y!; score (G, n, 1 + M + Q), baseline, traces, shared; own_own (n, 1 + M, 1 +
+    M);
     own_shared (n, 1 + M, Q); shared_shared (Q, Q). Without derivatives all but the first are empty.
     """
 
@@ -159,7 +161,7 @@ def lane_blocks(n_targets: int) -> list[slice]:
     groups = -(-n_targets // VECTOR)
     n_blocks = min(groups, max(-(-n_targets // LANES_PER_BLOCK), 2 if n_targets >= 2 * VECTOR else 1))
     edges = [VECTOR * (groups * k // n_blocks) for k in range(n_blocks)] + [n_targets]
-    return [slice(a, b) for a, b in zip(edges[:-1], edges[1:], strict=True)]
+    return [slice(a, b) for a, b in itertools.pairwise(edges)]
 
 
 def _in_threads(work: Callable[[slice], T], slices: list[slice], threads: int | None) -> list[T]:
@@ -198,7 +200,8 @@ def evaluate(
     data, point : the recording's counts and where to evaluate
     derivatives : False for the log-likelihood alone, several times cheaper
     blocks : blocks of time to keep apart in log-likelihood and score; None: one
-    block_weight : (n_blocks,) weight of each block in the information; log-likelihood and score come by block, unweighted
+    block_weight : (n_blocks,) weight of each block in the information; log-likelihood and score come by block,
+        unweighted
     threads : at most this many; None: as many as the machine has. The result does not depend on it
 
     Returns
@@ -223,7 +226,8 @@ def evaluate(
             np.zeros((padded, padded)),
         )
         sweep_block(
-            point.link, point.fit_leak, _events(data, part), _dynamics(data, point, part, n_tables), blocks.stretches, weight,
+            point.link, point.fit_leak, _events(data, part), _dynamics(data, point, part, n_tables),
+            blocks.stretches, weight,
             np.ascontiguousarray(point.baseline[part]), np.ascontiguousarray(point.coefficient[:, part]), sums,
         )  # fmt: skip
         return sums
@@ -277,9 +281,9 @@ def compensate(data: SweepData, point: Point, *, threads: int | None = None) -> 
     summed = ~np.isnan(before)
     order = np.flatnonzero(summed)[np.lexsort((before[summed], data.event_unit[summed]))]
     active_of_event = np.repeat(np.arange(n_active), np.diff(data.active_first))
-    pooled_count = np.bincount(
-        active_of_event[summed], weights=data.event_count[summed], minlength=n_active
-    ).astype(np.int64)
+    pooled_count = np.bincount(active_of_event[summed], weights=data.event_count[summed], minlength=n_active).astype(
+        np.int64
+    )
     holds = pooled_count > 0
     return Compensator(
         unit=data.event_unit[order].astype(np.int32),

@@ -1,6 +1,7 @@
 """What the sweep needs of a rate link, by its code. A new link is one branch in each function here.
 
-The dense part of a cell is mean = D f(eta), slope = D f'(eta), weight = D f'(eta)^2 / f(eta); a spike adds log f and f'/f.
+The dense part of a cell is mean = D f(eta), slope = D f'(eta), weight = D f'(eta)^2 / f(eta); a spike adds log f and
+f'/f.
 For the exponential link, the canonical one of Poisson counts, the three dense rows are one and the same.
 """
 
@@ -22,9 +23,16 @@ def is_canonical(link: int) -> bool:
 
 @compiled
 def fill_cells(
-    link: int, eta: FloatArray, bin_width: float, mean: FloatArray, slope: FloatArray, weight: FloatArray, scratch: FloatArray
+    link: int,
+    eta: FloatArray,
+    bin_width: float,
+    mean: FloatArray,
+    slope: FloatArray,
+    weight: FloatArray,
+    scratch: FloatArray,
 ) -> None:
-    """Dense rows of a tile from its linear predictor; `slope` and `weight` are left alone where the link is canonical."""
+    """Dense rows of a tile from its linear predictor; `slope` and `weight` are left alone where the link is
+    canonical."""
     exp_into(eta, math.log(bin_width), mean, scratch)
 
 

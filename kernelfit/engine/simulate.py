@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 
 import numpy as np
@@ -132,7 +133,9 @@ def simulate_counts(
                 bins, units, counts, 0,
             )  # fmt: skip
             if done < 0:
-                raise SimulationError(_exploded(bin_width, leak, baseline, table, link, (start + at - done - 1) * bin_width))
+                raise SimulationError(
+                    _exploded(bin_width, leak, baseline, table, link, (start + at - done - 1) * bin_width)
+                )
             parts.append((bins[:filled] + start + at, units[:filled].copy(), counts[:filled].copy()))
             at += done
     if not parts:
@@ -142,20 +145,21 @@ def simulate_counts(
     return event_bin, event_unit, event_count
 
 
-def _exploded(
-    bin_width: float, leak: float, baseline: FloatArray, table: FloatArray, link: Link, time_s: float
-) -> str:
+def _exploded(bin_width: float, leak: float, baseline: FloatArray, table: FloatArray, link: Link, time_s: float) -> str:
     slope = link.slope(baseline)
     radius = float(np.max(np.abs(np.linalg.eigvals(slope[:, None] * table.T / leak))))
     why = (
-        f"already at the baselines each spike causes {radius:.2g} others (spectral radius of E[f'] J / alpha, supercritical "
+        f"already at the baselines each spike causes {radius:.2g} others (spectral radius of E[f'] J / "
+        "alpha, supercritical "
         "from 1 on)"
         if radius >= 1
-        else f"a burst carried it out of its stable range (spectral radius {radius:.2g} at the baselines; the exponential "
+        else f"a burst carried it out of its stable range (spectral radius {radius:.2g} at the "
+        "baselines; the exponential "
         "link has no ceiling)"
     )
     return (
-        f"The simulated network exploded at {time_s:.3g} s: a unit was about to fire more than {MOST_PER_BIN:g} times in a bin of "
+        f"The simulated network exploded at {time_s:.3g} s: a unit was about to fire more than "
+        f"{MOST_PER_BIN:g} times in a bin of "
         f"{1000 * bin_width:g} ms; {why}. Lower the amplitude or the baselines, or raise the leak rate."
     )
 
@@ -179,7 +183,8 @@ def simulate_recording(
     Parameters
     ----------
     positions_um : (n, 1 to 3) µm
-    kernel : any callable from distances (µm) to J per spike, such as ``fit.kernel`` or ``kf.kernels.Gaussian().at(...)``
+    kernel : any callable from distances (µm) to J per spike, such as ``fit.kernel`` or
+        ``kf.kernels.Gaussian().at(...)``
     baseline_hz : rate without any spike, f(b_i), Hz, one for all or (n,); 0 is a silent unit
     leak_rate : alpha, 1/s
     duration : seconds; the window is [0, duration)
@@ -229,7 +234,7 @@ def simulate_recording(
     times = (bins + 0.001 + 0.998 * rng.random(bins.size)) * bin_width
     order = np.lexsort((times, units))
     edges = np.searchsorted(units[order], np.arange(n + 1))
-    trains = tuple(times[order[a:b]] for a, b in zip(edges[:-1], edges[1:], strict=True))
+    trains = tuple(times[order[a:b]] for a, b in itertools.pairwise(edges))
     return Recording(ids, positions, trains, np.array([[0.0, duration]]))
 
 
@@ -245,7 +250,8 @@ def _after_spike(
     weights = weights[:, None] if weights.ndim == 1 else weights
     if weights.shape[0] != constants.size or weights.shape[1] not in (1, n) or not (constants > 0).all():
         raise ArgumentError(
-            f"after_spike_coefficients of shape {weights.shape} for {constants.size} time constants: give one a time constant, "
+            f"after_spike_coefficients of shape {weights.shape} for {constants.size} time constants: "
+            "give one a time constant, "
             "for all units or for each; time constants are positive seconds."
         )
     return np.exp(-bin_width / constants), np.ascontiguousarray(np.broadcast_to(weights, (constants.size, n)))

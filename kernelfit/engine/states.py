@@ -1,7 +1,8 @@
 """What the sweep carries from bin to bin, and how it moves: the recursions of MODEL.md sections 3 and 4.
 
-A block of target units ("lanes") is swept at a time. `States.coupling` holds U and its derivatives P_k just after a bin's
-spikes were added; the next bin starts by decaying them. Named tuples, because compiled code takes them apart for nothing.
+A block of target units ("lanes") is swept at a time. `States.coupling` holds U and its derivatives P_k just after a
+bin's spikes were added; the next bin starts by decaying them. Named tuples, because compiled code takes them apart for
+nothing.
 """
 
 from __future__ import annotations
@@ -13,22 +14,27 @@ from kernelfit._typing import FloatArray, IntArray
 from kernelfit.engine.compiled import compiled, inlined
 
 
+NO_BIN = -(2**62)  # stands for the next active bin where there is none; no timeline reaches it
+
+
 class Events(NamedTuple):
     """Non-empty (bin, unit) of a recording by bin, and which units are lanes of this block.
 
-    active_bin (A,) bins that hold a spike; active_first (A + 1,) their first row in unit and count; unit (E,) source index;
-    count (E,) spikes; lane_of_unit (n_units,) lane, or -1 where the unit is not a target of this block.
+    active_bin (A,) bins that hold a spike; active_first (A + 1,) their first row in unit and count; unit (E,) source
+    index;
+    n_spikes (E,) spikes; lane_of_unit (n_units,) lane, or -1 where the unit is not a target of this block.
     """
 
     active_bin: IntArray
     active_first: IntArray
     unit: IntArray
-    count: FloatArray
+    n_spikes: FloatArray
     lane_of_unit: IntArray
 
 
 class Dynamics(NamedTuple):
-    """leak (1/s), bin_width (s), trace_decay (M,) decay per bin of each after-spike trace, tables (1 + K, n_units, lanes):
+    """leak (1/s), bin_width (s), trace_decay (M,) decay per bin of each after-spike trace, tables (1 + K, n_units,
+    lanes):
     the jump of U, then of each P_k, that a spike of the unit causes in the lane."""
 
     leak: float
@@ -38,7 +44,8 @@ class Dynamics(NamedTuple):
 
 
 class States(NamedTuple):
-    """coupling (1 + K, lanes): U and P_k; leak (lanes,) or empty: A = dU/dalpha; traces (M, lanes): own after-spike traces."""
+    """coupling (1 + K, lanes): U and P_k; leak (lanes,) or empty: A = dU/dalpha; traces (M, lanes): own
+    after-spike traces."""
 
     coupling: FloatArray
     leak: FloatArray
@@ -47,7 +54,8 @@ class States(NamedTuple):
 
 @compiled
 def decay(n_bins: int, dynamics: Dynamics, states: States) -> None:
-    """Let the states run `n_bins` bins without a spike: U by gamma^g, A to gamma^g (A - g D U), traces by their own decay."""
+    """Let the states run `n_bins` bins without a spike: U by gamma^g, A to gamma^g (A - g D U), traces by their
+    own decay."""
     factor = math.exp(-dynamics.leak * dynamics.bin_width * n_bins)
     u = states.coupling[0]
     for i in range(states.leak.size):
@@ -68,7 +76,7 @@ def jump(active: int, events: Events, dynamics: Dynamics, states: States) -> Non
     """Add the spikes of one active bin to the states: a row of each table per source, and one to own traces."""
     for e in range(events.active_first[active], events.active_first[active + 1]):
         unit = events.unit[e]
-        count = events.count[e]
+        count = events.n_spikes[e]
         for k in range(states.coupling.shape[0]):
             row = states.coupling[k]
             jumps = dynamics.tables[k, unit]
@@ -82,7 +90,8 @@ def jump(active: int, events: Events, dynamics: Dynamics, states: States) -> Non
 
 @compiled
 def advance(at: int, stop: int, active: int, events: Events, dynamics: Dynamics, states: States) -> int:
-    """Carry the states from bin `at` to bin `stop - 1`, spikes on the way included; returns the next active bin's index."""
+    """Carry the states from bin `at` to bin `stop - 1`, spikes on the way included; returns the next active bin's
+    index."""
     while active < events.active_bin.size and events.active_bin[active] < stop:
         decay(events.active_bin[active] - at, dynamics, states)
         at = events.active_bin[active]
@@ -113,7 +122,7 @@ def fill_rows(
     width = dynamics.bin_width
     coupling, leak, traces, trace_decay = states.coupling, states.leak, states.traces, dynamics.trace_decay
     lanes = coupling.shape[1]
-    next_bin = events.active_bin[active] if active < events.active_bin.size else -1
+    next_bin = events.active_bin[active] if active < events.active_bin.size else NO_BIN
     for t in range(n_bins):
         for k in range(coupling.shape[0]):
             s = coupling[k]
@@ -137,7 +146,7 @@ def fill_rows(
         if next_bin == t0 + t:
             jump(active, events, dynamics, states)
             active += 1
-            next_bin = events.active_bin[active] if active < events.active_bin.size else -1
+            next_bin = events.active_bin[active] if active < events.active_bin.size else NO_BIN
     return active
 
 

@@ -110,10 +110,10 @@ def add_events(
             if lane < 0:
                 continue
             cell = t * lanes + lane
-            log_likelihood[lane] += events.count[e] * (log_rate(link, eta[cell]) + log_width)
+            log_likelihood[lane] += events.n_spikes[e] * (log_rate(link, eta[cell]) + log_width)
             if score.shape[0] == 0:
                 continue
-            pull = events.count[e] * log_rate_slope(link, eta[cell])
+            pull = events.n_spikes[e] * log_rate_slope(link, eta[cell])
             score[0, lane] += pull
             for r in range(n_traces):
                 score[1 + r, lane] += pull * rows[first_trace_row + r, cell]

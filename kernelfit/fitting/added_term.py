@@ -2,7 +2,8 @@
 
 Reference
 ---------
-Rao (1948), Proceedings of the Cambridge Philosophical Society 44, 50-57; the variance is that of scores by block of time.
+Rao (1948), Proceedings of the Cambridge Philosophical Society 44, 50-57; the variance is that of scores by block of
+time.
 """
 
 from __future__ import annotations
@@ -36,7 +37,9 @@ def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
     corner = np.concatenate(
         [
             np.concatenate([sums.own_own[:, 1:, 1:].sum(axis=0), sums.own_shared[:, 1:, free].sum(axis=0)], axis=1),
-            np.concatenate([sums.own_shared[:, 1:, free].sum(axis=0).T, sums.shared_shared[np.ix_(free, free)]], axis=1),
+            np.concatenate(
+                [sums.own_shared[:, 1:, free].sum(axis=0).T, sums.shared_shared[np.ix_(free, free)]], axis=1
+            ),
         ]
     )
     cross = np.concatenate([sums.own_own[:, :1, 1:], sums.own_shared[:, :1, free]], axis=2)

@@ -48,7 +48,7 @@ class Elimination:
 
     def efficient_score(self, score_own: FloatArray, score_shared: FloatArray) -> FloatArray:
         """Shared score less what the own parameters explain of it: (..., n, P) and (..., Q) to (..., Q)."""
-        return score_shared - np.einsum("npq,...np->...q", self.reduced, score_own)
+        return np.asarray(score_shared - np.einsum("npq,...np->...q", self.reduced, score_own))
 
     def solve(self, score_own: FloatArray, score_shared: FloatArray) -> tuple[FloatArray, FloatArray]:
         """Solve H x = score: own (n, P) and shared (Q,) parts of x. Raises numpy's LinAlgError where singular."""
@@ -59,7 +59,7 @@ class Elimination:
 
 def eliminate(arrow: Arrow) -> Elimination:
     """Eliminate the own blocks. Raises numpy's LinAlgError where one is singular."""
-    own_inverse = np.linalg.inv(arrow.own)
+    own_inverse = np.asarray(np.linalg.inv(arrow.own), dtype=np.float64)
     reduced = own_inverse @ arrow.cross
     schur = arrow.shared - np.einsum("npq,npr->qr", arrow.cross, reduced)
     return Elimination(own_inverse, reduced, 0.5 * (schur + schur.T))

@@ -20,7 +20,9 @@ from kernelfit.fitting.problem import Problem
 N_BLOCKS = 100
 SHORTEST_BLOCK_S = 1.0
 SHORTEST_BLOCK_TAUS = 20.0
-SMALLEST_EIGENVALUE = 1e-9  # of the information scaled to a unit diagonal: below this two parameters cannot be told apart
+SMALLEST_EIGENVALUE = (
+    1e-9  # of the information scaled to a unit diagonal: below this two parameters cannot be told apart
+)
 
 
 @dataclass(frozen=True, eq=False)

@@ -1,6 +1,7 @@
 """Is there any coupling to describe? A test that holds although leak and length mean nothing without coupling.
 
-Where a parameter vanishes under the null (Davies 1977), the estimate of the amplitude at the best-looking length and leak
+Where a parameter vanishes under the null (Davies 1977), the estimate of the amplitude at the best-looking length and
+leak
 is too extreme to be judged by its own standard error. The statistic here is the largest, over the leaks of the grid, of
 the quadratic form of the efficient score of coupling in bands of distance, taken at the fit without coupling. Under
 the null the block scores are as likely to be of one sign as of the other, so flipping the signs of whole blocks of time
@@ -65,7 +66,8 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
     sentence = (
         f"Spikes change the firing of other units (any coupling, sign flips of {n_blocks} blocks of time: p {shown})."
         if found
-        else f"No coupling to describe: without any, the recording is described as well (sign flips of {n_blocks} blocks "
+        else f"No coupling to describe: without any, the recording is described as well (sign flips of "
+        f"{n_blocks} blocks "
         f"of time: p {shown}). Length and leak mean nothing here."
     )
     return CouplingVerdict(found, p_value, critical_z, sentence)

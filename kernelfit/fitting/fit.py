@@ -159,7 +159,8 @@ def _second_sentence(problem: Problem, found: SearchResult) -> str | None:
 
     gap = found.best.local.objective - found.second.local.objective
     return (
-        f"A second optimum lies only {gap:.2g} log-likelihood units below this one ({words(found.second.estimate.shared)} "
+        f"A second optimum lies only {gap:.2g} log-likelihood units below this one "
+        f"({words(found.second.estimate.shared)} "
         f"against {words(found.best.estimate.shared)}): the recording hardly tells them apart."
     )
 

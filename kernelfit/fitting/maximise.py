@@ -1,6 +1,7 @@
 """Penalised maximum likelihood by Levenberg-Marquardt steps on the expected information.
 
-The information of a step is that of Fisher scoring, which for the exponential link at fixed shapes is the Hessian itself.
+The information of a step is that of Fisher scoring, which for the exponential link at fixed shapes is the Hessian
+itself.
 Steps that are too long or lose likelihood raise the damping (Marquardt 1963) instead of being clipped: a clipped Newton
 step wanders where length and leak lie on a ridge.
 """
@@ -42,7 +43,8 @@ class Local:
 class Optimum:
     """Where the optimiser stopped.
 
-    `free` marks the shared parameters that were estimated; the others were held or sit at `at_bound` (-1 lower, 1 upper).
+    `free` marks the shared parameters that were estimated; the others were held or sit at `at_bound` (-1 lower, 1
+    upper).
     `decrement` is the squared length of the next step in standard errors.
     """
 
@@ -143,7 +145,9 @@ def maximise(
                 message = "no step raises the likelihood any more"
                 break
     else:
-        message = f"stopped after {max_iterations} steps, {np.sqrt(max(decrement, 0.0)):.1e} standard errors from the top"
+        message = (
+            f"stopped after {max_iterations} steps, {np.sqrt(max(decrement, 0.0)):.1e} standard errors from the top"
+        )
     pushed = _pushed_out(local, bounds)
     at_bound = np.where(pushed, np.where(local.estimate.shared <= bounds[:, 0], -1.0, 1.0), 0.0)
     return Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message)
@@ -183,9 +187,7 @@ def _solve(local: Local, free: BoolArray, damping: float) -> _Step:
     return _Step(own, shared, gain)
 
 
-def _bounded_step(
-    local: Local, free: BoolArray, damping: float, bounds: FloatArray
-) -> tuple[_Trial | None, float]:
+def _bounded_step(local: Local, free: BoolArray, damping: float, bounds: FloatArray) -> tuple[_Trial | None, float]:
     """The least damped step that is not too long, moved into the bounds, and the damping it took."""
     bounded = np.isfinite(bounds).all(axis=1) if bounds.size else np.zeros(0, dtype=bool)
     while damping <= LARGEST_DAMPING:

@@ -55,7 +55,9 @@ def fit_notes(
             )
         )
     if not verdict.found:
-        notes.append(Note("warning", verdict.sentence, "coupling", "Record longer, or look at fewer, more active units."))
+        notes.append(
+            Note("warning", verdict.sentence, "coupling", "Record longer, or look at fewer, more active units.")
+        )
     if spread.weak_direction is not None:
         parts = np.abs(spread.weak_direction)
         named = [names[q] for q in np.flatnonzero(parts > 0.3 * np.nanmax(parts))]
@@ -70,14 +72,20 @@ def fit_notes(
     for q, reason in enumerate(bound_reasons(problem, optimum.at_bound)):
         if reason and verdict.found:
             notes.append(
-                Note("warning", f"{names[q]} ran into its bound: {reason}.", names[q], "It has no interval; do not quote it.")
+                Note(
+                    "warning",
+                    f"{names[q]} ran into its bound: {reason}.",
+                    names[q],
+                    "It has no interval; do not quote it.",
+                )
             )
     leak = problem.leak(optimum.estimate.shared)
     if verdict.found and leak * problem.data.bin_width > WIDE_BINS:
         notes.append(
             Note(
                 "warning",
-                f"The bins of {1000 * problem.data.bin_width:g} ms are too wide for the time constant found, {1000 / leak:.3g} ms.",
+                f"The bins of {1000 * problem.data.bin_width:g} ms are too wide for the time constant "
+                f"found, {1000 / leak:.3g} ms.",
                 "bin_width",
                 f"Refit with bins of at most {1000 * WIDE_BINS / leak:.2g} ms.",
             )

@@ -1,6 +1,7 @@
 """The model without coupling, and what a little coupling would add to it at each leak rate.
 
-One fit of baselines and after-spike effects, then one sweep for each leak on a coarse grid. Each sweep gives the score of
+One fit of baselines and after-spike effects, then one sweep for each leak on a coarse grid. Each sweep gives the
+score of
 coupling in bands of distance: a one-step estimate of J(d), where every family starts from, and by blocks of time, the
 test of any coupling at all.
 """

@@ -27,7 +27,8 @@ class Note:
 class SolverReport:
     """How the optimiser ended.
 
-    converged; n_iterations: steps tried on the way to the best optimum; max_gradient: largest score component in standard
+    converged; n_iterations: steps tried on the way to the best optimum; max_gradient: largest score component in
+    standard
     errors; message: its own words; starts: every start tried
     """
 

@@ -1,6 +1,7 @@
 """One recording and one model, ready to be evaluated: tables from kernels, penalties, the scale of the parameters.
 
-Shared parameters stand in the order kernel (working scale), same-site coefficient, log leak rate. Own parameters of a unit
+Shared parameters stand in the order kernel (working scale), same-site coefficient, log leak rate. Own parameters of
+a unit
 are its baseline, then its after-spike coefficients.
 """
 

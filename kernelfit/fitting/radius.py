@@ -70,9 +70,7 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
         shared[place] = np.log(candidates[k])
         optima[k] = maximise(problem, Estimate(start.own, shared), held=held, tolerance=tolerance)
         objective[k] = optima[k].local.objective
-        records.append(
-            StartRecord(problem.leak(optima[k].estimate.shared), objective[k], optima[k].n_iterations)
-        )
+        records.append(StartRecord(problem.leak(optima[k].estimate.shared), objective[k], optima[k].n_iterations))
 
     for sweep in promising(null.sweeps)[:1]:
         gains, amplitudes = _gain_by_radius(problem, null, sweep, candidates)
@@ -124,9 +122,7 @@ def _gain_by_radius(
     return gains, amplitudes
 
 
-def _start(
-    problem: Problem, null: Null, sweep: NullSweep, place: int, radius_um: float, amplitude: float
-) -> Estimate:
+def _start(problem: Problem, null: Null, sweep: NullSweep, place: int, radius_um: float, amplitude: float) -> Estimate:
     theta = np.full(problem.n_kernel, amplitude)
     theta[place] = np.log(radius_um)
     rest = [0.0] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)

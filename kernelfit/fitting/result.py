@@ -33,7 +33,8 @@ class Uncertainty:
     """Both covariances on the working scale. Q shared parameters, P own ones of n targets, G blocks of time.
 
     shared_model, shared_robust (Q, Q), rows of NaN for what was not estimated; own_model, own_robust (n, P, P);
-    block_influence (G, Q): what each block of time moved the shared estimates by; n_blocks, block_length_s: the clusters.
+    block_influence (G, Q): what each block of time moved the shared estimates by; n_blocks, block_length_s: the
+    clusters.
     """
 
     shared_model: FloatArray
@@ -220,9 +221,7 @@ class CouplingFit:
         """J, the effect of one spike on the predictor, at each distance (µm); same shape as the input."""
         return self.kernel_curve(distances_um)
 
-    def kernel_band(
-        self, distances_um: FloatArray, level: float = LEVEL, simultaneous: bool = False
-    ) -> pd.DataFrame:
+    def kernel_band(self, distances_um: FloatArray, level: float = LEVEL, simultaneous: bool = False) -> pd.DataFrame:
         """The fitted kernel with a band.
 
         Parameters
@@ -315,9 +314,11 @@ class CouplingFit:
         grid = make_grid(recording, self.model.bin_width, warm_up_s=self.model.warm_up_s)
         if recording.unit_ids != self.unit_ids or not np.array_equal(grid.counts_in_sum, self.counts):
             raise StorageError(
-                f"{recording.origin.name('spikes')} and {self.origin.name('spikes')}: this recording is not the one that "
+                f"{recording.origin.name('spikes')} and {self.origin.name('spikes')}: this recording is "
+                "not the one that "
                 f"was fitted ({recording.n_units} units and {int(grid.counts_in_sum.sum())} spikes against "
-                f"{len(self.unit_ids)} and {int(self.counts.sum())}). Give the same tables, windows, exclusions and selection."
+                f"{len(self.unit_ids)} and {int(self.counts.sum())}). Give the same tables, windows, "
+                "exclusions and selection."
             )
         data = SweepData.from_grid(grid, self.targets)
         geometry = geometry_of(self.model, recording, self.targets)
@@ -335,7 +336,9 @@ class CouplingFit:
         ------
         StorageError : no recording, or another one
         """
-        from kernelfit.diagnostics.goodness import goodness_of_fit  # diagnostics stand above; the contract wants it here
+        from kernelfit.diagnostics.goodness import (
+            goodness_of_fit,
+        )  # diagnostics stand above; the contract wants it here
 
         _, data, point = self._with_recording(recording)
         return goodness_of_fit(

@@ -83,16 +83,12 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
     starts: list[Estimate] = []
     for rank, sweep in enumerate(promising(null.sweeps)):
         starts += start_estimates(problem, null, sweep, N_SHAPES if rank == 0 else 1)
-    linear = problem.model.leak_rate is not None and not any(
-        p.shape for p in problem.kernel.parameters(problem.span)
-    )
+    linear = problem.model.leak_rate is not None and not any(p.shape for p in problem.kernel.parameters(problem.span))
     climbed = []
     for start in starts[:1] if linear else starts:
         begin = shrunk(problem, start, floor)
         climbed.append(maximise(problem, begin, held=held, tolerance=LOOSE, max_iterations=LOOSE_ITERATIONS))
-    records = tuple(
-        StartRecord(problem.leak(o.estimate.shared), o.local.objective, o.n_iterations) for o in climbed
-    )
+    records = tuple(StartRecord(problem.leak(o.estimate.shared), o.local.objective, o.n_iterations) for o in climbed)
     ranked = sorted(climbed, key=lambda o: -o.local.objective)
     top = maximise(problem, ranked[0].estimate, held=held, tolerance=TIGHT)
     second = None

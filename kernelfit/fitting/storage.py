@@ -1,4 +1,5 @@
-"""Fits on disk: one JSON file, readable by anything, with no code in it. Floating-point numbers come back to the bit."""
+"""Fits on disk: one JSON file, readable by anything, with no code in it. Floating-point numbers come back to the
+bit."""
 
 from __future__ import annotations
 
@@ -47,7 +48,9 @@ def save_fit(fit: CouplingFit, path: Path) -> None:
             os.unlink(temporary)
             raise
     except OSError as error:
-        raise OutputError(f"{path}: cannot be written ({error.strerror}). Check the folder and its permissions.") from error
+        raise OutputError(
+            f"{path}: cannot be written ({error.strerror}). Check the folder and its permissions."
+        ) from error
 
 
 def load_fit(path: str | Path) -> CouplingFit:
@@ -70,14 +73,16 @@ def load_fit(path: str | Path) -> CouplingFit:
         raise StorageError(f"{path}: JSON, but not a fit saved by kernelfit. Give the fit.json of a results folder.")
     if content.get("format_version") != FORMAT_VERSION:
         raise StorageError(
-            f"{path}: saved in format {content.get('format_version')!r} by kernelfit {content.get('version')!r}; this version "
+            f"{path}: saved in format {content.get('format_version')!r} by kernelfit "
+            f"{content.get('version')!r}; this version "
             f"reads format {FORMAT_VERSION}. Load it with the version that wrote it, or fit again."
         )
     try:
         return _restore(content)
     except (KeyError, TypeError, ValueError, IndexError, AttributeError, KernelfitError) as error:
         raise StorageError(
-            f"{path}: damaged: {type(error).__name__} at {error}. Fit again, or copy the file again from where it was made."
+            f"{path}: damaged: {type(error).__name__} at {error}. Fit again, or copy the file again from "
+            "where it was made."
         ) from error
 
 
@@ -152,7 +157,9 @@ def describe_fit(fit: CouplingFit) -> dict[str, Any]:
 def _plain(array: AnyArray) -> Any:
     """Nested lists, NaN as null."""
     if array.dtype.kind == "f" and np.isnan(array).any():
-        return np.where(np.isnan(array), None, array.astype(object)).tolist()
+        boxed = array.astype(object)
+        boxed[np.isnan(array)] = None
+        return boxed.tolist()
     return array.tolist()
 
 
@@ -169,9 +176,7 @@ def _whole(values: Any) -> IntArray:
 
 
 def _restore(c: Mapping[str, Any]) -> CouplingFit:
-    m, r, g, e, u, ll = (
-        c[k] for k in ("model", "recording", "geometry", "estimate", "uncertainty", "log_likelihood")
-    )
+    m, r, g, e, u, ll = (c[k] for k in ("model", "recording", "geometry", "estimate", "uncertainty", "log_likelihood"))
     n_targets, n_shared, n_units = len(e["targets"]), len(e["shared"]), len(r["unit_ids"])
     n_own = len(e["own"][0])
     s = c["solver"]

@@ -22,7 +22,7 @@ def standard_errors(gradient: FloatArray, covariance: FloatArray) -> FloatArray:
     if not known.any():
         return np.full(gradient.shape[1], np.nan)
     g = gradient[known]
-    return np.sqrt(np.einsum("qm,qr,rm->m", g, covariance[np.ix_(known, known)], g))
+    return np.asarray(np.sqrt(np.einsum("qm,qr,rm->m", g, covariance[np.ix_(known, known)], g)))
 
 
 def sup_t_critical(

@@ -1,4 +1,5 @@
-"""The tables of a fit: shared parameters, baselines, kernel and after-spike curves, each with its interval and its reason."""
+"""The tables of a fit: shared parameters, baselines, kernel and after-spike curves, each with its interval and
+its reason."""
 
 from __future__ import annotations
 
@@ -7,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from kernelfit._typing import FloatArray
+from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.inference.bands import standard_errors, sup_t_critical
 from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
 
@@ -18,8 +19,9 @@ if TYPE_CHECKING:
 FIXED = "fixed"
 
 
-def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], FloatArray]:
-    """Natural values (K,), their Jacobian by the working parameters (K, Q), names, units, and which are on the log scale."""
+def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], BoolArray]:
+    """Natural values (K,), their Jacobian by the working parameters (K, Q), names, units, and which are on the
+    log scale."""
     kernel, n = fit.model.kernel, fit.n_kernel
     theta = fit.shared[:n]
     family = kernel.parameters(fit.span)
@@ -54,7 +56,8 @@ def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldInte
 def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.DataFrame:
     """Shared parameters by name: estimate, std_error, lower, upper, unit, note.
 
-    Where no coupling was found, lengths, exponents and the leak are NaN with the reason, and amplitudes keep an interval
+    Where no coupling was found, lengths, exponents and the leak are NaN with the reason, and amplitudes keep an
+    interval
     widened for the search over length and leak. A fixed leak has NaN and the note "fixed".
     """
     _, jacobian, names, units, on_log = _natural(fit)
@@ -80,9 +83,12 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
         shapes = np.array([*on_log])
         table.loc[table.index[shapes], numbers] = np.nan
         table.loc[table.index[shapes], "note"] = "not identified: no coupling to describe"
-        table.loc[table.index[~shapes], "note"] = "no coupling found; interval widened for the search over length and leak"
+        table.loc[table.index[~shapes], "note"] = (
+            "no coupling found; interval widened for the search over length and leak"
+        )
     if fit.model.leak_rate is not None:
-        table.loc["leak_rate"] = [fit.model.leak_rate, np.nan, np.nan, np.nan, "1/s", FIXED]
+        table.loc["leak_rate", "estimate"] = fit.model.leak_rate
+        table.loc["leak_rate", ["unit", "note"]] = ["1/s", FIXED]
     return table
 
 
@@ -152,9 +158,7 @@ def kernel_band(fit: CouplingFit, d_um: FloatArray, level: float, simultaneous: 
     if not fit.verdict.found:
         critical = max(critical, fit.verdict.critical_z)
     half = critical * standard_errors(gradient, covariance)
-    return pd.DataFrame(
-        {"distance_um": d_um, "estimate": estimate, "lower": estimate - half, "upper": estimate + half}
-    )
+    return pd.DataFrame({"distance_um": d_um, "estimate": estimate, "lower": estimate - half, "upper": estimate + half})
 
 
 def after_spike_band(fit: CouplingFit, target: int, lags_s: FloatArray, level: float) -> pd.DataFrame:
@@ -164,6 +168,4 @@ def after_spike_band(fit: CouplingFit, target: int, lags_s: FloatArray, level: f
     h = fit.own[target, 1:] @ traces
     critical = critical_value(level, fit.uncertainty.degrees_of_freedom(fit.covariance_kind))
     half = critical * standard_errors(traces, covariance)
-    return pd.DataFrame(
-        {"lag_s": lags_s, "estimate": np.exp(h), "lower": np.exp(h - half), "upper": np.exp(h + half)}
-    )
+    return pd.DataFrame({"lag_s": lags_s, "estimate": np.exp(h), "lower": np.exp(h - half), "upper": np.exp(h + half)})

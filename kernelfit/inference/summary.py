@@ -12,7 +12,8 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
 
 CAUTION = (
-    "Functional, not synaptic, coupling: common input and unrecorded cells leave a trace. Research use, not for clinical "
+    "Functional, not synaptic, coupling: common input and unrecorded cells leave a trace. Research use, "
+    "not for clinical "
     "decisions."
 )
 
@@ -34,7 +35,8 @@ def summary_text(fit: CouplingFit) -> str:
         f"  time constant {1000 * fit.time_constant:.4g} ms; amplitudes at {fit.reference_distance_um:.4g} µm; {kind}",
         f"{len(fit.targets)} of {len(fit.unit_ids)} units explained, {fit.n_spikes} spikes, {fit.duration_s:g} s in "
         f"{fit.n_blocks} blocks of {fit.block_length_s:.3g} s",
-        f"log-likelihood {fit.log_likelihood:.4f}, {fit.n_parameters} parameters, AIC {fit.aic:.2f}, BIC {fit.bic:.2f}; "
+        f"log-likelihood {fit.log_likelihood:.4f}, {fit.n_parameters} parameters, AIC {fit.aic:.2f}, BIC "
+        f"{fit.bic:.2f}; "
         f"{'converged' if fit.converged else 'NOT CONVERGED'}: {fit.solver.message}",
         *([fit.second_optimum] if fit.second_optimum else []),
         *[f"{n.severity}: {n.what} ({n.where}) {n.remedy}" for n in fit.notes],

@@ -36,12 +36,12 @@ class Bands(Kernel):
 
     def value(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> FloatArray:
         """The band's amplitude, or zero."""
-        return np.zeros(d_um.size) if self.empty else theta[self.band(d_um)]
+        return np.zeros(d_um.size) if self.empty else np.asarray(theta[self.band(d_um)])
 
     def gradient(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> FloatArray:
         """One in the band, zero elsewhere."""
         rows = np.arange(len(self.parameters(span)))
-        return (self.band(d_um)[None, :] == rows[:, None]).astype(np.float64)
+        return np.asarray(self.band(d_um)[None, :] == rows[:, None], dtype=np.float64)
 
 
 def equal_bands(distinct_um: FloatArray, n_pairs: IntArray, n_bands: int) -> Bands:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from dataclasses import dataclass
 from typing import ClassVar, Literal
@@ -38,7 +39,7 @@ class AfterSpike:
         if self.time_constants_s is not None:
             values = tuple(float(t) for t in self.time_constants_s)
             object.__setattr__(self, "time_constants_s", values)
-            rising = all(a < b for a, b in zip(values, values[1:], strict=False))
+            rising = all(a < b for a, b in itertools.pairwise(values))
             if not values or not all(math.isfinite(t) and t > 0 for t in values) or not rising:
                 raise ArgumentError(
                     f"after_spike: time_constants_s={values} must be positive seconds, each longer than the one before."

@@ -19,6 +19,7 @@ GAP_S = 10.0
 EVENT_TIMES_MEAN = 2.0  # a second is part of an event if it holds more than twice the mean
 EVENT_PAUSE_S = 3
 BUSY_SHARE_OF_TIME = 0.10
+MAX_SECONDS = 10_000_000  # longer "recordings" have another unit of time
 
 
 @dataclass(frozen=True, eq=False)
@@ -173,9 +174,9 @@ class Burstiness:
 
 
 def burstiness(train: MergedTrain) -> Burstiness | None:
-    """Share of spikes in the busiest seconds, number of population events; None below 20 s or 20 spikes."""
+    """Share of spikes in the busiest seconds, number of population events; None where there is too little of either."""
     n_seconds = int(train.duration_s)
-    if n_seconds < 20 or train.n_spikes < 20:
+    if not 20 <= n_seconds <= MAX_SECONDS or train.n_spikes < 20:
         return None
     counts = np.bincount(train.observed_time().astype(np.int64), minlength=n_seconds)[:n_seconds]
     n_busy = max(1, int(BUSY_SHARE_OF_TIME * n_seconds))

@@ -103,13 +103,20 @@ def units_at_once(time_s: FloatArray, unit: IntArray, n_units: int, at_least: in
     high = np.searchsorted(time_s, time_s + (WITHIN_S + TIME_TOLERANCE_S))
     candidates = np.flatnonzero(high - low >= at_least)
     result = np.zeros(time_s.size, dtype=np.int64)
-    if candidates.size:
-        size = (high - low)[candidates]
+    if candidates.size == 0:
+        return result
+    size = (high - low)[candidates]
+    if size.sum() > n_units * candidates.size:  # so dense that asking every unit is cheaper
+        n_distinct = np.zeros(candidates.size, dtype=np.int64)
+        for one in range(n_units):
+            before = np.concatenate([[0], np.cumsum(unit == one)])
+            n_distinct += before[high[candidates]] > before[low[candidates]]
+    else:
         owner = np.repeat(np.arange(candidates.size), size)
         member = np.arange(size.sum()) - np.repeat(np.cumsum(size) - size - low[candidates], size)
         distinct = np.unique(owner * n_units + unit[member])
         n_distinct = np.bincount(distinct // n_units, minlength=candidates.size)
-        result[candidates] = np.where(n_distinct >= at_least, n_distinct, 0)
+    result[candidates] = np.where(n_distinct >= at_least, n_distinct, 0)
     return result
 
 

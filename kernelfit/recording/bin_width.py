@@ -15,7 +15,7 @@ import numpy as np
 from scipy import stats
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.recording.correlogram import SLOW_STEPS, SLOW_WIDTH_S, FineCounts
+from kernelfit.recording.correlogram import FINE_WIDTH_S, SLOW_STEPS, SLOW_WIDTH_S, FineCounts
 from kernelfit.recording.findings import seconds
 
 LADDER_S = (0.001, 0.002, 0.005, 0.010, 0.020, 0.050)
@@ -53,6 +53,8 @@ def disturbed_lag(fine: FineCounts, bands: BoolArray) -> float:
     Only a run that starts within the first two lag bins counts: a broad rise towards short lags is what
     coupling does.
     """
+    if fine.width_s > 2.0 * FINE_WIDTH_S * (1 + 1e-9):
+        return 0.0  # the steps of the times hide short lags; `advise` says so
     level = fine.between(*_LEVEL_S)
     reach = 0
     for b in np.flatnonzero(bands):

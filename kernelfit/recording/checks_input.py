@@ -133,7 +133,16 @@ def _windows(e: Evidence) -> Iterator[Finding]:
 
 def _positions(e: Evidence) -> Iterator[Finding]:
     sites = e.recording.origin.name("sites")
-    if e.layout.reference_um is None:
+    extent = e.layout.extent_um
+    if 0.0 < extent < MIN_EXTENT_UM:
+        yield Finding(
+            "array_too_small",
+            "error",
+            f"The whole array measures {number(extent)} µm: positions look like millimetres or electrode numbers.",
+            sites,
+            "State the unit of length when reading (length_unit='mm', --length-unit mm), or give positions in µm.",
+        )
+    elif e.layout.reference_um is None:
         what = "There is one unit only" if e.recording.n_units == 1 else "All units lie on one site"
         yield Finding(
             "no_distances",
@@ -141,16 +150,6 @@ def _positions(e: Evidence) -> Iterator[Finding]:
             f"{what}: nothing can be said about distance.",
             sites,
             "A kernel needs units on at least two sites; check the coordinates and their unit of length.",
-        )
-        return
-    extent = e.layout.extent_um
-    if extent < MIN_EXTENT_UM:
-        yield Finding(
-            "array_too_small",
-            "error",
-            f"The whole array measures {number(extent)} µm: positions look like millimetres or electrode numbers.",
-            sites,
-            "State the unit of length when reading (length_unit='mm', --length-unit mm), or give positions in µm.",
         )
     if extent > MAX_EXTENT_UM:
         yield Finding(

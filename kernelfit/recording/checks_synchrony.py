@@ -8,7 +8,7 @@ import numpy as np
 from scipy import stats
 
 from kernelfit._typing import FloatArray
-from kernelfit.recording.coincidence import pairs_to_leave_out
+from kernelfit.recording.coincidence import COARSEST_S, pairs_to_leave_out
 from kernelfit.recording.correlogram import lag_measure
 from kernelfit.recording.evidence import Evidence
 from kernelfit.recording.findings import Finding, counted, names, number, percent, seconds
@@ -77,6 +77,8 @@ def _few(expected: float) -> str:
 
 def _far_coincidences(e: Evidence) -> Iterator[Finding]:
     fine, bands = e.fine_masked, e.layout.bands
+    if fine.width_s > COARSEST_S * (1 + 1e-9):
+        return
     measure = lag_measure(fine.width_s, fine.counts.shape[1], e.step_s)
     bins = fine.between(0.005, 0.010)
     share = measure[0] / (measure[0] + measure[bins].sum())

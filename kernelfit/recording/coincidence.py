@@ -18,7 +18,7 @@ from statsmodels.stats.multitest import multipletests
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.recording.correlogram import FineCounts, lag_measure
 from kernelfit.recording.layout import SAME_SITE, Layout
-from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain, close_pairs
+from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain, close_pairs, pair_sample
 
 COINCIDENCE_S = 0.0005
 LEVEL_FROM_S, LEVEL_TO_S = 0.005, 0.010
@@ -26,6 +26,7 @@ FALSE_DISCOVERIES = 0.01
 MIN_RATIO = 2.0  # times the level; a smaller excess bends little and may well be tissue
 MIN_SHARE = 0.01  # of the spikes of the unit with fewer
 MIN_EXCESS = 5.0  # coincidences
+COARSEST_S = 0.002  # times in wider steps say nothing about exact coincidences
 MIN_SPIKES = 100  # a unit with fewer says nothing about a share of 1 %
 DEAD_TIME_RATIO = 0.5
 DEAD_TIME_P = 1e-3
@@ -71,7 +72,11 @@ def pair_excess(
     step_s : time grid of the spikes, or None
     width_s : what counts as a coincidence, seconds
     """
-    first, second, coincident, level = _count_pairs(train, width_s)
+    if width_s > COARSEST_S * (1 + 1e-9):
+        nothing = pd.DataFrame(columns=list(PAIR_COLUMNS))
+        return PairExcess(near=nothing, far=nothing, n_near_tested=0, n_far_tested=0)
+    looked_at = pair_sample(train, LEVEL_TO_S + width_s)
+    first, second, coincident, level = _count_pairs(train, width_s, looked_at)
     n_lags = round(LEVEL_TO_S / width_s)
     measure = lag_measure(width_s, n_lags, step_s)
     short = measure[0]
@@ -80,7 +85,7 @@ def pair_excess(
     expected = level * short / long
     counts = train.counts()
     smaller = np.minimum(counts[first], counts[second])
-    excess = coincident - expected
+    excess = (coincident - expected) / looked_at
     large = (
         (coincident >= MIN_RATIO * expected)
         & (excess >= np.maximum(MIN_EXCESS, MIN_SHARE * smaller))
@@ -120,12 +125,12 @@ def _level_bins(width_s: float) -> slice:
     return slice(first, max(round(LEVEL_TO_S / width_s), first + 1))
 
 
-def _count_pairs(train: MergedTrain, width_s: float) -> tuple[IntArray, IntArray, IntArray, IntArray]:
+def _count_pairs(train: MergedTrain, width_s: float, share: float) -> tuple[IntArray, IntArray, IntArray, IntArray]:
     """Pairs that ever coincide: lower index, higher index, coincidences, spike pairs at 5 to 10 ms."""
     bins = _level_bins(width_s)
     start, stop = bins.start * width_s - TIME_TOLERANCE_S, bins.stop * width_s
     short_keys, long_keys = [np.empty(0, dtype=np.int64)], [np.empty(0, dtype=np.int64)]
-    for a, b, lag in close_pairs(train, stop):
+    for a, b, lag in close_pairs(train, stop, share):
         key = np.minimum(a, b) * train.n_units + np.maximum(a, b)
         short_keys.append(key[lag < width_s - TIME_TOLERANCE_S])
         long_keys.append(key[lag >= start])
@@ -184,6 +189,9 @@ class DeadTime:
 
 def dead_time(fine: FineCounts, layout: Layout, step_s: float | None) -> DeadTime:
     """Whether one unit's spike hides those of others, by band of distance."""
+    if fine.width_s > COARSEST_S * (1 + 1e-9):
+        n_bands = len(layout.bands)
+        return DeadTime(np.full(n_bands, np.nan), np.zeros(n_bands, dtype=bool), 0.0, False)
     bins = _level_bins(fine.width_s)
     measure = lag_measure(fine.width_s, fine.counts.shape[1], step_s)
     short, long = measure[0], measure[bins].sum()

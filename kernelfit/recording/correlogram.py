@@ -16,12 +16,13 @@ import pandas as pd
 
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit.recording.layout import Layout
-from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain, close_pairs
+from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain, close_pairs, pair_sample
 
 FINE_WIDTH_S = 0.0005
 FINE_MAX_S = 0.050
 SLOW_WIDTH_S = 0.050
 SLOW_STEPS: tuple[int, ...] = (*range(1, 21), *range(22, 41, 2), *range(45, 101, 5))  # of 50 ms: to 5 s
+_PAIR_COST = 30  # a pair of spikes costs as much as so many cells of bin, unit, lag and band
 _CHUNK_COUNTS = 400_000  # counts held at once: enough to be quick, few enough for a processor's cache
 COLUMNS = (
     "band",
@@ -44,13 +45,15 @@ class FineCounts:
     Parameters
     ----------
     width_s : width of a lag bin, seconds
-    counts : (n_bands, n_lags) unordered spike pairs
+    counts : (n_bands, n_lags) unordered spike pairs looked at
     expected : (n_bands, n_lags) the same by chance
+    share : of all spike pairs that were looked at
     """
 
     width_s: float
     counts: IntArray
     expected: FloatArray
+    share: float
 
     @property
     def lags_s(self) -> FloatArray:
@@ -108,7 +111,8 @@ def fine_counts(train: MergedTrain, layout: Layout, step_s: float | None) -> Fin
     n_lags = max(round(FINE_MAX_S / width), 10)
     n_bands = len(layout.bands)
     counts = np.zeros((n_bands + 1) * n_lags, dtype=np.int64)  # the last row takes the pairs left out
-    for first, second, lag in close_pairs(train, n_lags * width):
+    share = pair_sample(train, n_lags * width)
+    for first, second, lag in close_pairs(train, n_lags * width, share):
         place = np.minimum(((lag + TIME_TOLERANCE_S) / width).astype(np.int64), n_lags - 1)
         band = layout.band_of_pair[first, second] % (n_bands + 1)
         counts += np.bincount(band * n_lags + place, minlength=counts.size)
@@ -117,36 +121,84 @@ def fine_counts(train: MergedTrain, layout: Layout, step_s: float | None) -> Fin
     return FineCounts(
         width_s=width,
         counts=counts.reshape(n_bands + 1, n_lags)[:n_bands],
-        expected=np.outer(chance_products(train, layout), measure),
+        expected=share * np.outer(chance_products(train, layout), measure),
+        share=share,
     )
 
 
 def slow_counts(train: MergedTrain, layout: Layout) -> tuple[IntArray, FloatArray]:
     """Spike pairs per band at lags of 50 ms to 5 s: counts and expected, each (n_bands, n_lags).
 
-    A lag of k bins takes in all pairs whose 50 ms bins are k apart.
+    A lag of k bins takes in all pairs whose 50 ms bins are k apart. Two ways lead to the same counts: over the pairs of
+    spikes where those are few, over the bins where spikes are dense; the cheaper one is taken.
     """
-    n_bands, n_units = len(layout.bands), layout.n_units
-    total = np.zeros((n_bands, len(SLOW_STEPS)))
-    n_bin_pairs = np.zeros(len(SLOW_STEPS))
+    lengths = train.windows[:, 1] - train.windows[:, 0]
+    n_bins = np.floor(lengths / SLOW_WIDTH_S + 1e-6).astype(np.int64)
+    start = train.windows[train.window, 0]
+    bins = ((train.time_s - start) / SLOW_WIDTH_S + 1e-6).astype(np.int64)
+    whole = bins < n_bins[train.window]  # an incomplete last bin is left out
+    spikes = _BinnedSpikes(bins[whole], train.unit[whole], train.window[whole], n_bins)
+    reach_s = (max(SLOW_STEPS) + 1) * SLOW_WIDTH_S
+    n_pairs = int(np.sum(np.searchsorted(train.time_s, train.time_s + reach_s) - np.arange(train.n_spikes)))
+    n_cells = int(np.sum(n_bins + max(SLOW_STEPS))) * layout.n_units * len(SLOW_STEPS) * len(layout.bands)
+    by_pairs = n_pairs * _PAIR_COST < n_cells
+    counts = counts_by_pairs(spikes, layout) if by_pairs else counts_by_bins(spikes, layout)
+    bin_pairs = np.maximum(n_bins[:, None] - np.array(SLOW_STEPS), 0).sum(axis=0)
+    share = train.duration_s / max(float(lengths.sum()), 1e-300)
+    per_bin_pair = 2.0 * SLOW_WIDTH_S**2 * chance_products(train, layout)
+    return counts, np.outer(per_bin_pair, bin_pairs * share)
+
+
+@dataclass(frozen=True, eq=False)
+class _BinnedSpikes:
+    """Spikes by 50 ms bin of their window, sorted by window and bin; `n_bins` (n_windows,) whole bins."""
+
+    bin: IntArray
+    unit: IntArray
+    window: IntArray
+    n_bins: IntArray
+
+
+def counts_by_pairs(spikes: _BinnedSpikes, layout: Layout) -> IntArray:
+    """(n_bands, n_lags) spike pairs, from the pairs of spikes."""
+    n_bands, n_lags = len(layout.bands), len(SLOW_STEPS)
+    lag_of_step = np.full(max(SLOW_STEPS) + 1, -1)
+    lag_of_step[np.array(SLOW_STEPS)] = np.arange(n_lags)
+    total = np.zeros(n_bands * n_lags, dtype=np.int64)
+    earlier = np.arange(spikes.bin.size)
+    shift = 0
+    while earlier.size:
+        shift += 1
+        earlier = earlier[earlier + shift < spikes.bin.size]
+        step = spikes.bin[earlier + shift] - spikes.bin[earlier]
+        near = (step <= max(SLOW_STEPS)) & (spikes.window[earlier] == spikes.window[earlier + shift])
+        earlier, step = earlier[near], step[near]
+        lag = lag_of_step[step]
+        band = layout.band_of_pair[spikes.unit[earlier], spikes.unit[earlier + shift]]
+        kept = (lag >= 0) & (band >= 0)
+        total += np.bincount(band[kept] * n_lags + lag[kept], minlength=total.size)
+    return total.reshape(n_bands, n_lags)
+
+
+def counts_by_bins(spikes: _BinnedSpikes, layout: Layout) -> IntArray:
+    """(n_bands, n_lags) spike pairs, from dense counts of a stretch of bins at a go."""
+    n_units = layout.n_units
+    total = np.zeros((len(layout.bands), len(SLOW_STEPS)))
     reach = max(SLOW_STEPS)
     chunk = max(_CHUNK_COUNTS // n_units, reach)
     bands = np.flatnonzero(layout.pairs_in_band())
     masks = np.concatenate([layout.band_of_pair == b for b in bands] or [np.empty((n_units, 0))], axis=1)
     masks = masks.astype(np.float32)  # (n_units, n_used_bands * n_units)
-    for w, (start, stop) in enumerate(train.windows):
-        n_bins = math.floor((stop - start) / SLOW_WIDTH_S + 1e-6)
-        n_bin_pairs += np.maximum(n_bins - np.array(SLOW_STEPS), 0)
-        mine = slice(*np.searchsorted(train.window, [w, w + 1]))
-        bins = ((train.time_s[mine] - start) / SLOW_WIDTH_S + 1e-6).astype(np.int64)
-        units = train.unit[mine]
-        for first in range(0, n_bins, chunk):
-            last = min(first + chunk, n_bins)
-            low, middle, high = np.searchsorted(bins, [first, last, min(last + reach, n_bins)])
+    for w, n_bins in enumerate(spikes.n_bins):
+        mine = slice(*np.searchsorted(spikes.window, [w, w + 1]))
+        bins, units = spikes.bin[mine], spikes.unit[mine]
+        for first in range(0, int(n_bins), chunk):
+            last = min(first + chunk, int(n_bins))
+            low, middle, high = np.searchsorted(bins, [first, last, last + reach])
             if low == middle:
                 continue
             key = (bins[low:high] - first) * n_units + units[low:high]
-            counts = np.bincount(key, minlength=(chunk + reach) * n_units).astype(np.float32)
+            counts = np.bincount(key, minlength=(last - first + reach) * n_units).astype(np.float32)
             counts = counts.reshape(-1, n_units)
             early = counts[: last - first]
             later = (counts @ masks).reshape(len(counts), bands.size, n_units)
@@ -156,9 +208,7 @@ def slow_counts(train: MergedTrain, layout: Layout) -> tuple[IntArray, FloatArra
                     # A sum per bin first: single precision holds it.
                     per_bin = np.einsum("ij,ij->i", early, partners[step : step + last - first])
                     total[b, k] += per_bin.sum(dtype=np.float64)
-    share = train.duration_s / max(float(np.sum(train.windows[:, 1] - train.windows[:, 0])), 1e-300)
-    per_bin_pair = 2.0 * SLOW_WIDTH_S**2 * chance_products(train, layout)
-    return np.rint(total).astype(np.int64), np.outer(per_bin_pair, n_bin_pairs * share)
+    return np.rint(total).astype(np.int64)
 
 
 def correlogram_table(train: MergedTrain, layout: Layout, fine: FineCounts) -> pd.DataFrame:

@@ -93,7 +93,8 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
     stretches, window_of = _stretches(recording, bin_width, warm_up_s, first_bin, n_bins)
     if len(stretches) == 0:
         raise GridError(
-            f"{recording.origin.name('exclusions')}: with bins of {bin_width:g} s, exclusions and a warm-up of {warm_up_s:g} s "
+            f"{recording.origin.name('exclusions')}: with bins of {bin_width:g} s, exclusions and a "
+            f"warm-up of {warm_up_s:g} s "
             "leave no bin of any window. Use fewer exclusions, a shorter warm-up or narrower bins."
         )
     event_bin, event_unit, event_count, n_outside, n_excluded = _events(recording, bin_width, first_bin, n_bins)
@@ -181,9 +182,7 @@ def _events(
     inside = (w >= 0) & (within < n_bins[np.maximum(w, 0)])
     following = np.minimum(w + 1, len(start) - 1)
     back = np.floor((time_s - start[following]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
-    bins = np.where(
-        inside, first_bin[np.maximum(w, 0)] + within, first_bin[following] + np.minimum(back, -1)
-    )
+    bins = np.where(inside, first_bin[np.maximum(w, 0)] + within, first_bin[following] + np.minimum(back, -1))
     useful = inside | (w + 1 < len(start))  # after the last window nothing is left to drive
     bins, unit = bins[useful], unit[useful]
     if bins.size == 0:

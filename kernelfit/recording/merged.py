@@ -17,6 +17,9 @@ from kernelfit.recording.recording import Recording
 
 TIME_TOLERANCE_S = 1e-7  # times written on a grid of sampling steps differ from it by rounding only
 
+MOST_PAIRS = 50_000_000  # pairs of spikes looked at one by one; some seconds
+_GOLDEN = 0.6180339887498949
+
 # Rates at which recordings are commonly sampled, and decimal steps that times are rounded to, 1/s.
 _SAMPLING_RATES_HZ = (
     1.0,
@@ -168,8 +171,24 @@ def sort_trains(trains: Sequence[FloatArray]) -> tuple[FloatArray, IntArray]:
     return time_s[order], unit[order]
 
 
-def close_pairs(train: MergedTrain, max_lag_s: float) -> Iterator[tuple[IntArray, IntArray, FloatArray]]:
+def pair_sample(train: MergedTrain, max_lag_s: float) -> float:
+    """Share of the spikes whose pairs have to be looked at so that no more than `MOST_PAIRS` are, 1 for all."""
+    later = np.searchsorted(train.time_s, train.time_s + max_lag_s)
+    n_pairs = int(np.sum(later - np.arange(train.n_spikes)))
+    return min(1.0, MOST_PAIRS / max(n_pairs, 1))
+
+
+def close_pairs(
+    train: MergedTrain, max_lag_s: float, share: float = 1.0
+) -> Iterator[tuple[IntArray, IntArray, FloatArray]]:
     """Every pair of spikes of different units less than `max_lag_s` apart in one window, each pair once.
+
+    Parameters
+    ----------
+    train : spikes of all units
+    max_lag_s : seconds, not included
+    share : of the spikes, as the earlier one of a pair. Which ones follows from multiples of the golden section: spread
+        evenly, in step with nothing
 
     Yields
     ------
@@ -177,6 +196,8 @@ def close_pairs(train: MergedTrain, max_lag_s: float) -> Iterator[tuple[IntArray
     lag_s : (m,) seconds, at least 0
     """
     earlier = np.arange(train.n_spikes)
+    if share < 1.0:
+        earlier = earlier[np.mod(earlier * _GOLDEN, 1.0) < share]
     shift = 0
     while earlier.size:
         shift += 1
