@@ -173,7 +173,8 @@ def _events(
 
     cut = recording.exclusion_bounds
     k = np.searchsorted(cut[:, 0], time_s, side="right") - 1
-    excluded = (k >= 0) & (time_s < cut[np.maximum(k, 0), 1]) if len(cut) else np.zeros(time_s.size, dtype=bool)
+    latest = np.maximum.accumulate(cut[:, 1])  # one exclusion may lie inside another
+    excluded = (k >= 0) & (time_s < latest[np.maximum(k, 0)]) if len(cut) else np.zeros(time_s.size, dtype=bool)
     unit, time_s = unit[~excluded], time_s[~excluded]
 
     start = recording.window_bounds[:, 0]
