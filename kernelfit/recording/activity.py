@@ -186,14 +186,14 @@ def burstiness(train: MergedTrain) -> Burstiness | None:
     runs = np.flatnonzero(up)
     return Burstiness(
         busiest_share=float(np.sort(counts)[-n_busy:].sum() / total),
-        even_share=_even_share(float(mean)),
+        even_share=even_share(float(mean)),
         n_events=int(1 + np.sum(np.diff(runs) > EVENT_PAUSE_S)) if runs.size else 0,
         event_share_of_spikes=float(counts[up].sum() / total),
         event_share_of_time=float(up.mean()),
     )
 
 
-def _even_share(mean: float) -> float:
+def even_share(mean: float) -> float:
     """Share of a Poisson variable's sum that its largest tenth of values holds."""
     top = int(stats.poisson.isf(BUSY_SHARE_OF_TIME, mean))
     above = float(stats.poisson.sf(top, mean))  # values above `top` are all in the tenth, the rest of it equals `top`

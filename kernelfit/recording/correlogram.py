@@ -137,7 +137,7 @@ def slow_counts(train: MergedTrain, layout: Layout) -> tuple[IntArray, FloatArra
     start = train.windows[train.window, 0]
     bins = ((train.time_s - start) / SLOW_WIDTH_S + 1e-6).astype(np.int64)
     whole = bins < n_bins[train.window]  # an incomplete last bin is left out
-    spikes = _BinnedSpikes(bins[whole], train.unit[whole], train.window[whole], n_bins)
+    spikes = BinnedSpikes(bins[whole], train.unit[whole], train.window[whole], n_bins)
     reach_s = (max(SLOW_STEPS) + 1) * SLOW_WIDTH_S
     n_pairs = int(np.sum(np.searchsorted(train.time_s, train.time_s + reach_s) - np.arange(train.n_spikes)))
     n_cells = int(np.sum(n_bins + max(SLOW_STEPS))) * layout.n_units * len(SLOW_STEPS) * len(layout.bands)
@@ -150,7 +150,7 @@ def slow_counts(train: MergedTrain, layout: Layout) -> tuple[IntArray, FloatArra
 
 
 @dataclass(frozen=True, eq=False)
-class _BinnedSpikes:
+class BinnedSpikes:
     """Spikes by 50 ms bin of their window, sorted by window and bin; `n_bins` (n_windows,) whole bins."""
 
     bin: IntArray
@@ -159,7 +159,7 @@ class _BinnedSpikes:
     n_bins: IntArray
 
 
-def counts_by_pairs(spikes: _BinnedSpikes, layout: Layout) -> IntArray:
+def counts_by_pairs(spikes: BinnedSpikes, layout: Layout) -> IntArray:
     """(n_bands, n_lags) spike pairs, from the pairs of spikes."""
     n_bands, n_lags = len(layout.bands), len(SLOW_STEPS)
     lag_of_step = np.full(max(SLOW_STEPS) + 1, -1)
@@ -180,7 +180,7 @@ def counts_by_pairs(spikes: _BinnedSpikes, layout: Layout) -> IntArray:
     return total.reshape(n_bands, n_lags)
 
 
-def counts_by_bins(spikes: _BinnedSpikes, layout: Layout) -> IntArray:
+def counts_by_bins(spikes: BinnedSpikes, layout: Layout) -> IntArray:
     """(n_bands, n_lags) spike pairs, from dense counts of a stretch of bins at a go."""
     n_units = layout.n_units
     total = np.zeros((len(layout.bands), len(SLOW_STEPS)))

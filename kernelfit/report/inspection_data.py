@@ -337,7 +337,7 @@ def interval_edges(length_s: FloatArray, step_s: float | None) -> FloatArray:
 
 
 def _panel(label: str, length_s: FloatArray, edges: FloatArray) -> IntervalPanel:
-    counts, _ = np.histogram(length_s, bins=edges)
+    counts, _ = np.histogram(np.clip(length_s, edges[0], edges[-1]), bins=edges)  # the ends take what lies beyond
     return IntervalPanel(
         label=label,
         edges_s=edges,
