@@ -14,7 +14,7 @@ import numpy as np
 from scipy.stats import chi2
 
 from kernelfit.engine.time_blocks import time_blocks
-from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.arrow import Arrow, eliminate, solve_leniently
 from kernelfit.fitting.covariance import block_length_s
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.outcome import ScoreTest
@@ -51,7 +51,7 @@ def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
     test, rest = np.arange(n_traces), np.arange(n_traces, efficient.shape[1])
     schur = elimination.schur
     if rest.size:
-        weights = solve_symmetric(schur[np.ix_(rest, rest)], schur[np.ix_(rest, test)])
+        weights = solve_leniently(schur[np.ix_(rest, rest)], schur[np.ix_(rest, test)])
         efficient = efficient[:, test] - efficient[:, rest] @ weights
         schur = schur[np.ix_(test, test)] - schur[np.ix_(test, rest)] @ weights
     score = efficient.sum(axis=0)

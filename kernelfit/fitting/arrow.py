@@ -75,3 +75,11 @@ def solve_symmetric(matrix: FloatArray, right: FloatArray) -> FloatArray:
     scale = 1.0 / np.sqrt(diagonal)
     factor = scipy.linalg.cho_factor(matrix * scale[:, None] * scale[None, :])
     return np.asarray((scipy.linalg.cho_solve(factor, (right.T * scale).T).T * scale).T)
+
+
+def solve_leniently(matrix: FloatArray, right: FloatArray) -> FloatArray:
+    """Least-squares solution of a positive semidefinite system after scaling its diagonal to one; any rank will do."""
+    diagonal = np.diag(matrix)
+    scale = np.where(diagonal > 0, 1.0 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0)), 0.0)
+    inverse = np.linalg.pinv(matrix * scale[:, None] * scale[None, :], rcond=1e-10, hermitian=True)
+    return np.asarray(scale[:, None] * (inverse @ (scale[:, None] * right)))

@@ -3,14 +3,18 @@
 The information of a step is that of Fisher scoring, which for the exponential link at fixed shapes is the Hessian
 itself.
 Steps that are too long or lose likelihood raise the damping (Marquardt 1963) instead of being clipped: a clipped Newton
-step wanders where length and leak lie on a ridge.
+step wanders where length and leak lie on a ridge. Where the model is wrong the expected information and the Hessian
+differ, and scoring alone would crawl: what the score says of the difference is kept as a small symmetric correction of
+the shared block (structured secant method: Dennis, Gay and Welsch 1981, ACM Transactions on Mathematical Software 7,
+348-368, with the symmetric rank-one formula).
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
+import scipy.linalg
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.engine.evaluate import Evaluation
@@ -24,6 +28,8 @@ LONGEST_SHARED_STEP = 1.0  # on the log scale of lengths and leak: no more than 
 LONGEST_OWN_STEP = 5.0
 FIRST_DAMPING = 1e-3
 LARGEST_DAMPING = 1e12
+SMALLEST_COSINE = 1e-8  # a secant condition nearer to orthogonal than this says nothing
+MOST_CORRECTION = 10.0  # curvature that differs from the expected by more is not trusted
 ROUNDING = 1e-14  # of the log-likelihood: a loss smaller than this is no loss
 
 
@@ -112,20 +118,21 @@ def maximise(
     held = np.zeros(problem.n_shared, dtype=bool) if held is None else held
     inside = np.clip(start.shared, bounds[:, 0], bounds[:, 1]) if problem.n_shared else start.shared
     local = evaluate_locally(problem, Estimate(start.own, inside))
+    correction = np.zeros((problem.n_shared, problem.n_shared))
     damping, decrement, stale = FIRST_DAMPING, np.inf, 0
     message, converged, iteration = "", False, 0
     while iteration < max_iterations:
         iteration += 1
         free = ~held & ~_pushed_out(local, bounds)
         try:
-            step = _solve(local, free, 0.0)
+            step = _solve(local, free, 0.0, correction)
             decrement = step.gain
             if decrement < tolerance:
                 converged, message = True, f"the next step is {np.sqrt(max(decrement, 0.0)):.1e} standard errors long"
                 break
         except np.linalg.LinAlgError:
             decrement = np.inf
-        trial, damping = _bounded_step(local, free, damping, bounds)
+        trial, damping = _bounded_step(local, free, damping, bounds, correction)
         if trial is None:
             message = "no step short enough to trust leads on: the information is singular here"
             break
@@ -135,6 +142,7 @@ def maximise(
         if np.isfinite(candidate.objective) and gained >= -slack:
             stale = stale + 1 if gained <= slack else 0
             damping = _next_damping(damping, gained, trial.predicted)
+            correction = _corrected(correction, local, candidate)
             local = candidate
             if stale >= 3:
                 converged, message = True, "the log-likelihood no longer changes in its last digits"
@@ -174,11 +182,15 @@ def _pushed_out(local: Local, bounds: FloatArray) -> BoolArray:
     return np.asarray(((x <= bounds[:, 0]) & (g < 0)) | ((x >= bounds[:, 1]) & (g > 0)), dtype=bool)
 
 
-def _solve(local: Local, free: BoolArray, damping: float) -> _Step:
+def _solve(local: Local, free: BoolArray, damping: float, correction: FloatArray) -> _Step:
     information = local.information.only(free)
     if damping > 0:
         information = information.damped(damping)
-    own, part = eliminate(information).solve(local.score_own, local.score_shared[free])
+    elimination = eliminate(information)
+    schur = elimination.schur + correction[np.ix_(free, free)]
+    if _trusted(schur, elimination.schur):
+        elimination = replace(elimination, schur=schur)
+    own, part = elimination.solve(local.score_own, local.score_shared[free])
     shared = np.zeros(free.size)
     shared[free] = part
     gain = float(np.sum(local.score_own * own) + local.score_shared @ shared)
@@ -187,12 +199,42 @@ def _solve(local: Local, free: BoolArray, damping: float) -> _Step:
     return _Step(own, shared, gain)
 
 
-def _bounded_step(local: Local, free: BoolArray, damping: float, bounds: FloatArray) -> tuple[_Trial | None, float]:
+def _corrected(correction: FloatArray, before: Local, after: Local) -> FloatArray:
+    """Symmetric rank-one update: the change of the efficient score over a step is what information and correction predict."""
+    step = after.estimate.shared - before.estimate.shared
+    if not step.any():
+        return correction
+    here = eliminate(after.information)
+    change = eliminate(before.information).efficient_score(before.score_own, before.score_shared)
+    change = change - here.efficient_score(after.score_own, after.score_shared)
+    missing = change - (here.schur + correction) @ step
+    along = float(missing @ step)
+    if abs(along) <= SMALLEST_COSINE * float(np.linalg.norm(missing) * np.linalg.norm(step)):
+        return correction
+    return correction + np.outer(missing, missing) / along
+
+
+def _trusted(schur: FloatArray, expected: FloatArray) -> bool:
+    """Is the corrected information positive definite, and not wildly different from the expected one?"""
+    diagonal = np.diag(expected)
+    if schur.shape[0] == 0 or not (diagonal > 0).all():
+        return False
+    scale = 1.0 / np.sqrt(diagonal)
+    try:
+        ratio = scipy.linalg.eigvalsh(schur * scale[:, None] * scale, expected * scale[:, None] * scale)
+    except np.linalg.LinAlgError:
+        return False
+    return bool(ratio[0] > 1.0 / MOST_CORRECTION and ratio[-1] < MOST_CORRECTION)
+
+
+def _bounded_step(
+    local: Local, free: BoolArray, damping: float, bounds: FloatArray, correction: FloatArray
+) -> tuple[_Trial | None, float]:
     """The least damped step that is not too long, moved into the bounds, and the damping it took."""
     bounded = np.isfinite(bounds).all(axis=1) if bounds.size else np.zeros(0, dtype=bool)
     while damping <= LARGEST_DAMPING:
         try:
-            step = _solve(local, free, damping)
+            step = _solve(local, free, damping, correction)
         except np.linalg.LinAlgError:
             damping = max(10.0 * damping, FIRST_DAMPING)
             continue

@@ -100,7 +100,7 @@ def fit_notes(
                 "Record longer; read the intervals as lower limits of the uncertainty.",
             )
         )
-    for sentence in problem.kernel.check_identified(problem.geometry.distinct_um, problem.span):
+    for sentence in problem.kernel.check_identified(problem.driven_um, problem.span):
         notes.append(Note("info", sentence, "kernel", "Use fewer coefficients to let the data speak alone."))
     notes += _recording_notes(problem, recording)
     return tuple(notes)
@@ -128,6 +128,15 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
                 f"{n_same} pair{'s' * (n_same != 1)} of units on one site left out of the kernel.",
                 "same_site",
                 "Detection hides coincident spikes there; same_site='own' gives them a coefficient of their own.",
+            )
+        )
+    if problem.model.same_site == "own" and not problem.has_same_site:
+        notes.append(
+            Note(
+                "info",
+                "No two units on one site, the source firing, are left: there is no same-site coefficient.",
+                "same_site",
+                "Nothing to do.",
             )
         )
     if not recording.origin.windows_stated:

@@ -14,7 +14,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.engine.evaluate import Evaluation, Point, SweepData, TimeBlocks, evaluate
-from kernelfit.errors import ModelError
+from kernelfit.errors import ModelError, NotIdentifiedError
 from kernelfit.fitting.progress import Progress, ProgressCallback
 from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
 from kernelfit.model.coupling import CouplingModel
@@ -24,6 +24,7 @@ from kernelfit.recording.recording import Recording
 FASTEST_LEAK_BINS = 3.0  # alpha D above this leaves 5 % of a jump after one bin: nothing to see of the decay
 SLOWEST_LEAK_SHARE = 20.0  # a time constant above a twentieth of the recording looks like a drifting rate
 EXPECTED_SWEEPS = 60
+TABLES_OF_NULL = 8  # bands of distance the first sweeps look at
 
 
 @dataclass(frozen=True, eq=False)
@@ -91,8 +92,21 @@ class Problem:
 
     @property
     def has_same_site(self) -> bool:
-        """Whether pairs on one site have a coefficient of their own."""
-        return bool(self.geometry.own_site.any())
+        """Whether pairs on one site have a coefficient of their own, and one of them a source that fires."""
+        return bool((self.geometry.own_site & self.drives[None, :]).any())
+
+    @property
+    def drives(self) -> BoolArray:
+        """(n_units,) True for units that fire where it can drive a bin of the sum."""
+        mask = np.zeros(self.data.n_units, dtype=bool)
+        mask[self.data.event_unit] = True
+        return mask
+
+    @property
+    def driven_um(self) -> FloatArray:
+        """Distinct distances of the kernel's pairs whose source fires, µm: the others say nothing about J(d)."""
+        driven = self.geometry.kept & self.drives[None, :]
+        return self.geometry.distinct_um[np.unique(self.geometry.distance_index[driven])]
 
     @property
     def fits_leak(self) -> bool:
@@ -228,15 +242,7 @@ def make_problem(
             "exclusions and warm-up left out). Check the unit of time (time_unit), the windows and the exclusions."
         )
     geometry = geometry_of(model, recording, targets)
-    drives = np.zeros(recording.n_units, dtype=bool)
-    drives[grid.event_unit] = True
-    if not (geometry.kept & drives[None, :]).any():
-        raise ModelError(
-            f"{spikes}: no unit that fires has a partner within the kernel that fires too, so no spike can drive "
-            "anything. Record longer, or widen the selection of units."
-        )
-    model.kernel.check_identified(geometry.distinct_um, geometry.distance_range)
-    return Problem(
+    problem = Problem(
         model=model,
         kernel=model.kernel,
         data=SweepData.from_grid(grid, targets),
@@ -246,3 +252,19 @@ def make_problem(
         threads=threads,
         clock=Clock(progress),
     )
+    if problem.driven_um.size == 0:
+        raise ModelError(
+            f"{spikes}: no unit that fires has a partner within the kernel that fires too, so no spike can drive "
+            "anything. Record longer, or widen the selection of units."
+        )
+    _check_identified(problem)
+    return problem
+
+
+def _check_identified(problem: Problem) -> None:
+    try:
+        problem.kernel.check_identified(problem.driven_um, problem.span)
+    except NotIdentifiedError as error:
+        if problem.driven_um.size == problem.geometry.distinct_um.size:
+            raise
+        raise NotIdentifiedError(f"{error} Pairs whose source never fires do not count.") from None
