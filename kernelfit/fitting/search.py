@@ -16,6 +16,7 @@ N_SHAPES = 2
 WORTH_TRYING = 0.4  # of the best gain promised: poorer leaks only cost sweeps
 LOOSE_ITERATIONS = 25
 CLOSE = 2.0  # log-likelihood units: an optimum this near the best one is reported
+NO_INFORMATION = 1e-10  # of the best informed band
 APART = 0.2  # on the log scale: optima nearer than this are one
 
 
@@ -50,7 +51,9 @@ def promising(sweeps: tuple[NullSweep, ...]) -> list[NullSweep]:
 def start_estimates(problem: Problem, null: Null, sweep: NullSweep, n: int) -> list[Estimate]:
     """Starts at a leak: the family's shapes closest to the one-step estimate of J(d)."""
     variance = np.diag(np.linalg.pinv(sweep.information, rcond=1e-10, hermitian=True))
-    weight = np.where(variance > 0, 1.0 / np.where(variance > 0, variance, 1.0), 0.0)
+    information = np.diag(sweep.information)
+    informed = information > NO_INFORMATION * information.max()  # not so where all sources of a band are silent
+    weight = np.where(informed, 1.0 / np.where(informed, variance, 1.0), 0.0)
     thetas = problem.kernel.starts(null.distance_um, sweep.coupling, weight, problem.span, n=n)
     rest = [0.0] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)
     return [Estimate(null.optimum.estimate.own, np.concatenate([theta, rest])) for theta in thetas]
