@@ -20,6 +20,7 @@ from rich.progress import Progress as RichProgress
 
 from kernelfit.errors import FitWarning, KernelfitWarning
 from kernelfit.fitting.progress import Progress
+from kernelfit.report.look import GRID, RAISING
 from kernelfit.report.numbers import duration_text
 
 PLAIN_INTERVAL_S = 10.0  # between two progress lines where the line cannot rewrite itself
@@ -109,14 +110,14 @@ class ProgressLine:
         self._announced = False
         self._bar = RichProgress(
             TextColumn("{task.description}", markup=False),
-            BarColumn(bar_width=24),
-            TextColumn("{task.percentage:>3.0f} %"),
+            BarColumn(bar_width=24, style=GRID, complete_style=RAISING, finished_style=RAISING, pulse_style=GRID),
+            TextColumn("{task.fields[share]}", markup=False),
             TextColumn("{task.fields[left]}", markup=False),
             console=RichConsole(file=self._stream),
             transient=True,
             disable=not self._live,
         )
-        self._task = self._bar.add_task("reading", total=1.0, left="")
+        self._task = self._bar.add_task("preparing", total=1.0, share="", left="")
 
     def __enter__(self) -> ProgressLine:
         self._bar.start()
@@ -136,7 +137,9 @@ class ProgressLine:
             self._line(f"The fit will take about {left_text(left_s)}{memory}. Ctrl-C stops it cleanly.")
         share = report.sweeps / max(report.expected_sweeps, 1)
         if self._live:
-            self._bar.update(self._task, completed=share, description=report.stage, left=left)
+            self._bar.update(
+                self._task, completed=share, description=report.stage, share=f"{100 * share:.0f} %", left=left
+            )
         elif now - self._last_shown >= PLAIN_INTERVAL_S:
             self._last_shown = now
             self._line(f"{report.stage}: {100 * share:.0f} %" + (f", about {left}" if left else ""))
@@ -144,7 +147,7 @@ class ProgressLine:
     def stage(self, what: str) -> None:
         """Show that something else than a fit is going on, for which no time can be told."""
         if self._live:
-            self._bar.update(self._task, total=None, description=what, left="")
+            self._bar.update(self._task, description=what, share="", left="")
 
     def _left_s(self, report: Progress, now: float) -> float | None:
         # The first sweep may hold the time of compilation, so time is counted from its end.
