@@ -13,7 +13,6 @@ from typing import NamedTuple
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit.engine.compiled import compiled, inlined
 
-
 NO_BIN = -(2**62)  # stands for the next active bin where there is none; no timeline reaches it
 
 

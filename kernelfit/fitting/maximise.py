@@ -89,8 +89,9 @@ def penalised(problem: Problem, estimate: Estimate, sums: Evaluation) -> Local:
 
 
 def evaluate_locally(problem: Problem, estimate: Estimate) -> Local:
-    """Penalised objective and derivatives at an estimate: one sweep."""
-    return penalised(problem, estimate, problem.evaluate(estimate))
+    """Penalised objective and derivatives at an estimate: one sweep. Not finite where rates overflow."""
+    with np.errstate(over="ignore", invalid="ignore"):  # a step too far is seen by its objective and taken back
+        return penalised(problem, estimate, problem.evaluate(estimate))
 
 
 def maximise(
@@ -118,6 +119,9 @@ def maximise(
     held = np.zeros(problem.n_shared, dtype=bool) if held is None else held
     inside = np.clip(start.shared, bounds[:, 0], bounds[:, 1]) if problem.n_shared else start.shared
     local = evaluate_locally(problem, Estimate(start.own, inside))
+    if not np.isfinite(local.objective):
+        nowhere = np.zeros(problem.n_shared)
+        return Optimum(local, ~held, nowhere, False, 0, np.inf, "the likelihood at the start is not finite")
     correction = np.zeros((problem.n_shared, problem.n_shared))
     damping, decrement, stale = FIRST_DAMPING, np.inf, 0
     message, converged, iteration = "", False, 0
@@ -200,7 +204,7 @@ def _solve(local: Local, free: BoolArray, damping: float, correction: FloatArray
 
 
 def _corrected(correction: FloatArray, before: Local, after: Local) -> FloatArray:
-    """Symmetric rank-one update: the change of the efficient score over a step is what information and correction predict."""
+    """Symmetric rank-one update, so that information and correction predict the change of score over the step."""
     step = after.estimate.shared - before.estimate.shared
     if not step.any():
         return correction

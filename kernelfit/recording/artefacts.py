@@ -1,10 +1,11 @@
 """Moments at which much of the array fires at once: artefacts, where chance cannot give them.
 
-A spike is marked when at least 15 % of the active units (and at least 5) fire within 1 ms of it. How often
-that happens by chance, bursts and waves included, is measured on the recording itself: every train is shifted
-as a whole by up to 50 ms, differently for each unit, several times over. Where the shifted trains meet the
-mark too often, the mark is raised until at most 1 % of the marked moments can be chance. Each marked moment
-is left out with 10.05 ms to both sides.
+A spike is marked when at least 15 % of the active units (and at least 5) fire within 1 ms of it, and spikes lie there
+at least three times as densely as 5 to 25 ms away: a burst of the tissue has shoulders, an artefact has none. How often
+that happens by chance, bursts and waves included, is measured on the recording itself: every train is shifted as a
+whole by up to 50 ms, differently for each unit, several times over. Where the shifted trains meet the mark too often,
+the mark is raised until at most 1 % of the marked moments can be chance. Each marked moment is left out with 10.05 ms
+to both sides.
 """
 
 from __future__ import annotations
@@ -20,6 +21,8 @@ from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain, merge_inte
 SHARE_OF_UNITS = 0.15
 MIN_UNITS = 5
 WITHIN_S = 0.001
+SHOULDER_FROM_S, SHOULDER_TO_S = 0.005, 0.025
+SHARPNESS = 3.0
 MARGIN_S = 0.01005  # 10 ms and half of a common sampling step, so that no spike lies on an edge
 SHIFT_S = 0.050
 N_SHIFTS = 8
@@ -59,7 +62,7 @@ def whole_array_events(train: MergedTrain, *, rng: np.random.Generator) -> Whole
     """
     n_active = int(np.unique(train.unit).size)
     lowest = max(math.ceil(SHARE_OF_UNITS * n_active - 1e-9), MIN_UNITS)
-    at_once = units_at_once(train.time_s, train.unit, train.n_units, lowest)
+    at_once = sharp_units_at_once(train.time_s, train.unit, train.n_units, lowest)
     highest = int(at_once.max(initial=0))
     nothing = WholeArrayEvents(np.empty((0, 2)), np.empty(0, dtype=np.int64), lowest, n_active, 0.0, 0)
     shifted = [_shifted_marks(train, lowest, rng) for _ in range(N_SHIFTS)] if highest >= lowest else []
@@ -83,7 +86,7 @@ def _shifted_marks(train: MergedTrain, at_least: int, rng: np.random.Generator) 
     """Times of marked spikes, and units at once, after a shift of every train by up to 50 ms."""
     time_s = train.time_s + rng.uniform(-SHIFT_S, SHIFT_S, train.n_units)[train.unit]
     order = np.argsort(time_s, kind="stable")
-    at_once = units_at_once(time_s[order], train.unit[order], train.n_units, at_least)
+    at_once = sharp_units_at_once(time_s[order], train.unit[order], train.n_units, at_least)
     marked = at_once > 0
     return time_s[order][marked], at_once[marked]
 
@@ -95,6 +98,22 @@ def _beyond(chance: list[float]) -> float:
         return fewer_than_one * _SHRINK
     fall = chance[-1] / chance[-2] if len(chance) > 1 else _SHRINK
     return min(chance[-1], fewer_than_one) * min(fall, _SHRINK)
+
+
+def sharp_units_at_once(time_s: FloatArray, unit: IntArray, n_units: int, at_least: int) -> IntArray:
+    """As `units_at_once`, and 0 where spikes are not `SHARPNESS` times as dense as on the shoulders."""
+    at_once = units_at_once(time_s, unit, n_units, at_least)
+    marked = np.flatnonzero(at_once)
+    around = time_s[marked]
+
+    def spikes_between(start_s: float, stop_s: float) -> IntArray:
+        return np.searchsorted(time_s, around + stop_s) - np.searchsorted(time_s, around + start_s)
+
+    centre = spikes_between(-WITHIN_S, WITHIN_S) / (2.0 * WITHIN_S)
+    shoulders = spikes_between(-SHOULDER_TO_S, -SHOULDER_FROM_S) + spikes_between(SHOULDER_FROM_S, SHOULDER_TO_S)
+    blunt = centre < SHARPNESS * shoulders / (2.0 * (SHOULDER_TO_S - SHOULDER_FROM_S))
+    at_once[marked[blunt]] = 0
+    return at_once
 
 
 def units_at_once(time_s: FloatArray, unit: IntArray, n_units: int, at_least: int) -> IntArray:

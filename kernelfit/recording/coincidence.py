@@ -22,6 +22,7 @@ from kernelfit.recording.merged import TIME_TOLERANCE_S, MergedTrain, close_pair
 
 COINCIDENCE_S = 0.0005
 LEVEL_FROM_S, LEVEL_TO_S = 0.005, 0.010
+CLOSE_FROM_S, CLOSE_TO_S = 0.001, 0.003
 FALSE_DISCOVERIES = 0.01
 MIN_RATIO = 2.0  # times the level; a smaller excess bends little and may well be tissue
 MIN_SHARE = 0.01  # of the spikes of the unit with fewer
@@ -76,13 +77,16 @@ def pair_excess(
         nothing = pd.DataFrame(columns=list(PAIR_COLUMNS))
         return PairExcess(near=nothing, far=nothing, n_near_tested=0, n_far_tested=0)
     looked_at = pair_sample(train, LEVEL_TO_S + width_s)
-    first, second, coincident, level = _count_pairs(train, width_s, looked_at)
+    first, second, coincident, level, close = _count_pairs(train, width_s, looked_at)
     n_lags = round(LEVEL_TO_S / width_s)
     measure = lag_measure(width_s, n_lags, step_s)
     short = measure[0]
-    long = measure[_level_bins(width_s)].sum()
-    p_value = np.asarray(stats.binom.sf(coincident - 1, coincident + level, short / (short + long)))
-    expected = level * short / long
+    long, near = measure[_level_bins(width_s)].sum(), measure[_close_bins(width_s)].sum()
+    p_value = np.maximum(
+        stats.binom.sf(coincident - 1, coincident + level, short / (short + long)),
+        stats.binom.sf(coincident - 1, coincident + close, short / (short + near)),
+    )
+    expected = np.maximum(level * short / long, close * short / near)
     counts = train.counts()
     smaller = np.minimum(counts[first], counts[second])
     excess = (coincident - expected) / looked_at
@@ -125,23 +129,31 @@ def _level_bins(width_s: float) -> slice:
     return slice(first, max(round(LEVEL_TO_S / width_s), first + 1))
 
 
-def _count_pairs(train: MergedTrain, width_s: float, share: float) -> tuple[IntArray, IntArray, IntArray, IntArray]:
-    """Pairs that ever coincide: lower index, higher index, coincidences, spike pairs at 5 to 10 ms."""
-    bins = _level_bins(width_s)
-    start, stop = bins.start * width_s - TIME_TOLERANCE_S, bins.stop * width_s
-    short_keys, long_keys = [np.empty(0, dtype=np.int64)], [np.empty(0, dtype=np.int64)]
-    for a, b, lag in close_pairs(train, stop, share):
+def _close_bins(width_s: float) -> slice:
+    first = max(round(CLOSE_FROM_S / width_s), 1)
+    return slice(first, max(round(CLOSE_TO_S / width_s), first + 1))
+
+
+def _count_pairs(
+    train: MergedTrain, width_s: float, share: float
+) -> tuple[IntArray, IntArray, IntArray, IntArray, IntArray]:
+    """Pairs that ever coincide: lower index, higher index, coincidences, spike pairs at 5 to 10 ms, at 1 to 3 ms."""
+    ranges = (slice(0, 1), _level_bins(width_s), _close_bins(width_s))
+    keys: tuple[list[IntArray], ...] = tuple([np.empty(0, dtype=np.int64)] for _ in ranges)
+    for a, b, lag in close_pairs(train, ranges[1].stop * width_s, share):
         key = np.minimum(a, b) * train.n_units + np.maximum(a, b)
-        short_keys.append(key[lag < width_s - TIME_TOLERANCE_S])
-        long_keys.append(key[lag >= start])
-    short, n_short = np.unique(np.concatenate(short_keys), return_counts=True)
-    long, n_long = np.unique(np.concatenate(long_keys), return_counts=True)
-    level = np.zeros(short.size, dtype=np.int64)
-    place = np.searchsorted(long, short)
-    known = place < long.size
-    known[known] = long[place[known]] == short[known]
-    level[known] = n_long[place[known]]
-    return short // train.n_units, short % train.n_units, n_short.astype(np.int64), level
+        place = ((lag + TIME_TOLERANCE_S) / width_s).astype(np.int64)
+        for found, bins in zip(keys, ranges, strict=True):
+            found.append(key[(place >= bins.start) & (place < bins.stop)])
+    pair, coincident = np.unique(np.concatenate(keys[0]), return_counts=True)
+    level, close = (_counted_at(np.concatenate(found), pair) for found in keys[1:])
+    return pair // train.n_units, pair % train.n_units, coincident.astype(np.int64), level, close
+
+
+def _counted_at(keys: IntArray, wanted: IntArray) -> IntArray:
+    """How often each of the sorted `wanted` stands among `keys`."""
+    keys = np.sort(keys)
+    return np.searchsorted(keys, wanted, side="right") - np.searchsorted(keys, wanted, side="left")
 
 
 def _adjusted(p_value: FloatArray, n_tests: int) -> FloatArray:
