@@ -44,6 +44,18 @@ class Local:
     score_shared: FloatArray  # (Q,)
     information: Arrow
 
+    @property
+    def finite(self) -> bool:
+        """Whether nothing overflowed here."""
+        parts = (
+            self.score_own,
+            self.score_shared,
+            self.information.own,
+            self.information.cross,
+            self.information.shared,
+        )
+        return bool(np.isfinite(self.objective)) and all(bool(np.isfinite(p).all()) for p in parts)
+
 
 @dataclass(frozen=True, eq=False)
 class Optimum:
@@ -119,7 +131,7 @@ def maximise(
     held = np.zeros(problem.n_shared, dtype=bool) if held is None else held
     inside = np.clip(start.shared, bounds[:, 0], bounds[:, 1]) if problem.n_shared else start.shared
     local = evaluate_locally(problem, Estimate(start.own, inside))
-    if not np.isfinite(local.objective):
+    if not local.finite:
         nowhere = np.zeros(problem.n_shared)
         return Optimum(local, ~held, nowhere, False, 0, np.inf, "the likelihood at the start is not finite")
     correction = np.zeros((problem.n_shared, problem.n_shared))
@@ -143,7 +155,7 @@ def maximise(
         candidate = evaluate_locally(problem, trial.estimate)
         slack = ROUNDING * abs(local.objective)
         gained = candidate.objective - local.objective
-        if np.isfinite(candidate.objective) and gained >= -slack:
+        if candidate.finite and gained >= -slack:
             stale = stale + 1 if gained <= slack else 0
             damping = _next_damping(damping, gained, trial.predicted)
             correction = _corrected(correction, local, candidate)
