@@ -36,13 +36,13 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
     yield Finding(
         "whole_array_events",
         "warning",
-        f"{counted(len(events.bounds), 'moment')} at which {events.threshold} or more of {events.n_active} "
-        f"active units fire within 1 ms of one spike (median {number(float(np.median(most)))}, at most "
-        f"{int(most.max())}); trains shifted by up to 50 ms give {_few(events.expected_by_chance)}. "
-        f"{percent(share)} of the spikes lie there and make distant units look coupled.",
+        f"{counted(len(events.bounds), 'moment')} at which {events.threshold} or more of {events.n_active} active "
+        f"units fire within 1 ms of one spike (median {number(float(np.median(most)))}, at most {int(most.max())}); "
+        f"trains shifted by up to 50 ms give {_few(events.expected_by_chance)}. {percent(share)} of the spikes lie "
+        "there and make distant units look coupled.",
         f"{_stretch(events.bounds)}; see proposed_exclusions",
-        "Leave them out: rec.with_exclusions(inspection.proposed_exclusions), or "
-        f"--exclusions proposed_exclusions.csv.{doubt}",
+        "Leave them out: rec.with_exclusions(inspection.proposed_exclusions), or --exclusions "
+        f"proposed_exclusions.csv.{doubt}",
     )
     counts = e.train.counts()
     lost = (counts > 0) & (e.n_proposed == counts)
@@ -59,8 +59,8 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "mostly_in_proposed",
             "warning",
-            f"{counted(int(most_lost.sum()), 'unit')} with more than half of their spikes inside these "
-            "moments: sites that hardly saw tissue.",
+            f"{counted(int(most_lost.sum()), 'unit')} with more than half of their spikes inside these moments: "
+            "sites that hardly saw tissue.",
             names(e.units_where(most_lost)),
             "Consider leaving them out (rec.select(units=...)), and see what changes.",
         )
@@ -93,12 +93,11 @@ def _far_coincidences(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "far_coincidences",
             "warning",
-            f"Units far apart {left}fire within {seconds(fine.width_s)} more often than 5 to 10 ms apart. "
-            "Tissue is not that fast over such distances: smaller artefacts, cross-talk or a common "
-            "reference.",
+            f"Units far apart {left}fire within {seconds(fine.width_s)} more often than 5 to 10 ms apart. Tissue is "
+            "not that fast over such distances: smaller artefacts, cross-talk or a common reference.",
             "; ".join(rows),
-            "Look for interference in the raw recording; bins of 10 ms and more take such pairs into one "
-            "bin, where the model does not see them.",
+            "Look for interference in the raw recording; bins of 10 ms and more take such pairs into one bin, "
+            "where the model does not see them.",
         )
 
 
@@ -112,11 +111,11 @@ def _pairs(e: Evidence) -> Iterator[Finding]:
             "one_cell_twice",
             "warning",
             f"Among {e.excess.n_near_tested:,} neighbouring pairs, {len(proposed):,} fire within "
-            f"{seconds(e.fine.width_s)} more than twice as often as their level at 5 to 10 ms asks for: perhaps one "
-            "cell seen twice. In brackets: the excess as a share of the smaller unit's spikes.",
+            f"{seconds(e.fine.width_s)} more than twice as often as at lags of 1 to 3 and of 5 to 10 ms: perhaps "
+            "one cell seen twice. In brackets: the excess as a share of the smaller unit's spikes.",
             names(listed, shown=6),
-            "Leave the pairs out of the kernel: --exclude-pairs proposed_pairs.csv, or exclude_pairs=... "
-            "when reading. Where the share is large, keep one of the units.",
+            "Leave the pairs out of the kernel: --exclude-pairs proposed_pairs.csv, or exclude_pairs=... when "
+            "reading. Where the share is large, keep one of the units.",
         )
 
 
@@ -130,9 +129,9 @@ def _dead_time(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "array_dead_time",
             "warning",
-            "Units at all distances hardly ever fire together: coincidences within "
-            f"{seconds(e.fine.width_s)} are at {spread} of their level at 5 to 10 ms, for about "
-            f"{seconds(dead.length_s)}. One unit's spike blocks the detection of all others.",
+            f"Units at all distances hardly ever fire together: coincidences within {seconds(e.fine.width_s)} are "
+            f"at {spread} of their level at 5 to 10 ms, for about {seconds(dead.length_s)}. One unit's spike blocks "
+            "the detection of all others.",
             "whole array",
             f"Use bins of at least {seconds(5 * dead.length_s)}: in narrower ones the dead time looks like "
             "suppression.",

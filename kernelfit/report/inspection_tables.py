@@ -8,8 +8,20 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 import pandas as pd
 
-from kernelfit.recording.artefacts import MARGIN_S, MIN_UNITS, N_SHIFTS, SHARE_OF_UNITS, SHIFT_S, WITHIN_S
+from kernelfit.recording.artefacts import (
+    MARGIN_S,
+    MIN_UNITS,
+    N_SHIFTS,
+    SHARE_OF_UNITS,
+    SHARPNESS,
+    SHIFT_S,
+    SHOULDER_FROM_S,
+    SHOULDER_TO_S,
+    WITHIN_S,
+)
 from kernelfit.recording.coincidence import (
+    CLOSE_FROM_S,
+    CLOSE_TO_S,
     COINCIDENCE_S,
     FALSE_DISCOVERIES,
     LEVEL_FROM_S,
@@ -70,7 +82,7 @@ def pairs_table(pairs: pd.DataFrame) -> Table:
             Column("other unit", numeric=False),
             Column("distance (µm)"),
             Column("coincidences"),
-            Column("expected from 5 to 10 ms"),
+            Column("expected"),
             Column("excess (% of smaller unit)"),
             Column("p, adjusted"),
         ),
@@ -211,22 +223,24 @@ def methods_paragraph(inspection: Inspection) -> tuple[str, tuple[str, ...]]:
     """The inspection in a paragraph ready for a paper, and its references."""
     from kernelfit import __version__
 
-    low, high = time_text(LEVEL_FROM_S), time_text(LEVEL_TO_S)
+    close = f"{number_text(1e3 * CLOSE_FROM_S)} to {time_text(CLOSE_TO_S)}"
+    level = f"{number_text(1e3 * LEVEL_FROM_S)} to {time_text(LEVEL_TO_S)}"
     reference_um = inspection.reference_distance_um
     reference = "the reference distance" if math.isnan(reference_um) else distance_label(reference_um)
     paragraph = (
         f"Recordings were inspected with kernelfit {__version__} before any fit. Whole-array artefacts were moments "
         f"at which at least {number_text(100 * SHARE_OF_UNITS)} % of the active units, and at least {MIN_UNITS}, "
-        f"fired within {time_text(WITHIN_S)} of one spike, with {number_text(1e3 * MARGIN_S, 4)} ms to both sides; "
-        f"the number of units was raised where trains shifted as wholes by up to {time_text(SHIFT_S)}, each unit by "
-        f"its own amount ({N_SHIFTS} times, seed {inspection.seed}), gave more than 1 % as many. Neighbouring pairs "
-        f"of units (up to 1.5 times {reference}, the median distance between nearest sites) were held to be perhaps "
-        f"one cell if coincidences within {time_text(COINCIDENCE_S)} exceeded {number_text(MIN_RATIO)} times the "
-        f"pair's level at lags of {low} to {high} by at least {number_text(100 * MIN_SHARE)} % of the smaller unit's "
-        f"spikes (one-sided binomial test, false discovery rate {number_text(100 * FALSE_DISCOVERIES)} %, Benjamini "
-        "and Hochberg 1995). Short intervals were marked above 1 % of a unit's intervals (common practice). "
-        "Correlograms were pooled over pairs by distance and divided by the number of spike pairs expected from the "
-        "mean rates."
+        f"fired within {time_text(WITHIN_S)} of one spike and spikes were at least {number_text(SHARPNESS)} times as "
+        f"dense as {number_text(1e3 * SHOULDER_FROM_S)} to {time_text(SHOULDER_TO_S)} away, with "
+        f"{number_text(1e3 * MARGIN_S, 4)} ms to both sides; the number of units was raised where trains shifted as "
+        f"wholes by up to {time_text(SHIFT_S)}, each unit by its own amount ({N_SHIFTS} times, seed "
+        f"{inspection.seed}), gave more than 1 % as many. Neighbouring pairs of units (up to 1.5 times {reference}, "
+        f"the median distance between nearest sites) were held to be perhaps one cell if coincidences within "
+        f"{time_text(COINCIDENCE_S)} exceeded {number_text(MIN_RATIO)} times the pair's level at lags of {close} and "
+        f"of {level}, by at least {number_text(100 * MIN_SHARE)} % of the smaller unit's spikes (one-sided binomial "
+        f"tests, false discovery rate {number_text(100 * FALSE_DISCOVERIES)} %, Benjamini and Hochberg 1995). Short "
+        "intervals were marked above 1 % of a unit's intervals (common practice). Correlograms were pooled over "
+        "pairs by distance and divided by the number of spike pairs expected from the mean rates."
     )
     return paragraph, (BENJAMINI,)
 

@@ -159,7 +159,7 @@ def _proposals(inspection: Inspection) -> tuple[str, ...]:
     if len(inspection.proposed_pairs):
         said.append(
             f"proposed_pairs.csv holds {_counted(len(inspection.proposed_pairs), 'neighbouring pair')} with more "
-            "exact coincidences than their level at 5 to 10 ms allows: perhaps one cell seen by two sites. Give it "
+            "exact coincidences than their lags of 1 to 10 ms let expect: perhaps one cell seen by two sites. Give it "
             "back with --exclude-pairs proposed_pairs.csv; the units stay, the pair leaves the kernel."
         )
     if not said:

@@ -6,7 +6,7 @@ import itertools
 
 import numpy as np
 import pytest
-from planted import grid_positions, recording_of, steady_trains
+from planted import coupled_trains, grid_positions, recording_of, steady_trains
 from scipy import stats
 
 from kernelfit.recording.activity import blocks, burstiness, even_share, gaps, intervals
@@ -229,6 +229,17 @@ def test_broad_bursts_of_a_small_array_are_no_artefacts(seed: int) -> None:
     assert len(whole_array_events(train, rng=rng).bounds) == 0
 
 
+@pytest.mark.parametrize("n_units", [16, 36, 60])
+@pytest.mark.parametrize("spread_s", [0.03, 0.1])
+def test_tight_bursts_have_shoulders_and_are_no_artefacts(n_units: int, spread_s: float) -> None:
+    """Every unit fires some 13 times within a burst: far more units within 1 ms than trains shifted by 50 ms give."""
+    rng = np.random.default_rng(n_units)
+    centres = rng.uniform(5.0, 595.0, 60)
+    trains = {f"u{k}": np.sort(rng.choice(centres, 800) + rng.normal(0.0, spread_s, 800)) for k in range(n_units)}
+    train = merge_trains(recording_of(trains))
+    assert len(whole_array_events(train, rng=rng).bounds) <= 1  # a stray moment in 60 bursts at the most
+
+
 # --- coincidences -------------------------------------------------------------------------------------
 
 
@@ -244,6 +255,14 @@ def test_pairs_without_excess_are_hardly_ever_flagged() -> None:
         excess = pair_excess(train, layout, recording.unit_ids, None, 5e-4)
         flagged += len(excess.near) + len(excess.far)
     assert flagged <= 1
+
+
+@pytest.mark.parametrize("tau_s", [0.003, 0.005])
+def test_a_fast_coupling_is_not_one_cell_seen_twice(tau_s: float) -> None:
+    trains = coupled_trains(np.random.default_rng(8), rate_hz=5.0, offspring=0.15, tau_s=tau_s)
+    recording = recording_of(trains)
+    excess = pair_excess(merge_trains(recording), lay_out(recording), recording.unit_ids, None, 5e-4)
+    assert len(excess.near) <= 2  # of 72 neighbouring pairs that all couple
 
 
 def test_a_unit_that_coincides_everywhere_is_not_one_cell_seen_twice() -> None:
