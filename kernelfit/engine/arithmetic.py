@@ -3,6 +3,9 @@
 A row holds one number per cell of a tile; cells run over bins, then lanes (`row[t * n_lanes + lane]`), a lane being one
 target unit. Every loop here runs over a contiguous slice, so that the compiler turns it into vector instructions.
 Sums may be reordered by the compiler, always in the same way for the same shapes.
+
+Where a loop runs over several rows at once, indices are unsigned and pitches constant: only then does the compiler see
+that what it writes cannot lie on what it reads, and vectors cost no checks.
 """
 
 from __future__ import annotations
@@ -12,7 +15,15 @@ import numpy as np
 from kernelfit._typing import FloatArray
 from kernelfit.engine.compiled import compiled, compiled_in_order
 
+CELLS_PER_TILE = 1024  # ten rows of this many doubles stay in the second cache level
+ROW_PITCH = CELLS_PER_TILE + 24  # from row to row of a tile; rows a power of two apart contend for the same cache lines
+LANE_PITCH = 48  # from sum to sum by lane, and so the most lanes of a block
+GRAM = 3  # rows per side of a gram block
+BINS_AT_ONCE = 4  # bins of a tile come in multiples of this
 ETA_LIMIT = 700.0  # exp(709.8) overflows; a linear predictor beyond this is a failed step, whatever its size
+_ZERO, _BINS, _ROW = np.uint64(0), np.uint64(BINS_AT_ONCE), np.uint64(ROW_PITCH)
+_ROW_2 = np.uint64(2 * ROW_PITCH)
+_SUM = tuple(np.uint64(k * LANE_PITCH) for k in range(GRAM * GRAM))
 _ROUND = 6755399441055744.0  # 1.5 * 2**52: adding it rounds to an integer held in the low bits of the double
 _LOG2_E = 1.4426950408889634074
 _LN2_HIGH = 6.93147180369123816490e-01
@@ -97,6 +108,62 @@ def add_products_by_lane(x: FloatArray, y: FloatArray, sums: FloatArray) -> None
         for i in range(lanes):
             sums[i] += x0[i] * y0[i]
         t += 1
+
+
+@compiled
+def add_gram_row_by_lane(a: FloatArray, b: FloatArray, n_bins: int, n_lanes: int, sums: FloatArray) -> None:
+    """sums[j, lane] += sum over bins of a * b_j: one row by three.
+
+    a : a row; b : three rows, flat, ROW_PITCH apart; sums : flat, LANE_PITCH apart
+    n_bins : rounded up to a multiple of BINS_AT_ONCE, so `a` must end in zeros where the tile does not fill them
+    """
+    lanes = np.uint64(n_lanes)
+    for t in range(_ZERO, np.uint64(n_bins), _BINS):
+        for lane in range(lanes):
+            s0 = s1 = s2 = 0.0
+            for k in range(_BINS):
+                c = (t + k) * lanes + lane
+                s0 += a[c] * b[c]
+                s1 += a[c] * b[c + _ROW]
+                s2 += a[c] * b[c + _ROW_2]
+            sums[lane] += s0
+            sums[lane + _SUM[1]] += s1
+            sums[lane + _SUM[2]] += s2
+
+
+@compiled
+def add_gram_block_by_lane(a: FloatArray, b: FloatArray, n_bins: int, n_lanes: int, sums: FloatArray) -> None:
+    """sums[i, j, lane] += sum over bins of a_i * b_j: three rows by three, all as in `add_gram_row_by_lane`.
+
+    Vectors run over lanes, so no sum can stay in a register from bin to bin. Three rows by three over four bins make 36
+    products of 24 loads and nine sums, where product by product it would be 72 loads.
+    """
+    lanes = np.uint64(n_lanes)
+    for t in range(_ZERO, np.uint64(n_bins), _BINS):
+        for lane in range(lanes):
+            s00 = s01 = s02 = s10 = s11 = s12 = s20 = s21 = s22 = 0.0
+            for k in range(_BINS):
+                c = (t + k) * lanes + lane
+                x0, x1, x2 = a[c], a[c + _ROW], a[c + _ROW_2]
+                y0, y1, y2 = b[c], b[c + _ROW], b[c + _ROW_2]
+                s00 += x0 * y0
+                s01 += x0 * y1
+                s02 += x0 * y2
+                s10 += x1 * y0
+                s11 += x1 * y1
+                s12 += x1 * y2
+                s20 += x2 * y0
+                s21 += x2 * y1
+                s22 += x2 * y2
+            sums[lane] += s00
+            sums[lane + _SUM[1]] += s01
+            sums[lane + _SUM[2]] += s02
+            sums[lane + _SUM[3]] += s10
+            sums[lane + _SUM[4]] += s11
+            sums[lane + _SUM[5]] += s12
+            sums[lane + _SUM[6]] += s20
+            sums[lane + _SUM[7]] += s21
+            sums[lane + _SUM[8]] += s22
 
 
 @compiled

@@ -6,10 +6,10 @@ from __future__ import annotations
 import numpy as np
 
 from kernelfit._typing import FloatArray, IntArray
+from kernelfit.engine.arithmetic import CELLS_PER_TILE
 from kernelfit.engine.compiled import compiled
 from kernelfit.engine.links import fill_cells
 from kernelfit.engine.states import Dynamics, Events, States, advance, fill_rows, predictor_into
-from kernelfit.engine.sweep import CELLS_PER_TILE
 
 
 @compiled

@@ -17,14 +17,15 @@ import numpy as np
 from scipy.special import gammaln
 
 from kernelfit._typing import FloatArray, IntArray
+from kernelfit.engine.arithmetic import GRAM, LANE_PITCH
 from kernelfit.engine.compensate import compensate_block, rates_block
 from kernelfit.engine.compensator import Compensator
 from kernelfit.engine.states import Dynamics, Events
-from kernelfit.engine.sweep import GRAM, Sums, sweep_block
+from kernelfit.engine.sweep import Sums, sweep_block
 from kernelfit.recording.grid import Grid
 
 VECTOR = 8  # lanes come in multiples of one vector register of doubles
-LANES_PER_BLOCK = 48  # measured: narrower blocks cost more a cell, wider ones leave threads idle
+LANES_PER_BLOCK = LANE_PITCH  # measured: narrower blocks cost more a cell, wider ones leave threads idle
 
 T = TypeVar("T")
 

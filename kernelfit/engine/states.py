@@ -10,10 +10,14 @@ from __future__ import annotations
 import math
 from typing import NamedTuple
 
+import numpy as np
+
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit.engine.compiled import compiled, inlined
 
 NO_BIN = -(2**62)  # stands for the next active bin where there is none; no timeline reaches it
+
+_U = np.uint64(0)  # row of U in States.coupling and in a tile
 
 
 class Events(NamedTuple):
@@ -122,26 +126,25 @@ def fill_rows(
     coupling, leak, traces, trace_decay = states.coupling, states.leak, states.traces, dynamics.trace_decay
     lanes = coupling.shape[1]
     next_bin = events.active_bin[active] if active < events.active_bin.size else NO_BIN
+    n_lanes, n_coupling = np.uint64(lanes), np.uint64(coupling.shape[0])  # unsigned: see kernelfit.engine.arithmetic
+    trace_row = np.uint64(first_trace_row)
     for t in range(n_bins):
-        for k in range(coupling.shape[0]):
-            s = coupling[k]
-            row = rows[k][t * lanes : (t + 1) * lanes]
-            for i in range(lanes):
-                s[i] *= gamma
-                row[i] = s[i]
-        if leak.size > 0:
-            u = coupling[0]
-            row = rows[coupling.shape[0]][t * lanes : (t + 1) * lanes]
-            for i in range(lanes):
-                leak[i] = gamma * leak[i] - width * u[i]
-                row[i] = leak[i]
-        for m in range(traces.shape[0]):
-            s = traces[m]
-            row = rows[first_trace_row + m][t * lanes : (t + 1) * lanes]
+        at = np.uint64(t) * n_lanes
+        for k in range(n_coupling):
+            for i in range(n_lanes):
+                now = gamma * coupling[k, i]
+                coupling[k, i] = now
+                rows[k, at + i] = now
+        for i in range(np.uint64(leak.size)):
+            now = gamma * leak[i] - width * coupling[_U, i]
+            leak[i] = now
+            rows[n_coupling, at + i] = now
+        for m in range(np.uint64(traces.shape[0])):
             g = trace_decay[m]
-            for i in range(lanes):
-                s[i] *= g
-                row[i] = s[i]
+            for i in range(n_lanes):
+                now = g * traces[m, i]
+                traces[m, i] = now
+                rows[trace_row + m, at + i] = now
         if next_bin == t0 + t:
             jump(active, events, dynamics, states)
             active += 1
@@ -154,14 +157,10 @@ def predictor_into(
     baseline: FloatArray, coefficient: FloatArray, rows: FloatArray, first_trace_row: int, eta: FloatArray
 ) -> None:
     """eta = b + U + sum_m c_m S_m over a tile; coefficient (M, lanes)."""
-    lanes = baseline.size
-    for t in range(eta.size // lanes):
-        u = rows[0][t * lanes : (t + 1) * lanes]
-        out = eta[t * lanes : (t + 1) * lanes]
+    lanes, trace_row = np.uint64(baseline.size), np.uint64(first_trace_row)
+    for at in range(np.uint64(0), np.uint64(eta.size), lanes):
         for i in range(lanes):
-            out[i] = baseline[i] + u[i]
-        for m in range(coefficient.shape[0]):
-            c = coefficient[m]
-            s = rows[first_trace_row + m][t * lanes : (t + 1) * lanes]
+            eta[at + i] = baseline[i] + rows[_U, at + i]
+        for m in range(np.uint64(coefficient.shape[0])):
             for i in range(lanes):
-                out[i] += c[i] * s[i]
+                eta[at + i] += coefficient[m, i] * rows[trace_row + m, at + i]

@@ -13,13 +13,22 @@ from typing import NamedTuple
 import numpy as np
 
 from kernelfit._typing import FloatArray, IntArray
-from kernelfit.engine.arithmetic import add_by_lane, add_gram_block, add_products_by_lane, multiply_into
+from kernelfit.engine.arithmetic import (
+    BINS_AT_ONCE,
+    CELLS_PER_TILE,
+    GRAM,
+    LANE_PITCH,
+    ROW_PITCH,
+    add_by_lane,
+    add_gram_block,
+    add_gram_block_by_lane,
+    add_gram_row_by_lane,
+    add_products_by_lane,
+    multiply_into,
+)
 from kernelfit.engine.compiled import compiled
 from kernelfit.engine.links import fill_cells, is_canonical, log_rate, log_rate_slope
 from kernelfit.engine.states import Dynamics, Events, States, advance, fill_rows, predictor_into
-
-CELLS_PER_TILE = 1024  # ten rows of this many doubles stay in the second cache level
-GRAM = 3  # rows per side of a gram block
 
 
 class Sums(NamedTuple):
@@ -40,38 +49,69 @@ class Sums(NamedTuple):
 
 
 @compiled
+def weigh(gradients: FloatArray, first: int, w: FloatArray, end: int, weighted: FloatArray) -> None:
+    """Multiply GRAM rows by `w`, and leave zeros from there to cell `end`."""
+    for d in range(GRAM):
+        multiply_into(gradients[first + d][: w.size], w, weighted[d][: w.size])
+        weighted[d][w.size : end] = 0.0
+
+
+@compiled
 def add_information(
     w: FloatArray,
-    rows: FloatArray,
-    first_trace_row: int,
-    cross: FloatArray,
-    own: FloatArray,
-    own_shared: FloatArray,
+    gradients: FloatArray,
+    n_traces: int,
+    lanes: int,
+    by_lane: FloatArray,
     shared: FloatArray,
     weighted: FloatArray,
 ) -> None:
-    """Add a tile to sum omega grad grad': per lane where a unit's own parameters take part, else over all lanes."""
+    """Add a tile to sum omega grad grad': per lane where a unit's own parameters take part, else over all lanes.
+
+    gradients : rows of the tile by shared parameters, then by a unit's own, each filled up to a multiple of GRAM
+    by_lane : (own blocks, all blocks, GRAM * GRAM * LANE_PITCH) own rows by shared and own rows, own ones in the upper
+        triangle of blocks; without traces only the first row of a block, the baseline's
+    shared : (padded Q, padded Q) shared rows by shared rows
+    weighted : (GRAM, ROW_PITCH) scratch
+    """
     n = w.size
-    n_traces, n_shared = own_shared.shape[0], own_shared.shape[1]
-    add_by_lane(w, cross[0])
-    for r in range(n_traces):
-        add_products_by_lane(rows[first_trace_row + r][:n], w, cross[1 + r])
-    for r in range(n_shared):
-        add_products_by_lane(rows[1 + r][:n], w, cross[1 + n_traces + r])
-    for a in range(n_traces):
-        multiply_into(rows[first_trace_row + a][:n], w, weighted[0][:n])
-        for b in range(a, n_traces):
-            add_products_by_lane(rows[first_trace_row + b][:n], weighted[0][:n], own[a, b])
-        for b in range(n_shared):
-            add_products_by_lane(rows[1 + b][:n], weighted[0][:n], own_shared[a, b])
+    n_bins = n // lanes
+    end = -(-n_bins // BINS_AT_ONCE) * BINS_AT_ONCE * lanes
+    n_rows, n_shared = gradients.shape[0], shared.shape[0]
+    if n_traces == 0:
+        weighted[0][:n] = w
+        weighted[0][n:end] = 0.0
+        for b in range(0, n_rows, GRAM):
+            add_gram_row_by_lane(weighted[0], gradients[b : b + GRAM].ravel(), n_bins, lanes, by_lane[0, b // GRAM])
+    else:
+        for a in range(n_shared, n_rows, GRAM):
+            weigh(gradients, a, w, end, weighted)
+            for b in range(0, n_rows, GRAM):
+                if b < n_shared or b >= a:
+                    block = gradients[b : b + GRAM].ravel()
+                    sums = by_lane[(a - n_shared) // GRAM, b // GRAM]
+                    add_gram_block_by_lane(weighted.ravel(), block, n_bins, lanes, sums)
     for a in range(0, n_shared, GRAM):
-        for d in range(GRAM):
-            multiply_into(rows[1 + a + d][:n], w, weighted[d][:n])
+        weigh(gradients, a, w, n, weighted)
         for b in range(a, n_shared, GRAM):
             add_gram_block(
-                weighted[0][:n], weighted[1][:n], weighted[2][:n], rows[1 + b][:n], rows[2 + b][:n], rows[3 + b][:n],
-                shared[a : a + GRAM, b : b + GRAM],
+                weighted[0][:n], weighted[1][:n], weighted[2][:n],
+                gradients[b][:n], gradients[b + 1][:n], gradients[b + 2][:n], shared[a : a + GRAM, b : b + GRAM],
             )  # fmt: skip
+
+
+@compiled
+def unpack(by_lane: FloatArray, padded: int, own: FloatArray, own_shared: FloatArray) -> None:
+    """Take `by_lane` apart: own (1 + M, 1 + M, lanes), its upper triangle, and own_shared (1 + M, Q, lanes)."""
+    n_own, n_shared, lanes = own_shared.shape
+    for a in range(n_own):
+        for column in range(padded + n_own):
+            at = (a % GRAM * GRAM + column % GRAM) * LANE_PITCH
+            found = by_lane[a // GRAM, column // GRAM, at : at + lanes]
+            if column < n_shared:
+                own_shared[a, column] = found
+            elif column >= padded + a:
+                own[a, column - padded] = found
 
 
 @compiled
@@ -148,7 +188,8 @@ def sweep_block(
     derivatives = sums.score.shape[1] > 0
     n_shared = sums.own_shared.shape[1]
     padded = sums.shared_shared.shape[0]
-    bins_per_tile = max(4, CELLS_PER_TILE // lanes // 4 * 4)
+    n_own_rows = -(-(1 + n_traces) // GRAM) * GRAM
+    bins_per_tile = max(1, CELLS_PER_TILE // lanes // BINS_AT_ONCE) * BINS_AT_ONCE
     cells = bins_per_tile * lanes
     canonical = is_canonical(link)
 
@@ -157,16 +198,18 @@ def sweep_block(
         np.zeros(lanes if derivatives and fit_leak else 0),
         np.zeros((n_traces, lanes)),
     )
-    first_trace_row = 1 + padded  # rows: U, shared gradients, zero rows up to a multiple of GRAM, traces
-    rows = np.zeros((first_trace_row + n_traces, cells))
-    weighted = np.zeros((GRAM, cells))
+    # rows: U; shared gradients; the baseline's gradient, which is 1, and the traces. Zero rows up to multiples of GRAM
+    first_trace_row = 2 + padded
+    rows = np.zeros((1 + padded + n_own_rows, ROW_PITCH))
+    rows[1 + padded] = 1.0
+    weighted = np.zeros((GRAM, ROW_PITCH))
     eta, mean, scratch = np.zeros(cells), np.zeros(cells), np.zeros(cells)
     slope, weight = np.zeros(0 if canonical else cells), np.zeros(0 if canonical else cells)
     expected = np.zeros(lanes)
-    cross = np.zeros((1 + n_traces + n_shared, lanes))  # sum of omega * gradient, baseline first
     drift = np.zeros((1 + n_traces + n_shared if not canonical else 1, lanes))
-    own = np.zeros((n_traces, n_traces, lanes))
-    own_shared = np.zeros((n_traces, n_shared, lanes))
+    by_lane = np.zeros((n_own_rows // GRAM, (padded + n_own_rows) // GRAM, GRAM * GRAM * LANE_PITCH))
+    own = np.zeros((1 + n_traces, 1 + n_traces, lanes))
+    own_shared = np.zeros((1 + n_traces, n_shared, lanes))
     shared = np.zeros((padded, padded))
 
     active = 0
@@ -176,10 +219,8 @@ def sweep_block(
         active = advance(min(at, start - 1), start, active, events, dynamics, states)
         at = stop - 1
         expected[:] = 0.0
-        cross[:] = 0.0
         drift[:] = 0.0
-        own[:] = 0.0
-        own_shared[:] = 0.0
+        by_lane[:] = 0.0
         shared[:] = 0.0
         for t0 in range(start, stop, bins_per_tile):
             n_bins = min(bins_per_tile, stop - t0)
@@ -191,7 +232,7 @@ def sweep_block(
             add_by_lane(mean[:n], expected)
             if derivatives:
                 w = mean[:n] if canonical else weight[:n]
-                add_information(w, rows, first_trace_row, cross, own, own_shared, shared, weighted)
+                add_information(w, rows[1:], n_traces, lanes, by_lane, shared, weighted)
                 if not canonical:
                     add_drift(slope[:n], rows, first_trace_row, n_traces, drift)
             add_events(
@@ -201,10 +242,13 @@ def sweep_block(
 
         sums.log_likelihood[block] -= expected
         if derivatives:
-            sums.score[block] -= cross if canonical else drift
+            unpack(by_lane, padded, own, own_shared)
+            if canonical:
+                sums.score[block, : 1 + n_traces] -= own[0]
+                sums.score[block, 1 + n_traces :] -= own_shared[0]
+            else:
+                sums.score[block] -= drift
             share = block_weight[block]
-            sums.own_own[0] += share * cross[: 1 + n_traces]
-            sums.own_own[1:, 1:] += share * own
-            sums.own_shared[0] += share * cross[1 + n_traces :]
-            sums.own_shared[1:] += share * own_shared
+            sums.own_own[:] += share * own
+            sums.own_shared[:] += share * own_shared
             sums.shared_shared[:] += share * shared

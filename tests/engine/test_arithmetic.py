@@ -9,9 +9,15 @@ import numpy as np
 import pytest
 
 from kernelfit.engine.arithmetic import (
+    BINS_AT_ONCE,
     ETA_LIMIT,
+    GRAM,
+    LANE_PITCH,
+    ROW_PITCH,
     add_by_lane,
     add_gram_block,
+    add_gram_block_by_lane,
+    add_gram_row_by_lane,
     add_products_by_lane,
     exp_into,
     multiply_into,
@@ -105,3 +111,25 @@ def test_gram_block(n):
         for j in range(3):
             size = abs(start[i, j]) + np.sum(np.abs(a[i] * b[j]))
             assert out[i, j] == pytest.approx(math.fsum([start[i, j], *(a[i] * b[j])]), abs=(n + 8) * EPS * size)
+
+
+@pytest.mark.parametrize("n_bins", [0, 1, 3, 4, 5, 20])
+@pytest.mark.parametrize("lanes", [1, 3, 8, 28, LANE_PITCH])
+def test_gram_blocks_by_lane(n_bins, lanes):
+    """Each lane's sums against math.fsum, added to what is there; what lies beyond the last bin must not count."""
+    rng = np.random.default_rng(n_bins * 100 + lanes)
+    n = n_bins * lanes
+    a, b = rng.normal(size=(GRAM, ROW_PITCH)), rng.normal(size=(GRAM, ROW_PITCH))
+    a[:, n : -(-n_bins // BINS_AT_ONCE) * BINS_AT_ONCE * lanes] = 0.0
+    start = rng.normal(size=(GRAM, GRAM, LANE_PITCH))
+    block, row = start.copy(), start[0].copy()
+    add_gram_block_by_lane(a.ravel(), b.ravel(), n_bins, lanes, block.reshape(-1))
+    add_gram_row_by_lane(a[0], b.ravel(), n_bins, lanes, row.reshape(-1))
+    np.testing.assert_array_equal(block[..., lanes:], start[..., lanes:])
+    for i, j, lane in np.ndindex(GRAM, GRAM, lanes):
+        products = a[i, lane:n:lanes] * b[j, lane:n:lanes]
+        exact = math.fsum([start[i, j, lane], *products])
+        error = 8 * EPS * (abs(start[i, j, lane]) + np.sum(np.abs(products)))
+        assert block[i, j, lane] == pytest.approx(exact, abs=error)
+        if i == 0:
+            assert row[j, lane] == pytest.approx(exact, abs=error)
