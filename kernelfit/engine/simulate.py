@@ -133,9 +133,8 @@ def simulate_counts(
                 bins, units, counts, 0,
             )  # fmt: skip
             if done < 0:
-                raise SimulationError(
-                    _exploded(bin_width, leak, baseline, table, link, (start + at - done - 1) * bin_width)
-                )
+                time_s = (start + at - done - 1) * bin_width
+                raise SimulationError(_exploded(bin_width, leak, baseline, table, weights, link, time_s))
             parts.append((bins[:filled] + start + at, units[:filled].copy(), counts[:filled].copy()))
             at += done
     if not parts:
@@ -145,22 +144,29 @@ def simulate_counts(
     return event_bin, event_unit, event_count
 
 
-def _exploded(bin_width: float, leak: float, baseline: FloatArray, table: FloatArray, link: Link, time_s: float) -> str:
+def _exploded(
+    bin_width: float,
+    leak: float,
+    baseline: FloatArray,
+    table: FloatArray,
+    weights: FloatArray,
+    link: Link,
+    time_s: float,
+) -> str:
     slope = link.slope(baseline)
     radius = float(np.max(np.abs(np.linalg.eigvals(slope[:, None] * table.T / leak))))
     why = (
-        f"already at the baselines each spike causes {radius:.2g} others (spectral radius of E[f'] J / "
-        "alpha, supercritical "
-        "from 1 on)"
+        f"already at the baselines each spike causes {radius:.2g} others (spectral radius of E[f'] J / alpha, "
+        "supercritical from 1 on)"
         if radius >= 1
-        else f"a burst carried it out of its stable range (spectral radius {radius:.2g} at the "
-        "baselines; the exponential "
-        "link has no ceiling)"
+        else f"a burst carried it out of its stable range (spectral radius {radius:.2g} at the baselines; the "
+        "exponential link has no ceiling)"
     )
+    own = " Or make the after-spike effects weaker: a unit may excite itself." if (weights > 0).any() else ""
     return (
-        f"The simulated network exploded at {time_s:.3g} s: a unit was about to fire more than "
-        f"{MOST_PER_BIN:g} times in a bin of "
-        f"{1000 * bin_width:g} ms; {why}. Lower the amplitude or the baselines, or raise the leak rate."
+        f"The simulated network exploded at {time_s:.3g} s: a unit was about to fire more than {MOST_PER_BIN:g} times "
+        f"in a bin of {1000 * bin_width:g} ms; {why}. Lower the amplitude or the baselines, or raise the leak rate."
+        f"{own}"
     )
 
 
