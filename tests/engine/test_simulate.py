@@ -241,6 +241,15 @@ def test_a_burst_in_a_subcritical_network_is_told_apart():
     assert "Lower the amplitude or the baselines, or raise the leak rate." in str(error.value)
 
 
+def test_a_unit_that_excites_itself_to_death_is_told_apart():
+    nothing = kernels.Flat().at(amplitude=0.0)
+    with pytest.raises(SimulationError, match="make the after-spike effects weaker: a unit may excite itself"):
+        simulate_recording(
+            LINE, nothing, 20.0, 40.0, 100.0, 1,
+            after_spike_constants_s=np.array([0.1]), after_spike_coefficients=np.array([1.5]),
+        )  # fmt: skip
+
+
 @pytest.mark.parametrize(
     ("change", "says"),
     [
