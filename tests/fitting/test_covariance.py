@@ -1,0 +1,148 @@
+"""Both covariances against the full matrices of a dense design."""
+
+from __future__ import annotations
+
+import dataclasses
+
+import numpy as np
+import pytest
+from worlds import BIN_S, LEAK, model, simulated
+
+from kernelfit import kernels, terms
+from kernelfit.engine.time_blocks import time_blocks
+from kernelfit.engine.twin import dense_counts, dense_gradients
+from kernelfit.fitting.covariance import block_length_s, covariances
+from kernelfit.fitting.maximise import maximise
+from kernelfit.fitting.null import first_estimate
+from kernelfit.fitting.problem import Estimate, make_problem
+from kernelfit.kernels.bands import Bands
+
+CASES = {
+    "gaussian": (model("gaussian"), [0.1, np.log(120.0), np.log(LEAK)]),
+    "after-spike": (
+        model("exponential", after_spike=terms.AfterSpike(time_constants_s=(0.01, 0.1), ridge=0.2)),
+        [0.1, np.log(120.0), np.log(LEAK)],
+    ),
+    "spline, penalised, leak fixed": (model(kernels.Spline(n_basis=6, smoothing=5.0), leak_rate=LEAK), [0.1] * 6),
+}
+
+
+@pytest.fixture(scope="module")
+def recording():
+    return simulated(1)
+
+
+@pytest.fixture(scope="module", params=CASES.values(), ids=CASES)
+def case(request, recording):
+    the_model, start = request.param
+    problem = make_problem(the_model, recording, threads=2)
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array(start)))
+    return problem, optimum, covariances(problem, optimum)
+
+
+@pytest.fixture(scope="module")
+def dense(case):
+    """Information with penalties, its inverse, and block scores over all parameters, from the design matrix."""
+    problem, optimum, spread = case
+    point = problem.point(optimum.estimate)
+    first, bins, eta, gradients = dense_gradients(problem.data, point)
+    counts = dense_counts(problem.data)[1][bins - first][:, problem.data.targets]
+    n, p = optimum.estimate.own.shape
+    q = problem.n_shared
+    scale = np.ones(p + q)
+    if problem.fits_leak:
+        scale[-1] = problem.leak(optimum.estimate.shared)  # d/d log alpha = alpha d/d alpha
+    design = np.zeros((*eta.shape, n * p + q))
+    for i in range(n):
+        design[:, i, i * p : (i + 1) * p] = gradients[:, i, :p]
+        design[:, i, n * p :] = gradients[:, i, p:] * scale[p:]
+    mean = BIN_S * np.exp(eta)
+    information = np.einsum("tn,tnj,tnk->jk", mean, design, design, optimize=True)
+    ridge = np.zeros(p)
+    ridge[1:] = problem.model.after_spike.ridge
+    information[: n * p, : n * p] += np.diag(np.tile(ridge, n))
+    information[n * p :, n * p :] += problem.penalty
+    blocks = time_blocks(problem.grid, spread.block_length_s)
+    block = np.concatenate([np.full(b - a, g) for a, b, g in blocks.stretches])
+    pull = np.einsum("tn,tnj->tj", counts - mean, design)
+    scores = np.array([pull[block == g].sum(axis=0) for g in range(blocks.n_blocks)])
+    return np.linalg.inv(information), scores, n, p
+
+
+def test_model_based_covariance_is_the_inverse_information(case, dense):
+    _, _, spread = case
+    inverse, _, n, p = dense
+    np.testing.assert_allclose(spread.shared_model, inverse[n * p :, n * p :], rtol=1e-7)
+    for i in range(n):
+        rows = slice(i * p, (i + 1) * p)
+        np.testing.assert_allclose(spread.own_model[i], inverse[rows, rows], rtol=1e-7, atol=1e-12)
+
+
+def test_robust_covariance_is_the_sandwich_of_block_scores(case, dense):
+    """G/(G - 1) H^-1 (sum of s s') H^-1, all parameters together (Liang and Zeger 1986)."""
+    _, _, spread = case
+    inverse, scores, n, p = dense
+    G = len(scores)
+    sandwich = G / (G - 1) * inverse @ (scores.T @ scores) @ inverse
+    assert spread.n_blocks == G
+    np.testing.assert_allclose(spread.shared_robust, sandwich[n * p :, n * p :], rtol=1e-6)
+    for i in range(n):
+        rows = slice(i * p, (i + 1) * p)
+        size = np.sqrt(np.diag(sandwich)[rows])
+        np.testing.assert_allclose(
+            spread.own_robust[i] / np.outer(size, size), sandwich[rows, rows] / np.outer(size, size), atol=1e-6
+        )
+
+
+def test_block_influence_is_the_one_step_move_of_each_block(case, dense):
+    _, _, spread = case
+    inverse, scores, n, p = dense
+    np.testing.assert_allclose(spread.block_influence, (scores @ inverse)[:, n * p :], rtol=1e-5, atol=1e-9)
+
+
+def test_without_penalty_the_influences_cancel(recording):
+    problem = make_problem(CASES["gaussian"][0], recording, threads=2)
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array(CASES["gaussian"][1])))
+    spread = covariances(problem, optimum)
+    total = spread.block_influence.sum(axis=0)
+    np.testing.assert_allclose(total / np.sqrt(np.diag(spread.shared_model)), 0.0, atol=1e-4)
+
+
+def test_a_parameter_at_its_bound_has_no_variance_and_leaves_the_others_conditional(recording):
+    problem = make_problem(model("exponential", leak_rate=LEAK), simulated(2, lambda d: np.where(d > 180, 0.2, 0.1)))
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05, np.log(500.0)])))
+    spread = covariances(problem, optimum)
+    np.testing.assert_array_equal(np.isnan(spread.shared_model), [[False, True], [True, True]])
+    np.testing.assert_array_equal(np.isnan(spread.shared_robust), [[False, True], [True, True]])
+    assert np.isnan(spread.block_influence[:, 1]).all()
+    assert spread.weak_direction is None
+    assert np.isfinite(spread.own_model).all()
+
+
+def test_one_block_of_time_has_no_robust_variance(recording):
+    problem = make_problem(model("flat", leak_rate=LEAK), recording.select(stop_s=0.9), threads=1)
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05])))
+    spread = covariances(problem, optimum)
+    assert spread.n_blocks == 1
+    assert np.isnan(spread.shared_robust).all()
+    assert np.isfinite(spread.shared_model).all()
+
+
+def test_parameters_that_cannot_be_told_apart_are_named():
+    """Two bands, one of them without pairs: no information on its amplitude."""
+    problem = make_problem(model(Bands((10_000.0,)), leak_rate=LEAK), simulated(1), threads=1)
+    held = np.array([False, True])
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05, 0.0])), held=held)
+    spread = covariances(problem, dataclasses.replace(optimum, free=np.array([True, True])))
+    np.testing.assert_array_equal(spread.weak_direction, [0.0, 1.0])
+    assert np.isnan(spread.shared_model).all()
+    assert np.isfinite(spread.own_model).all()
+
+
+@pytest.mark.parametrize(
+    ("duration", "leak", "length"),
+    [(1000.0, 40.0, 10.0), (50.0, 40.0, 1.0), (1000.0, 0.5, 40.0), (60.0, 100.0, 1.0), (3600.0, 1.0, 36.0)],
+)
+def test_length_of_blocks(duration, leak, length):
+    """About a hundred, none shorter than 1 s or 20 time constants (MODEL.md section 8)."""
+    assert block_length_s(duration, leak) == pytest.approx(length)
