@@ -82,13 +82,14 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
     held : (Q,) shared parameters that stay at their start (a discrete one, profiled elsewhere)
     """
     problem.clock.stage = "climbing"
+    if problem.model.leak_rate is not None and not any(p.shape for p in problem.kernel.parameters(problem.span)):
+        return _only_hill(problem, null, held)
     floor = null.optimum.local.objective
     starts: list[Estimate] = []
     for rank, sweep in enumerate(promising(null.sweeps)):
         starts += start_estimates(problem, null, sweep, N_SHAPES if rank == 0 else 1)
-    linear = problem.model.leak_rate is not None and not any(p.shape for p in problem.kernel.parameters(problem.span))
     climbed = []
-    for start in starts[:1] if linear else starts:
+    for start in starts:
         begin = shrunk(problem, start, floor)
         climbed.append(maximise(problem, begin, held=held, tolerance=LOOSE, max_iterations=LOOSE_ITERATIONS))
     records = tuple(StartRecord(problem.leak(o.estimate.shared), o.local.objective, o.n_iterations) for o in climbed)
@@ -106,6 +107,15 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
                 second = finished
                 break
     return SearchResult(replace(top, n_iterations=top.n_iterations + ranked[0].n_iterations), second, records)
+
+
+def _only_hill(problem: Problem, null: Null, held: BoolArray | None) -> SearchResult:
+    """At a fixed leak, a kernel linear in its coefficients: the objective is concave, so no coupling is as good a start
+    as any, and unlike one-step estimates it never lies on a slope too steep to climb straight on."""
+    begin = Estimate(null.optimum.estimate.own, np.zeros(problem.n_shared))
+    top = maximise(problem, begin, held=held, tolerance=TIGHT)
+    start = StartRecord(problem.leak(top.estimate.shared), top.local.objective, top.n_iterations)
+    return SearchResult(top, None, (start,))
 
 
 def _apart(problem: Problem, a: FloatArray, b: FloatArray) -> bool:
