@@ -21,7 +21,7 @@ from kernelfit.engine.evaluate import Evaluation
 from kernelfit.fitting.arrow import Arrow, eliminate
 from kernelfit.fitting.problem import Estimate, Problem
 
-TIGHT = 1e-10  # squared length of the next step in standard errors
+TIGHT = 1e-10  # squared length of the next step in standard errors; that step is taken too, which squares the error
 LOOSE = 1e-2
 MAX_ITERATIONS = 200
 LONGEST_SHARED_STEP = 1.0  # on the log scale of lengths and leak: no more than a factor e at once
@@ -144,7 +144,8 @@ def maximise(
             step = _solve(local, free, 0.0, correction)
             decrement = step.gain
             if decrement < tolerance:
-                converged, message = True, f"the next step is {np.sqrt(max(decrement, 0.0)):.1e} standard errors long"
+                converged, message = True, f"the last step was {np.sqrt(max(decrement, 0.0)):.1e} standard errors long"
+                local = _last_step(problem, local, step, bounds) if tolerance <= TIGHT else local
                 break
         except np.linalg.LinAlgError:
             decrement = np.inf
@@ -196,6 +197,15 @@ def _pushed_out(local: Local, bounds: FloatArray) -> BoolArray:
     if x.size == 0:
         return np.zeros(0, dtype=bool)
     return np.asarray(((x <= bounds[:, 0]) & (g < 0)) | ((x >= bounds[:, 1]) & (g > 0)), dtype=bool)
+
+
+def _last_step(problem: Problem, local: Local, step: _Step, bounds: FloatArray) -> Local:
+    """The point one undamped step on, unless rounding makes it a worse one."""
+    shared = local.estimate.shared + step.shared
+    inside = np.clip(shared, bounds[:, 0], bounds[:, 1]) if shared.size else shared
+    candidate = evaluate_locally(problem, Estimate(local.estimate.own + step.own, inside))
+    slack = ROUNDING * abs(local.objective)
+    return candidate if candidate.finite and candidate.objective >= local.objective - slack else local
 
 
 def _solve(local: Local, free: BoolArray, damping: float, correction: FloatArray) -> _Step:
