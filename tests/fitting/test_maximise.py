@@ -72,8 +72,8 @@ def test_the_score_vanishes_at_the_optimum(recording):
     optimum = maximise(problem, start_of(problem, CASES["gaussian"][1]))
     local = optimum.local
     assert optimum.decrement < TIGHT
-    assert np.abs(local.score_own / np.sqrt(np.einsum("nii->ni", local.information.own))).max() < 1e-4
-    assert np.abs(local.score_shared / np.sqrt(np.diag(local.information.shared))).max() < 1e-4
+    assert np.abs(local.score_own / np.sqrt(np.einsum("nii->ni", local.information.own))).max() < 1e-6
+    assert np.abs(local.score_shared / np.sqrt(np.diag(local.information.shared))).max() < 1e-6
     np.testing.assert_array_equal(optimum.at_bound, 0.0)
     assert optimum.free.all()
 
