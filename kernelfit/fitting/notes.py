@@ -64,7 +64,9 @@ def fit_notes(
         notes.append(
             Note(
                 "warning",
-                f"The recording cannot tell {' and '.join(named)} apart: some combination of them changes nothing.",
+                f"The recording cannot tell {' and '.join(named)} apart: some combination of them changes nothing."
+                if len(named) > 1
+                else f"The recording says nothing about {named[0]}.",
                 ", ".join(named),
                 "Use a kernel with fewer parameters, or fix the leak rate.",
             )

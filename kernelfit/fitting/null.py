@@ -104,11 +104,12 @@ def fit_null(problem: Problem) -> Null:
     distance = np.bincount(band, weights=problem.geometry.distinct_um * n_pairs) / np.bincount(band, weights=n_pairs)
     blocks = null_blocks(problem)
     problem.clock.stage = "looking for coupling"
-    sweeps = tuple(_sweep(problem, bands, float(leak), optimum.estimate, blocks) for leak in leak_grid(problem))
+    sweeps = tuple(null_sweep(problem, bands, float(leak), optimum.estimate, blocks) for leak in leak_grid(problem))
     return Null(problem, optimum, bands, distance, sweeps)
 
 
-def _sweep(problem: Problem, bands: Bands, leak: float, null: Estimate, blocks: TimeBlocks) -> NullSweep:
+def null_sweep(problem: Problem, bands: Bands, leak: float, null: Estimate, blocks: TimeBlocks) -> NullSweep:
+    """One sweep at the null estimate with coupling in these bands at this leak rate (1/s), by blocks of time."""
     here = with_bands(problem, bands, leak)
     estimate = Estimate(null.own, np.zeros(here.n_shared))
     sums = here.evaluate(estimate, blocks=blocks)

@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
 from scipy.stats import chi2
 
-from kernelfit._typing import BoolArray, FloatArray
+from kernelfit._typing import FloatArray
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
-from kernelfit.fitting.null import Null, NullSweep, _sweep, null_blocks
+from kernelfit.fitting.null import Null, NullSweep, null_blocks, null_sweep
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.search import SearchResult, StartRecord, promising
 from kernelfit.kernels.bands import Bands
@@ -90,10 +91,9 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
     return SearchResult(optima[best], None, tuple(records)), profile
 
 
-def _widen(objective: FloatArray, best: int, n: int, climb: object) -> None:
+def _widen(objective: FloatArray, best: int, n: int, climb: Callable[[int, int], None]) -> None:
     """Climb outwards from the best radius until the likelihood has dropped enough for a wide interval."""
     enough = 0.5 * float(chi2.ppf(0.999, 1)) * 4.0  # room for a robust variance four times the model's
-    assert callable(climb)
     for side in (-1, 1):
         k = best + side
         while 0 <= k < n:
@@ -110,7 +110,7 @@ def _gain_by_radius(
     """Gain a quadratic promises for each radius, and the amplitude, from one sweep with fine bands."""
     chosen = np.unique(np.linspace(0, candidates.size - 1, min(MOST_BANDS, candidates.size)).astype(int))
     bands = Bands(tuple(float(r) for r in candidates[chosen]))
-    fine = _sweep(problem, bands, sweep.leak, null.optimum.estimate, null_blocks(problem))
+    fine = null_sweep(problem, bands, sweep.leak, null.optimum.estimate, null_blocks(problem))
     score = fine.information @ fine.coupling
     gains, amplitudes = np.full(candidates.size, -np.inf), np.zeros(candidates.size)
     for place, k in enumerate(chosen):
@@ -127,11 +127,3 @@ def _start(problem: Problem, null: Null, sweep: NullSweep, place: int, radius_um
     theta[place] = np.log(radius_um)
     rest = [0.0] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)
     return Estimate(null.optimum.estimate.own, np.concatenate([theta, rest]))
-
-
-def held_mask(problem: Problem, place: int | None) -> BoolArray:
-    """(Q,) True for the discrete parameter."""
-    mask = np.zeros(problem.n_shared, dtype=bool)
-    if place is not None:
-        mask[place] = True
-    return mask
