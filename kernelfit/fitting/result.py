@@ -11,7 +11,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
-from kernelfit.engine.evaluate import Point, SweepData, compensate, expected_counts
+from kernelfit.engine.evaluate import Point, SweepData, compensate, evaluate, expected_counts
 from kernelfit.errors import ArgumentError, StorageError, Unavailable
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.outcome import FittedRates, Note, ScoreTest, SolverReport
@@ -24,6 +24,7 @@ if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness
 
 LEVEL = 0.95
+SAME_LIKELIHOOD = 1e-9  # relative: sums in another order differ by less, another recording by more
 SAME_SITE_NAME = "same_site"
 LEAK_NAME = "leak_rate"
 
@@ -322,7 +323,22 @@ class CouplingFit:
             )
         data = SweepData.from_grid(grid, self.targets)
         geometry = geometry_of(self.model, recording, self.targets)
-        return grid, data, self.point(data, geometry.distance_index, geometry.own_site)
+        same = geometry.distinct_um.shape == self.distinct_um.shape
+        if same:
+            point = self.point(data, geometry.distance_index, geometry.own_site)
+            same = recording is self.recording or self._likelihood_is(data, point)
+        if not same:
+            raise StorageError(
+                f"{recording.origin.name('spikes')} and {self.origin.name('spikes')}: this recording is not the one "
+                "that was fitted: units and numbers of spikes agree, but spike times, positions, windows or excluded pairs "
+                "do not. Give the same tables."
+            )
+        return grid, data, point
+
+    def _likelihood_is(self, data: SweepData, point: Point) -> bool:
+        """Whether the log-likelihood on these data is the fit's: it is not on another recording."""
+        here = float(evaluate(data, point, derivatives=False).log_likelihood.sum()) - data.log_factorials
+        return bool(abs(here - self.log_likelihood) <= SAME_LIKELIHOOD * abs(self.log_likelihood))
 
     def goodness(self, recording: Recording | None = None, seed: int = 0) -> Goodness:
         """Does the model describe the recording? Time rescaling with the discrete-time correction.

@@ -1,8 +1,11 @@
-"""Fits on disk: one JSON file, readable by anything, with no code in it. Floating-point numbers come back to the
-bit."""
+"""Fits on disk: one JSON file, readable by anything, with no code in it.
+
+Floating-point numbers come back to the bit, and a check sum tells a file that was cut short, garbled or edited.
+"""
 
 from __future__ import annotations
 
+import hashlib
 import json
 import math
 import os
@@ -20,13 +23,14 @@ from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.outcome import Note, ScoreTest, SolverReport
 from kernelfit.fitting.result import CouplingFit, Uncertainty, covariance_kind
 from kernelfit.fitting.search import StartRecord
-from kernelfit.kernels import DistanceRange, kernel_from_description
+from kernelfit.kernels import KERNELS, DistanceRange, kernel_from_description
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.model.terms import AfterSpike, NoAfterSpike
 from kernelfit.recording.recording import Origin, SourceFile
 
 FORMAT = "kernelfit fit"
 FORMAT_VERSION = 1
+CHECK_SUM = "sha256"
 
 
 def save_fit(fit: CouplingFit, path: Path) -> None:
@@ -36,7 +40,8 @@ def save_fit(fit: CouplingFit, path: Path) -> None:
     ------
     OutputError : the file cannot be written
     """
-    text = json.dumps(describe_fit(fit), indent=1, allow_nan=False)
+    content = describe_fit(fit)
+    text = json.dumps({**content, CHECK_SUM: check_sum(content)}, indent=1, allow_nan=False)
     try:
         handle, temporary = tempfile.mkstemp(dir=path.parent, prefix=f".{path.name}.")
         try:
@@ -65,7 +70,7 @@ def load_fit(path: str | Path) -> CouplingFit:
         content = json.loads(path.read_text(encoding="utf-8"))
     except OSError as error:
         raise StorageError(f"{path}: cannot be read ({error.strerror}). Give the path of a fit.json.") from error
-    except (UnicodeDecodeError, json.JSONDecodeError) as error:
+    except (UnicodeDecodeError, json.JSONDecodeError, RecursionError) as error:
         raise StorageError(
             f"{path}: damaged, or not a saved fit ({error}). Fit again, or copy the file again from where it was made."
         ) from error
@@ -77,13 +82,32 @@ def load_fit(path: str | Path) -> CouplingFit:
             f"{content.get('version')!r}; this version "
             f"reads format {FORMAT_VERSION}. Load it with the version that wrote it, or fit again."
         )
+    stated = content.pop(CHECK_SUM, None)
+    if stated != check_sum(content):
+        raise StorageError(
+            f"{path}: damaged, or edited after it was saved: its check sum does not match. Fit again, or copy the file "
+            "again from where it was made."
+        )
     try:
+        kernel = content["model"]["kernel"]
+        if kernel not in KERNELS:
+            raise StorageError(
+                f"{path}: fitted with the kernel {kernel!r}, which is not one of kernelfit's own "
+                f"({', '.join(KERNELS)}): a kernel written elsewhere cannot be loaded. Fit again where it is defined."
+            )
         return _restore(content)
-    except (KeyError, TypeError, ValueError, IndexError, AttributeError, KernelfitError) as error:
+    except StorageError:
+        raise
+    except (KeyError, TypeError, ValueError, IndexError, AttributeError, ArithmeticError, KernelfitError) as error:
         raise StorageError(
             f"{path}: damaged: {type(error).__name__} at {error}. Fit again, or copy the file again from "
             "where it was made."
         ) from error
+
+
+def check_sum(content: Mapping[str, Any]) -> str:
+    """SHA-256 of what a file says, whatever its layout: keys sorted, no spaces."""
+    return hashlib.sha256(json.dumps(content, sort_keys=True, separators=(",", ":")).encode()).hexdigest()
 
 
 def describe_fit(fit: CouplingFit) -> dict[str, Any]:
@@ -148,7 +172,7 @@ def describe_fit(fit: CouplingFit) -> dict[str, Any]:
         "spectral_radius": fit.spectral_radius,
         "verdict": asdict(fit.verdict),
         "notes": [asdict(n) for n in fit.notes],
-        "solver": _finite(asdict(fit.solver)),
+        "solver": _finite({**asdict(fit.solver), "starts": [_finite(asdict(start)) for start in fit.solver.starts]}),
         "second_optimum": fit.second_optimum,
         "after_spike_test": None if fit.after_spike_test is None else asdict(fit.after_spike_test),
     }
@@ -220,7 +244,7 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
             n_iterations=int(s["n_iterations"]),
             max_gradient=float("inf") if s["max_gradient"] is None else float(s["max_gradient"]),
             message=str(s["message"]),
-            starts=tuple(StartRecord(**start) for start in s["starts"]),
+            starts=tuple(_start(start) for start in s["starts"]),
         ),
         second_optimum=c["second_optimum"],
         after_spike_test=None if c["after_spike_test"] is None else ScoreTest(**c["after_spike_test"]),
@@ -229,6 +253,11 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
         version=str(c["version"]),
         created=str(c["created"]),
     )
+
+
+def _start(values: Mapping[str, Any]) -> StartRecord:
+    objective = values["objective"]  # null: the likelihood there was not finite
+    return StartRecord(values["leak"], -math.inf if objective is None else objective, values["n_iterations"])
 
 
 def _pair(values: Any) -> tuple[float, float]:
