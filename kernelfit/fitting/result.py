@@ -330,8 +330,8 @@ class CouplingFit:
         if not same:
             raise StorageError(
                 f"{recording.origin.name('spikes')} and {self.origin.name('spikes')}: this recording is not the one "
-                "that was fitted: units and numbers of spikes agree, but spike times, positions, windows or excluded pairs "
-                "do not. Give the same tables."
+                "that was fitted: units and numbers of spikes agree, but spike times, positions, windows or excluded "
+                "pairs do not. Give the same tables."
             )
         return grid, data, point
 
