@@ -17,11 +17,11 @@ import typer
 from typer.main import get_command
 
 from kernelfit.cli._console import silence, tell, warnings_as_lines
-from kernelfit.cli._usage import USAGE_ERROR, usage_lines
+from kernelfit.cli._usage import USAGE_ERROR, option_lines, usage_lines
 from kernelfit.cli.demo import demo_command
 from kernelfit.cli.fit import fit_command
 from kernelfit.cli.inspect import inspect_command
-from kernelfit.errors import KernelfitError, NotConvergedError, OutputError
+from kernelfit.errors import KernelfitError, NotConvergedError
 from kernelfit.version import __version__
 
 __all__ = ["app", "main"]
@@ -74,7 +74,7 @@ def main(argv: Sequence[str] | None = None) -> int:
         tell(*usage_lines(error, _command_typed(arguments)))
         return WRONG_INPUT
     except KernelfitError as error:
-        tell(*str(error).splitlines(), *_options_for(error))
+        tell(*str(error).splitlines(), *option_lines(str(error)))
         return NOT_CONVERGED if isinstance(error, NotConvergedError) else WRONG_INPUT
     except (KeyboardInterrupt, typer.Abort):
         tell("", "Interrupted. No results were written.")
@@ -99,13 +99,6 @@ def _run(arguments: list[str]) -> int:
 def _command_typed(arguments: Sequence[str]) -> str:
     known = [command.name for command in app.registered_commands]
     return " ".join(["kernelfit", *(a for a in arguments[:1] if a in known)])
-
-
-def _options_for(error: KernelfitError) -> list[str]:
-    """How the remedy of an error is typed, where its message speaks of Python and command line alike."""
-    if isinstance(error, OutputError):
-        return ["On the command line: --out DIR names another folder, --overwrite replaces earlier results."]
-    return []
 
 
 def _own_fault_lines(error: Exception, arguments: Sequence[str]) -> list[str]:

@@ -110,6 +110,10 @@ SourceOnlyOption: TypeAlias = Annotated[
     list[str] | None,
     typer.Option("--source-only", metavar="IDS", help="Units that drive others and are not explained."),
 ]
+LeaveOutOption: TypeAlias = Annotated[
+    list[str] | None,
+    typer.Option("--leave-out", metavar="IDS", help="Leave out these: ids with commas between; may be repeated."),
+]
 OverwriteOption: TypeAlias = Annotated[
     bool, typer.Option("--overwrite", help="Replace earlier results in the output folder.")
 ]
@@ -133,13 +137,15 @@ class TableOptions:
 class Selection:
     """Which part of the recording is used; the meaning is that of `Recording.select`.
 
-    `units` and `source_only` are as typed: each entry an id, or several with commas between.
+    `units`, `leave_out` and `source_only` are as typed: each entry an id, or several with commas between. Those of
+    `leave_out` are left out of `units`, or of all units where those are not named.
     """
 
     min_spikes: int | None = None
     start_s: float | None = None
     stop_s: float | None = None
     units: Sequence[str] = ()
+    leave_out: Sequence[str] = ()
     source_only: Sequence[str] = ()
 
 
@@ -169,7 +175,7 @@ def read_inputs(
         drop_duplicates=tables.drop_duplicates,
     )
     chosen = recording.select(
-        units=_ids(selection.units, recording) or None,
+        units=_kept(selection, recording),
         min_spikes=selection.min_spikes,
         start_s=selection.start_s,
         stop_s=selection.stop_s,
@@ -195,6 +201,20 @@ def _check(tables: TableOptions, selection: Selection) -> None:
     start, stop = selection.start_s, selection.stop_s
     if start is not None and stop is not None and stop <= start:
         raise ArgumentError(f"--stop-s: {stop:g} is not after --start-s {start:g}. Give a later stop.")
+
+
+def _kept(selection: Selection, recording: Recording) -> list[str] | None:
+    """Ids of the units to keep; None: all."""
+    named = _ids(selection.units, recording)
+    left_out = _ids(selection.leave_out, recording)
+    if not left_out:
+        return named or None
+    for unit in left_out:
+        recording.index_of(unit)
+    kept = [unit for unit in named or recording.unit_ids if unit not in set(left_out)]
+    if not kept:
+        raise ArgumentError("--leave-out: no unit is left. Name fewer units.")
+    return kept
 
 
 def _ids(typed: Iterable[str], recording: Recording) -> list[str]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from difflib import get_close_matches
 from typing import Any
 
@@ -10,6 +11,39 @@ import typer
 # The option parser lives in a package of its own or inside typer, depending on typer's version; its root of
 # wrong calls is reached through the one class that typer has always exported.
 USAGE_ERROR: type[Exception] = typer.BadParameter.__mro__[1]
+
+ALIKE = 0.65  # of the letters of an option, for another to be taken for a slip of the finger
+
+# Messages of the package name arguments as Python has them; these are the options of the same meaning.
+OPTIONS = {
+    "time_unit": "--time-unit",
+    "sampling_rate_hz": "--sampling-rate-hz",
+    "length_unit": "--length-unit",
+    "decimal": "--decimal",
+    "drop_duplicates": "--drop-duplicates",
+    "min_spikes": "--min-spikes",
+    "source_only": "--source-only",
+    "kernel": "--kernel",
+    "n_basis": "--spline-basis",
+    "smoothing": "--smoothing",
+    "bin_width": "--bin-ms (in ms)",
+    "leak_rate": "--leak-rate",
+    "max_distance": "--max-distance-um",
+    "same_site": "--same-site",
+    "after_spike": "--after-spike",
+    "warm_up_s": "--warm-up-s",
+    "covariance": "--covariance",
+}
+_WORDS_TOO = {"decimal", "kernel", "covariance"}  # arguments only where a value follows
+_NAMED = re.compile(r"(?<![-\w])(" + "|".join(OPTIONS) + r")\b(?!-)(\s?=)?")
+
+
+def option_lines(message: str) -> list[str]:
+    """How the arguments that a message names are typed: one line, or none."""
+    named = [name for name, given in _NAMED.findall(message) if given or name not in _WORDS_TOO]
+    if not named:
+        return []
+    return [f"On the command line: {', '.join(f'{name} is {OPTIONS[name]}' for name in dict.fromkeys(named))}."]
 
 
 def usage_lines(error: Exception, typed: str) -> list[str]:
@@ -70,5 +104,5 @@ def _commands(context: Any) -> list[str]:
 
 
 def _closest(typed: str, known: list[str]) -> str:
-    close = get_close_matches(typed, known, n=1, cutoff=0.5)
+    close = get_close_matches(typed, known, n=1, cutoff=ALIKE)
     return f"Did you mean {close[0]}?" if close else "Leave it out, or look for the right one."

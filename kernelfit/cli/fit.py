@@ -13,6 +13,7 @@ from kernelfit.cli._inputs import (
     DropDuplicatesOption,
     ExcludePairsOption,
     ExclusionsOption,
+    LeaveOutOption,
     LengthUnitOption,
     MinSpikesOption,
     OverwriteOption,
@@ -143,7 +144,7 @@ def fit_command(
             "--warm-up-s",
             metavar="S",
             parser=from_zero("--warm-up-s", "seconds, such as 1"),
-            help="Leave this long after each start out of the sum; it still drives.",
+            help="Time after each window's start and each exclusion that only drives and is not explained.",
         ),
     ] = 0.0,
     covariance: Annotated[
@@ -152,10 +153,11 @@ def fit_command(
             "--covariance",
             metavar="KIND",
             parser=one_of("--covariance", COVARIANCES),
-            help="Headline intervals: robust (from blocks of time) or model.",
+            help="Intervals of the report: robust (from blocks of time) or model (right if the model is).",
         ),
     ] = "robust",
     units: UnitsOption = None,
+    leave_out: LeaveOutOption = None,
     source_only: SourceOnlyOption = None,
     min_spikes: MinSpikesOption = None,
     start_s: StartOption = None,
@@ -171,7 +173,9 @@ def fit_command(
     ] = None,
     seed: Annotated[
         int,
-        typer.Option("--seed", metavar="N", parser=whole("--seed", 0), help="Of the randomised tests."),
+        typer.Option(
+            "--seed", metavar="N", parser=whole("--seed", 0), help="Of the draws in the tests of coupling and fit."
+        ),
     ] = 0,
 ) -> int:
     """Fit coupling against distance; write a report and tables.
@@ -210,6 +214,7 @@ def fit_command(
             start_s=start_s,
             stop_s=stop_s,
             units=units or (),
+            leave_out=leave_out or (),
             source_only=source_only or (),
         ),
     )

@@ -17,6 +17,7 @@ from kernelfit.cli._inputs import (
     DropDuplicatesOption,
     ExcludePairsOption,
     ExclusionsOption,
+    LeaveOutOption,
     LengthUnitOption,
     MinSpikesOption,
     OverwriteOption,
@@ -63,6 +64,7 @@ def inspect_command(
         ),
     ] = None,
     units: UnitsOption = None,
+    leave_out: LeaveOutOption = None,
     min_spikes: MinSpikesOption = None,
     start_s: StartOption = None,
     stop_s: StopOption = None,
@@ -107,7 +109,7 @@ def inspect_command(
             decimal=decimal,
             drop_duplicates=drop_duplicates,
         ),
-        Selection(min_spikes=min_spikes, start_s=start_s, stop_s=stop_s, units=units or ()),
+        Selection(min_spikes=min_spikes, start_s=start_s, stop_s=stop_s, units=units or (), leave_out=leave_out or ()),
     )
     inspection = inspect_recording(recording, seed=seed)
     page = (

@@ -62,7 +62,7 @@ def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
     shown = "p < 0.001" if p_value < 0.001 else f"p = {p_value:.2g}"
     advice = (
         f"A unit's own past matters here: an after-spike term would add about {bits:.2g} bits per spike ({shown}). "
-        "Without it the kernel absorbs part of it; fit with after_spike='basis'."
+        "Without it the kernel absorbs part of it; fit with after_spike='basis' (--after-spike basis)."
         if p_value <= 0.05
         else f"An after-spike term would add little: about {bits:.2g} bits per spike ({shown})."
     )

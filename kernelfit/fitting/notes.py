@@ -51,7 +51,8 @@ def fit_notes(
                 "error",
                 f"The fit did not converge: {optimum.message}.",
                 "optimiser",
-                "Treat every number with caution. Try a simpler kernel, wider bins, or a fixed leak rate.",
+                "Treat every number with caution. Try a simpler kernel, wider bins, or a fixed leak rate "
+                "(leak_rate=..., --leak-rate).",
             )
         )
     if not verdict.found:
@@ -68,7 +69,7 @@ def fit_notes(
                 if len(named) > 1
                 else f"The recording says nothing about {named[0]}.",
                 ", ".join(named),
-                "Use a kernel with fewer parameters, or fix the leak rate.",
+                "Use a kernel with fewer parameters, or fix the leak rate (leak_rate=..., --leak-rate).",
             )
         )
     for q, reason in enumerate(bound_reasons(problem, optimum.at_bound)):
@@ -119,7 +120,7 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
                 "info",
                 f"{len(ids)} unit{'s' * (len(ids) != 1)} without a spike in the bins that count: {shown}.",
                 "units",
-                "Baseline minus infinity, rate 0; not explained, still a source where it fires elsewhere.",
+                "Baseline minus infinity, rate 0; not explained, still a source where it fires in other bins.",
             )
         )
     n_same = int(np.triu(problem.geometry.same_site).sum())
@@ -129,7 +130,8 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
                 "info",
                 f"{n_same} pair{'s' * (n_same != 1)} of units on one site left out of the kernel.",
                 "same_site",
-                "Detection hides coincident spikes there; same_site='own' gives them a coefficient of their own.",
+                "Detection hides coincident spikes there; same_site='own' (--same-site own) gives them a coefficient "
+                "of their own.",
             )
         )
     if problem.model.same_site == "own" and not problem.has_same_site:

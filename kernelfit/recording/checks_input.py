@@ -8,7 +8,7 @@ from collections.abc import Iterator
 import numpy as np
 
 from kernelfit.recording.evidence import Evidence
-from kernelfit.recording.findings import Finding, counted, names, number, percent, seconds
+from kernelfit.recording.findings import LEAVE_OUT, Finding, counted, names, number, percent, seconds
 
 MAX_RATE_HZ = 500.0
 MIN_EXTENT_UM, MAX_EXTENT_UM = 10.0, 50_000.0
@@ -173,5 +173,5 @@ def _copies(e: Evidence) -> Iterator[Finding]:
             "error",
             f"{counted(sum(map(len, copies)), 'unit')} have exactly the same spike times as another unit.",
             f"{e.recording.origin.name('spikes')}: {names([' = '.join(g) for g in copies])}",
-            "Keep one of each (rec.select(units=...)): the same train twice looks like perfect coupling.",
+            f"Keep one of each ({LEAVE_OUT}): the same train twice looks like perfect coupling.",
         )

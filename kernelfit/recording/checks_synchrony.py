@@ -11,7 +11,7 @@ from kernelfit._typing import FloatArray
 from kernelfit.recording.coincidence import COARSEST_S, pairs_to_leave_out
 from kernelfit.recording.correlogram import lag_measure
 from kernelfit.recording.evidence import Evidence
-from kernelfit.recording.findings import Finding, counted, names, number, percent, seconds
+from kernelfit.recording.findings import LEAVE_OUT, Finding, counted, names, number, percent, seconds
 
 LOST_SHARE = 0.5
 MUCH = 0.25  # of the spikes: then the events are perhaps the tissue's own
@@ -50,9 +50,9 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
         yield Finding(
             "only_in_proposed",
             "warning",
-            f"{counted(int(lost.sum()), 'unit')} with every spike inside these moments: artefact and nothing else.",
+            f"{counted(int(lost.sum()), 'unit')} with every spike inside these moments: artefacts and nothing else.",
             names(e.units_where(lost)),
-            "With the exclusions they fall silent; leave them out with rec.select(units=...).",
+            f"The exclusions leave nothing of them; leave them out ({LEAVE_OUT}).",
         )
     most_lost = (counts > 0) & (e.n_proposed > LOST_SHARE * counts) & ~lost
     if most_lost.any():
@@ -62,7 +62,7 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
             f"{counted(int(most_lost.sum()), 'unit')} with more than half of their spikes inside these moments: "
             "sites that hardly saw tissue.",
             names(e.units_where(most_lost)),
-            "Consider leaving them out (rec.select(units=...)), and see what changes.",
+            f"Consider leaving them out ({LEAVE_OUT}), and see what changes.",
         )
 
 

@@ -8,7 +8,7 @@ import numpy as np
 from scipy import stats
 
 from kernelfit.recording.evidence import Evidence
-from kernelfit.recording.findings import Finding, counted, number, percent, seconds
+from kernelfit.recording.findings import CUT, Finding, counted, number, percent, seconds
 
 CHANGE, LARGE_CHANGE = 1.5, 2.0
 CHANGE_P = 0.01
@@ -47,8 +47,8 @@ def _blocks(e: Evidence) -> Iterator[Finding]:
         f"The mean rate changes {times} over blocks of {seconds(e.blocks.length_s)} ({number(low.rate_hz)} "
         f"to {number(high.rate_hz)} Hz), {beyond}.",
         f"quietest block from {number(low.start_s)} s, busiest from {number(high.start_s)} s",
-        "A drifting rate looks like slow, far-reaching coupling. Add a rate course to the model, fit a "
-        "steady stretch (rec.select(start_s=..., stop_s=...)), or fit both halves and compare.",
+        f"A drifting rate looks like slow, far-reaching coupling. Fit a steady stretch ({CUT}), or fit both halves "
+        "and compare.",
     )
 
 

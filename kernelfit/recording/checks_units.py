@@ -9,7 +9,7 @@ import numpy as np
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.recording.activity import come_and_go
 from kernelfit.recording.evidence import Evidence
-from kernelfit.recording.findings import Finding, counted, names, number, percent, seconds
+from kernelfit.recording.findings import CUT, LEAVE_OUT, Finding, counted, names, number, percent, seconds
 
 FEW_SPIKES = 30  # fewer leave a baseline known to no better than a fifth either way
 SHORT_SHARE = 0.01  # common practice, no source; ranges of 0.5 to 2 % are in use
@@ -36,7 +36,7 @@ def _silent(e: Evidence) -> Iterator[Finding]:
             f"{counted(int(all_excluded.sum()), 'unit')} with every spike inside the exclusions: nothing of "
             "them is left.",
             names(e.units_where(all_excluded)),
-            "They hold artefacts only; leave them out with rec.select(min_spikes=1).",
+            "They hold artefacts only; leave them out with rec.select(min_spikes=1) or --min-spikes 1.",
         )
     silent = (counts == 0) & ~all_excluded
     if silent.any():
@@ -46,7 +46,8 @@ def _silent(e: Evidence) -> Iterator[Finding]:
             f"{counted(int(silent.sum()), 'unit')} of {counts.size} without a spike in the windows.",
             names(e.units_where(silent)),
             "They stay in the result as silent, without a baseline. If they should have fired, compare the "
-            "unit ids of the spikes and sites tables; to leave them out use rec.select(min_spikes=1).",
+            "unit ids of the spikes and sites tables; to leave them out use rec.select(min_spikes=1), or "
+            "--min-spikes 1.",
         )
     few = (counts > 0) & (counts < FEW_SPIKES)
     if few.any():
@@ -55,7 +56,8 @@ def _silent(e: Evidence) -> Iterator[Finding]:
             "info",
             f"{counted(int(few.sum()), 'unit')} with fewer than {FEW_SPIKES} spikes: their baselines are hardly known.",
             names([f"{e.recording.unit_ids[k]} ({counts[k]})" for k in np.flatnonzero(few)]),
-            f"To leave them out use rec.select(min_spikes={FEW_SPIKES}), and see what changes.",
+            f"To leave them out use rec.select(min_spikes={FEW_SPIKES}), or --min-spikes {FEW_SPIKES}, and see what "
+            "changes.",
         )
 
 
@@ -83,7 +85,7 @@ def _short_intervals(e: Evidence) -> Iterator[Finding]:
             f"{counted(int(bad.sum()), 'unit')} with more than 1 % of intervals below 1 ms, the usual mark "
             "(common practice, no source): several cells in one unit, or spikes counted twice.",
             listed,
-            "Sort again or leave them out (rec.select(units=...)), and see what changes.",
+            f"Sort again or leave them out ({LEAVE_OUT}), and see what changes.",
         )
     bad = (held.n_medium >= MIN_SHORT) & (np.nan_to_num(held.share_medium) > SHORT_SHARE)
     if bad.any():
@@ -118,7 +120,7 @@ def _same_site(e: Evidence) -> Iterator[Finding]:
         f"{counted(len(sites), 'site')} of {e.layout.n_sites} hold several units, {counted(n_pairs, 'pair')}{note}.",
         names(sites, shown=6),
         "Such pairs are left out of the kernel by default, because a detector on one site misses "
-        "overlapping spikes; same_site='own' gives them a coefficient of their own.",
+        "overlapping spikes; same_site='own' (--same-site own) gives them a coefficient of their own.",
     )
 
 
@@ -134,7 +136,7 @@ def _uneven(e: Evidence) -> Iterator[Finding]:
             f"One unit holds {percent(float(share[k]))} of all spikes, {number(float(e.rate_hz[k]))} Hz "
             f"against a median of {number(float(np.median(e.rate_hz)))} Hz: it may carry the result alone.",
             e.recording.unit_ids[k],
-            "Fit once without it (rec.select(units=...)), and see what changes.",
+            f"Fit once without it ({LEAVE_OUT}), and see what changes.",
         )
     lost = come_and_go(e.blocks)
     if lost.any():
@@ -145,5 +147,5 @@ def _uneven(e: Evidence) -> Iterator[Finding]:
             "last third of the recording: a cell or contact that came or went. The model takes its silence "
             "for a low rate.",
             names(e.units_where(lost)),
-            "Cut the recording (rec.select(start_s=..., stop_s=...)) or leave the units out.",
+            f"Cut the recording ({CUT}) or leave the units out ({LEAVE_OUT}).",
         )

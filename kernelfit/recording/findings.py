@@ -11,6 +11,10 @@ Severity: TypeAlias = Literal["error", "warning", "info"]
 SEVERITIES: tuple[Severity, ...] = ("error", "warning", "info")
 _NAMES_SHOWN = 8
 
+# What can be done, as it is written in Python and on the command line.
+LEAVE_OUT = "rec.select(units=...) with the others, or --leave-out"
+CUT = "rec.select(start_s=..., stop_s=...), or --start-s and --stop-s"
+
 
 @dataclass(frozen=True, slots=True)
 class Finding:

@@ -92,10 +92,10 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
 
     stretches, window_of = _stretches(recording, bin_width, warm_up_s, first_bin, n_bins)
     if len(stretches) == 0:
+        table = recording.origin.name("exclusions" if len(recording.exclusion_bounds) else "windows")
         raise GridError(
-            f"{recording.origin.name('exclusions')}: with bins of {bin_width:g} s, exclusions and a "
-            f"warm-up of {warm_up_s:g} s "
-            "leave no bin of any window. Use fewer exclusions, a shorter warm-up or narrower bins."
+            f"{table}: with bins of {bin_width:g} s, exclusions and a warm-up of {warm_up_s:g} s leave no bin of any "
+            "window. Use fewer exclusions, a shorter warm-up or narrower bins."
         )
     event_bin, event_unit, event_count, n_outside, n_excluded = _events(recording, bin_width, first_bin, n_bins)
     grid = Grid(

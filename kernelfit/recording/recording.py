@@ -45,12 +45,22 @@ class Origin:
     notes: tuple[str, ...] = ()
 
     def name(self, role: str) -> str:
-        """File name of the table in that role, or "<role> table" where it came from memory."""
+        """File name of the table in that role, or "<role> table" where it came from memory.
+
+        A window that was derived from the spikes goes by the name of the spikes table.
+        """
+        if role == "windows" and not self.windows_stated:
+            role = "spikes"
         return next((f.name for f in self.files if f.role == role), f"{role} table")
 
     def noted(self, note: str) -> Origin:
         """The same origin with one more note."""
         return replace(self, notes=(*self.notes, note))
+
+
+def _between(start_s: float | None, stop_s: float | None) -> str:
+    start = "" if start_s is None else f" from start_s={start_s:g} on"
+    return start if stop_s is None else f"{start} up to stop_s={stop_s:g}"
 
 
 def _frozen(values: FloatArray) -> FloatArray:
@@ -338,8 +348,8 @@ class Recording:
         if not keep.any():
             first, last = self.window_bounds[0, 0], self.window_bounds[-1, 1]
             raise RecordingError(
-                f"{self.origin.name('windows')}: nothing of the windows is left between start_s={start_s} and "
-                f"stop_s={stop_s}. The recording runs from {first:g} s to {last:g} s."
+                f"{self.origin.name('windows')}: nothing of the windows is left{_between(start_s, stop_s)}. "
+                f"The recording runs from {first:g} s to {last:g} s. Give times within."
             )
 
         def kept(labels: tuple[str, ...] | None) -> tuple[str, ...] | None:

@@ -61,6 +61,18 @@ if TYPE_CHECKING:
     from kernelfit.fitting.outcome import Note
     from kernelfit.fitting.result import CouplingFit
 
+# Where a note belongs, in words; "" where the note itself says it.
+_PLACES = {
+    "bin_width": "bin width",
+    "coupling": "",
+    "covariance": "robust intervals",
+    "exclusions": "",
+    "leak_rate": "leak rate",
+    "optimiser": "",
+    "same_site": "",
+    "units": "",
+    "windows": "",
+}
 NOTICES_SHOWN = 8  # at the top of the page; all notes stand in the section on how sure the numbers are
 AFTER_SPIKE_SHOWN = 2.0  # longest lag of the after-spike figure, in longest time constants of its basis
 
@@ -211,7 +223,8 @@ def _said(note: Note, fit: CouplingFit) -> bool:
 
 def note_text(note: Note) -> str:
     """One note as a line: what, where, remedy."""
-    where = f" Where: {note.where.rstrip('.')}." if note.where else ""
+    place = _PLACES.get(note.where, note.where).rstrip(".")
+    where = f" Where: {place}." if place else ""
     return f"{note.what}{where}{' ' if note.remedy else ''}{note.remedy}"
 
 

@@ -192,7 +192,7 @@ def after_spike_data(fit: CouplingFit, shown: float) -> AfterSpikeData | Unavail
     """After-spike curves over the units that have one, up to `shown` times the longest time constant."""
     constants = fit.model.after_spike.constants(fit.model.bin_width)
     if constants.size == 0:
-        return Unavailable('the model has no after-spike term (after_spike="none")')
+        return Unavailable('the model has no after-spike term')
     longest = max(shown * float(constants[-1]), 10.0 * fit.model.bin_width)
     lag = np.geomspace(fit.model.bin_width, longest, 140)
     curves = fit.after_spike_curves(lag)

@@ -45,10 +45,10 @@ def check_folder(path: str | os.PathLike[str], *, overwrite: bool = False) -> No
     if not target.exists():
         blocking = next((p for p in target.parents if p.exists()), None)
         if blocking is not None and not blocking.is_dir():
-            raise OutputError(f"{path}: {blocking} is a file. Give another place for the results.")
+            raise OutputError(f"{path}: {blocking} is a file. Give another folder for the results.")
         return
     if not target.is_dir():
-        raise OutputError(f"{path}: this is a file. Give the name of a folder for the results.")
+        raise OutputError(f"{path}: this is a file. Give another name to the folder for the results.")
     found = _files_in(target)
     if not found:
         return

@@ -13,6 +13,7 @@ from pathlib import Path
 import pytest
 
 from kernelfit.cli import main
+from kernelfit.cli._usage import OPTIONS, option_lines
 
 UNITS = ("a1", "a2", "b1", "b2")
 PLACES = {"a1": (0, 0), "a2": (100, 0), "b1": (0, 100), "b2": (100, 130)}
@@ -97,10 +98,10 @@ FILE_CASES = {
     "time is infinite": spikes(GOOD_SPIKES + "a1,inf\n", "row", "time_s", "'inf'"),
     "time is not a number": spikes(GOOD_SPIKES + "a1,nan\n", "row", "time_s", "nan"),
     "time with decimal comma": spikes(
-        "unit;time_s\na1;12,350\na2;13,5\n", "row 2", "time_s", "'12,350'", "12.350", "decimal"
+        "unit;time_s\na1;12,350\na2;13,5\n", "row 2", "time_s", "'12,350'", "12.350", "--decimal"
     ),
     "row with too many cells": spikes(GOOD_SPIKES + "a1,1.5,9,9\n", "row"),
-    "duplicate spike": spikes(GOOD_SPIKES + "a1,0.02\n", "row", "a1", "duplicate"),
+    "duplicate spike": spikes(GOOD_SPIKES + "a1,0.02\n", "row", "a1", "duplicate", "--drop-duplicates"),
     "spike of unknown unit": spikes(GOOD_SPIKES + "zz9,1.234\n", "row", "'zz9'", "sites.csv"),
     "spike without unit": spikes(GOOD_SPIKES + ",1.234\n", "row", "unit"),
     "spikes not text": Case(FIT, ("spikes.csv",), {"spikes.csv": bytes(range(256)) * 4}),
@@ -151,18 +152,18 @@ CALL_CASES = {
     "bin width negative": option("--bin-ms -1", "--bin-ms", "above 0"),
     "bin width not a number": option("--bin-ms nan", "--bin-ms", "above 0"),
     "bin width infinite": option("--bin-ms inf", "--bin-ms", "above 0"),
-    "bin width beyond the recording": option("--bin-ms 60000", "wider than window", "at most"),
+    "bin width beyond the recording": option("--bin-ms 60000", "spikes.csv", "wider than window", "--bin-ms"),
     "kernel unknown": option("--kernel ricker", "--kernel", "'ricker'", "mexican-hat"),
     "link unknown": option("--link probit", "--link", "'probit'", "exp"),
     "leak rate zero": option("--leak-rate 0", "--leak-rate", "above 0", "time constant"),
     "leak rate negative": option("--leak-rate -5", "--leak-rate", "above 0"),
     "largest distance negative": option("--max-distance-um -5", "--max-distance-um", "above 0"),
-    "largest distance below the pitch": option("--max-distance-um 5", "5", "distance"),
+    "largest distance below the pitch": option("--max-distance-um 5", "5", "distance", "--max-distance-um"),
     "same site unknown": option("--same-site drop", "--same-site", "'drop'", "exclude, own, kernel"),
     "after-spike unknown": option("--after-spike off", "--after-spike", "'off'", "basis, none"),
     "covariance unknown": option("--covariance hac", "--covariance", "'hac'", "robust, model"),
     "warm-up negative": option("--warm-up-s -1", "--warm-up-s", "0 or more"),
-    "warm-up beyond the window": option("--warm-up-s 100", "warm-up", "shorter"),
+    "warm-up beyond the window": option("--warm-up-s 100", "spikes.csv", "warm-up", "shorter"),
     "threads none": option("--threads 0", "--threads", "1 or more"),
     "threads a fraction": option("--threads 1.5", "--threads", "'1.5'", "whole number"),
     "seed negative": option("--seed -1", "--seed", "0 or more"),
@@ -176,8 +177,10 @@ CALL_CASES = {
     "least spikes beyond all": option("--min-spikes 5000", "min_spikes", "Widen"),
     "start not a time": option("--start-s nan", "--start-s", "seconds"),
     "stop before start": option("--start-s 9 --stop-s 3", "--stop-s", "later stop"),
-    "start after the end": option("--start-s 500", "start_s=500", "runs from"),
+    "start after the end": option("--start-s 500", "spikes.csv", "start_s=500", "runs from"),
     "unit unknown": option("--units a1,zz", "'zz'", "closest"),
+    "unit to leave out unknown": option("--leave-out zz", "'zz'", "closest"),
+    "all units left out": option("--leave-out a1,a2,b1,b2", "--leave-out", "Name fewer"),
     "source unknown": option("--source-only zz", "'zz'", "closest"),
     "every unit source only": option("--source-only a1,a2,b1,b2", "--source-only", "Name fewer"),
     "one unit left": option("--units a1", "sites.csv", "two units at different sites"),
@@ -185,7 +188,7 @@ CALL_CASES = {
     "smoothing without spline": option("--smoothing 1", "--smoothing", "--kernel spline"),
     "spline too small": option("--kernel spline --spline-basis 2", "--spline-basis", "4"),
     "smoothing negative": option("--kernel spline --smoothing -1", "--smoothing", "0 or more"),
-    "spline beyond the distances": option("--kernel spline --spline-basis 12", "distances"),
+    "spline beyond the distances": option("--kernel spline --spline-basis 12", "distances", "--smoothing"),
     "results place is a file": option("--out sites.csv", "sites.csv", "folder"),
     "results place under a file": option("--out sites.csv/results", "sites.csv", "folder"),
     "results folder not empty": Case(
@@ -231,6 +234,28 @@ def test_bad_input_is_refused_with_place_and_remedy(
     assert not set("│╭╰\x1b") & set(printed.err), "plain lines, no boxes, no colours"
     assert printed.out == ""
     assert everything_under(tmp_path) == before, "nothing is written on failure"
+
+
+@pytest.mark.parametrize(
+    ("message", "line"),
+    [
+        ("Load with decimal=',' or write 12.3.", ["On the command line: decimal is --decimal."]),
+        (
+            "Check time_unit, or bin_width=2.",
+            ["On the command line: time_unit is --time-unit, bin_width is --bin-ms (in ms)."],
+        ),
+        ("The kernel needs decimal places. Add --time-unit.", []),
+        ("u.csv: no unit 'kernel'.", []),
+    ],
+)
+def test_arguments_that_a_message_names_are_also_given_as_typed(message: str, line: list[str]) -> None:
+    assert option_lines(message) == line
+
+
+def test_every_option_that_stands_for_an_argument_exists(capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["fit", "--help"]) == 0
+    shown = capsys.readouterr().out
+    assert [o for o in OPTIONS.values() if o.split()[0] not in shown] == []
 
 
 def test_there_are_many_kinds() -> None:

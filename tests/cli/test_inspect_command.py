@@ -95,7 +95,7 @@ def test_wrong_calls_end_with_2_and_leave_nothing(
 def test_units_of_measure_are_taken_from_options(tables: tuple[Path, Path], capsys: pytest.CaptureFixture[str]) -> None:
     assert call(*tables, "--length-unit", "mm") == 0
     assert "error: The array measures 283 mm" in capsys.readouterr().out
-    assert call(*tables, "--units", "u0,u1,u2", "--start-s", "0", "--stop-s", "50") == 0
+    assert call(*tables, "--units", "u0,u1,u2,u3", "--leave-out", "u3", "--start-s", "0", "--stop-s", "50") == 0
     assert capsys.readouterr().out.startswith("3 units, ")
 
 

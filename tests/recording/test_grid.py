@@ -263,7 +263,7 @@ FILES = (SourceFile("windows", "w.csv", ""), SourceFile("exclusions", "artefacts
         (0.1, np.nan, ["warm_up_s=nan"]),
         (1e-13, 0.0, ["bins", "Is the width in seconds? 1 ms is 0.001"]),
         (5.0, 0.0, ["w.csv", "wider than window 2 (10 to 11 s)", "at most 1 s", "10 ms is 0.01"]),
-        (0.1, 20.0, ["artefacts.csv", "warm-up of 20 s", "leave no bin"]),
+        (0.1, 20.0, ["w.csv", "warm-up of 20 s", "leave no bin"]),
     ],
 )
 def test_refusals_name_the_place_and_the_remedy(bin_s, warm_up_s, parts):

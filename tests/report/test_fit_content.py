@@ -104,7 +104,7 @@ def test_warnings_stand_at_the_top_and_all_notes_in_the_text():
     )
     found = content_of(notes=notes)
     assert [n.severity for n in found.notices] == ["warning"]
-    assert found.notices[0].text == ("The bins are too wide for the leak found. Where: leak_rate. Use bins of 1 ms.")
+    assert found.notices[0].text == ("The bins are too wide for the leak found. Where: leak rate. Use bins of 1 ms.")
     assert len(found.notes) == 2
 
 
