@@ -1,4 +1,4 @@
-"""What the sweep carries from bin to bin, and how it moves: the recursions of MODEL.md sections 3 and 4.
+"""What the sweep carries from bin to bin, and how it moves: the recursions of docs/model.md sections 3 and 4.
 
 A block of target units ("lanes") is swept at a time. `States.coupling` holds U and its derivatives P_k just after a
 bin's spikes were added; the next bin starts by decaying them. Named tuples, because compiled code takes them apart for

@@ -1,8 +1,9 @@
 """The forward-sensitivity sweep: one pass over time gives log-likelihood, score and expected information.
 
 The states of kernelfit.engine.states fill a tile of a few bins at a time; the tile becomes rates and is added to the
-sums of MODEL.md section 4. Nothing of the length of the recording is stored. The loops know no kernel, only tables of
-J(d_ij) and its derivatives; kernelfit.engine.twin says the same in plain numpy and tests hold one against the other.
+sums of docs/model.md section 4. Nothing of the length of the recording is stored. The loops know no kernel, only
+tables of J(d_ij) and its derivatives; kernelfit.engine.twin says the same in plain numpy and tests hold one against the
+other.
 """
 
 from __future__ import annotations

@@ -1,4 +1,4 @@
-"""Blocks of time: the clusters of the robust variance and the units of the bootstrap (MODEL.md section 8)."""
+"""Blocks of time: the clusters of the robust variance and the units of the bootstrap (docs/model.md section 8)."""
 
 from __future__ import annotations
 

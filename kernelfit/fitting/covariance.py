@@ -49,7 +49,7 @@ class Covariances:
 
 
 def block_length_s(duration_s: float, leak: float) -> float:
-    """About a hundred blocks, none shorter than max(1 s, 20 tau) (MODEL.md section 8)."""
+    """About a hundred blocks, none shorter than max(1 s, 20 tau) (docs/model.md section 8)."""
     return max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S, SHORTEST_BLOCK_TAUS / leak)
 
 

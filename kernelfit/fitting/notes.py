@@ -12,7 +12,7 @@ from kernelfit.fitting.outcome import Note
 from kernelfit.fitting.problem import FASTEST_LEAK_BINS, SLOWEST_LEAK_SHARE, Problem
 from kernelfit.recording.recording import Recording
 
-WIDE_BINS = 0.5  # alpha D above this: the bins are too wide for the leak found (MODEL.md section 3)
+WIDE_BINS = 0.5  # alpha D above this: the bins are too wide for the leak found (docs/model.md section 3)
 FEW_BLOCKS = 30
 
 

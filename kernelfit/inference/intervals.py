@@ -1,4 +1,4 @@
-"""Wald intervals on the scale where they are honest, stated on the scale people read (MODEL.md section 8)."""
+"""Wald intervals on the scale where they are honest, stated on the scale people read (docs/model.md section 8)."""
 
 from __future__ import annotations
 

@@ -1,4 +1,4 @@
-"""Windows and bins: from spike times to sparse sorted counts on one timeline (MODEL.md sections 1 and 3).
+"""Windows and bins: from spike times to sparse sorted counts on one timeline (docs/model.md sections 1 and 3).
 
 All windows of a recording lie on one timeline of bins. Bin 0 starts with the first window; each further window starts
 on a whole bin, the gap before it rounded up. A spike in a window falls into bin floor((t - start)/width + 1e-6) of

@@ -17,7 +17,7 @@ if TYPE_CHECKING:
     from kernelfit.recording.inspection import Inspection
 
 COORDINATES = ("x_um", "y_um", "z_um")
-SAME_SITE_UM = 1.0  # positions closer than this are one site (MODEL.md section 1)
+SAME_SITE_UM = 1.0  # positions closer than this are one site (docs/model.md section 1)
 
 
 @dataclass(frozen=True, slots=True)

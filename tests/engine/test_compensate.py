@@ -10,7 +10,7 @@ from kernelfit.engine.evaluate import compensate, expected_counts
 
 
 def dense_means(data, point, n_bins):
-    """(n_bins, n_targets) expected counts from timeline bin 0 on, from the formulas of MODEL.md section 3 alone."""
+    """(n_bins, n_targets) expected counts from timeline bin 0 on, from docs/model.md section 3 alone."""
     low = min(0, int(data.active_bin.min(initial=0)))
     counts = np.zeros((n_bins - low, data.n_units))
     for k, b in enumerate(data.active_bin):

@@ -83,7 +83,7 @@ def test_spikes_lie_inside_the_window_sorted_and_distinct():
 # J_k = J gamma^k the effect k bins later, Poisson's generating function gives, exactly,
 #   E rate = e^b prod_k exp(m (e^{J_k} - 1)),   Cov(y_{t-k}, y'_t) = m D E rate (e^{J_k} - 1),
 #   E rate_t rate_{t+l} = e^{2b} prod_k exp(m (e^{J_k + J_{k+l}} - 1)) prod_{k<=l} exp(m (e^{J_k} - 1)).
-# Own derivation; to first order in J these are the mean, cross-covariance and count variance of CHECKS.md C1 to C3.
+# Own derivation; to first order in J these are the mean and cross-covariance of Hawkes (1971), Biometrika 58, 83-90.
 
 D, LEAK, JUMP, SOURCE_HZ, TARGET_HZ = 0.005, 25.0, 0.8, 12.0, 5.0
 LAGS = np.arange(1, 400)

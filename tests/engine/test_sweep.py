@@ -14,7 +14,7 @@ from sweep_cases import BIN_S, SUMS, assert_agree, make_case, random_point, size
 from kernelfit.engine.evaluate import SweepData, TimeBlocks, compensate, evaluate, expected_counts, lane_blocks, whole
 from kernelfit.engine.twin import evaluate_plainly
 
-# Source of every expected value: the recursions of MODEL.md section 4, written down once more in plain numpy
+# Source of every expected value: the recursions of docs/model.md section 4, written down once more in plain numpy
 # (kernelfit.engine.twin). 1e-12 of what is added up is the agreement that reordered sums owe their twin.
 
 SHAPES = [

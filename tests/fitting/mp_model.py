@@ -1,4 +1,4 @@
-"""The model of MODEL.md sections 2, 3 and 5 once more, cell by cell in 40-digit arithmetic.
+"""The model of docs/model.md sections 2, 3 and 5 once more, cell by cell in 40-digit arithmetic.
 
 Shares no code with the package but the counts of the grid and, for the spline, its basis functions.
 """
@@ -16,7 +16,7 @@ STEP = mpf(10) ** -12  # central differences: error of order STEP^2 = 1e-24
 
 
 def kernel_value(kernel, theta, d, span):
-    """J(d) from working parameters, by the formulas of MODEL.md section 5."""
+    """J(d) from working parameters, by the formulas of docs/model.md section 5."""
     r, m = mpf(span.reference_um), span.n_coordinates
     name = kernel.name
     if name == "flat":

@@ -144,5 +144,5 @@ def test_parameters_that_cannot_be_told_apart_are_named():
     [(1000.0, 40.0, 10.0), (50.0, 40.0, 1.0), (1000.0, 0.5, 40.0), (60.0, 100.0, 1.0), (3600.0, 1.0, 36.0)],
 )
 def test_length_of_blocks(duration, leak, length):
-    """About a hundred, none shorter than 1 s or 20 time constants (MODEL.md section 8)."""
+    """About a hundred, none shorter than 1 s or 20 time constants (docs/model.md section 8)."""
     assert block_length_s(duration, leak) == pytest.approx(length)

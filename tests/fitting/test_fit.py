@@ -442,7 +442,7 @@ def test_a_leak_faster_than_a_bin_is_named():
 
 
 def test_bins_too_wide_for_the_leak_are_named():
-    """alpha D above 0.5 (MODEL.md section 3), with the width that would do."""
+    """alpha D above 0.5 (docs/model.md section 3), with the width that would do."""
     with pytest.warns(kf.FitWarning, match=r"bins of 5 ms are too wide for the time constant found"):
         fit = model("flat").fit(echoing(1.2), threads=2)
     note = next(n for n in fit.notes if n.where == "bin_width")

@@ -89,7 +89,7 @@ def test_the_cases_cover_every_registered_family():
 
 @pytest.mark.parametrize("case", CASES.values(), ids=CASES)
 def test_objective_score_and_information(case):
-    """Source: MODEL.md sections 3 to 6 in 40 digits (mp_model.py). Doubles keep about 12 of them over 280 cells."""
+    """Source: docs/model.md sections 3 to 6 in 40 digits (mp_model.py). Doubles keep about 12 over 280 cells."""
     problem, rec = case.problem()
     estimate = case.estimate(problem)
     local = evaluate_locally(problem, estimate)

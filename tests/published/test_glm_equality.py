@@ -52,7 +52,7 @@ class Dense:
 
 
 def dense_design(recording, basis, constants):
-    """The regression of MODEL.md section 3, from spike times.
+    """The regression of docs/model.md section 3, from spike times.
 
     Parameters
     ----------

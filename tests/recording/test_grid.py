@@ -30,7 +30,7 @@ def events(grid):
     return list(rows)
 
 
-# --- the bin rule of MODEL.md section 3: floor((t - a)/D + 1e-6) ---------------------------------------------
+# --- the bin rule of docs/model.md section 3: floor((t - a)/D + 1e-6) ---------------------------------------------
 
 
 def test_counts_by_bin_and_unit_sorted():
