@@ -28,8 +28,10 @@ SMALLEST_EXCESS = 0.1  # the wide length is at least 10 % above the narrow one, 
 class DifferenceOfGaussians(Kernel):
     """J(d) = A_n exp(-(d^2 - r^2) / 2 s_n^2) - A_w exp(-(d^2 - r^2) / 2 s_w^2): narrow minus wide Gaussian.
 
-    Both amplitudes are stated at the reference distance r and may have either sign. The wide length is kept
-    above the narrow one by s_w = s_n (1 + e^u); the fourth working parameter is u, the natural one s_w.
+    Both amplitudes are stated at the reference distance r and may have either sign. The wide length is kept above the
+    narrow one by s_w = s_n (1 + e^u). Where the lengths come close the amplitudes grow without limit while their
+    difference hardly changes, so the optimiser works with A_n - A_w and with B = A_w (1 - s_n/s_w), which stays finite:
+    J = (A_n - A_w) G_n + B (G_n - G_w) / (1 - s_n/s_w). Working parameters: A_n - A_w, log s_n, B, u.
     """
 
     name: ClassVar[str] = "difference-of-gaussians"
@@ -44,39 +46,49 @@ class DifferenceOfGaussians(Kernel):
 
     def value(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> FloatArray:
         narrow, wide = self._falls(theta, d_um, span)
-        return np.asarray(theta[0] * narrow - theta[2] * wide)
+        return np.asarray(theta[0] * narrow + theta[2] * (narrow - wide) / _gap(theta))
 
     def gradient(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> FloatArray:
         narrow, wide = self._falls(theta, d_um, span)
         squared = d_um**2 - span.reference_um**2
-        _, narrow_length, _, wide_length = self.natural(theta, span)
-        by_narrow = (
-            theta[0] * narrow * squared / narrow_length**2
-        )  # derivative by each log length, the other fixed
-        by_wide = -theta[2] * wide * squared / wide_length**2
-        share = 1.0 - narrow_length / wide_length  # d log s_w / du
-        return np.stack([narrow, by_narrow + by_wide, -wide, by_wide * share])
+        narrow_amplitude, narrow_length, wide_amplitude, wide_length = self.natural(theta, span)
+        # derivative by each log length, the other and the amplitudes fixed
+        by_narrow = narrow_amplitude * narrow * squared / narrow_length**2
+        by_wide = -wide_amplitude * wide * squared / wide_length**2
+        gap = _gap(theta)  # d log s_w / du too
+        difference = (narrow - wide) / gap
+        return np.stack([narrow, by_narrow + by_wide, difference, by_wide * gap - theta[2] * difference * (1.0 - gap)])
 
     def natural(self, theta: FloatArray, span: DistanceRange) -> FloatArray:
         narrow_length = np.exp(theta[1])
-        return np.array([theta[0], narrow_length, theta[2], narrow_length * (1.0 + np.exp(theta[3]))])
+        wide_amplitude = theta[2] / _gap(theta)
+        return np.array(
+            [theta[0] + wide_amplitude, narrow_length, wide_amplitude, narrow_length * (1.0 + np.exp(theta[3]))]
+        )
 
     def natural_jacobian(self, theta: FloatArray, span: DistanceRange) -> FloatArray:
-        _, narrow_length, _, wide_length = self.natural(theta, span)
-        jacobian = np.diag([1.0, narrow_length, 1.0, wide_length - narrow_length])
-        jacobian[3, 1] = wide_length
-        return jacobian
+        _, narrow_length, wide_amplitude, wide_length = self.natural(theta, span)
+        gap = _gap(theta)
+        by_excess = -wide_amplitude * (1.0 - gap)
+        return np.array(
+            [
+                [1.0, 0.0, 1.0 / gap, by_excess],
+                [0.0, narrow_length, 0.0, 0.0],
+                [0.0, 0.0, 1.0 / gap, by_excess],
+                [0.0, wide_length, 0.0, wide_length - narrow_length],
+            ]
+        )
 
     def working(self, natural: FloatArray, span: DistanceRange) -> FloatArray:
-        narrow_length, wide_length = natural[1], natural[3]
+        narrow_amplitude, narrow_length, wide_amplitude, wide_length = natural
         if not 0 < narrow_length < wide_length:
             raise ArgumentError(
                 f"narrow_length_um={narrow_length}, wide_length_um={wide_length}: both must be above 0, and "
                 "the wide length above the narrow one."
             )
-        return np.array(
-            [natural[0], np.log(narrow_length), natural[2], np.log(wide_length / narrow_length - 1.0)]
-        )
+        excess = np.log(wide_length / narrow_length - 1.0)
+        gap = 1.0 - narrow_length / wide_length
+        return np.array([narrow_amplitude - wide_amplitude, np.log(narrow_length), wide_amplitude * gap, excess])
 
     def bounds(self, span: DistanceRange) -> FloatArray:
         """The narrow length within the limits of every length, and u so that the wide one can reach it.
@@ -93,9 +105,7 @@ class DifferenceOfGaussians(Kernel):
             return super().bound_reason(k, upper, span)
         if upper:
             return "so wide that over this array the wide Gaussian cannot be told from a constant"
-        return (
-            "within 10 % of the narrow length: the two Gaussians cannot be told apart, nor their amplitudes"
-        )
+        return "within 10 % of the narrow length: the two Gaussians cannot be told apart, nor their amplitudes"
 
     def shape_grid(self, span: DistanceRange) -> FloatArray:
         grid = super().shape_grid(span)
@@ -123,12 +133,15 @@ class DifferenceOfGaussians(Kernel):
         span = at_reference(reference_um)
         return self.curve(self.working(natural, span), span)
 
-    def _falls(
-        self, theta: FloatArray, d_um: FloatArray, span: DistanceRange
-    ) -> tuple[FloatArray, FloatArray]:
+    def _falls(self, theta: FloatArray, d_um: FloatArray, span: DistanceRange) -> tuple[FloatArray, FloatArray]:
         squared = d_um**2 - span.reference_um**2
         _, narrow_length, _, wide_length = self.natural(theta, span)
         return exponential(-0.5 * squared / narrow_length**2), exponential(-0.5 * squared / wide_length**2)
+
+
+def _gap(theta: FloatArray) -> float:
+    """1 - s_n / s_w = e^u / (1 + e^u), which is also d log s_w / du."""
+    return float(1.0 / (1.0 + np.exp(-theta[3])))
 
 
 @dataclass(frozen=True)
@@ -153,9 +166,7 @@ class MexicanHat(Kernel):
         hat, fall = 1.0 - q / span.n_coordinates, np.exp(-0.5 * q)
         return np.stack([hat * fall, theta[0] * fall * q * (hat + 2.0 / span.n_coordinates)])
 
-    def at(
-        self, *, amplitude: float, length_um: float, n_coordinates: int, reference_um: float = 1.0
-    ) -> KernelCurve:
+    def at(self, *, amplitude: float, length_um: float, n_coordinates: int, reference_um: float = 1.0) -> KernelCurve:
         """The kernel with `amplitude` (per spike) at distance 0, in a space of `n_coordinates` dimensions.
 
         The reference distance makes no difference here.

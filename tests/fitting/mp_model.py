@@ -32,7 +32,8 @@ def kernel_value(kernel, theta, d, span):
         narrow = mpmath.exp(theta[1])
         wide = narrow * (1 + mpmath.exp(theta[3]))
         fall = [mpmath.exp(-(d**2 - r**2) / (2 * s**2)) for s in (narrow, wide)]
-        return theta[0] * fall[0] - theta[2] * fall[1]
+        wide_amplitude = theta[2] / (1 - narrow / wide)  # working scale: A_n - A_w and A_w (1 - s_n/s_w)
+        return (theta[0] + wide_amplitude) * fall[0] - wide_amplitude * fall[1]
     if name == "mexican-hat":
         s = mpmath.exp(theta[1])
         return theta[0] * (1 - d**2 / (m * s**2)) * mpmath.exp(-(d**2) / (2 * s**2))
