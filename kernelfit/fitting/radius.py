@@ -2,21 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 from scipy.stats import chi2
 
-from kernelfit._typing import FloatArray
+from kernelfit._typing import FloatArray, IntArray
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, NullSweep, null_blocks, null_sweep
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.search import SearchResult, StartRecord, promising
 from kernelfit.kernels.bands import Bands
 
-MOST_BANDS = 40
+MOST_RADII = 40
 N_STARTS = 3
+NEIGHBOURS = 4
+ENOUGH = 0.5 * 3.84 * 4.0  # drop of the log-likelihood: room for a robust variance four times the model's
 
 
 @dataclass(frozen=True, eq=False)
@@ -27,19 +28,20 @@ class RadiusProfile:
     objective: FloatArray
 
     def interval(self, level: float, edges_um: FloatArray, inflation: float) -> tuple[float, float]:
-        """Radii a likelihood-ratio test keeps, out to the distances of the array that bound them.
+        """Radii a likelihood-ratio test keeps, out to the last distance before a radius that it does not keep.
 
         Parameters
         ----------
         level : coverage
-        edges_um : distinct distances of the array
+        edges_um : distinct distances of the array; between two of them all radii are alike
         inflation : robust over model variance, by which the ratio is scaled
         """
-        drop = 2.0 * (np.nanmax(self.objective) - self.objective)
-        kept = self.radius_um[drop <= inflation * chi2.ppf(level, 1)]
-        below = edges_um[edges_um < kept.min()]
-        above = edges_um[edges_um >= kept.max()]
-        return (float(below[-1]) if below.size else 0.0), (float(above[0]) if above.size else float(edges_um[-1]))
+        drop = 2.0 * (np.max(self.objective) - self.objective)
+        kept = np.flatnonzero(drop <= inflation * chi2.ppf(level, 1))
+        first, last = int(kept[0]), int(kept[-1])
+        below = self.radius_um[first - 1] if first > 0 else 0.0
+        above = self.radius_um[last + 1] if last + 1 < self.radius_um.size else np.inf
+        return float(edges_um[edges_um > below][0]), float(edges_um[edges_um < above][-1])
 
 
 def discrete_parameter(problem: Problem) -> int | None:
@@ -49,7 +51,9 @@ def discrete_parameter(problem: Problem) -> int | None:
 
 
 def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResult, RadiusProfile]:
-    """Profile the radius: promising ones from one fine sweep, the best climbed, neighbours tried until none is better.
+    """Profile the radius: promising ones from one fine sweep, the best climbed, and refined between its neighbours.
+
+    Arrays with many distinct distances are profiled at MOST_RADII of them and refined only around the best.
 
     Parameters
     ----------
@@ -60,61 +64,84 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
     candidates = problem.kernel.radius_candidates(problem.geometry.distinct_um)
     if candidates is None:
         raise ValueError(f"kernel {problem.kernel.name!r} names no radii to profile")
-    held = np.zeros(problem.n_shared, dtype=bool)
-    held[place] = True
-    objective = np.full(candidates.size, np.nan)
-    optima: dict[int, Optimum] = {}
-    records: list[StartRecord] = []
+    coarse = np.unique(np.linspace(0, candidates.size - 1, min(MOST_RADII, candidates.size)).astype(int))
+    sweep = promising(null.sweeps)[0]
+    gains, amplitudes = _gain_by_radius(problem, null, sweep, candidates[coarse])
+    profiled = _Profile(problem, place, candidates)
+    for c in np.argsort(-gains, kind="stable")[:N_STARTS]:
+        k = int(coarse[c])
+        profiled.climb(k, _start(problem, null, sweep, place, float(candidates[k]), float(amplitudes[c])))
+    starts = tuple(
+        StartRecord(problem.leak(o.estimate.shared), o.local.objective, o.n_iterations)
+        for o in profiled.optima.values()
+    )
+    step, best = int(np.max(np.diff(coarse), initial=1)), -1
+    while profiled.best != best:  # widening may come upon a better hill
+        profiled.refine(step)
+        best = profiled.best
+        profiled.widen(coarse)
+    top = profiled.climb(best, profiled.optima[best].estimate, TIGHT)
+    tried = sorted(profiled.optima)
+    objective = np.array([profiled.optima[k].local.objective for k in tried])
+    return SearchResult(top, None, starts), RadiusProfile(candidates[tried], objective)
 
-    def climb(k: int, start: Estimate, tolerance: float) -> None:
+
+@dataclass(eq=False)
+class _Profile:
+    """Optima at the radii tried so far, by place among the candidates; grows while the radius is searched."""
+
+    problem: Problem
+    place: int
+    candidates: FloatArray
+    optima: dict[int, Optimum] = field(default_factory=dict)
+
+    @property
+    def best(self) -> int:
+        """The radius with the highest objective so far."""
+        return max(self.optima, key=lambda k: (self.optima[k].local.objective, -k))
+
+    def climb(self, k: int, start: Estimate, tolerance: float = LOOSE) -> Optimum:
+        """Maximise over everything else at radius k."""
         shared = start.shared.copy()
-        shared[place] = np.log(candidates[k])
-        optima[k] = maximise(problem, Estimate(start.own, shared), held=held, tolerance=tolerance)
-        objective[k] = optima[k].local.objective
-        records.append(StartRecord(problem.leak(optima[k].estimate.shared), objective[k], optima[k].n_iterations))
+        shared[self.place] = np.log(self.candidates[k])
+        held = np.arange(self.problem.n_shared) == self.place
+        self.optima[k] = maximise(self.problem, Estimate(start.own, shared), held=held, tolerance=tolerance)
+        return self.optima[k]
 
-    for sweep in promising(null.sweeps)[:1]:
-        gains, amplitudes = _gain_by_radius(problem, null, sweep, candidates)
-        for k in np.argsort(-gains, kind="stable")[:N_STARTS]:
-            climb(int(k), _start(problem, null, sweep, place, float(candidates[k]), float(amplitudes[k])), LOOSE)
-    while True:
-        best = int(np.nanargmax(objective))
-        untried = [k for k in (best - 1, best + 1) if 0 <= k < candidates.size and np.isnan(objective[k])]
-        if not untried:
-            break
-        for k in untried:
-            climb(k, optima[best].estimate, LOOSE)
-    _widen(objective, best, candidates.size, lambda k, near: climb(k, optima[near].estimate, LOOSE))
-    climb(best, optima[best].estimate, TIGHT)
-    tried = ~np.isnan(objective)
-    profile = RadiusProfile(candidates[tried], objective[tried])
-    return SearchResult(optima[best], None, tuple(records)), profile
+    def refine(self, step: int) -> None:
+        """Try radii around the best, nearer and nearer, until neither neighbour is better."""
+        while step >= 1:
+            best = self.best
+            reach = (step,) if step > 1 else range(1, NEIGHBOURS + 1)  # the profile is ragged at the last
+            for k in [best - r for r in reach] + [best + r for r in reach]:
+                if 0 <= k < self.candidates.size and k not in self.optima:
+                    self.climb(k, self.optima[best].estimate)
+            if self.best == best:
+                step //= 2
 
-
-def _widen(objective: FloatArray, best: int, n: int, climb: Callable[[int, int], None]) -> None:
-    """Climb outwards from the best radius until the likelihood has dropped enough for a wide interval."""
-    enough = 0.5 * float(chi2.ppf(0.999, 1)) * 4.0  # room for a robust variance four times the model's
-    for side in (-1, 1):
-        k = best + side
-        while 0 <= k < n:
-            if np.isnan(objective[k]):
-                climb(k, k - side)
-            if objective[best] - objective[k] > enough:
-                break
-            k += side
+    def widen(self, coarse: IntArray) -> None:
+        """Climb outwards over the coarse radii until the likelihood has dropped enough for a wide interval."""
+        best = self.best
+        for side in (-1, 1):
+            near = best
+            for k in coarse[coarse > best] if side > 0 else coarse[coarse < best][::-1]:
+                if int(k) not in self.optima:
+                    self.climb(int(k), self.optima[near].estimate)
+                near = int(k)
+                if self.optima[best].local.objective - self.optima[near].local.objective > ENOUGH:
+                    break
 
 
 def _gain_by_radius(
     problem: Problem, null: Null, sweep: NullSweep, candidates: FloatArray
 ) -> tuple[FloatArray, FloatArray]:
-    """Gain a quadratic promises for each radius, and the amplitude, from one sweep with fine bands."""
-    chosen = np.unique(np.linspace(0, candidates.size - 1, min(MOST_BANDS, candidates.size)).astype(int))
-    bands = Bands(tuple(float(r) for r in candidates[chosen]))
+    """Gain a quadratic promises for each radius, and the amplitude, from one sweep with a band between each two."""
+    bands = Bands(tuple(float(r) for r in candidates))
     fine = null_sweep(problem, bands, sweep.leak, null.optimum.estimate, null_blocks(problem))
     score = fine.information @ fine.coupling
     gains, amplitudes = np.full(candidates.size, -np.inf), np.zeros(candidates.size)
-    for place, k in enumerate(chosen):
-        inside = np.arange(fine.coupling.size) <= place
+    for k in range(candidates.size):
+        inside = np.arange(fine.coupling.size) <= k
         information = float(fine.information[np.ix_(inside, inside)].sum())
         if information > 0:
             amplitudes[k] = float(score[inside].sum()) / information

@@ -206,7 +206,7 @@ def test_interval_of_the_radius(inflation, interval):
 
 def test_an_interval_at_the_ends_of_the_array():
     profile = RadiusProfile(np.array([50.0, 400.0]), np.zeros(2))
-    assert profile.interval(0.95, np.array([100.0, 300.0]), 1.0) == (0.0, 300.0)
+    assert profile.interval(0.95, np.array([100.0, 300.0]), 1.0) == (100.0, 300.0)
 
 
 def test_without_coupling_the_radius_search_still_ends():
