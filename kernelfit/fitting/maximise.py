@@ -30,6 +30,8 @@ FIRST_DAMPING = 1e-3
 LARGEST_DAMPING = 1e12
 SMALLEST_COSINE = 1e-8  # a secant condition nearer to orthogonal than this says nothing
 MOST_CORRECTION = 10.0  # curvature that differs from the expected by more is not trusted
+RIDGE_STEPS = 25  # steps along a ridge change parameters that the recording cannot tell apart, and nothing else
+RIDGE_GAIN = 0.01  # log-likelihood units
 ROUNDING = 1e-14  # of the log-likelihood: a loss smaller than this is no loss
 
 
@@ -136,6 +138,7 @@ def maximise(
         return Optimum(local, ~held, nowhere, False, 0, np.inf, "the likelihood at the start is not finite")
     correction = np.zeros((problem.n_shared, problem.n_shared))
     damping, decrement, stale = FIRST_DAMPING, np.inf, 0
+    gains: list[float] = []
     message, converged, iteration = "", False, 0
     while iteration < max_iterations:
         iteration += 1
@@ -163,6 +166,10 @@ def maximise(
             local = candidate
             if stale >= 3:
                 converged, message = True, "the log-likelihood no longer changes in its last digits"
+                break
+            gains.append(gained)
+            if len(gains) > RIDGE_STEPS and sum(gains[-RIDGE_STEPS:]) < RIDGE_GAIN:
+                converged, message = True, f"a ridge: {RIDGE_STEPS} steps gained less than {RIDGE_GAIN:g} in all"
                 break
         else:
             damping = max(damping * 10.0, FIRST_DAMPING)
@@ -230,8 +237,11 @@ def _corrected(correction: FloatArray, before: Local, after: Local) -> FloatArra
     step = after.estimate.shared - before.estimate.shared
     if not step.any():
         return correction
-    here = eliminate(after.information)
-    change = eliminate(before.information).efficient_score(before.score_own, before.score_shared)
+    try:
+        here, there = eliminate(after.information), eliminate(before.information)
+    except np.linalg.LinAlgError:  # nothing to learn from a point without information
+        return correction
+    change = there.efficient_score(before.score_own, before.score_shared)
     change = change - here.efficient_score(after.score_own, after.score_shared)
     missing = change - (here.schur + correction) @ step
     along = float(missing @ step)
