@@ -64,11 +64,11 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
     found = p_value <= LEVEL
     shown = "< 0.001" if p_value < 0.001 else f"= {p_value:.2g}"
     sentence = (
-        f"Spikes change the firing of other units (any coupling, sign flips of {n_blocks} blocks of time: p {shown})."
+        f"Units' rates change after spikes of other units (test of any coupling, sign flips of {n_blocks} blocks of "
+        f"time: p {shown})."
         if found
-        else f"No coupling to describe: without any, the recording is described as well (sign flips of "
-        f"{n_blocks} blocks "
-        f"of time: p {shown}). Length and leak mean nothing here."
+        else f"No coupling to describe: the recording is described as well without any (test of any coupling, sign "
+        f"flips of {n_blocks} blocks of time: p {shown}). Length and leak rate mean nothing here."
     )
     return CouplingVerdict(found, p_value, critical_z, sentence)
 

@@ -12,9 +12,8 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
 
 CAUTION = (
-    "Functional, not synaptic, coupling: common input and unrecorded cells leave a trace. Research use, "
-    "not for clinical "
-    "decisions."
+    "Functional, not synaptic, coupling: common input and unrecorded cells leave a trace. For research; not for "
+    "clinical decisions."
 )
 
 
@@ -28,11 +27,13 @@ def _row(name: str, row: pd.Series) -> str:
 def summary_text(fit: CouplingFit) -> str:
     """The result in plain text: verdict, parameters with 95 % intervals, what they rest on, notes."""
     kind = f"{fit.covariance_kind} standard errors, 95 % intervals"
+    stated = fit.verdict.found or fit.model.leak_rate is not None
+    time_constant = f"time constant {1000 * fit.time_constant:.4g} ms; " if stated else ""
     lines = [
         f"{fit.model.kernel.name} kernel, {fit.model.link.name} link, {1000 * fit.model.bin_width:g} ms bins",
         fit.verdict.sentence,
         *[_row(str(name), row) for name, row in fit.parameters.iterrows()],
-        f"  time constant {1000 * fit.time_constant:.4g} ms; amplitudes at {fit.reference_distance_um:.4g} µm; {kind}",
+        f"  {time_constant}amplitudes at {fit.reference_distance_um:.4g} µm; {kind}",
         f"{len(fit.targets)} of {len(fit.unit_ids)} units explained, {fit.n_spikes} spikes, {fit.duration_s:g} s in "
         f"{fit.n_blocks} blocks of {fit.block_length_s:.3g} s",
         f"log-likelihood {fit.log_likelihood:.4f}, {fit.n_parameters} parameters, AIC {fit.aic:.2f}, BIC "

@@ -192,7 +192,7 @@ def after_spike_data(fit: CouplingFit, shown: float) -> AfterSpikeData | Unavail
     """After-spike curves over the units that have one, up to `shown` times the longest time constant."""
     constants = fit.model.after_spike.constants(fit.model.bin_width)
     if constants.size == 0:
-        return Unavailable('the model has no after-spike term')
+        return Unavailable("the model has no after-spike term")
     longest = max(shown * float(constants[-1]), 10.0 * fit.model.bin_width)
     lag = np.geomspace(fit.model.bin_width, longest, 140)
     curves = fit.after_spike_curves(lag)
@@ -243,7 +243,7 @@ def ks_data(goodness: Goodness) -> KsData | Unavailable:
     for k, word in sorted(places.items(), key=lambda item: ratio[item[0]]):
         unit = str(units.index[k])
         label = f"{word}: unit {short_id(unit)}"
-        panels.append(ks_panel(label, curves[unit], float(units["p_adjusted"].iloc[k])))
+        panels.append(ks_panel(label, curves[unit], float(units["p_adjusted"].iloc[k]), corrected=True))
     pooled_p = float(goodness.pooled["p_value"].iloc[0])
     if math.isfinite(pooled_p):
         panels.append(ks_panel("all units together", goodness.ks_curve(), pooled_p))
@@ -259,12 +259,12 @@ def short_id(unit: str) -> str:
     return unit if len(unit) <= DROPPED_ID else f"{unit[: DROPPED_ID - 1]}…"
 
 
-def ks_panel(label: str, curve: KsCurve, p_value: float) -> KsPanel:
-    """One KS plot, thinned to the points a plot can show."""
+def ks_panel(label: str, curve: KsCurve, p_value: float, *, corrected: bool = False) -> KsPanel:
+    """One KS plot, thinned to the points a plot can show; `corrected`: the p-value is, for many tests."""
     n = curve.z.size
     keep = np.unique(np.linspace(0, n - 1, min(n, KS_POINTS)).astype(np.int64))
     return KsPanel(
-        title=f"{label}\n{count_text(n)} intervals, {p_sentence(p_value)}",
+        title=f"{label}\n{count_text(n)} intervals\n{p_sentence(p_value)}{', corrected' * corrected}",
         expected=curve.z[keep],
         observed=curve.share[keep],
         test_band=curve.critical_half_width,

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from dataclasses import replace
+import re
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -18,13 +18,14 @@ from kernelfit.report.numbers import (
     count_text,
     distance_label,
     duration_text,
+    fixed_text,
     interval_text,
     number_text,
     p_text,
     spaced_unit,
     time_text,
 )
-from kernelfit.report.page import Cell, Column, Definition, Table
+from kernelfit.report.page import Cell, Column, Definition, Table, without_empty_notes
 from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, link_name, parameter_of, time_constant_of
 from kernelfit.report.truth import Truth
 from kernelfit.report.words import Estimate, level_text
@@ -190,13 +191,6 @@ def _goodness_row(name: str, row: pd.Series) -> tuple[Cell, ...]:
     )
 
 
-def without_empty_notes(table: Table) -> Table:
-    """The table without its last column, the notes, where no row has one."""
-    if any(row[-1].text for row in table.rows):
-        return table
-    return replace(table, columns=table.columns[:-1], rows=tuple(row[:-1] for row in table.rows))
-
-
 def _note(value: object) -> str:
     return "" if value is None or value != value else str(value)
 
@@ -205,6 +199,8 @@ def unit_table(fit: CouplingFit, recording: Recording) -> Table:
     """Every unit: place, spikes, observed rate, baseline."""
     units = recording.units
     axes = [c for c in COORDINATES if c in units.columns]
+    places = units[axes].to_numpy(dtype=np.float64)
+    decimals = 0 if np.array_equal(places, np.round(places)) else 1
     rate_of = fit.model.link.rate
     rows = []
     for (unit, row), (_, known) in zip(fit.baselines.iterrows(), units.iterrows(), strict=True):
@@ -216,7 +212,7 @@ def unit_table(fit: CouplingFit, recording: Recording) -> Table:
         rows.append(
             (
                 Cell(str(unit)),
-                Cell(", ".join(number_text(float(known[c])) for c in axes)),
+                *(Cell(fixed_text(float(known[c]), decimals), float(known[c])) for c in axes),
                 Cell(count_text(float(known["n_spikes"])), float(known["n_spikes"])),
                 value_cell(float(known["rate_hz"])),
                 Cell(shown, rate) if estimable else Cell(""),
@@ -229,7 +225,7 @@ def unit_table(fit: CouplingFit, recording: Recording) -> Table:
         caption="Units: what was observed, and the baseline without coupling",
         columns=(
             Column("unit", numeric=False),
-            Column("position (µm)", numeric=False),
+            *(Column(f"{axis[0]} (µm)") for axis in axes),
             Column("spikes"),
             Column("observed rate (Hz)"),
             Column(f"baseline rate (Hz, {level_text(LEVEL)} interval)"),
@@ -335,7 +331,7 @@ def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
     model = fit.model
     leak = "estimated" if model.leak_rate is None else f"held at {number_text(model.leak_rate)} per second"
     kernel = model.kernel
-    reach = "none" if model.max_distance is None else distance_label(model.max_distance)
+    reach = "no limit" if model.max_distance is None else distance_label(model.max_distance)
     blocks = f"{count_text(fit.n_blocks)} blocks of {time_text(fit.block_length_s)}"
     rows = (
         ("kernel", kernel_setting(kernel)),
@@ -357,9 +353,14 @@ def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
         ),
         ("seed of the coupling test", str(fit.seed)),
         ("seed of the goodness test", str(goodness.seed)),
-        ("kernelfit", f"version {fit.version}, {fit.created}"),
+        ("kernelfit", f"version {fit.version}, run at {_moment(fit.created)}"),
     )
     return Definition(rows=rows, caption="Settings", headings=("setting", "value"))
+
+
+def _moment(created: str) -> str:
+    """A time stamp as people write it: "2026-03-01 14:05 UTC"."""
+    return re.sub(r"^(\d{4}-\d\d-\d\d)T(\d\d:\d\d):\d\d(?:\.\d+)?\+00:00$", r"\1 \2 UTC", created)
 
 
 def _or_reason(value: float | Unavailable, factor: float, unit: str) -> str:

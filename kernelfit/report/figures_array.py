@@ -27,6 +27,7 @@ from kernelfit.report.look import (
 
 _POINTS_PER_MM = 72.0 / 25.4
 _MAP_MM = 62.0  # of one column, left for the map beside the colour bar
+_ROOM_FOR_LEGEND = 1.2
 _RASTERISE_FROM = 20_000  # spikes; beyond, a drawing of single strokes is too large to open
 
 
@@ -48,7 +49,8 @@ def draw_array(data: ArrayData) -> Figure:
             markeredgewidth=0.5,
         )
         points_per_um = _MAP_MM * _POINTS_PER_MM / (span + 2.0 * data.spacing_um)
-        diameter = float(np.clip(0.42 * data.spacing_um * points_per_um, 2.2, 11.0))
+        diameter = float(np.clip(0.42 * data.spacing_um * points_per_um, 3.0, 11.0))
+        outline = min(0.4, 0.06 * diameter)  # small marks would be nothing but outline
         known = np.isfinite(data.value)
         norm = _norm(data)
         if known.any():
@@ -60,7 +62,7 @@ def draw_array(data: ArrayData) -> Figure:
                 cmap=AMOUNTS,
                 norm=norm,
                 edgecolors=INK,
-                linewidths=0.4,
+                linewidths=outline,
                 zorder=3,
             )
             bar = figure.colorbar(marks, ax=ax, shrink=0.75, aspect=16, pad=0.02)
@@ -153,7 +155,7 @@ def draw_raster(data: RasterData) -> Figure:
         )
         under.plot(data.time_s, data.fitted_hz, color=RAISING, label="fitted")
         under.set_xlim(data.start_s, data.stop_s)
-        under.set_ylim(bottom=0.0)
+        under.set_ylim(0.0, under.get_ylim()[1] * _ROOM_FOR_LEGEND)
         under.set_xlabel("time on the recording's clock (s)")
         under.set_ylabel("rate per unit (Hz)")
         under.legend(loc="upper right", ncols=2)

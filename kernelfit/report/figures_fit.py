@@ -59,8 +59,8 @@ def draw_after_spike(data: AfterSpikeData) -> Figure:
 def draw_ks(data: KsData) -> Figure:
     """KS plots of a few units and of all together, and every unit's statistic over its critical value."""
     with look():
-        figure = new_figure(TWO_COLUMNS_MM, 108.0)
-        grid = figure.add_gridspec(2, 1, height_ratios=[1.05, 1.0])
+        figure = new_figure(TWO_COLUMNS_MM, 111.0)
+        grid = figure.add_gridspec(2, 1, height_ratios=[1.12, 1.0])
         upper, lower = figure.add_subfigure(grid[0]), figure.add_subfigure(grid[1])
         axes = np.atleast_1d(upper.subplots(1, len(data.panels), sharey=True))
         for k, (ax, panel) in enumerate(zip(axes, data.panels, strict=True)):

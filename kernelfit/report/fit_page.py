@@ -17,11 +17,10 @@ from kernelfit.report.content import FitContent, build_content
 from kernelfit.report.figures_array import draw_array, draw_raster
 from kernelfit.report.figures_fit import draw_after_spike, draw_ks
 from kernelfit.report.figures_kernel import draw_kernel, draw_time_course
-from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder
+from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder, files_list
 from kernelfit.report.look import save_figure
 from kernelfit.report.page import (
     Block,
-    Definition,
     Listing,
     Page,
     Picture,
@@ -297,7 +296,7 @@ def _recording(content: FitContent, pictures: dict[str, Picture]) -> Section:
 
 def _settings(content: FitContent) -> Section:
     lead = "With these settings, this version and these files the fit can be run again."
-    return Section("settings", "Settings", lead, (content.tables.settings, content.tables.fit))
+    return Section("settings", "Settings", lead, (content.tables.settings,), beside=(content.tables.fit,))
 
 
 def _methods(content: FitContent) -> Section:
@@ -318,10 +317,9 @@ def _cautions() -> Section:
 
 
 def _files(files: tuple[FileEntry, ...]) -> Section:
-    rows = tuple((entry.name, entry.what) for entry in files)
     return Section(
         "files",
         "Files",
         "Everything on this page, as files for papers and further work.",
-        (Definition(rows, "Files in this folder", ("file", "what it holds")),),
+        (files_list(files),),
     )

@@ -19,6 +19,7 @@ from pathlib import Path
 from types import TracebackType
 
 from kernelfit.errors import OutputError
+from kernelfit.report.page import Definition
 
 CONTENTS_FILE = "contents.csv"
 _HEADER = ("file", "what")
@@ -32,6 +33,19 @@ class FileEntry:
 
     name: str
     what: str
+
+
+def files_list(files: tuple[FileEntry, ...]) -> Definition:
+    """The files for a page; a figure's drawing and picture, which hold the same, share a row."""
+    names = {entry.name for entry in files}
+    rows = []
+    for entry in files:
+        stem, _, ending = entry.name.rpartition(".")
+        if ending == "png" and f"{stem}.svg" in names:
+            continue
+        both = ending == "svg" and f"{stem}.png" in names
+        rows.append((f"{stem}.svg, .png" if both else entry.name, entry.what))
+    return Definition(tuple(rows), "Files in this folder (PNG: 300 dots per inch)", ("file", "what it holds"))
 
 
 def check_folder(path: str | os.PathLike[str], *, overwrite: bool = False) -> None:

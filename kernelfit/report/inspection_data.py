@@ -26,7 +26,7 @@ COURSE_POINTS = 900
 SHORTEST_COURSE_BIN_S = 1.0
 WORST_UNITS = 3
 BINS_PER_DECADE = 12
-MIN_INTERVALS = 50
+MIN_INTERVALS = 200  # fewer make a histogram of single strokes
 
 
 @dataclass(frozen=True, eq=False)

@@ -25,7 +25,7 @@ from kernelfit.report.numbers import count_text, number_text, time_text
 _POINTS_PER_MM = 72.0 / 25.4
 _RASTERISE_FROM = 20_000  # strokes; beyond, a drawing of single strokes is too large to open
 _ABOVE = 1.15  # of the largest value shown
-_WIDE_TITLE = 92  # characters that fit over axes two columns wide
+_WIDE_TITLE = 100  # characters that fit over axes two columns wide
 
 
 def draw_stretch(data: StretchData) -> Figure:

@@ -15,7 +15,7 @@ from kernelfit.recording.inspection import Inspection
 from kernelfit.report import words
 from kernelfit.report.content import recording_name
 from kernelfit.report.figures_array import draw_array
-from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder
+from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder, files_list
 from kernelfit.report.inspection_data import InspectionFigures, figures_data
 from kernelfit.report.inspection_figures import draw_correlograms, draw_intervals, draw_rate_course, draw_stretch
 from kernelfit.report.inspection_tables import (
@@ -32,7 +32,6 @@ from kernelfit.report.inspection_words import TOGETHER, InspectionWords, inspect
 from kernelfit.report.look import save_figure
 from kernelfit.report.page import (
     Block,
-    Definition,
     Listing,
     Notice,
     Page,
@@ -315,10 +314,9 @@ def _cautions() -> Section:
 
 
 def _files(files: tuple[FileEntry, ...]) -> Section:
-    rows = tuple((entry.name, entry.what) for entry in files)
     return Section(
         "files",
         "Files",
         "Everything on this page, as files for papers and further work.",
-        (Definition(rows, "Files in this folder", ("file", "what it holds")),),
+        (files_list(files),),
     )

@@ -32,19 +32,53 @@ from kernelfit.recording.coincidence import (
 from kernelfit.recording.findings import Finding
 from kernelfit.recording.inspection import Inspection
 from kernelfit.report.numbers import count_text, distance_label, duration_text, number_text, p_text, time_text
-from kernelfit.report.page import Cell, Column, Definition, Table
+from kernelfit.report.page import Cell, Column, Definition, Table, without_empty_notes
 
 HASH_SHOWN = 12
 GAPS_SHOWN = 12
 BENJAMINI = "Benjamini Y, Hochberg Y (1995) J R Stat Soc B 57: 289-300."
 SEVERITY_WORDS = {"error": "Error", "warning": "Warning", "info": "Note"}
+KINDS = {
+    "array_dead_time": "one spike blocks the whole array",
+    "array_too_large": "array too large",
+    "array_too_small": "array too small",
+    "coarse_times": "coarse times",
+    "dominant_unit": "one unit dominates",
+    "double_detection": "spikes counted twice",
+    "far_coincidences": "distant units coincide",
+    "few_events": "bursts",
+    "gaps": "gaps",
+    "identical_trains": "identical spike trains",
+    "intervals_below_1ms": "intervals below 1 ms",
+    "intervals_below_2ms": "intervals below 2 ms",
+    "longer_than_a_week": "longer than a week",
+    "mostly_in_proposed": "mostly artefacts",
+    "much_excluded": "much is excluded",
+    "nearly_silent_units": "nearly silent units",
+    "no_distances": "no distances",
+    "no_spikes": "no spikes",
+    "one_cell_twice": "one cell seen twice",
+    "only_in_exclusions": "nothing but exclusions",
+    "only_in_proposed": "nothing but artefacts",
+    "rate_changes": "changes of rate",
+    "rates_too_high": "rates too high",
+    "same_site_dead_time": "dead time on one site",
+    "silent_units": "silent units",
+    "spikes_outside_windows": "spikes outside the windows",
+    "times_are_integers": "times are whole numbers",
+    "times_look_like_ms": "times look like ms",
+    "units_come_or_go": "units come or go",
+    "units_on_one_site": "units on one site",
+    "whole_array_events": "artefacts on the whole array",
+    "windows_not_stated": "windows not stated",
+}
 
 
 def findings_list(findings: Sequence[Finding]) -> Definition:
     """Every finding: severity and kind; what was seen, what can be done, and where."""
     rows = tuple(
         (
-            f"{SEVERITY_WORDS[f.severity]}: {f.key.replace('_', ' ')}",
+            f"{SEVERITY_WORDS[f.severity]}: {KINDS[f.key]}",
             f"{f.what} {f.remedy} Where: {f.where.rstrip('.')}.",
         )
         for f in findings
@@ -96,6 +130,8 @@ def units_table(inspection: Inspection) -> Table:
     units = inspection.units
     places = [c for c in ("x_um", "y_um", "z_um") if c in units.columns]
     grouped = "group" in units.columns
+    shared = bool((units["n_same_site"] > 0).any())
+    proposed = len(inspection.proposed_exclusions) > 0
     columns = [Column("unit", numeric=False)]
     columns += [Column("group", numeric=False)] * grouped
     columns += [Column(f"{c[0]} (µm)") for c in places]
@@ -104,9 +140,9 @@ def units_table(inspection: Inspection) -> Table:
         Column("rate (Hz)"),
         Column("below 1 ms (%)"),
         Column("below 2 ms (%)"),
-        Column("others on site"),
-        Column("in proposed (%)"),
-        Column("remarks", numeric=False),
+        *[Column("others on site")] * shared,
+        *[Column("in proposed (%)")] * proposed,
+        Column("remarks", numeric=False, wraps=True),
     ]
     numbers = {c: _floats(units[c]) for c in units.columns if c not in ("group", "remarks")}
     rows = []
@@ -116,27 +152,34 @@ def units_table(inspection: Inspection) -> Table:
         row += [_number(float(numbers[c][k]), digits=4) for c in places]
         row += [
             _count(float(numbers["n_spikes"][k])),
-            _number(float(numbers["rate_hz"][k]), digits=3),
+            _number(float(numbers["rate_hz"][k]), digits=3, keep_zeros=True),
             _number(100.0 * float(numbers["share_below_1ms"][k]), digits=2),
             _number(100.0 * float(numbers["share_below_2ms"][k]), digits=2),
-            _count(float(numbers["n_same_site"][k])),
-            _number(100.0 * float(numbers["share_in_proposed"][k]), digits=2),
+            *[_count(float(numbers["n_same_site"][k]))] * shared,
+            *[_number(100.0 * float(numbers["share_in_proposed"][k]), digits=2)] * proposed,
             Cell(str(units["remarks"].iloc[k])),
         ]
         rows.append(tuple(row))
-    return Table(
-        caption="The units: shares of intervals below 1 and 2 ms, other units on the site, share of spikes in "
-        "proposed exclusions",
+    more = ", other units on the site" * shared + ", share of spikes in proposed exclusions" * proposed
+    table = Table(
+        caption=f"The units: shares of intervals below 1 and 2 ms{more}",
         columns=tuple(columns),
         rows=tuple(rows),
         file="units.csv",
     )
+    return without_empty_notes(table)
 
 
 def blocks_table(blocks: pd.DataFrame) -> Table:
     """Rates over blocks of time."""
     rows = tuple(
-        (_number(a, digits=4), _number(b, digits=4), _count(n), _number(rate, digits=3), _count(active))
+        (
+            _number(a, digits=4),
+            _number(b, digits=4),
+            _count(n),
+            _number(rate, digits=3, keep_zeros=True),
+            _count(active),
+        )
         for a, b, n, rate, active in zip(
             *(_floats(blocks[c]) for c in ("start_s", "stop_s", "n_spikes", "rate_hz", "n_active_units")), strict=True
         )
@@ -252,9 +295,9 @@ def _floats(column: Iterable[object]) -> np.ndarray[tuple[int], np.dtype[np.floa
     return np.asarray(list(column), dtype=np.float64)
 
 
-def _number(value: float, digits: int = 3) -> Cell:
+def _number(value: float, digits: int = 3, *, keep_zeros: bool = False) -> Cell:
     value = float(value)
-    return Cell("none", None) if math.isnan(value) else Cell(number_text(value, digits), value)
+    return Cell("none", None) if math.isnan(value) else Cell(number_text(value, digits, keep_zeros=keep_zeros), value)
 
 
 def _count(value: float) -> Cell:

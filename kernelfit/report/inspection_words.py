@@ -243,7 +243,11 @@ def _captions(inspection: Inspection, figures: InspectionFigures) -> dict[str, t
         )
     correlograms = figures.correlograms
     if not isinstance(correlograms, Unavailable):
-        main = "with the proposed exclusions left out; dotted: raw" if correlograms.proposes else "raw"
+        main = (
+            "with the proposed exclusions left out; dotted: raw, which may leave the axis"
+            if correlograms.proposes
+            else "raw"
+        )
         captions["correlograms"] = (
             "Pairs of spikes of different units at each lag, either one first, divided by the number that "
             f"independent trains with the same mean rates would give (dashed: 1), {main}. Columns: distance between "

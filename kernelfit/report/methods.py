@@ -90,8 +90,7 @@ def _data_sentence(fit: CouplingFit, recording: Recording) -> str:
     if recording.exclusion_bounds.shape[0]:
         seconds = float(np.sum(recording.exclusion_bounds[:, 1] - recording.exclusion_bounds[:, 0]))
         left_out.append(
-            f"{count_text(recording.exclusion_bounds.shape[0])} stretches with artefacts "
-            f"({number_text(seconds)} s in all)"
+            f"{count_text(recording.exclusion_bounds.shape[0])} excluded stretches ({number_text(seconds)} s in all)"
         )
     if recording.excluded_pairs:
         left_out.append(f"{count_text(len(recording.excluded_pairs))} pairs of units")
@@ -174,6 +173,16 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
         sentences.append(
             f"Intervals are {level_text(LEVEL)} Wald intervals from the expected information; lengths and "
             "rates were treated on the log scale."
+        )
+    if "radius_um" in fit.parameters.index:
+        sentences.append(
+            "The radius was profiled over the distances of the array; its interval is that of a likelihood-ratio test "
+            "scaled by the ratio of robust to model-based variance."
+        )
+    if not fit.verdict.found:
+        sentences.append(
+            "As no coupling was found, intervals of amplitudes use the critical value of that test, which allows for "
+            "the search over lengths and leak rates; lengths and the leak rate are not stated."
         )
     if fit.after_spike_test is not None:
         sentences.append("What effects of own earlier spikes would add was asked by a score test (Rao 1948).")

@@ -8,7 +8,7 @@ the pictures that `look.inline_svg` made.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import ClassVar, TypeAlias
 
 import jinja2
@@ -18,7 +18,7 @@ from matplotlib.figure import Figure
 from kernelfit.report.look import inline_svg
 from kernelfit.report.numbers import tied
 
-PRINTED_ROWS = 40  # a printed table of a thousand units helps nobody; its file holds them all
+PRINTED_ROWS = 60  # a printed table of a thousand units helps nobody; its file holds them all
 SCROLLED_ROWS = 24  # longer tables scroll in a box of their own on the screen
 
 
@@ -101,6 +101,13 @@ class Table:
         return len(self.rows) > SCROLLED_ROWS
 
 
+def without_empty_notes(table: Table) -> Table:
+    """The table without its last column, the notes, where no row has one."""
+    if any(row[-1].text for row in table.rows):
+        return table
+    return replace(table, columns=table.columns[:-1], rows=tuple(row[:-1] for row in table.rows))
+
+
 @dataclass(frozen=True, slots=True)
 class Picture:
     """A figure with its caption.
@@ -143,7 +150,7 @@ class Section:
     title : short; it also stands in the contents
     lead : one plain sentence for a reader who stops there
     blocks : the text column, in order
-    beside : pictures one column wide, beside the text on wide screens
+    beside : what is one column wide, beside the text on wide screens
     below : blocks over the full width
     """
 
@@ -151,7 +158,7 @@ class Section:
     title: str
     lead: str
     blocks: tuple[Block, ...] = ()
-    beside: tuple[Picture, ...] = ()
+    beside: tuple[Block, ...] = ()
     below: tuple[Block, ...] = ()
 
 

@@ -117,7 +117,7 @@ def test_coupling_is_found_and_said(null):
     verdict = detect_coupling(null, 0)
     assert verdict.found
     assert verdict.p_value <= 0.05
-    assert "Spikes change the firing of other units" in verdict.sentence
+    assert "rates change after spikes of other units" in verdict.sentence
     assert "40 blocks of time" in verdict.sentence
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 import xml.etree.ElementTree as ET
 from dataclasses import replace
 from html.parser import HTMLParser
@@ -11,6 +12,7 @@ import numpy as np
 import pandas as pd
 import pytest
 
+import kernelfit.recording
 from kernelfit.errors import ArgumentError, OutputError, Unavailable
 from kernelfit.recording.inspection import Inspection, inspect_recording
 from kernelfit.recording.recording import Recording
@@ -18,6 +20,7 @@ from kernelfit.recording.table_writing import write_recording
 from kernelfit.recording.tables import read_recording
 from kernelfit.report.inspection_data import figures_data, interval_edges
 from kernelfit.report.inspection_page import PAGE, write_inspection
+from kernelfit.report.inspection_tables import KINDS
 
 NASTY = "<script>alert(1)</script>"
 DURATION_S = 300.0
@@ -260,3 +263,13 @@ def test_hardly_any_data_still_gives_a_page(n_units: int, n_spikes: int, tmp_pat
     assert read(page).wrong == []
     if n_spikes == 0:
         assert "could not be drawn" in page.read_text(encoding="utf-8")
+
+
+def test_every_kind_of_finding_has_words() -> None:
+    """Source: the keys as they stand in the checks themselves."""
+    source = "".join(
+        p.read_text(encoding="utf-8") for p in Path(kernelfit.recording.__file__).parent.glob("checks_*.py")
+    )
+    keys = re.findall(r"Finding\(\s*\"([a-z0-9_]+)\"", source)
+    assert len(keys) > 25
+    assert set(keys) == set(KINDS)

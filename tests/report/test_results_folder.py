@@ -9,7 +9,7 @@ import pytest
 
 from kernelfit.errors import OutputError
 from kernelfit.report import folder as folder_module
-from kernelfit.report.folder import ResultsFolder, check_folder
+from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder, files_list
 
 
 def write(path, text="one", **options):
@@ -171,3 +171,9 @@ def test_results_get_the_usual_permissions(tmp_path):
     (tmp_path / "plain").mkdir()
     write(tmp_path / "out")
     assert (tmp_path / "out").stat().st_mode == (tmp_path / "plain").stat().st_mode
+
+
+def test_a_page_lists_the_two_forms_of_a_figure_in_one_row():
+    files = (FileEntry("a.csv", "numbers"), FileEntry("figures/k.svg", "kernel"), FileEntry("figures/k.png", "kernel"))
+    assert files_list(files).rows == (("a.csv", "numbers"), ("figures/k.svg, .png", "kernel"))
+    assert files_list(files[2:]).rows == (("figures/k.png", "kernel"),)
