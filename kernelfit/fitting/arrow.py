@@ -1,6 +1,6 @@
 """Linear algebra of an information matrix with an arrow shape: each unit's own block, then the shared parameters.
 
-Eliminating the own blocks first keeps the cost linear in the number of units (MODEL.md section 4).
+Eliminating the own blocks first keeps the cost linear in the number of units (docs/model.md section 4).
 """
 
 from __future__ import annotations
@@ -11,6 +11,16 @@ import numpy as np
 import scipy.linalg
 
 from kernelfit._typing import BoolArray, FloatArray
+
+LEAST_OWN = 1e-13  # smallest eigenvalue of an own block with a unit diagonal: below it an inverse is rounding
+
+
+class SingularOwnBlock(np.linalg.LinAlgError):
+    """The own parameters of one unit cannot be told apart. `place` is its index among the targets."""
+
+    def __init__(self, place: int) -> None:
+        super().__init__(f"own block {place} is singular")
+        self.place = place
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,8 +68,14 @@ class Elimination:
 
 
 def eliminate(arrow: Arrow) -> Elimination:
-    """Eliminate the own blocks. Raises numpy's LinAlgError where one is singular."""
-    own_inverse = np.asarray(np.linalg.inv(arrow.own), dtype=np.float64)
+    """Eliminate the own blocks. Raises SingularOwnBlock, a LinAlgError of numpy, where one is singular."""
+    diagonal = np.diagonal(arrow.own, axis1=1, axis2=2)
+    scale = 1.0 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0))
+    scaled = arrow.own * scale[:, :, None] * scale[:, None, :]
+    weak = ~(np.linalg.eigvalsh(scaled)[:, 0] > LEAST_OWN) if scaled.size else np.zeros(len(scaled), dtype=bool)
+    if weak.any():
+        raise SingularOwnBlock(int(np.argmax(weak)))
+    own_inverse = np.linalg.inv(scaled) * scale[:, :, None] * scale[:, None, :]
     reduced = own_inverse @ arrow.cross
     schur = arrow.shared - np.einsum("npq,npr->qr", arrow.cross, reduced)
     return Elimination(own_inverse, reduced, 0.5 * (schur + schur.T))

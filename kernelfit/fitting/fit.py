@@ -11,8 +11,10 @@ import numpy as np
 from scipy.special import gammaln, xlogy
 
 from kernelfit._typing import FloatArray
-from kernelfit.errors import FitWarning
+from kernelfit._validation import is_whole
+from kernelfit.errors import ArgumentError, FitWarning, NotIdentifiedError
 from kernelfit.fitting.added_term import after_spike_test
+from kernelfit.fitting.arrow import SingularOwnBlock
 from kernelfit.fitting.covariance import Covariances, covariances
 from kernelfit.fitting.detection import detect_coupling
 from kernelfit.fitting.maximise import Optimum
@@ -40,13 +42,17 @@ def fit_model(
 ) -> CouplingFit:
     """Estimate a model from a recording; see `CouplingModel.fit`."""
     kind = covariance_kind(covariance)
+    _check_call(recording, threads, seed)
     started = time.monotonic()
     problem = make_problem(model, recording, threads=threads, progress=progress)
-    null = fit_null(problem)
-    verdict = detect_coupling(null, seed)
-    found, profile = _best(problem, null)
-    optimum = found.best
-    spread = covariances(problem, optimum)
+    try:
+        null = fit_null(problem)
+        verdict = detect_coupling(null, seed)
+        found, profile = _best(problem, null)
+        optimum = found.best
+        spread = covariances(problem, optimum)
+    except SingularOwnBlock as error:
+        raise NotIdentifiedError(_undetermined_unit(problem, recording, error.place)) from error
     added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None
     notes = fit_notes(problem, recording, optimum, spread, verdict)
     for note in notes:
@@ -97,6 +103,28 @@ def fit_model(
         version=__version__,
         created=datetime.now(UTC).isoformat(timespec="seconds"),
         recording=recording,
+    )
+
+
+def _check_call(recording: object, threads: int | None, seed: int) -> None:
+    if not isinstance(recording, Recording):
+        raise ArgumentError(
+            f"recording={recording!r:.60}: not a Recording. Read one with kf.read_recording(spikes, sites), or build "
+            "it with kf.Recording.from_arrays(...)."
+        )
+    if threads is not None and not (is_whole(threads) and threads >= 1):
+        raise ArgumentError(f"threads={threads!r} must be a whole number from 1 on, or None for all there are.")
+    if not (is_whole(seed) and seed >= 0):
+        raise ArgumentError(f"seed={seed!r} must be a whole number, 0 or more.")
+
+
+def _undetermined_unit(problem: Problem, recording: Recording, place: int) -> str:
+    unit = recording.unit_ids[problem.data.targets[place]]
+    n = int(problem.data.counts[place])
+    return (
+        f"{recording.origin.name('spikes')}: unit {unit!r} has {n} spike{'s' * (n != 1)} in the bins that count, from "
+        "which its baseline and after-spike coefficients cannot be told. Give the term a ridge (0.01 is the default of "
+        "kf.terms.AfterSpike), or fewer time constants, or leave the unit out (recording.select(min_spikes=...))."
     )
 
 

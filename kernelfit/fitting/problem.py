@@ -14,7 +14,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.engine.evaluate import Evaluation, Point, SweepData, TimeBlocks, evaluate
-from kernelfit.errors import ModelError, NotIdentifiedError
+from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
 from kernelfit.fitting.progress import Progress, ProgressCallback
 from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
 from kernelfit.model.coupling import CouplingModel
@@ -23,8 +23,8 @@ from kernelfit.recording.recording import Recording
 
 FASTEST_LEAK_BINS = 3.0  # alpha D above this leaves 5 % of a jump after one bin: nothing to see of the decay
 SLOWEST_LEAK_SHARE = 20.0  # a time constant above a twentieth of the recording looks like a drifting rate
+GONE_AFTER_BINS = 20.0  # time constants that pass in one bin: exp(-20) of an effect is left, nothing to estimate from
 EXPECTED_SWEEPS = 60
-TABLES_OF_NULL = 8  # bands of distance the first sweeps look at
 
 
 @dataclass(frozen=True, eq=False)
@@ -226,8 +226,9 @@ def make_problem(
 
     Raises
     ------
-    ModelError, GridError, NotIdentifiedError : see `CouplingModel.fit`
+    ArgumentError, ModelError, GridError, NotIdentifiedError : see `CouplingModel.fit`
     """
+    _check_time_scales(model)
     grid = make_grid(recording, model.bin_width, warm_up_s=model.warm_up_s)
     spikes = recording.origin.name("spikes")
     if recording.n_units < 2:
@@ -236,6 +237,11 @@ def make_problem(
             "A kernel needs at least two units at different sites."
         )
     targets = target_units(recording, grid)
+    if targets.size == 0 and grid.counts_in_sum.any():
+        raise ModelError(
+            f"{spikes}: every unit that fires in the bins that count is source-only, so there is nothing to explain. "
+            "Take units back with recording.select(source_only=[...])."
+        )
     if targets.size == 0:
         raise ModelError(
             f"{spikes}: no unit has a spike in the bins that are explained ({grid.duration_s:g} s in windows, "
@@ -259,6 +265,23 @@ def make_problem(
         )
     _check_identified(problem)
     return problem
+
+
+def _check_time_scales(model: CouplingModel) -> None:
+    """Refuse a stated leak or after-spike time constant of which nothing is left after one bin."""
+    shortest_s = model.bin_width / GONE_AFTER_BINS
+    if model.leak_rate is not None and model.leak_rate * model.bin_width > GONE_AFTER_BINS:
+        raise ArgumentError(
+            f"leak_rate={model.leak_rate:g}: of a spike's effect nothing is left after one bin of "
+            f"{1000 * model.bin_width:g} ms. Give a leak rate (1/s) of at most {1 / shortest_s:.3g}, or use narrower "
+            "bins. Is it a time constant? leak_rate is one over it."
+        )
+    constants = model.after_spike.constants(model.bin_width)
+    if constants.size and constants[0] < shortest_s:
+        raise ArgumentError(
+            f"after_spike: of a trace with a time constant of {constants[0]:g} s nothing is left after one bin of "
+            f"{1000 * model.bin_width:g} ms. Leave it out, or use narrower bins."
+        )
 
 
 def _check_identified(problem: Problem) -> None:

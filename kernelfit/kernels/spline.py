@@ -13,6 +13,7 @@ import numpy as np
 from scipy.interpolate import BSpline
 
 from kernelfit._typing import FloatArray, IntArray
+from kernelfit._validation import is_number, is_whole
 from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
 from kernelfit.kernels.base import DistanceRange, Kernel, KernelCurve, Parameter
 
@@ -46,18 +47,22 @@ class Spline(Kernel):
     axis: Literal["distance", "log-distance"] = "distance"
 
     def __post_init__(self) -> None:
-        if not _is_whole(self.n_basis) or self.n_basis <= DEGREE:
+        if not is_whole(self.n_basis) or self.n_basis <= DEGREE:
             raise ArgumentError(
                 f"n_basis={self.n_basis!r}: a cubic spline needs a whole number of at least 4."
             )
-        if not (np.isfinite(self.smoothing) and self.smoothing >= 0):
+        if not (is_number(self.smoothing) and self.smoothing >= 0):
             raise ArgumentError(f"smoothing={self.smoothing!r}: must be a finite number, 0 or above.")
-        if not _is_whole(self.order) or not 1 <= self.order < self.n_basis:
+        if not is_whole(self.order) or not 1 <= self.order < self.n_basis:
             raise ArgumentError(
                 f"order={self.order!r}: must be a whole number from 1 to n_basis - 1 = {self.n_basis - 1}."
             )
         if self.axis not in ("distance", "log-distance"):
             raise ArgumentError(f"axis={self.axis!r}: must be 'distance' or 'log-distance'.")
+        put = object.__setattr__  # plain numbers: numpy's cannot be written as JSON
+        put(self, "n_basis", int(self.n_basis))
+        put(self, "order", int(self.order))
+        put(self, "smoothing", float(self.smoothing))
 
     def parameters(self, span: DistanceRange) -> tuple[Parameter, ...]:
         return tuple(Parameter(f"coefficient_{k + 1}", "per spike") for k in range(self.n_basis))
@@ -195,7 +200,3 @@ def _others(which: IntArray) -> str:
     named = ", ".join(f"coefficient_{k + 1}" for k in sorted(which[1:4].tolist()))
     more = f" and {len(which) - 4} more" if len(which) > 4 else ""
     return f" (the same holds for {named}{more})"
-
-
-def _is_whole(value: object) -> bool:
-    return isinstance(value, int | np.integer) and not isinstance(value, bool)

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-import math
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Literal, cast
 
+from kernelfit._validation import is_number
 from kernelfit.errors import ArgumentError
 from kernelfit.kernels import Kernel, kernel_from
 from kernelfit.model.links import Link, link_from
@@ -83,7 +83,7 @@ class CouplingModel:
         put(self, "same_site", cast(SameSiteTreatment, same_site))
         put(self, "after_spike", after_spike_from(after_spike))
         put(self, "rate_course", rate_course_from(rate_course))
-        if not (isinstance(warm_up_s, (int, float)) and math.isfinite(warm_up_s) and warm_up_s >= 0):
+        if not (is_number(warm_up_s) and warm_up_s >= 0):
             raise ArgumentError(f"warm_up_s={warm_up_s!r} must be a number of seconds, 0 or more.")
         put(self, "warm_up_s", float(warm_up_s))
 
@@ -103,7 +103,7 @@ class CouplingModel:
         recording : what was recorded
         covariance : "robust", scores clustered by blocks of time (the default of every headline interval), or "model",
             the inverse expected information; both are computed and ``fit.with_covariance`` switches
-        threads : at most this many; None: all. The result is the same to the bit
+        threads : at most this many, 1 or more; None: all. The result is the same to the bit
         seed : for the sign flips of the coupling test
         progress : called with a `Progress` now and then
 
@@ -113,6 +113,7 @@ class CouplingModel:
 
         Raises
         ------
+        ArgumentError : not a recording, or an argument out of range
         ModelError : nothing to estimate (one unit, no spikes, no pair within reach)
         NotIdentifiedError : the recording says nothing about some parameter
         GridError : the bin width does not fit the recording
@@ -123,7 +124,6 @@ class CouplingModel:
 
 
 def _positive(name: str, value: object, what: str) -> float:
-    good = isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value) and value > 0
-    if not good:
+    if not (is_number(value) and value > 0):
         raise ArgumentError(f"{name}={value!r} must be a positive number of {what}.")
-    return float(cast(float, value))
+    return float(value)

@@ -1,4 +1,4 @@
-"""Terms beside the coupling (MODEL.md section 6): small immutable objects, with a plain string for the default."""
+"""Terms beside the coupling (docs/model.md section 6): small immutable objects, with a plain string for the default."""
 
 from __future__ import annotations
 
@@ -10,6 +10,7 @@ from typing import ClassVar, Literal
 import numpy as np
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import is_number
 from kernelfit.errors import ArgumentError
 
 STEPS_PER_DECADE = 1.7  # time constants a factor of about four apart: traces overlap, and are told apart
@@ -28,6 +29,10 @@ class AfterSpike:
     longest_s : longest time constant where they are chosen for you
     ridge : weight r of the penalty r/2 sum c^2; the default, a prior of standard deviation 10, only holds coefficients
         of lags that a unit with few spikes never showed
+
+    Raises
+    ------
+    ArgumentError : an option out of its range
     """
 
     time_constants_s: tuple[float, ...] | None = None
@@ -36,18 +41,23 @@ class AfterSpike:
     name: ClassVar[str] = "basis"
 
     def __post_init__(self) -> None:
+        put = object.__setattr__  # plain numbers: numpy's cannot be written as JSON
         if self.time_constants_s is not None:
-            values = tuple(float(t) for t in self.time_constants_s)
-            object.__setattr__(self, "time_constants_s", values)
+            given = self.time_constants_s if np.iterable(self.time_constants_s) else ()
+            values = tuple(float(t) for t in given if is_number(t) and t > 0)
             rising = all(a < b for a, b in itertools.pairwise(values))
-            if not values or not all(math.isfinite(t) and t > 0 for t in values) or not rising:
+            if not values or len(values) < len(list(given)) or not rising:
                 raise ArgumentError(
-                    f"after_spike: time_constants_s={values} must be positive seconds, each longer than the one before."
+                    f"after_spike: time_constants_s={self.time_constants_s!r} must be positive seconds, each longer "
+                    "than the one before, such as (0.002, 0.02, 0.2)."
                 )
-        if not (math.isfinite(self.longest_s) and self.longest_s > 0):
-            raise ArgumentError(f"after_spike: longest_s={self.longest_s} must be a positive number of seconds.")
-        if not (math.isfinite(self.ridge) and self.ridge >= 0):
-            raise ArgumentError(f"after_spike: ridge={self.ridge} must be 0 or more.")
+            put(self, "time_constants_s", values)
+        if not (is_number(self.longest_s) and self.longest_s > 0):
+            raise ArgumentError(f"after_spike: longest_s={self.longest_s!r} must be a positive number of seconds.")
+        if not (is_number(self.ridge) and self.ridge >= 0):
+            raise ArgumentError(f"after_spike: ridge={self.ridge!r} must be a number, 0 or more.")
+        put(self, "longest_s", float(self.longest_s))
+        put(self, "ridge", float(self.ridge))
 
     def constants(self, bin_width: float) -> FloatArray:
         """(M,) time constants in seconds at this bin width."""

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.arrow import Arrow, SingularOwnBlock, eliminate, solve_symmetric
 
 SHAPES = [(1, 1, 1), (3, 1, 2), (4, 3, 2), (7, 2, 5), (2, 4, 1)]  # units, own parameters, shared ones
 
@@ -116,3 +116,13 @@ def test_solve_symmetric_does_not_mind_scales():
 def test_a_singular_or_indefinite_matrix_raises(matrix):
     with pytest.raises(np.linalg.LinAlgError):
         solve_symmetric(matrix, np.ones(2))
+
+
+@pytest.mark.parametrize("block", [np.diag([1.0, 0.0]), np.ones((2, 2)), np.array([[1.0, 1e6], [1e6, 1e12]])])
+def test_a_singular_own_block_is_named(block):
+    """Whatever the scales of its parameters: the third is the second in other units."""
+    arrow, _ = arrow_and_dense(11, 3, 2, 1)
+    arrow.own[1] = block
+    with pytest.raises(SingularOwnBlock) as caught:
+        eliminate(arrow)
+    assert caught.value.place == 1
