@@ -20,6 +20,7 @@ from kernelfit.fitting.problem import Problem
 N_BLOCKS = 100
 SHORTEST_BLOCK_S = 1.0
 SHORTEST_BLOCK_TAUS = 20.0
+FEWEST_BLOCKS = 10  # with 20 tau above a tenth of the recording there would soon be one block, and no variance
 SMALLEST_EIGENVALUE = (
     1e-9  # of the information scaled to a unit diagonal: below this two parameters cannot be told apart
 )
@@ -49,8 +50,12 @@ class Covariances:
 
 
 def block_length_s(duration_s: float, leak: float) -> float:
-    """About a hundred blocks, none shorter than max(1 s, 20 tau) (docs/model.md section 8)."""
-    return max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S, SHORTEST_BLOCK_TAUS / leak)
+    """About a hundred blocks, none shorter than max(1 s, 20 tau) (docs/model.md section 8).
+
+    A leak so slow that fewer than `FEWEST_BLOCKS` would be left, as one that is not identified may be, gets shorter ones.
+    """
+    slow = min(SHORTEST_BLOCK_TAUS / leak, duration_s / FEWEST_BLOCKS)
+    return max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S, slow)
 
 
 def covariances(problem: Problem, optimum: Optimum) -> Covariances:

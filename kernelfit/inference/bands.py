@@ -22,7 +22,8 @@ def standard_errors(gradient: FloatArray, covariance: FloatArray) -> FloatArray:
     if not known.any():
         return np.full(gradient.shape[1], np.nan)
     g = gradient[known]
-    return np.asarray(np.sqrt(np.einsum("qm,qr,rm->m", g, covariance[np.ix_(known, known)], g)))
+    variance = np.einsum("qm,qr,rm->m", g, covariance[np.ix_(known, known)], g)
+    return np.asarray(np.sqrt(np.maximum(variance, 0.0)))  # rounding can leave a variance of 0 below it
 
 
 def sup_t_critical(

@@ -46,7 +46,7 @@ def wald_intervals(
         used = row != 0
         if used.any():
             variance[k] = float(row[used] @ covariance[np.ix_(used, used)] @ row[used])
-    std_error = np.sqrt(variance)
+    std_error = np.sqrt(np.maximum(variance, 0.0))  # rounding can leave a variance of 0 below it
     half = np.asarray(critical) * std_error
     with np.errstate(divide="ignore", invalid="ignore", over="ignore"):
         factor = np.exp(half / natural)

@@ -17,6 +17,7 @@ if TYPE_CHECKING:
     from kernelfit.model.coupling import CovarianceKind
 
 FIXED = "fixed"
+ONE_BLOCK = "no robust standard error: a single block of time; fit.with_covariance('model') has one"
 
 
 def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], BoolArray]:
@@ -29,7 +30,7 @@ def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[
     jacobian = np.zeros((fit.shared.size, fit.shared.size))
     jacobian[:n, :n] = kernel.natural_jacobian(theta, fit.span)
     names, units = [p.name for p in family], [p.unit for p in family]
-    on_log = [p.shape and p.name != "amplitude" for p in family]
+    on_log = [p.scale == "log" for p in family]
     if fit.has_same_site:
         values.append(fit.shared[n])
         jacobian[n, n] = 1.0
@@ -60,7 +61,7 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
     interval
     widened for the search over length and leak. A fixed leak has NaN and the note "fixed".
     """
-    _, jacobian, names, units, on_log = _natural(fit)
+    _, jacobian, names, units, _ = _natural(fit)
     wald = _intervals(fit, kind, level)
     table = pd.DataFrame(
         {
@@ -69,7 +70,7 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
             "lower": wald.lower.copy(),
             "upper": wald.upper.copy(),
             "unit": units,
-            "note": [_note(fit, row) for row in jacobian],
+            "note": [_note(fit, kind, row) for row in jacobian],
         },
         index=pd.Index(names, name="parameter", dtype=object),
     )
@@ -80,10 +81,12 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
         table.loc[discrete, ["std_error", "lower", "upper"]] = [np.nan, *fit.radius_interval]
         table.loc[discrete, "note"] = "profiled over the distances of the array; the interval is a likelihood interval"
     if not fit.verdict.found:
-        shapes = np.array([*on_log])
-        table.loc[table.index[shapes], numbers] = np.nan
-        table.loc[table.index[shapes], "note"] = "not identified: no coupling to describe"
-        table.loc[table.index[~shapes], "note"] = (
+        fits_leak = fit.model.leak_rate is None
+        shape = np.array([*(p.shape for p in family), *[False] * fit.has_same_site, *[True] * fits_leak])
+        widened = ~shape & np.isfinite(wald.std_error)
+        table.loc[table.index[shape], numbers] = np.nan
+        table.loc[table.index[shape], "note"] = "not identified: no coupling to describe"
+        table.loc[table.index[widened], "note"] = (
             "no coupling found; interval widened for the search over length and leak"
         )
     if fit.model.leak_rate is not None:
@@ -92,7 +95,7 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
     return table
 
 
-def _note(fit: CouplingFit, jacobian_row: FloatArray) -> str:
+def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> str:
     """Why a parameter has no standard error, where it has none."""
     used = np.flatnonzero(jacobian_row)
     reasons = [fit.bound_reasons[q] for q in used if fit.at_bound[q] != 0]
@@ -103,7 +106,7 @@ def _note(fit: CouplingFit, jacobian_row: FloatArray) -> str:
         if used[0] < len(family) and family[used[0]].discrete:
             return ""
         return "not identified: the recording says nothing about it (see notes)"
-    return ""
+    return ONE_BLOCK if kind == "robust" and fit.n_blocks < 2 else ""
 
 
 def std_error_table(fit: CouplingFit) -> pd.DataFrame:
@@ -128,6 +131,8 @@ def baseline_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.D
     explained = np.zeros(n, dtype=bool)
     explained[fit.targets] = True
     notes = np.array([""] * n, dtype=object)
+    if kind == "robust" and fit.n_blocks < 2:
+        notes[fit.targets] = ONE_BLOCK
     silent = ~explained & (fit.counts == 0)
     rate[silent] = 0.0
     notes[silent] = "silent in the bins that count: baseline minus infinity, rate 0; still drives others"
