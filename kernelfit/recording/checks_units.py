@@ -113,11 +113,12 @@ def _same_site(e: Evidence) -> Iterator[Finding]:
     first = np.flatnonzero(~np.tril(together, -1).any(axis=1) & together.any(axis=1))
     sites = ["+".join(e.units_where(together[k] | (np.arange(len(together)) == k))) for k in first]
     apart = int(np.sum(together & (e.layout.distance_um > 0.0))) // 2
+    verb = "holds" if len(sites) == 1 else "hold"
     note = f" ({counted(apart, 'pair')} of them less than 1 µm apart, not at the same point)" if apart else ""
     yield Finding(
         "units_on_one_site",
         "info",
-        f"{counted(len(sites), 'site')} of {e.layout.n_sites} hold several units, {counted(n_pairs, 'pair')}{note}.",
+        f"{counted(len(sites), 'site')} of {e.layout.n_sites} {verb} several units, {counted(n_pairs, 'pair')}{note}.",
         names(sites, shown=6),
         "Such pairs are left out of the kernel by default, because a detector on one site misses "
         "overlapping spikes; same_site='own' (--same-site own) gives them a coefficient of their own.",
