@@ -193,14 +193,14 @@ EDGES = np.array([100.0, 120.0, 180.0, 200.0, 260.0])
 @pytest.mark.parametrize(
     ("inflation", "interval"),
     [
-        (1.0, (120.0, 200.0)),  # drops 18, 3, 0, 8 against 3.84: 150 and 190 stay, out to 120 and 200
-        (2.5, (120.0, 260.0)),  # against 9.6: 230 too
-        (5.0, (100.0, 260.0)),  # against 19.2: all of them
+        (1.0, (120.0, 200.0)),  # drops 18, 3, 0, 8 against 7.35: 150 and 190 stay, out to 120 and 200
+        (1.5, (120.0, 260.0)),  # against 11: 230 too
+        (5.0, (100.0, 260.0)),  # against 36.7: all of them
         (0.1, (180.0, 200.0)),  # only the best: the distances around it
     ],
 )
 def test_interval_of_the_radius(inflation, interval):
-    """Likelihood ratio against the 95 % point of chi-square(1), 3.84, times the inflation."""
+    """Likelihood ratio of an edge against 7.35 (Hansen 2000, table 1, 95 %) times the inflation."""
     assert PROFILE.interval(0.95, EDGES, inflation) == interval
 
 
