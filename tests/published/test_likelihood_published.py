@@ -201,16 +201,17 @@ def test_criteria(pair):
 
 
 # --- printed Poisson regressions --------------------------------------------------------------------------
-# Any Poisson regression can be put as a coupling model: one unit is explained in bins of 1 s, and for each bin a unit
-# of its own, source-only, fires in the bin before. With gamma = e^-40 nothing of an older spike is left, and a kernel
-# that is e^40 times the covariates of the bin at its unit's distance makes the predictor exactly b + x'theta.
+# Any Poisson regression can be put as a coupling model: one unit is explained in bins of 1 s, and for each bin t a unit
+# of its own, source-only, fires in the bin before. U_t = gamma (U_{t-1} + w_t) is x_t'theta in every bin if unit t
+# jumps by w_t = (x_t / gamma - x_{t-1})'theta. The leak is fast, so that blocks of time of one bin hold 20 time constants.
 
-GAMMA_LEAK = 40.0
+LEAK_PER_S = 20.0
+GAMMA = np.exp(-LEAK_PER_S)
 
 
 @dataclass(frozen=True)
 class Covariates(Kernel):
-    """J(d) = e^40 x'theta with the row x of the unit at distance 100 (t + 1) µm."""
+    """J(d) = (x_t / gamma - x_{t-1})'theta, t the unit at distance 100 (t + 1) µm."""
 
     rows: tuple[tuple[float, ...], ...] = ()
     name: ClassVar[str] = "covariates"
@@ -219,7 +220,9 @@ class Covariates(Kernel):
         return tuple(Parameter(f"beta_{k + 1}", "") for k in range(len(self.rows[0])))
 
     def gradient(self, theta, d_um, span):
-        return np.exp(GAMMA_LEAK) * np.array(self.rows)[np.round(d_um / 100.0).astype(int) - 1].T
+        x = np.array(self.rows)
+        jumps = x / GAMMA - np.vstack([np.zeros(x.shape[1]), x[:-1]])
+        return jumps[np.round(d_um / 100.0).astype(int) - 1].T
 
     def value(self, theta, d_um, span):
         return theta @ self.gradient(theta, d_um, span)
@@ -235,7 +238,7 @@ def regression(y, *columns):
     recording = kf.Recording.from_arrays(spikes, positions, [(0.0, float(n))])
     recording = recording.select(source_only=[f"x{t}" for t in range(n)])
     kernel = Covariates(tuple(tuple(float(v) for v in row) for row in x))
-    model = kf.CouplingModel(kernel=kernel, bin_width=1.0, leak_rate=GAMMA_LEAK, after_spike="none")
+    model = kf.CouplingModel(kernel=kernel, bin_width=1.0, leak_rate=LEAK_PER_S, after_spike="none")
     return model.fit(recording, "model", threads=1)
 
 
