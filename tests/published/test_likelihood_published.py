@@ -203,7 +203,7 @@ def test_criteria(pair):
 # --- printed Poisson regressions --------------------------------------------------------------------------
 # Any Poisson regression can be put as a coupling model: one unit is explained in bins of 1 s, and for each bin t a unit
 # of its own, source-only, fires in the bin before. U_t = gamma (U_{t-1} + w_t) is x_t'theta in every bin if unit t
-# jumps by w_t = (x_t / gamma - x_{t-1})'theta. The leak is fast, so that blocks of time of one bin hold 20 time constants.
+# jumps by w_t = (x_t / gamma - x_{t-1})'theta. With so fast a leak a bin is 20 time constants, a block.
 
 LEAK_PER_S = 20.0
 GAMMA = np.exp(-LEAK_PER_S)
