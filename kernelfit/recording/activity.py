@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -138,9 +139,7 @@ def come_and_go(activity: Blocks, *, min_spikes: int = 100) -> BoolArray:
 def gaps(train: MergedTrain) -> pd.DataFrame:
     """start_s, stop_s, length_s of stretches of 10 s and more in which no unit fires, longest first."""
     starts, stops = [], []
-    for start, stop in train.observed:
-        low, high = np.searchsorted(train.time_s, [start, stop])
-        edges = np.concatenate([[start], train.time_s[low:high], [stop]])
+    for edges in _edges(train):
         long = np.flatnonzero(np.diff(edges) >= GAP_S)
         starts.append(edges[long])
         stops.append(edges[long + 1])
@@ -152,6 +151,19 @@ def gaps(train: MergedTrain) -> pd.DataFrame:
     )
     table["length_s"] = table["stop_s"] - table["start_s"]
     return table.sort_values("length_s", ascending=False, kind="stable", ignore_index=True)
+
+
+def longest_break(train: MergedTrain) -> float:
+    """Longest stretch below 10 s in which no unit fires, seconds; 0 where there is none."""
+    lengths = np.concatenate([np.zeros(1), *(np.diff(edges) for edges in _edges(train))])
+    return float(lengths[lengths < GAP_S].max())
+
+
+def _edges(train: MergedTrain) -> Iterator[FloatArray]:
+    """For each observed stretch its start, its spikes and its stop, seconds."""
+    for start, stop in train.observed:
+        low, high = np.searchsorted(train.time_s, [start, stop])
+        yield np.concatenate([[start], train.time_s[low:high], [stop]])
 
 
 @dataclass(frozen=True, slots=True)

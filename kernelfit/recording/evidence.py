@@ -8,7 +8,16 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
-from kernelfit.recording.activity import Blocks, Burstiness, Intervals, blocks, burstiness, gaps, intervals
+from kernelfit.recording.activity import (
+    Blocks,
+    Burstiness,
+    Intervals,
+    blocks,
+    burstiness,
+    gaps,
+    intervals,
+    longest_break,
+)
 from kernelfit.recording.artefacts import WholeArrayEvents, whole_array_events
 from kernelfit.recording.bin_width import BinWidthAdvice, advise, disturbed_lag, excess_fall
 from kernelfit.recording.coincidence import DeadTime, PairExcess, dead_time, pair_excess
@@ -30,6 +39,7 @@ class Evidence:
     masked : the same without the proposed exclusions
     step_s : time grid of the spikes, or None
     intervals, blocks, gaps, burstiness : of `train`; `burstiness` is that of `masked`
+    longest_break_s : the longest silence of `train` that is too short for `gaps`
     events : whole-array events, proposed for exclusion
     fine, fine_masked : short-lag pair counts of both trains
     correlograms, correlograms_masked : tables of both; the same table where nothing is proposed
@@ -48,6 +58,7 @@ class Evidence:
     intervals: Intervals
     blocks: Blocks
     gaps: pd.DataFrame
+    longest_break_s: float
     burstiness: Burstiness | None
     events: WholeArrayEvents
     fine: FineCounts
@@ -104,6 +115,7 @@ def gather(recording: Recording, *, seed: int) -> Evidence:
         intervals=held,
         blocks=blocks(train),
         gaps=gaps(train),
+        longest_break_s=longest_break(train),
         burstiness=burstiness(masked),
         events=events,
         fine=fine,

@@ -142,6 +142,10 @@ def pause(trains: dict[str, np.ndarray]) -> Recording:
     return recording_of({u: t[(t < 200) | (t > 290)] for u, t in trains.items()})
 
 
+def short_pause(trains: dict[str, np.ndarray]) -> Recording:
+    return recording_of({u: t[(t < 200) | (t > 212)] for u, t in trains.items()})
+
+
 def one_that_carries_it(trains: dict[str, np.ndarray]) -> Recording:
     fast = np.sort(np.random.default_rng(2).choice(np.arange(0, DURATION_S, 0.01), 36_000, replace=False))
     return recording_of({**trains, "u09": fast})
@@ -194,6 +198,7 @@ PLANTED = {  # fault -> its key, its severity, and a name that must be said unde
     rate_that_drops: ("rate_changes", "warning", "busiest"),
     unit_that_leaves: ("units_come_or_go", "warning", "u05"),
     pause: ("gaps", "warning", "290"),
+    short_pause: ("gaps", "warning", "212"),
     one_that_carries_it: ("dominant_unit", "warning", "u09"),
     few_waves: ("few_events", "warning", "whole recording"),
     windows_elsewhere: ("spikes_outside_windows", "warning", "windows"),
