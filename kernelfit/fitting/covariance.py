@@ -52,7 +52,7 @@ class Covariances:
 def block_length_s(duration_s: float, leak: float) -> float:
     """About a hundred blocks, none shorter than max(1 s, 20 tau) (docs/model.md section 8).
 
-    A leak so slow that fewer than `FEWEST_BLOCKS` would be left, as one that is not identified may be, gets shorter ones.
+    A leak so slow that fewer than `FEWEST_BLOCKS` would be left, as one not identified may be, gets shorter ones.
     """
     slow = min(SHORTEST_BLOCK_TAUS / leak, duration_s / FEWEST_BLOCKS)
     return max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S, slow)

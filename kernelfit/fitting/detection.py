@@ -1,11 +1,16 @@
 """Is there any coupling to describe? A test that holds although leak and length mean nothing without coupling.
 
 Where a parameter vanishes under the null (Davies 1977), the estimate of the amplitude at the best-looking length and
-leak
-is too extreme to be judged by its own standard error. The statistic here is the largest, over the leaks of the grid, of
-the quadratic form of the efficient score of coupling in bands of distance, taken at the fit without coupling. Under
-the null the block scores are as likely to be of one sign as of the other, so flipping the signs of whole blocks of time
-gives its distribution (the multiplier idea of Hansen 1996 with random signs), bursts and all.
+leak is too extreme to be judged by its own standard error. The statistic here is the largest, over the leaks of the
+grid, of the quadratic form of the efficient score of coupling in bands of distance, taken at the fit without coupling.
+Under the null the block scores are as likely to be of one sign as of the other, so flipping the signs of whole blocks
+of time gives its distribution (the multiplier idea of Hansen 1996 with random signs), bursts and all.
+
+The form is weighted by the inverse expected information, not by the spread of the scores themselves: where units fire
+seldom and a band happens to hold no coincidence, its scores are all small, of one sign and alike, and divided by their
+own spread they would look certain. A spread above the expected one, that of bursts, is divided out, so that one leak
+does not drown the others; flips that spread less than expected are stretched to it. Blocks are joined as long as
+neighbours go together, which they do where rates drift over more than a block.
 """
 
 from __future__ import annotations
@@ -15,11 +20,15 @@ from dataclasses import dataclass
 import numpy as np
 
 from kernelfit._typing import FloatArray
-from kernelfit.fitting.null import Null
+from kernelfit.fitting.null import Null, NullSweep
 
 N_TEST_BANDS = 4
 N_FLIPS = 1999
 LEVEL = 0.05
+FEWEST_BLOCKS = 6  # with fewer there are too few patterns of signs for a p-value of 5 %
+ENOUGH_BLOCKS = 12  # no joining below this
+TOGETHER = 1.3  # standard errors of the correlation of neighbouring blocks
+ROUNDING = 1e-9  # a pattern of signs as extreme as the observed one must not miss it by rounding
 
 
 @dataclass(frozen=True)
@@ -49,31 +58,89 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
     seed : of the sign flips
     """
     rng = np.random.default_rng(seed)
-    n_blocks = null.sweeps[0].block_score.shape[0]
+    directions = _joined([_directions(sweep) for sweep in null.sweeps])
+    n_blocks = directions[0].scores.shape[0]
     signs = rng.choice(np.array([-1.0, 1.0]), size=(N_FLIPS, n_blocks))
-    observed, flipped = 0.0, np.zeros(N_FLIPS)
-    for sweep in null.sweeps:
-        scores = _coarse(sweep.block_score, N_TEST_BANDS)
-        weight = np.linalg.pinv(scores.T @ scores, rcond=1e-10, hermitian=True)
-        total = scores.sum(axis=0)
-        observed = max(observed, float(total @ weight @ total))
-        draws = signs @ scores
-        flipped = np.maximum(flipped, np.sum((draws @ weight) * draws, axis=1))
-    p_value = (1.0 + float(np.sum(flipped >= observed))) / (N_FLIPS + 1.0)
-    critical_z = float(np.sqrt(np.quantile(flipped, 1.0 - LEVEL)))
+    observed, flipped, searched = 0.0, np.zeros(N_FLIPS), np.zeros(N_FLIPS)
+    for d in directions:
+        draws = signs @ d.scores
+        observed = max(observed, float(d.form(d.scores.sum(axis=0)[None])[0]) / max(d.excess, 1.0))
+        flipped = np.maximum(flipped, d.form(draws) / d.excess if d.excess > 0 else 0.0)
+        own = np.linalg.pinv(d.spread, rcond=1e-10, hermitian=True)  # in units of robust standard errors
+        searched = np.maximum(searched, np.sum((draws @ own) * draws, axis=1))
+    reached = flipped >= observed * (1.0 - ROUNDING)
+    p_value = (1.0 + float(np.sum(reached))) / (N_FLIPS + 1.0)
+    critical_z = float(np.sqrt(np.quantile(searched, 1.0 - LEVEL)))
     found = p_value <= LEVEL
+    return CouplingVerdict(found, p_value, critical_z, _sentence(found, p_value, n_blocks))
+
+
+def _sentence(found: bool, p_value: float, n_blocks: int) -> str:
+    if n_blocks < FEWEST_BLOCKS:
+        blocks = f"{n_blocks} block{'s' * (n_blocks != 1)} of time"
+        return (
+            f"No coupling to describe: the recording is too short to test for any ({blocks}; {FEWEST_BLOCKS} are "
+            "needed). Length and leak rate mean nothing here."
+        )
     shown = "< 0.001" if p_value < 0.001 else f"= {p_value:.2g}"
-    sentence = (
-        f"Units' rates change after spikes of other units (test of any coupling, sign flips of {n_blocks} blocks of "
-        f"time: p {shown})."
-        if found
-        else f"No coupling to describe: the recording is described as well without any (test of any coupling, sign "
-        f"flips of {n_blocks} blocks of time: p {shown}). Length and leak rate mean nothing here."
+    test = f"test of any coupling, sign flips of {n_blocks} blocks of time: p {shown}"
+    if found:
+        return f"Units' rates change after spikes of other units ({test})."
+    return (
+        f"No coupling to describe: the recording is described as well without any ({test}). Length and leak rate mean "
+        "nothing here."
     )
-    return CouplingVerdict(found, p_value, critical_z, sentence)
 
 
-def _coarse(scores: FloatArray, n: int) -> FloatArray:
-    """Add neighbouring bands up until at most n are left: fewer directions, more power."""
-    groups = np.array_split(np.arange(scores.shape[1]), min(n, scores.shape[1]))
-    return np.column_stack([scores[:, g].sum(axis=1) for g in groups])
+@dataclass(frozen=True, eq=False)
+class _Directions:
+    """Scores by block of time in a few bands at one leak, (G, K), and their expected information (K, K)."""
+
+    scores: FloatArray
+    information: FloatArray
+
+    @property
+    def spread(self) -> FloatArray:
+        """(K, K) sum of the products of the scores by block."""
+        return np.asarray(self.scores.T @ self.scores)
+
+    def form(self, scores: FloatArray) -> FloatArray:
+        """(n,) quadratic form of (n, K) scores, weighted by the inverse expected information."""
+        weight = np.linalg.pinv(self.information, rcond=1e-10, hermitian=True)
+        return np.asarray(np.sum((scores @ weight) * scores, axis=1))
+
+    @property
+    def excess(self) -> float:
+        """Spread of the scores over the expected one, averaged over the bands that carry information."""
+        rank = int(np.linalg.matrix_rank(self.information, hermitian=True))
+        return float(self.form(self.scores).sum()) / rank if rank else 0.0
+
+    def togetherness(self) -> float:
+        """Correlation of neighbouring blocks, in its standard errors where there is none."""
+        scores = self.scores - self.scores.mean(axis=0)
+        own, both = self.form(scores), self.form(scores[:-1] + scores[1:])
+        correlation = 0.5 * float(np.sum(both - own[:-1] - own[1:])) / max(float(own.sum()), np.finfo(float).tiny)
+        return float(correlation * np.sqrt(len(scores)))
+
+    def joined(self) -> _Directions:
+        """Each two neighbouring blocks as one; an odd last one stands alone."""
+        first = np.arange(0, len(self.scores), 2)
+        return _Directions(np.add.reduceat(self.scores, first, axis=0), self.information)
+
+
+def _directions(sweep: NullSweep) -> _Directions:
+    sums = _sums(sweep.block_score.shape[1], N_TEST_BANDS)
+    return _Directions(sweep.block_score @ sums, sums.T @ sweep.information @ sums)
+
+
+def _joined(directions: list[_Directions]) -> list[_Directions]:
+    """Join blocks two by two while neighbours go together at some leak and enough blocks are left."""
+    while len(directions[0].scores) >= 2 * ENOUGH_BLOCKS and max(d.togetherness() for d in directions) > TOGETHER:
+        directions = [d.joined() for d in directions]
+    return directions
+
+
+def _sums(n_bands: int, n: int) -> FloatArray:
+    """(n_bands, at most n) adds neighbouring bands up: fewer directions, more power."""
+    groups = np.array_split(np.arange(n_bands), min(n, n_bands))
+    return np.array([np.isin(np.arange(n_bands), g) for g in groups], dtype=np.float64).T

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+from types import SimpleNamespace
 
 import numpy as np
 import pytest
@@ -11,8 +12,8 @@ from scipy.stats import kstest
 from worlds import BIN_S, LEAK, NOTHING, array, model, simulated
 
 from kernelfit.engine.twin import dense_counts, dense_gradients
-from kernelfit.fitting.detection import detect_coupling
-from kernelfit.fitting.null import fit_null, leak_grid, null_blocks, with_bands
+from kernelfit.fitting.detection import FEWEST_BLOCKS, LEVEL, detect_coupling
+from kernelfit.fitting.null import NullSweep, fit_null, leak_grid, null_blocks, with_bands
 from kernelfit.fitting.problem import Estimate, make_problem
 from kernelfit.recording.recording import Recording
 
@@ -125,6 +126,62 @@ def test_p_values_are_one_more_than_flips_that_reach_the_statistic(null):
     """With one block there are two sign patterns, both as extreme: p = 1."""
     merged = tuple(dataclasses.replace(s, block_score=s.block_score.sum(axis=0, keepdims=True)) for s in null.sweeps)
     assert detect_coupling(dataclasses.replace(null, sweeps=merged), 0).p_value == 1.0
+
+
+def scored(scores, information):
+    """A null whose one sweep has these scores by block and band."""
+    sweep = NullSweep(1.0, np.zeros(scores.shape[1]), np.diag(information), scores, 0.0)
+    return SimpleNamespace(sweeps=(sweep,))
+
+
+def rejected(draw, n=300):
+    """Share of n made-up nulls in which coupling is found."""
+    return np.mean([detect_coupling(scored(*draw(np.random.default_rng([9, k]))), 0).found for k in range(n)])
+
+
+def coincidences(rng, expected):
+    """100 blocks of time, four bands; coincidences are Poisson, `expected` of them a band; scores are count - mean."""
+    return rng.poisson(expected / 100, (100, 4)) - expected / 100, np.full(4, expected)
+
+
+@pytest.mark.parametrize("expected", [0.5, 1.0, 3.0, 10.0, 100.0])
+def test_size_where_coincidences_are_rare(expected):
+    """A band that happens to hold none has scores all small, of one sign and alike: no evidence of anything."""
+    share = rejected(lambda rng: coincidences(rng, expected))
+    assert share <= LEVEL + 4 * np.sqrt(LEVEL * (1 - LEVEL) / 300)
+
+
+def drifting(rng, blocks, mean=0.0):
+    """256 block scores in two bands that go together over about so many blocks."""
+    keep = np.exp(-1.0 / blocks)
+    noise = rng.normal(size=(256 + 50, 2))
+    scores = np.zeros_like(noise)
+    for t in range(1, len(noise)):
+        scores[t] = keep * scores[t - 1] + np.sqrt(1 - keep**2) * noise[t]
+    return scores[50:] + mean, np.full(2, 256.0)
+
+
+def test_blocks_that_go_together_are_joined():
+    """Rates that drift over five blocks: flipped on their own, blocks would look like coupling in three cases of four.
+
+    Dependence left between the joined ones keeps the share above 5 %: a sixth was measured; 0.25 is four Monte-Carlo
+    standard errors above it.
+    """
+    assert rejected(lambda rng: drifting(rng, 5.0)) <= 0.25
+    verdict = detect_coupling(scored(*drifting(np.random.default_rng(1), 5.0)), 0)
+    assert "sign flips of 256 blocks" not in verdict.sentence
+
+
+def test_joined_blocks_still_find_what_is_there():
+    assert rejected(lambda rng: drifting(rng, 3.0, mean=0.6), n=100) >= 0.8
+
+
+def test_too_few_blocks_are_said_to_be_too_few():
+    """With five blocks 2 of 32 patterns of signs are as extreme as the best: p is 6 % at least. With six, 2 of 64."""
+    few, enough = (scored(np.full((n, 1), 5.0), np.ones(1)) for n in (FEWEST_BLOCKS - 1, FEWEST_BLOCKS))
+    assert "too short to test for any (5 blocks of time; 6 are needed)" in detect_coupling(few, 0).sentence
+    assert not detect_coupling(few, 0).found
+    assert detect_coupling(enough, 0).p_value == pytest.approx(2 / 64, abs=4 * np.sqrt(2 / 64 / 1999))
 
 
 N_SIZE = 120
