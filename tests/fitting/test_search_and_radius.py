@@ -12,11 +12,12 @@ from worlds import LEAK, NOTHING, model, simulated
 from kernelfit import kernels
 from kernelfit.fitting import search as search_module
 from kernelfit.fitting.covariance import covariances
+from kernelfit.fitting.fit import _second_sentence
 from kernelfit.fitting.maximise import evaluate_locally, maximise
 from kernelfit.fitting.null import NullSweep, fit_null
 from kernelfit.fitting.problem import Estimate, make_problem
 from kernelfit.fitting.radius import RadiusProfile, discrete_parameter, search_radius
-from kernelfit.fitting.search import promising, search, shrunk, start_estimates
+from kernelfit.fitting.search import SearchResult, promising, search, shrunk, start_estimates
 
 DISC = kernels.Disc().at(amplitude=0.3, length_um=160.0)
 
@@ -214,3 +215,18 @@ def test_without_coupling_the_radius_search_still_ends():
     found, profile = search_radius(problem, fit_null(problem), 1)
     assert np.isfinite(profile.objective).all()
     assert np.isfinite(found.best.local.objective)
+
+
+def test_a_second_optimum_is_put_in_words(gaussian):
+    problem, null = gaussian
+    best = search(problem, null).best
+    shared = best.estimate.shared + np.array([0.0, 0.5, -0.7])
+    local = dataclasses.replace(
+        best.local, estimate=Estimate(best.estimate.own, shared), objective=best.local.objective - 1.25
+    )
+    second = dataclasses.replace(best, local=local)
+    sentence = _second_sentence(problem, SearchResult(best, second, ()))
+    assert "only 1.2 log-likelihood units below" in sentence
+    assert f"length_um {np.exp(shared[1]):.3g}" in sentence
+    assert f"time constant {1000 * np.exp(-best.estimate.shared[2]):.3g} ms" in sentence
+    assert _second_sentence(problem, SearchResult(best, None, ())) is None
