@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
-from functools import cached_property
 from pathlib import Path
 from typing import TYPE_CHECKING
 
@@ -180,21 +179,21 @@ class CouplingFit:
 
     # --- tables ---------------------------------------------------------------------------------------
 
-    @cached_property
+    @property
     def parameters(self) -> pd.DataFrame:
-        """Shared parameters by name: estimate, std_error, lower, upper (95 %), unit, note. A fresh table per fit."""
+        """Shared parameters by name: estimate, std_error, lower, upper (95 %), unit, note. A fresh copy each time."""
         from kernelfit.inference.parameters import parameter_table  # inference stands above; the contract wants it here
 
         return parameter_table(self, self.covariance_kind, LEVEL)
 
-    @cached_property
+    @property
     def std_errors(self) -> pd.DataFrame:
-        """By parameter name: model, robust and their ratio robust / model."""
+        """By parameter name: model, robust and their ratio robust / model. A fresh copy at each call."""
         from kernelfit.inference.parameters import std_error_table
 
         return std_error_table(self)
 
-    @cached_property
+    @property
     def baselines(self) -> pd.DataFrame:
         """By unit, all units in order: estimate (b_i), std_error, lower, upper, rate_hz = f(b_i), note."""
         from kernelfit.inference.parameters import baseline_table
@@ -233,7 +232,9 @@ class CouplingFit:
 
         Returns
         -------
-        DataFrame : distance_um, estimate, lower, upper; NaN bounds where no coupling was found or nothing was estimated
+        DataFrame : distance_um, estimate, lower, upper. Where no coupling was found the band is widened for the search
+            over length and leak; a parameter at its bound is taken as known; between the ends of a radius' interval
+            the band holds the amplitude and zero. NaN where nothing has a standard error
 
         Raises
         ------
@@ -376,9 +377,11 @@ class CouplingFit:
 
         Raises
         ------
-        ArgumentError : no window holds `start_s`, or the stretch is empty
+        ArgumentError : no window holds `start_s`, or the stretch is empty or not finite
         StorageError : no recording, or another one
         """
+        if not (np.isfinite(start_s) and np.isfinite(stop_s)):
+            raise ArgumentError(f"start_s={start_s}, stop_s={stop_s}: both must be finite times in seconds.")
         grid, data, point = self._with_recording(recording)
         w = int(np.searchsorted(grid.window_start_s, start_s, side="right")) - 1
         width = grid.bin_width

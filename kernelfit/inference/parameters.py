@@ -163,7 +163,15 @@ def kernel_band(fit: CouplingFit, d_um: FloatArray, level: float, simultaneous: 
     if not fit.verdict.found:
         critical = max(critical, fit.verdict.critical_z)
     half = critical * standard_errors(gradient, covariance)
-    return pd.DataFrame({"distance_um": d_um, "estimate": estimate, "lower": estimate - half, "upper": estimate + half})
+    lower, upper = estimate - half, estimate + half
+    if fit.radius_interval is not None:  # between its ends a distance may lie within the radius or beyond it
+        closest = np.array([fit.span.smallest_um])
+        within = float(fit.kernel(closest)[0])
+        slope = fit.model.kernel.gradient(fit.shared[:n], closest, fit.span)
+        spread = float(critical * standard_errors(slope, covariance)[0])
+        between = (d_um > fit.radius_interval[0]) & (d_um < fit.radius_interval[1])
+        lower[between], upper[between] = min(within - spread, 0.0), max(within + spread, 0.0)
+    return pd.DataFrame({"distance_um": d_um, "estimate": estimate, "lower": lower, "upper": upper})
 
 
 def after_spike_band(fit: CouplingFit, target: int, lags_s: FloatArray, level: float) -> pd.DataFrame:

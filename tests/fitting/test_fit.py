@@ -6,6 +6,7 @@ import threading
 import warnings
 
 import numpy as np
+import pandas as pd
 import pytest
 from scipy.stats import t
 from worlds import BIN_S, LEAK, NOTHING, array, model, simulated
@@ -134,6 +135,27 @@ def test_bands_widen_when_they_are_to_cover_the_whole_curve(fit):
             fit.kernel_band(d, level=level)
 
 
+@quiet
+def test_the_band_of_a_disc_knows_that_its_radius_is_estimated():
+    """Sure of the amplitude within the interval of the radius, of zero beyond it, and of neither between its ends."""
+    law = kf.kernels.Disc().at(amplitude=0.3, length_um=160.0)
+    fit = model("disc").fit(simulated(3, law, duration_s=30.0), threads=2)
+    low, high = fit.parameters.loc["length_um", ["lower", "upper"]]
+    row = fit.parameters.loc["amplitude"]
+    d = np.array([0.5 * low, low, 0.5 * (low + high), high, 2.0 * high])
+    band = fit.kernel_band(d)
+    np.testing.assert_allclose(band["lower"], [row["lower"], row["lower"], 0.0, 0.0, 0.0])
+    np.testing.assert_allclose(band["upper"], [row["upper"], row["upper"], row["upper"], 0.0, 0.0])
+
+
+def test_tables_are_fresh_copies(fit):
+    """Nobody can change a fit by writing into a table of it."""
+    for name in ("parameters", "baselines", "std_errors", "pairs_by_distance"):
+        before, other = getattr(fit, name), getattr(fit, name)
+        other.iloc[:, 0] = other.iloc[::-1, 0].to_numpy()
+        pd.testing.assert_frame_equal(getattr(fit, name), before)
+
+
 def test_after_spike_curves_and_bands(fit):
     lags = np.array([0.005, 0.05, 0.5])
     curves = fit.after_spike_curves(lags)
@@ -159,6 +181,9 @@ def test_fitted_rates_are_the_models_and_its_residuals_cancel(fit, recording):
     np.testing.assert_allclose(part.rate_hz, rates.rate_hz[2000:2020])
     for start, stop in ((-5.0, -1.0), (40.0, 50.0), (7.0, 7.0)):
         with pytest.raises(ArgumentError, match="no window holds"):
+            fit.fitted_rates(start, stop)
+    for start, stop in ((np.nan, 1.0), (0.0, np.inf)):
+        with pytest.raises(ArgumentError, match="must be finite times"):
             fit.fitted_rates(start, stop)
 
 
