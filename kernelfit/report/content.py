@@ -50,6 +50,7 @@ from kernelfit.report.readings import (
     distance_sentence,
     headline,
     kernel_name,
+    length_word,
     link_name,
     parameter_of,
     sure_lead,
@@ -65,7 +66,7 @@ if TYPE_CHECKING:
 _PLACES = {
     "bin_width": "bin width",
     "coupling": "",
-    "covariance": "robust intervals",
+    "covariance": "",
     "exclusions": "",
     "leak_rate": "leak rate",
     "optimiser": "",
@@ -263,7 +264,7 @@ def coupling_lead(fit: CouplingFit) -> str:
     name = kernel_name(fit)
     length = parameter_of(fit, "length_um")
     if length is not None:
-        return words.length_sentence(name, length)
+        return words.length_sentence(name, length, length_word(fit))
     return f"The coupling at each distance is described by a {name} kernel, drawn with its interval."
 
 
@@ -291,7 +292,7 @@ def stability_sentence(spectral_radius: float) -> str:
         )
     return (
         f"Taken as a network, the fitted couplings multiply a small rise of activity by up to {size} per "
-        "round (spectral radius above 1): a simulation from this fit would run away."
+        "round (spectral radius above 1): a simulation from this fit may run away."
     )
 
 
@@ -334,8 +335,8 @@ def after_spike_sentence(fit: CouplingFit) -> str:
     test = fit.after_spike_test
     if test is None:
         return (
-            "Each unit's own earlier spikes change its rate, too (refractoriness, bursts). Left out of the "
-            "model, they would be taken for coupling and bend the kernel's length and the time constant."
+            "What a unit's own earlier spikes do to its rate (refractoriness, bursts) is part of the model. Left out, "
+            "it would be taken for coupling and bend the kernel's length and the time constant."
         )
     return (
         f"The model leaves out what a unit's own spikes do to it. {test.sentence.rstrip('.')}. Score test: chi-squared "

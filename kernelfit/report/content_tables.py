@@ -26,7 +26,7 @@ from kernelfit.report.numbers import (
     time_text,
 )
 from kernelfit.report.page import Cell, Column, Definition, Table, without_empty_notes
-from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, link_name, parameter_of, time_constant_of
+from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, length_word, link_name, parameter_of, time_constant_of
 from kernelfit.report.truth import Truth
 from kernelfit.report.words import Estimate, level_text
 
@@ -39,23 +39,23 @@ HASH_SHOWN = 12
 
 _MEANINGS = {
     "amplitude": "effect J of one spike at {reference}",
-    "length_um": "length of the kernel",
     "exponent": "exponent of the power law",
     "narrow_amplitude": "narrow part, J at {reference}",
     "narrow_length_um": "narrow part, length",
     "wide_amplitude": "wide part, J at {reference}",
     "wide_length_um": "wide part, length",
-    "radius_um": "radius of the disc",
     "same_site": "effect J of one spike on the same site",
     LEAK: "leak rate",
 }
 
 
-def meaning(name: str, reference_um: float) -> str:
-    """A parameter in words; its own name where there are none."""
+def meaning(name: str, fit: CouplingFit) -> str:
+    """A parameter of a fit in words; its own name where there are none."""
+    if name == "length_um":
+        return f"{length_word(fit)} of the kernel"
     if name.startswith("coefficient_"):
         return f"coefficient {name.removeprefix('coefficient_')} of the spline"
-    return _MEANINGS.get(name, name).format(reference=distance_label(reference_um))
+    return _MEANINGS.get(name, name).format(reference=distance_label(fit.reference_distance_um))
 
 
 def value_cell(value: float, digits: int = 3, *, unit: str = "") -> Cell:
@@ -74,7 +74,7 @@ def parameter_table(fit: CouplingFit) -> Table:
         rows.append(
             (
                 Cell(str(name)),
-                Cell(f"{meaning(str(name), fit.reference_distance_um)}{_unit_shown(str(row['unit']))}"),
+                Cell(f"{meaning(str(name), fit)}{_unit_shown(str(row['unit']))}"),
                 Cell(shown, estimate if math.isfinite(estimate) else None),
                 Cell(_note(row["note"])),
             )
@@ -252,7 +252,7 @@ def truth_table(fit: CouplingFit, truth: Truth) -> Table:
             inside = ("yes" if holds else "no") if estimate.bounded else "no interval"
         rows.append(
             (
-                Cell(f"{meaning(value.name, fit.reference_distance_um)}{_unit_shown(value.unit)}"),
+                Cell(f"{meaning(value.name, fit)}{_unit_shown(value.unit)}"),
                 Cell(number_text(value.value, 4, max_decimals=TABLE_DECIMALS), value.value),
                 Cell(shown),
                 Cell(inside),

@@ -48,7 +48,8 @@ def draw_kernel(data: KernelData) -> Figure:
         figure = new_figure(ONE_COLUMN_MM, 88.0)
         top, under = figure.subplots(2, 1, sharex=True, height_ratios=[3.2, 1.0])
         colour = hue(data.jump) if data.found else INK
-        if data.found and np.isfinite(data.jump).sum() > 1:
+        curve = data.found and np.isfinite(data.jump).sum() > 1
+        if curve:
             top.fill_between(data.distance_um, data.lower, data.upper, color=colour, alpha=BAND_ALPHA, linewidth=0)
             top.plot(data.distance_um, data.jump, color=colour)
         else:  # all pairs at one distance, or no shape to draw: a point with its interval, not a curve
@@ -56,7 +57,13 @@ def draw_kernel(data: KernelData) -> Figure:
             ends = np.nan_to_num([[value - lower], [upper - value]])
             top.errorbar([data.reference_um], [value], yerr=ends, color=colour, fmt="o", capsize=2.5)
         zero_line(top)
-        _reference_mark(top, data.reference_um, on_left=data.reference_um > 0.6 * data.reach_um, low=colour == LOWERING)
+        _reference_mark(
+            top,
+            data.reference_um,
+            on_left=data.reference_um > 0.6 * data.reach_um,
+            low=colour == LOWERING,
+            gap=3.0 if curve else 7.0,  # beside the cap of the bar
+        )
         top.set_ylabel("J, effect of one spike on the drive")
         if data.in_percent:
             percent = top.secondary_yaxis("right", functions=(_to_percent, _from_percent))
@@ -70,13 +77,13 @@ def draw_kernel(data: KernelData) -> Figure:
         return figure
 
 
-def _reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool) -> None:
+def _reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool, gap: float) -> None:
     ax.axvline(reference_um, color=NULL, linestyle="--", linewidth=0.8, zorder=0)
     ax.annotate(
         f"reference {distance_label(reference_um)}",
         xy=(reference_um, 0.0 if low else 1.0),
         xycoords=("data", "axes fraction"),
-        xytext=(-3 if on_left else 3, 2 if low else -2),
+        xytext=(-gap if on_left else gap, 2 if low else -2),
         textcoords="offset points",
         ha="right" if on_left else "left",
         va="bottom" if low else "top",

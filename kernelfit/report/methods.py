@@ -15,7 +15,7 @@ from kernelfit.report.numbers import (
     number_text,
     time_text,
 )
-from kernelfit.report.readings import LEVEL, TEST_LEVEL, link_name
+from kernelfit.report.readings import LEVEL, TEST_LEVEL, length_word, link_name
 from kernelfit.report.words import level_text, listed
 
 if TYPE_CHECKING:
@@ -174,7 +174,7 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
             f"Intervals are {level_text(LEVEL)} Wald intervals from the expected information; lengths and "
             "rates were treated on the log scale."
         )
-    if "radius_um" in fit.parameters.index:
+    if length_word(fit) == "radius":
         sentences.append(
             "The radius was profiled over the distances of the array; its interval is that of a likelihood-ratio test "
             "scaled by the ratio of robust to model-based variance."

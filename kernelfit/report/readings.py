@@ -46,6 +46,11 @@ def kernel_name(fit: CouplingFit) -> str:
     return fit.model.kernel.name
 
 
+def length_word(fit: CouplingFit) -> str:
+    """What `length_um` is called: the radius of a kernel with an edge, the length of any other."""
+    return "radius" if kernel_name(fit) == "disc" else "length"
+
+
 def parameter_of(fit: CouplingFit, name: str) -> Estimate | None:
     """A parameter with its interval, or None where the model has none of that name."""
     table = fit.parameters

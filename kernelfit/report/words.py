@@ -198,11 +198,11 @@ def not_ruled_out_sentence(distance_um: float, jump: Estimate, link: str, level:
     )
 
 
-def length_sentence(kernel_name: str, length_um: Estimate) -> str:
+def length_sentence(kernel_name: str, length_um: Estimate, word: str = "length") -> str:
     """The length of a kernel that has one: "The gaussian kernel has a length of 180 µm (150 to 210)"."""
     if not length_um.known:
-        return f"The length of the {kernel_name} kernel {could_not(length_um.reason)}."
-    return f"The {kernel_name} kernel has a length of {length_um.text('µm')}."
+        return f"The {word} of the {kernel_name} kernel {could_not(length_um.reason)}."
+    return f"The {kernel_name} kernel has a {word} of {length_um.text('µm')}."
 
 
 def listed(parts: list[str]) -> str:
@@ -233,8 +233,8 @@ def sureness_sentence(n_blocks: int, block_length_s: float, ratios: FloatArray, 
     times = span or f"{number_text(low, 2)} to {number_text(high, 2)}"
     if high < RATIO_WORTH_SAYING:
         return (
-            f"The recording behaves as the model says: robust standard errors, from {blocks}, are {times} "
-            "times those that take the model at its word."
+            f"Robust standard errors, from {blocks}, are {times} times those that take the model at its word: "
+            "stretches of time scatter as the model says."
         )
     return (
         f"Robust standard errors, from {blocks}, are {times} times those that take the model at its word; "

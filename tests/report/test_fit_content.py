@@ -346,3 +346,12 @@ def test_too_few_spikes_for_any_test_give_a_reason():
     found = build_content(fit, recording, fake_goodness(recording))
     assert isinstance(found.figures.ks, Unavailable) or found.figures.ks.panels
     assert "No unit has enough spikes" in found.verdict[2]
+
+
+@pytest.mark.parametrize(("kernel", "word"), [("disc", "radius"), ("gaussian", "length")])
+def test_the_length_of_a_disc_is_its_radius(kernel, word):
+    fit = fake_fit(model=CouplingModel(kernel=kernel, bin_width=0.005))
+    found = build_content(fit, fit.recording, fit.goodness())
+    assert found.coupling_lead.startswith(f"The {kernel} kernel has a {word} of ")
+    assert any(row[1].text == f"{word} of the kernel (µm)" for row in found.tables.parameters.rows)
+    assert ("The radius was profiled" in found.methods.paragraph) == (word == "radius")

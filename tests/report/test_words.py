@@ -81,7 +81,7 @@ def test_effects_at_several_distances():
     [
         ([3.1, 3.1], "are 3.1 times those"),
         ([2.0, 4.26], "are 2 to 4.3 times those"),
-        ([0.9, 1.05], "behaves as the model says"),
+        ([0.9, 1.05], "scatter as the model says"),
         ([math.nan], "cannot be compared"),
     ],
 )
