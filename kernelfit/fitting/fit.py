@@ -23,7 +23,7 @@ from kernelfit.fitting.null import Null, fit_null
 from kernelfit.fitting.outcome import SolverReport
 from kernelfit.fitting.problem import Problem, make_problem
 from kernelfit.fitting.progress import ProgressCallback
-from kernelfit.fitting.radius import RadiusProfile, discrete_parameter, search_radius
+from kernelfit.fitting.radius import LEVEL, RadiusProfile, discrete_parameter, search_radius, variance_inflation
 from kernelfit.fitting.result import CouplingFit, Uncertainty, covariance_kind
 from kernelfit.fitting.search import SearchResult, search
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
@@ -198,6 +198,4 @@ def _radius_interval(
 ) -> tuple[float, float] | None:
     if profile is None:
         return None
-    model, robust = spread.shared_model[0, 0], spread.shared_robust[0, 0]
-    inflation = robust / model if model > 0 and np.isfinite(robust / model) else 1.0
-    return profile.interval(0.95, problem.geometry.distinct_um, max(inflation, 1.0))
+    return profile.interval(LEVEL, problem.geometry.distinct_um, variance_inflation(spread))

@@ -8,6 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from kernelfit._typing import FloatArray, IntArray
+from kernelfit.fitting.covariance import Covariances, covariances
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, NullSweep, null_blocks, null_sweep
 from kernelfit.fitting.problem import Estimate, Problem
@@ -17,7 +18,7 @@ from kernelfit.kernels.bands import Bands
 MOST_RADII = 40
 N_STARTS = 3
 NEIGHBOURS = 4
-ENOUGH = 0.5 * 7.35 * 4.0  # drop of the log-likelihood: room for a robust variance four times the model's
+LEVEL = 0.95  # of the interval whose ends the profile must reach
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,6 +52,12 @@ def edge_critical(level: float) -> float:
     Hansen (2000), Econometrica 68, 575-603, theorem 2.
     """
     return -2.0 * math.log(1.0 - math.sqrt(level))
+
+
+def variance_inflation(spread: Covariances) -> float:
+    """Robust over model variance of the amplitude, the first shared parameter; 1 at least, and where there is none."""
+    model, robust = spread.shared_model[0, 0], spread.shared_robust[0, 0]
+    return max(float(robust / model), 1.0) if model > 0 and np.isfinite(robust / model) else 1.0
 
 
 def discrete_parameter(problem: Problem) -> int | None:
@@ -88,7 +95,9 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
     while profiled.best != best:  # widening may come upon a better hill
         profiled.refine(step)
         best = profiled.best
-        profiled.widen(coarse)
+        inflation = variance_inflation(covariances(problem, profiled.optima[best]))
+        problem.clock.stage = "climbing"
+        profiled.widen(coarse, 0.5 * inflation * edge_critical(LEVEL))
     top = profiled.climb(best, profiled.optima[best].estimate, TIGHT)
     tried = sorted(profiled.optima)
     objective = np.array([profiled.optima[k].local.objective for k in tried])
@@ -106,8 +115,8 @@ class _Profile:
 
     @property
     def best(self) -> int:
-        """The radius with the highest objective so far."""
-        return max(self.optima, key=lambda k: (self.optima[k].local.objective, -k))
+        """The radius with the highest objective so far; one that is not finite counts as the lowest."""
+        return max(self.optima, key=lambda k: (np.nan_to_num(self.optima[k].local.objective, nan=-np.inf), -k))
 
     def climb(self, k: int, start: Estimate, tolerance: float = LOOSE) -> Optimum:
         """Maximise over everything else at radius k."""
@@ -128,8 +137,8 @@ class _Profile:
             if self.best == best:
                 step //= 2
 
-    def widen(self, coarse: IntArray) -> None:
-        """Climb outwards over the coarse radii until the likelihood has dropped enough for a wide interval."""
+    def widen(self, coarse: IntArray, enough: float) -> None:
+        """Climb outwards over the coarse radii until the log-likelihood has dropped by more than `enough`."""
         best = self.best
         for side in (-1, 1):
             near = best
@@ -137,7 +146,7 @@ class _Profile:
                 if int(k) not in self.optima:
                     self.climb(int(k), self.optima[near].estimate)
                 near = int(k)
-                if self.optima[best].local.objective - self.optima[near].local.objective > ENOUGH:
+                if self.optima[best].local.objective - self.optima[near].local.objective > enough:
                     break
 
 

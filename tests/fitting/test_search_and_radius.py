@@ -10,13 +10,20 @@ from scipy.stats import chi2
 from worlds import LEAK, NOTHING, model, simulated
 
 from kernelfit import kernels
+from kernelfit.fitting import radius as radius_module
 from kernelfit.fitting import search as search_module
 from kernelfit.fitting.covariance import covariances
 from kernelfit.fitting.fit import _second_sentence
 from kernelfit.fitting.maximise import evaluate_locally, maximise
 from kernelfit.fitting.null import NullSweep, fit_null
 from kernelfit.fitting.problem import Estimate, make_problem
-from kernelfit.fitting.radius import RadiusProfile, discrete_parameter, search_radius
+from kernelfit.fitting.radius import (
+    RadiusProfile,
+    discrete_parameter,
+    edge_critical,
+    search_radius,
+    variance_inflation,
+)
 from kernelfit.fitting.search import SearchResult, promising, search, shrunk, start_estimates
 
 DISC = kernels.Disc().at(amplitude=0.3, length_um=160.0)
@@ -230,3 +237,23 @@ def test_a_second_optimum_is_put_in_words(gaussian):
     assert f"length_um {np.exp(shared[1]):.3g}" in sentence
     assert f"time constant {1000 * np.exp(-best.estimate.shared[2]):.3g} ms" in sentence
     assert _second_sentence(problem, SearchResult(best, None, ())) is None
+
+
+def test_the_profile_reaches_as_far_as_a_wide_interval(disc, monkeypatch):
+    """Bursts make the robust variance up to 80 times the model's: the profile must drop by as much, or end there."""
+    problem, null, *_ = disc
+    monkeypatch.setattr(radius_module, "variance_inflation", lambda spread: 40.0)
+    _, profile = search_radius(problem, null, 1)
+    candidates = problem.kernel.radius_candidates(problem.geometry.distinct_um)
+    drop = 2.0 * (profile.objective.max() - profile.objective)
+    for end, last in ((0, candidates[0]), (-1, candidates[-1])):
+        assert drop[end] > 40.0 * edge_critical(0.95) or profile.radius_um[end] == last
+
+
+def test_inflation_is_that_of_the_amplitude(disc):
+    problem, _, found, _ = disc
+    spread = covariances(problem, found.best)
+    want = spread.shared_robust[0, 0] / spread.shared_model[0, 0]
+    assert variance_inflation(spread) == pytest.approx(max(want, 1.0))
+    nothing = np.full_like(spread.shared_robust, np.nan)
+    assert variance_inflation(dataclasses.replace(spread, shared_robust=nothing)) == 1.0
