@@ -15,7 +15,7 @@ import numpy as np
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.engine.evaluate import Evaluation, Point, SweepData, TimeBlocks, evaluate
 from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
-from kernelfit.fitting.progress import Progress, ProgressCallback
+from kernelfit.fitting.progress import Progress, ProgressCallback, peak_memory_bytes
 from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.recording.grid import Grid, make_grid
@@ -43,7 +43,6 @@ class Clock:
     stage: str = ""
     sweeps: int = 0
     expected_sweeps: int = EXPECTED_SWEEPS
-    peak_bytes: int = 0
     started: float = field(default_factory=time.monotonic)
 
     def tick(self) -> None:
@@ -53,7 +52,7 @@ class Clock:
             return
         self.expected_sweeps = max(self.expected_sweeps, self.sweeps + 5)
         left = (time.monotonic() - self.started) / self.sweeps * (self.expected_sweeps - self.sweeps)
-        self.callback(Progress(self.stage, self.sweeps, self.expected_sweeps, left, self.peak_bytes))
+        self.callback(Progress(self.stage, self.sweeps, self.expected_sweeps, left, peak_memory_bytes()))
 
 
 @dataclass(frozen=True, eq=False)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import sys
 import threading
 import warnings
 
@@ -280,6 +281,16 @@ def test_progress_is_told_stage_by_stage(recording):
     assert stages == ["rates without coupling", "looking for coupling", "climbing", "standard errors"]
     silent = model("gaussian", after_spike="basis").fit(recording, threads=2)
     np.testing.assert_array_equal(silent.shared, fit.shared)
+
+
+@pytest.mark.skipif(sys.platform == "win32", reason="the operating system does not tell")
+def test_progress_tells_how_much_memory_the_process_holds(recording):
+    """An array of 100 MB that was written to cannot be in less."""
+    held = np.ones(12_500_000)
+    told = []
+    model("flat", leak_rate=LEAK).fit(recording, threads=1, progress=told.append)
+    assert held.nbytes < told[-1].peak_bytes < 1e12
+
 
 
 @pytest.mark.parametrize("at", [1, 12, 25])
