@@ -93,7 +93,27 @@ def fit_notes(
                 f"Refit with bins of at most {1000 * WIDE_BINS / leak:.2g} ms.",
             )
         )
-    if spread.n_blocks < FEW_BLOCKS:
+    if not problem.fits_leak and leak < problem.leak_limits[0]:
+        notes.append(
+            Note(
+                "warning",
+                f"The time constant stated, {1 / leak:.3g} s, is above 1/{SLOWEST_LEAK_SHARE:g} of the "
+                f"{problem.grid.duration_s:.4g} s that count: coupling so slow cannot be told from a drifting rate.",
+                "leak_rate",
+                "State a faster leak rate, or record longer.",
+            )
+        )
+    if spread.n_blocks < 2:
+        notes.append(
+            Note(
+                "warning",
+                f"The {problem.grid.duration_s:.3g} s that count are a single block of time: there are no robust "
+                "standard errors.",
+                "covariance",
+                "Record longer, or read the model-based ones: fit.with_covariance('model') (--covariance model).",
+            )
+        )
+    elif spread.n_blocks < FEW_BLOCKS:
         notes.append(
             Note(
                 "warning",

@@ -58,6 +58,14 @@ def test_a_leak_that_leaves_nothing_after_a_bin_is_refused(recording, leak_rate)
         model("flat", leak_rate=leak_rate).fit(recording)
 
 
+@quiet
+@pytest.mark.parametrize(("leak_rate", "said"), [(0.9, True), (1.1, False)])
+def test_a_stated_leak_too_slow_for_the_recording_is_said(recording, leak_rate, said):
+    """A twentieth of 20 s is 1 s."""
+    fit = model("flat", leak_rate=leak_rate).fit(recording, threads=1)
+    assert any("cannot be told from a drifting rate" in note.what for note in fit.notes) is said
+
+
 def test_a_trace_that_is_gone_after_a_bin_is_refused(recording):
     with pytest.raises(ArgumentError, match="after_spike: of a trace with a time constant of 1e-06 s nothing is left"):
         model(after_spike=kf.terms.AfterSpike((1e-6, 0.01))).fit(recording)
@@ -78,6 +86,8 @@ def test_nobody_to_explain_is_said_as_such(recording):
 def test_without_blocks_of_time_the_missing_intervals_have_their_reason(recording):
     fit = model("flat", leak_rate=LEAK).fit(recording.select(stop_s=0.9), threads=1)
     assert fit.n_blocks == 1
+    assert any("single block of time" in note.what for note in fit.notes)
+    assert not any("1 blocks" in note.what for note in fit.notes)
     row = fit.parameters.loc["amplitude"]
     assert np.isnan(row["std_error"])
     assert "single block of time" in row["note"]
