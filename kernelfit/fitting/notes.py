@@ -10,6 +10,8 @@ from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.outcome import Note
 from kernelfit.fitting.problem import FASTEST_LEAK_BINS, SLOWEST_LEAK_SHARE, Problem
+from kernelfit.recording.activity import gaps, longest_break, paused
+from kernelfit.recording.merged import merge_trains
 from kernelfit.recording.recording import Recording
 
 WIDE_BINS = 0.5  # alpha D above this: the bins are too wide for the leak found (docs/model.md section 3)
@@ -129,6 +131,24 @@ def fit_notes(
     return tuple(notes)
 
 
+def _pause(recording: Recording) -> list[Note]:
+    """Where the window was derived from the spikes, a pause of the acquisition was taken for silence."""
+    train = merge_trains(recording)
+    silences = gaps(train)
+    if not paused(silences["length_s"].to_numpy(dtype=np.float64), longest_break(train)):
+        return []
+    start, stop = float(silences["start_s"].iloc[0]), float(silences["stop_s"].iloc[0])
+    return [
+        Note(
+            "warning",
+            f"No unit fires from {start:.5g} s to {stop:.5g} s, far longer than other silences: a pause of the "
+            "acquisition that is taken for silence looks like slow, far-reaching coupling.",
+            "windows",
+            "If acquisition stopped there, give a windows table with the stretches that were recorded.",
+        )
+    ]
+
+
 def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
     notes: list[Note] = []
     silent = np.flatnonzero((problem.grid.counts_in_sum == 0) & ~recording.source_only_mask)
@@ -174,6 +194,7 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
                 "Give a windows table where acquisition started earlier or stopped later.",
             )
         )
+        notes += _pause(recording)
     if problem.grid.n_outside:
         notes.append(
             Note(

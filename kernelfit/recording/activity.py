@@ -17,6 +17,7 @@ BLOCK_S = 300.0
 BLOCK_SPIKES = 100  # on average at least; blocks of fewer differ by chance alone
 MIN_BLOCKS = 4
 GAP_S = 10.0
+PAUSE_TIMES = 3.0
 EVENT_TIMES_MEAN = 2.0  # a second is part of an event if it holds more than twice the mean
 EVENT_PAUSE_S = 3
 BUSY_SHARE_OF_TIME = 0.10
@@ -151,6 +152,18 @@ def gaps(train: MergedTrain) -> pd.DataFrame:
     )
     table["length_s"] = table["stop_s"] - table["start_s"]
     return table.sort_values("length_s", ascending=False, kind="stable", ignore_index=True)
+
+
+def paused(gap_lengths_s: FloatArray, longest_break_s: float) -> bool:
+    """Whether acquisition may have stopped: a step in the lengths of silences, which activity alone does not make.
+
+    Parameters
+    ----------
+    gap_lengths_s : of `gaps`, longest first, seconds
+    longest_break_s : of `longest_break`, seconds
+    """
+    shorter = np.append(gap_lengths_s[1:], longest_break_s)
+    return bool(np.any(gap_lengths_s > PAUSE_TIMES * shorter)) if gap_lengths_s.size else False
 
 
 def longest_break(train: MergedTrain) -> float:

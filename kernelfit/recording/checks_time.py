@@ -7,12 +7,12 @@ from collections.abc import Iterator
 import numpy as np
 from scipy import stats
 
+from kernelfit.recording.activity import paused
 from kernelfit.recording.evidence import Evidence
 from kernelfit.recording.findings import CUT, Finding, counted, number, percent, seconds
 
 CHANGE, LARGE_CHANGE = 1.5, 2.0
 CHANGE_P = 0.01
-PAUSE_TIMES = 3.0
 BURSTY_TIMES, BURSTY_SHARE = 2.0, 0.3
 FEW_EVENTS = 50
 
@@ -58,15 +58,14 @@ def _gaps(e: Evidence) -> Iterator[Finding]:
         return
     length = gaps["length_s"].to_numpy()
     longest = gaps.iloc[0]
-    shorter = np.append(length[1:], e.longest_break_s)
-    paused = bool(np.any(length > PAUSE_TIMES * shorter))  # a step in the lengths, which activity alone does not make
+    stopped = paused(length, e.longest_break_s)
     share = length.sum() / e.train.duration_s
     yield Finding(
         "gaps",
-        "warning" if paused else "info",
+        "warning" if stopped else "info",
         f"{counted(len(gaps), 'gap')} of 10 s and more without a spike of any unit, {percent(float(share))} "
         f"of the time; the longest lasts {seconds(float(length[0]))}"
-        + (", far longer than other silences: acquisition may have paused." if paused else "."),
+        + (", far longer than other silences: acquisition may have paused." if stopped else "."),
         f"longest from {number(float(longest.start_s))} s to {number(float(longest.stop_s))} s",
         "If acquisition stopped there, give a windows table with the stretches that were recorded: a pause taken for "
         "silence looks like slow, far-reaching coupling. If it ran, silence is data and nothing needs doing.",
