@@ -40,6 +40,16 @@ def test_what_a_document_points_to_exists(document: Path) -> None:
         assert (ROOT / name).exists(), f"{document.name} speaks of {name}"
 
 
+DOCUMENTS = sorted([*ROOT.glob("*.md"), *ROOT.glob("docs/*.md"), *ROOT.glob("datasets/*.md")])
+LINKS = re.compile(r"\]\(([^)#]+)\)")
+
+
+@pytest.mark.parametrize("document", DOCUMENTS, ids=lambda p: p.name)
+def test_links_lead_somewhere(document: Path) -> None:
+    for link in LINKS.findall(document.read_text(encoding="utf-8")):
+        assert "://" in link or (document.parent / link).exists(), f"{document.name} links to {link}"
+
+
 @pytest.mark.parametrize("name", ["scripts/demo", "scripts/test", ".ci/run", "scripts/make_demo_recording"])
 def test_scripts_can_be_run(name: str) -> None:
     assert (ROOT / name).stat().st_mode & 0o111, f"{name} is not executable"
