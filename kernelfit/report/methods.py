@@ -27,6 +27,7 @@ TRUCCOLO = "Truccolo W, Eden UT, Fellows MR, Donoghue JP, Brown EN (2005) J Neur
 WHITE = "White H (1982) Econometrica 50: 1-25."
 LIANG = "Liang KY, Zeger SL (1986) Biometrika 73: 13-22."
 HANSEN = "Hansen BE (1996) Econometrica 64: 413-430."
+HANSEN_EDGE = "Hansen BE (2000) Econometrica 68: 575-603."
 RAO = "Rao CR (1948) Math Proc Camb Philos Soc 44: 50-57."
 EILERS = "Eilers PHC, Marx BD (1996) Stat Sci 11: 89-121."
 BROWN = "Brown EN, Barbieri R, Ventura V, Kass RE, Frank LM (2002) Neural Comput 14: 325-346."
@@ -77,6 +78,8 @@ def methods(fit: CouplingFit, recording: Recording, goodness: Goodness) -> Metho
     references.append(HANSEN)
     if fit.covariance_kind == "robust":
         references += [WHITE, LIANG]
+    if length_word(fit) == "radius":
+        references.append(HANSEN_EDGE)
     if fit.after_spike_test is not None:
         references.append(RAO)
     references += [BROWN, HASLINGER, LILLIEFORS, BENJAMINI, GERHARD, MASSART]
@@ -177,7 +180,7 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
     if length_word(fit) == "radius":
         sentences.append(
             "The radius was profiled over the distances of the array; its interval holds the radii that a "
-            "likelihood-ratio test keeps, with the critical value of an edge and the ratio scaled by that of robust to "
+            "likelihood-ratio test keeps, with the critical value of an edge (Hansen 2000) and the ratio scaled by that of robust to "
             "model-based variance."
         )
     if not fit.verdict.found:
