@@ -180,8 +180,8 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
     if length_word(fit) == "radius":
         sentences.append(
             "The radius was profiled over the distances of the array; its interval holds the radii that a "
-            "likelihood-ratio test keeps, with the critical value of an edge (Hansen 2000) and the ratio scaled by that "
-            "of robust to model-based variance."
+            "likelihood-ratio test keeps, with the critical value of an edge (Hansen 2000) and the ratio scaled by "
+            "that of robust to model-based variance."
         )
     if not fit.verdict.found:
         sentences.append(
