@@ -21,10 +21,12 @@ from kernelfit.fitting.outcome import ScoreTest
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.model.terms import AfterSpike
 
+EVERY = 2  # every second time constant of the term: a coarser basis tells as well whether anything is there, for less
+
 
 def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
     """Score test of a lag basis common to all units at a fit without after-spike effects."""
-    constants = AfterSpike().constants(problem.data.bin_width)
+    constants = AfterSpike().constants(problem.data.bin_width)[::EVERY]
     n_traces = constants.size
     here = replace(problem, trace_decay=np.exp(-problem.data.bin_width / constants))
     own = np.column_stack([optimum.estimate.own, np.zeros((problem.data.n_targets, n_traces))])

@@ -63,7 +63,9 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
     signs = rng.choice(np.array([-1.0, 1.0]), size=(N_FLIPS, n_blocks))
     observed, flipped, searched = 0.0, np.zeros(N_FLIPS), np.zeros(N_FLIPS)
     for d in directions:
-        draws = signs @ d.scores
+        # not by matrix product: the threads of a linear algebra library keep a core busy for a while after their work,
+        # and the sweeps that follow need it
+        draws = np.einsum("fg,gk->fk", signs, d.scores)
         observed = max(observed, float(d.form(d.scores.sum(axis=0)[None])[0]) / max(d.excess, 1.0))
         flipped = np.maximum(flipped, d.form(draws) / d.excess if d.excess > 0 else 0.0)
         own = np.linalg.pinv(d.spread, rcond=1e-10, hermitian=True)  # in units of robust standard errors
