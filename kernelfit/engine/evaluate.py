@@ -140,8 +140,8 @@ class Evaluation:
     """Sums over time at one point. G blocks of time, n targets, M traces, Q shared parameters; nats and per parameter.
 
     log_likelihood (G, n), without -log y!; score (G, n, 1 + M + Q), baseline, traces, shared; own_own (n, 1 + M, 1 +
-    M);
-    own_shared (n, 1 + M, Q); shared_shared (Q, Q). Without derivatives all but the first are empty.
+    M); own_shared (n, 1 + M, Q); shared_shared (Q, Q). Information by block of time has a leading axis G. Without
+    derivatives all but the first are empty.
     """
 
     log_likelihood: FloatArray
@@ -192,6 +192,7 @@ def evaluate(
     derivatives: bool = True,
     blocks: TimeBlocks | None = None,
     block_weight: FloatArray | None = None,
+    information_by_block: bool = False,
     threads: int | None = None,
 ) -> Evaluation:
     """Log-likelihood, and with `derivatives` score and expected information, at one point.
@@ -203,6 +204,7 @@ def evaluate(
     blocks : blocks of time to keep apart in log-likelihood and score; None: one
     block_weight : (n_blocks,) weight of each block in the information; log-likelihood and score come by block,
         unweighted
+    information_by_block : keep the information of each block apart too, which takes G times its memory
     threads : at most this many; None: as many as the machine has. The result does not depend on it
 
     Returns
@@ -216,19 +218,21 @@ def evaluate(
     padded = -(-n_shared // GRAM) * GRAM
     n_rows = n_own + n_shared if derivatives else 0
     n_tables = point.tables.shape[0] if derivatives else 1
+    slot = np.arange(blocks.n_blocks) if information_by_block else np.zeros(blocks.n_blocks, dtype=np.int64)
+    n_slots = blocks.n_blocks if information_by_block else 1
 
     def sweep(part: slice) -> Sums:
         lanes = data.targets[part].size
         sums = Sums(
             np.zeros((blocks.n_blocks, lanes)),
             np.zeros((blocks.n_blocks, n_rows, lanes)),
-            np.zeros((n_own, n_own, lanes)),
-            np.zeros((n_own, n_shared, lanes)),
-            np.zeros((padded, padded)),
+            np.zeros((n_slots, n_own, n_own, lanes)),
+            np.zeros((n_slots, n_own, n_shared, lanes)),
+            np.zeros((n_slots, padded, padded)),
         )
         sweep_block(
             point.link, point.fit_leak, _events(data, part), _dynamics(data, point, part, n_tables),
-            blocks.stretches, weight,
+            blocks.stretches, weight, slot,
             np.ascontiguousarray(point.baseline[part]), np.ascontiguousarray(point.coefficient[:, part]), sums,
         )  # fmt: skip
         return sums
@@ -238,18 +242,19 @@ def evaluate(
     if not derivatives:
         nothing = np.empty((0, 0, 0))
         return Evaluation(log_likelihood, nothing, nothing, nothing, np.empty((0, 0)))
-    own = np.concatenate([np.moveaxis(p.own_own, -1, 0) for p in parts])
-    upper = np.triu(own)
-    shared = np.zeros((n_shared, n_shared))
+    own = np.triu(np.concatenate([np.moveaxis(p.own_own, -1, 1) for p in parts], axis=1))
+    own_shared = np.concatenate([np.moveaxis(p.own_shared, -1, 1) for p in parts], axis=1)
+    shared = np.zeros((n_slots, n_shared, n_shared))
     for p in parts:  # in the order of the targets, whichever thread came first
-        shared += p.shared_shared[:n_shared, :n_shared]
-    shared = np.triu(shared)
+        shared += np.triu(p.shared_shared[:, :n_shared, :n_shared])
+    own += np.swapaxes(np.triu(own, 1), -1, -2)
+    shared += np.swapaxes(np.triu(shared, 1), -1, -2)
     return Evaluation(
         log_likelihood=log_likelihood,
         score=np.concatenate([np.moveaxis(p.score, -1, 1) for p in parts], axis=1),
-        own_own=upper + np.swapaxes(np.triu(own, 1), 1, 2),
-        own_shared=np.concatenate([np.moveaxis(p.own_shared, -1, 0) for p in parts]),
-        shared_shared=shared + np.triu(shared, 1).T,
+        own_own=own if information_by_block else own[0],
+        own_shared=own_shared if information_by_block else own_shared[0],
+        shared_shared=shared if information_by_block else shared[0],
     )
 
 

@@ -33,13 +33,13 @@ from kernelfit.engine.states import Dynamics, Events, States, advance, fill_rows
 
 
 class Sums(NamedTuple):
-    """What a sweep adds up for one block of targets. M traces, Q shared parameters, G blocks of time.
+    """What a sweep adds up for one block of targets. M traces, Q shared parameters, G blocks of time, S slots.
 
     log_likelihood (G, lanes): sum of y log mean - mean, without -log y!, not weighted
     score (G, 1 + M + Q, lanes): baseline, traces, shared; not weighted
-    own_own (1 + M, 1 + M, lanes): upper triangle, weighted by block of time
-    own_shared (1 + M, Q, lanes): weighted
-    shared_shared (padded Q, padded Q): upper triangle of GRAM x GRAM blocks, summed over lanes, weighted
+    own_own (S, 1 + M, 1 + M, lanes): upper triangle, weighted by block of time and added to the slot of the block
+    own_shared (S, 1 + M, Q, lanes): weighted
+    shared_shared (S, padded Q, padded Q): upper triangle of GRAM x GRAM blocks, summed over lanes, weighted
     """
 
     log_likelihood: FloatArray
@@ -170,6 +170,7 @@ def sweep_block(
     dynamics: Dynamics,
     stretches: IntArray,
     block_weight: FloatArray,
+    block_slot: IntArray,
     baseline: FloatArray,
     coefficient: FloatArray,
     sums: Sums,
@@ -182,13 +183,14 @@ def sweep_block(
     fit_leak : carry A, the derivative by the leak rate, as last shared parameter
     stretches : (n, 3) bins [start, stop) in the sum and the block of time each belongs to
     block_weight : (G,) weight of each block of time in the information
+    block_slot : (G,) slot its information is added to: one for all, or one for each
     baseline, coefficient : (lanes,) b_i; (M, lanes) after-spike coefficients
     sums : added to. A score without rows (G, 0, lanes) asks for the log-likelihood alone
     """
     lanes, n_traces = baseline.size, coefficient.shape[0]
     derivatives = sums.score.shape[1] > 0
-    n_shared = sums.own_shared.shape[1]
-    padded = sums.shared_shared.shape[0]
+    n_shared = sums.own_shared.shape[2]
+    padded = sums.shared_shared.shape[1]
     n_own_rows = -(-(1 + n_traces) // GRAM) * GRAM
     bins_per_tile = max(1, CELLS_PER_TILE // lanes // BINS_AT_ONCE) * BINS_AT_ONCE
     cells = bins_per_tile * lanes
@@ -249,7 +251,7 @@ def sweep_block(
                 sums.score[block, 1 + n_traces :] -= own_shared[0]
             else:
                 sums.score[block] -= drift
-            share = block_weight[block]
-            sums.own_own[:] += share * own
-            sums.own_shared[:] += share * own_shared
-            sums.shared_shared[:] += share * shared
+            share, slot = block_weight[block], block_slot[block]
+            sums.own_own[slot] += share * own
+            sums.own_shared[slot] += share * own_shared
+            sums.shared_shared[slot] += share * shared

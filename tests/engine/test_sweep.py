@@ -133,6 +133,19 @@ def test_blocks_and_weights_only_split_and_weigh():
     np.testing.assert_allclose(one.shared_shared, np.sum(parts, axis=0), rtol=1e-11, atol=1e-11)
 
 
+def test_information_by_block_is_that_of_each_block_alone():
+    case = make_case(2, 9, 2, 2)
+    kept = evaluate(
+        case.data, case.point, blocks=case.blocks, block_weight=case.weight, information_by_block=True, threads=2
+    )
+    for b in range(case.blocks.n_blocks):
+        only = np.where(np.arange(case.blocks.n_blocks) == b, case.weight, 0.0)
+        alone = evaluate(case.data, case.point, blocks=case.blocks, block_weight=only)
+        for name in ("own_own", "own_shared", "shared_shared"):
+            np.testing.assert_array_equal(getattr(kept, name)[b], getattr(alone, name))
+        np.testing.assert_array_equal(kept.score, alone.score)
+
+
 @pytest.mark.parametrize("n_units", [5, 16, 33, 130])
 def test_the_number_of_threads_changes_no_bit(n_units):
     case = make_case(3, n_units, 4, 2, windows=((0.0, 1.0), (1.5, 2.5)))
