@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from kernelfit._typing import IntArray
 from kernelfit.engine.evaluate import TimeBlocks
 from kernelfit.recording.grid import Grid
 
@@ -12,7 +13,9 @@ def time_blocks(grid: Grid, length_s: float) -> TimeBlocks:
     """Cut the bins of the sum into blocks of about `length_s` seconds that respect windows.
 
     A window at least as long as a block is cut into equal blocks no shorter than it; shorter windows are put together,
-    in order, until they reach it. Only bins of the sum count towards a block's length.
+    in order, until they reach it. Those that do not, before a longer window or at the end, join the block before them,
+    or the first one of the window that follows where there is none. Only bins of the sum count towards a block's
+    length, so no block is shorter than asked unless all of the sum is.
 
     Parameters
     ----------
@@ -26,18 +29,15 @@ def time_blocks(grid: Grid, length_s: float) -> TimeBlocks:
     target = max(1, round(length_s / grid.bin_width))
     rows: list[tuple[int, int, int]] = []
     lengths: list[int] = []
-    gathered = 0  # bins in a block still open, made of whole short windows
     for w in np.unique(grid.window_of_stretch):
         stretches = grid.stretches[grid.window_of_stretch == w]
         total = int(np.sum(stretches[:, 1] - stretches[:, 0]))
         if total < target:
-            if gathered == 0:
+            if not lengths or lengths[-1] >= target:
                 lengths.append(0)
             rows += [(int(a), int(b), len(lengths) - 1) for a, b in stretches]
             lengths[-1] += total
-            gathered = 0 if gathered + total >= target else gathered + total
             continue
-        gathered = 0
         n_blocks = total // target
         edges = [total * k // n_blocks for k in range(1, n_blocks + 1)]
         first = len(lengths)
@@ -52,4 +52,13 @@ def time_blocks(grid: Grid, length_s: float) -> TimeBlocks:
                 if done == edges[k]:
                     k += 1
         lengths += [int(n) for n in np.diff([0, *edges])]
-    return TimeBlocks(np.array(rows, dtype=np.int64), np.array(lengths, dtype=np.int64))
+    table = np.array(rows, dtype=np.int64)
+    block = _without_short_blocks(np.array(lengths), target)
+    table[:, 2] = block[table[:, 2]]
+    return TimeBlocks(table, np.bincount(block, weights=lengths).astype(np.int64))
+
+
+def _without_short_blocks(n_bins: IntArray, target: int) -> IntArray:
+    """(G,) number of each block once those below `target` bins have joined the one before, the first the one after."""
+    stays = n_bins >= target
+    return np.maximum(np.cumsum(stays) - 1, 0)
