@@ -134,6 +134,28 @@ class TimeBlocks:
         """Number of blocks."""
         return int(self.n_bins.size)
 
+    def split(self, parts: int) -> TimeBlocks:
+        """Each block cut into `parts` nearly equal ones, or as many as it has bins where that is less for any."""
+        parts = max(1, min(parts, int(self.n_bins.min(initial=parts))))
+        rows: list[tuple[int, int, int]] = []
+        done = np.zeros(self.n_blocks, dtype=np.int64)
+        edges = self.n_bins[:, None] * np.arange(1, parts + 1) // parts
+        for start, stop, block in self.stretches:
+            at = int(start)
+            while at < stop:
+                part = int(np.searchsorted(edges[block], done[block], side="right"))
+                end = min(int(stop), at + int(edges[block, part] - done[block]))
+                rows.append((at, end, int(block) * parts + part))
+                done[block] += end - at
+                at = end
+        return TimeBlocks(np.array(rows, dtype=np.int64).reshape(-1, 3), np.diff(edges, prepend=0, axis=1).ravel())
+
+    def join(self, size: int) -> TimeBlocks:
+        """Each `size` neighbouring blocks as one; what is left over at the end stands alone."""
+        stretches = self.stretches.copy()
+        stretches[:, 2] //= size
+        return TimeBlocks(stretches, np.add.reduceat(self.n_bins, np.arange(0, self.n_blocks, size)))
+
 
 @dataclass(frozen=True, eq=False)
 class Evaluation:

@@ -1,8 +1,12 @@
 """Both covariances of a fit: inverse expected information, and the sandwich of scores clustered by blocks of time.
 
+With few blocks the sandwich is too narrow, because the estimates follow the blocks they are judged by. There the
+one-step jackknife takes its place: what the estimates would be without each block, from the information that is left.
+
 References
 ----------
-Huber (1967); White (1982), Econometrica 50, 1-25; Liang and Zeger (1986), Biometrika 73, 13-22.
+Huber (1967); White (1982), Econometrica 50, 1-25; Liang and Zeger (1986), Biometrika 73, 13-22. Jackknife form of the
+cluster variance: Bell and McCaffrey (2002), Survey Methodology 28, 169-181.
 """
 
 from __future__ import annotations
@@ -12,30 +16,39 @@ from dataclasses import dataclass
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
+from kernelfit.engine.evaluate import Evaluation, TimeBlocks
 from kernelfit.engine.time_blocks import time_blocks
-from kernelfit.fitting.arrow import eliminate, solve_symmetric
+from kernelfit.errors import ArgumentError
+from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_symmetric
+from kernelfit.fitting.block_length import FINER, BlockCurve, block_curve, joined
 from kernelfit.fitting.maximise import Optimum, penalised
 from kernelfit.fitting.problem import Problem
+from kernelfit.model.coupling import CovarianceKind
 
 N_BLOCKS = 100
 SHORTEST_BLOCK_S = 1.0
 SHORTEST_BLOCK_TAUS = 20.0
 FEWEST_BLOCKS = 10  # with 20 tau above a tenth of the recording there would soon be one block, and no variance
+REFUSED_BELOW = 6  # blocks: a variance of fewer numbers means nothing
+JACKKNIFE_BELOW = 50  # blocks: from there on jackknife and sandwich differ by under 2 %
 SMALLEST_EIGENVALUE = (
     1e-9  # of the information scaled to a unit diagonal: below this two parameters cannot be told apart
 )
 
 
 @dataclass(frozen=True, eq=False)
-class Covariances:
+class Uncertainty:
     """Covariances on the working scale; parameters that were held or sit at a bound have rows of NaN.
 
     Parameters
     ----------
     shared_model, shared_robust : (Q, Q)
     own_model, own_robust : (n_targets, P, P), each unit's own parameters
+    shared_jackknife, own_jackknife : the same, one-step jackknife over blocks; None where it was not asked for and
+        there are blocks enough
     block_influence : (G, Q) what each block of time moved the shared estimates by (one step)
     n_blocks, block_length_s : clusters of the robust kind
+    block_curve : standard errors against the length of the blocks, from which it was chosen
     weak_direction : (Q,) the combination of parameters the recording says nothing about, or None
     """
 
@@ -43,10 +56,37 @@ class Covariances:
     shared_robust: FloatArray
     own_model: FloatArray
     own_robust: FloatArray
+    shared_jackknife: FloatArray | None
+    own_jackknife: FloatArray | None
     block_influence: FloatArray
     n_blocks: int
     block_length_s: float
+    block_curve: BlockCurve
     weak_direction: FloatArray | None
+
+    def shared(self, kind: CovarianceKind) -> FloatArray:
+        """(Q, Q) of that kind. Raises ArgumentError for a jackknife that was not made."""
+        if kind == "jackknife":
+            return self._made(self.shared_jackknife)
+        return self.shared_robust if kind == "robust" else self.shared_model
+
+    def own(self, kind: CovarianceKind) -> FloatArray:
+        """(n, P, P) of that kind. Raises ArgumentError for a jackknife that was not made."""
+        if kind == "jackknife":
+            return self._made(self.own_jackknife)
+        return self.own_robust if kind == "robust" else self.own_model
+
+    def degrees_of_freedom(self, kind: CovarianceKind) -> float:
+        """Blocks less one, infinite for the model-based kind."""
+        return np.inf if kind == "model" else float(self.n_blocks - 1)
+
+    def _made(self, jackknife: FloatArray | None) -> FloatArray:
+        if jackknife is None:
+            raise ArgumentError(
+                f"covariance='jackknife' was not computed: with {self.n_blocks} blocks of time it hardly differs from "
+                "'robust'. Refit with covariance='jackknife' (--intervals jackknife) to have it."
+            )
+        return jackknife
 
 
 def block_length_s(duration_s: float, leak: float) -> float:
@@ -58,43 +98,117 @@ def block_length_s(duration_s: float, leak: float) -> float:
     return max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S, slow)
 
 
-def covariances(problem: Problem, optimum: Optimum) -> Covariances:
-    """Both covariances at an optimum: one sweep with scores by block of time."""
-    free = optimum.free
-    length_s = block_length_s(problem.grid.duration_s, problem.leak(optimum.estimate.shared))
-    blocks = time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
-    problem.clock.stage = "standard errors"
-    sums = problem.evaluate(optimum.estimate, blocks=blocks)
-    local = penalised(problem, optimum.estimate, sums)
-    elimination = eliminate(local.information.only(free))
-    n_own = optimum.estimate.own.shape[1]
-    block_own = sums.score[..., :n_own]
-    efficient = elimination.efficient_score(block_own, sums.score[..., n_own:].sum(axis=1)[:, free])
+def usual_blocks(problem: Problem, leak: float) -> TimeBlocks:
+    """Blocks of the usual length at a leak rate (1/s)."""
+    length_s = block_length_s(problem.grid.duration_s, leak)
+    return time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
 
+
+def covariances(problem: Problem, optimum: Optimum, *, jackknife: bool = False) -> Uncertainty:
+    """All covariances at an optimum: one sweep with scores by block of time, one more where blocks are few or joined.
+
+    Parameters
+    ----------
+    problem, optimum : the model on the recording, and its estimate
+    jackknife : make the jackknife although there are blocks enough
+    """
+    free = optimum.free
+    usual = usual_blocks(problem, problem.leak(optimum.estimate.shared))
+    fine = usual.split(FINER if usual.n_bins.min() >= FINER else 1)
+    problem.clock.stage = "standard errors"
+    sums = problem.evaluate(optimum.estimate, blocks=fine)
+    information = penalised(problem, optimum.estimate, sums).information.only(free)
+    elimination = eliminate(information)
     weak = _weak_direction(elimination.schur)
-    if weak is None:
-        inverse = solve_symmetric(elimination.schur, np.eye(int(free.sum())))
-        influence = solve_symmetric(elimination.schur, efficient.T).T
-    else:
-        inverse = np.full((int(free.sum()), int(free.sum())), np.nan)
-        influence = np.full_like(efficient, np.nan)
-    through_shared = elimination.reduced @ np.nan_to_num(inverse)
-    own_model = elimination.own_inverse + through_shared @ np.swapaxes(elimination.reduced, 1, 2)
-    own_influence = np.einsum("npk,gnk->gnp", elimination.own_inverse, block_own) - np.einsum(
-        "npq,gq->gnp", elimination.reduced, np.nan_to_num(influence)
-    )
+    influence = _influence(sums, elimination, free, weak is None)
+    finer = fine.n_blocks // usual.n_blocks
+    curve = block_curve(influence.shared, finer, problem.grid.duration_s)
+    influence, blocks = influence.joined(finer), usual
+    if curve.factor(finer) > 1:
+        blocks = time_blocks(problem.grid, curve.factor(finer) * problem.grid.duration_s / usual.n_blocks)
+        sums = problem.evaluate(optimum.estimate, blocks=blocks)
+        influence = _influence(sums, elimination, free, weak is None)
     n_blocks = blocks.n_blocks
-    correction = n_blocks / (n_blocks - 1.0) if n_blocks > 1 else np.nan
-    return Covariances(
+    correction = n_blocks / (n_blocks - 1.0) if n_blocks >= REFUSED_BELOW else np.nan
+    left_out = None
+    if weak is None and n_blocks >= REFUSED_BELOW and (jackknife or n_blocks < JACKKNIFE_BELOW):
+        left_out = _left_out(problem, optimum, blocks, information)
+    inverse = (
+        solve_symmetric(elimination.schur, np.eye(int(free.sum())))
+        if weak is None
+        else np.full((int(free.sum()), int(free.sum())), np.nan)
+    )
+    through_shared = elimination.reduced @ np.nan_to_num(inverse)
+    return Uncertainty(
         shared_model=_spread(inverse, free),
-        shared_robust=_spread(correction * influence.T @ influence, free),
-        own_model=own_model,
-        own_robust=correction * np.einsum("gnp,gnq->npq", own_influence, own_influence),
-        block_influence=_columns(influence, free),
+        shared_robust=_spread(correction * influence.squared_shared, free),
+        own_model=elimination.own_inverse + through_shared @ np.swapaxes(elimination.reduced, 1, 2),
+        own_robust=correction * influence.squared_own,
+        shared_jackknife=None if left_out is None else _spread(left_out.squared_shared / correction, free),
+        own_jackknife=None if left_out is None else left_out.squared_own / correction,
+        block_influence=_columns(influence.shared, free),
         n_blocks=n_blocks,
         block_length_s=float(np.mean(blocks.n_bins)) * problem.data.bin_width,
+        block_curve=curve.over(free),
         weak_direction=None if weak is None else _columns(weak[None], free)[0],
     )
+
+
+@dataclass(frozen=True, eq=False)
+class _Influence:
+    """What each block of time moves the estimates by: own (G, n, P) and free shared ones (G, Q)."""
+
+    own: FloatArray
+    shared: FloatArray
+
+    def joined(self, size: int) -> _Influence:
+        """The same for each `size` neighbouring blocks together."""
+        n = len(self.own)
+        own = joined(self.own.reshape(n, -1), size)
+        return _Influence(own.reshape(len(own), *self.own.shape[1:]), joined(self.shared, size))
+
+    @property
+    def squared_shared(self) -> FloatArray:
+        """(Q, Q) sum of products over blocks."""
+        return np.asarray(self.shared.T @ self.shared)
+
+    @property
+    def squared_own(self) -> FloatArray:
+        """(n, P, P) sum of products over blocks."""
+        return np.asarray(np.einsum("gnp,gnq->npq", self.own, self.own))
+
+
+def _influence(sums: Evaluation, elimination: Elimination, free: BoolArray, determined: bool) -> _Influence:
+    n_own = elimination.own_inverse.shape[1]
+    score_own = sums.score[..., :n_own]
+    efficient = elimination.efficient_score(score_own, sums.score[..., n_own:].sum(axis=1)[:, free])
+    shared = solve_symmetric(elimination.schur, efficient.T).T if determined else np.full_like(efficient, np.nan)
+    own = np.einsum("npk,gnk->gnp", elimination.own_inverse, score_own) - np.einsum(
+        "npq,gq->gnp", elimination.reduced, np.nan_to_num(shared)
+    )
+    return _Influence(own, shared)
+
+
+def _left_out(problem: Problem, optimum: Optimum, blocks: TimeBlocks, information: Arrow) -> _Influence | None:
+    """What leaving out each block would take from the estimates, in one step from the information that is left.
+
+    None where all that is known of some parameter stands in one block: without it nothing is left to estimate from.
+    """
+    free = optimum.free
+    sums = problem.evaluate(optimum.estimate, blocks=blocks, information_by_block=True)
+    n_own = sums.own_own.shape[-1]
+    own, shared = [], []
+    for g in range(blocks.n_blocks):
+        here = Arrow(sums.own_own[g], sums.own_shared[g], sums.shared_shared[g]).only(free)
+        rest = Arrow(information.own - here.own, information.cross - here.cross, information.shared - here.shared)
+        score = sums.score[g]
+        try:
+            own_step, shared_step = eliminate(rest).solve(score[:, :n_own], score[:, n_own:].sum(axis=0)[free])
+        except np.linalg.LinAlgError:
+            return None
+        own.append(own_step)
+        shared.append(shared_step)
+    return _Influence(np.array(own), np.array(shared))
 
 
 def _weak_direction(schur: FloatArray) -> FloatArray | None:

@@ -15,7 +15,7 @@ from kernelfit._validation import is_whole
 from kernelfit.errors import ArgumentError, FitWarning, NotIdentifiedError
 from kernelfit.fitting.added_term import after_spike_test
 from kernelfit.fitting.arrow import SingularOwnBlock
-from kernelfit.fitting.covariance import Covariances, covariances
+from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.detection import detect_coupling
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.notes import bound_reasons, fit_notes
@@ -24,7 +24,7 @@ from kernelfit.fitting.outcome import SolverReport
 from kernelfit.fitting.problem import Problem, make_problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.fitting.radius import LEVEL, RadiusProfile, discrete_parameter, search_radius, variance_inflation
-from kernelfit.fitting.result import CouplingFit, Uncertainty, covariance_kind
+from kernelfit.fitting.result import CouplingFit, covariance_kind
 from kernelfit.fitting.search import SearchResult, search
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.recording import Recording
@@ -50,7 +50,7 @@ def fit_model(
         verdict = detect_coupling(null, seed)
         found, profile = _best(problem, null)
         optimum = found.best
-        spread = covariances(problem, optimum)
+        spread = covariances(problem, optimum, jackknife=kind == "jackknife")
     except SingularOwnBlock as error:
         raise NotIdentifiedError(_undetermined_unit(problem, recording, error.place)) from error
     added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None
@@ -78,15 +78,7 @@ def fit_model(
         n_pairs=by_distance["n_pairs"].to_numpy(),
         has_same_site=problem.has_same_site,
         radius_interval=_radius_interval(problem, profile, spread),
-        uncertainty=Uncertainty(
-            shared_model=spread.shared_model,
-            shared_robust=spread.shared_robust,
-            own_model=spread.own_model,
-            own_robust=spread.own_robust,
-            block_influence=spread.block_influence,
-            n_blocks=spread.n_blocks,
-            block_length_s=spread.block_length_s,
-        ),
+        uncertainty=spread,
         covariance_kind=kind,
         log_likelihood=optimum.local.log_likelihood,
         null_log_likelihood=likelihoods.constant,
@@ -194,7 +186,7 @@ def _second_sentence(problem: Problem, found: SearchResult) -> str | None:
 
 
 def _radius_interval(
-    problem: Problem, profile: RadiusProfile | None, spread: Covariances
+    problem: Problem, profile: RadiusProfile | None, spread: Uncertainty
 ) -> tuple[float, float] | None:
     if profile is None:
         return None

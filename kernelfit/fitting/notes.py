@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from kernelfit._typing import FloatArray
-from kernelfit.fitting.covariance import Covariances
+from kernelfit.fitting.covariance import REFUSED_BELOW, Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.outcome import Note
@@ -42,7 +42,7 @@ def bound_reasons(problem: Problem, at_bound: FloatArray) -> tuple[str, ...]:
 
 
 def fit_notes(
-    problem: Problem, recording: Recording, optimum: Optimum, spread: Covariances, verdict: CouplingVerdict
+    problem: Problem, recording: Recording, optimum: Optimum, spread: Uncertainty, verdict: CouplingVerdict
 ) -> tuple[Note, ...]:
     """Everything worth saying about a fit, gravest first."""
     notes: list[Note] = []
@@ -105,12 +105,13 @@ def fit_notes(
                 "State a faster leak rate, or record longer.",
             )
         )
-    if spread.n_blocks < 2:
+    if spread.n_blocks < REFUSED_BELOW:
+        many = "a single block" if spread.n_blocks == 1 else f"only {spread.n_blocks} blocks"
         notes.append(
             Note(
                 "warning",
-                f"The {problem.grid.duration_s:.3g} s that count are a single block of time: there are no robust "
-                "standard errors.",
+                f"The {problem.grid.duration_s:.3g} s that count are {many} of time ({REFUSED_BELOW} are needed): there "
+                "are no robust standard errors.",
                 "covariance",
                 "Record longer, or read the model-based ones: fit.with_covariance('model') (--covariance model).",
             )
@@ -121,6 +122,17 @@ def fit_notes(
                 "warning",
                 f"Robust standard errors rest on {spread.n_blocks} blocks of time of {spread.block_length_s:.3g} s; "
                 f"fewer than {FEW_BLOCKS} tend to come out too small.",
+                "covariance",
+                "Record longer, or read those of the jackknife, made for few blocks: fit.with_covariance('jackknife') "
+                "(--covariance jackknife).",
+            )
+        )
+    if spread.n_blocks >= REFUSED_BELOW and not spread.block_curve.settled:
+        notes.append(
+            Note(
+                "warning",
+                f"Neighbouring blocks of time of {spread.block_length_s:.3g} s still go together, and there are too few "
+                "to join more of them: slow states outlast a block, and the robust standard errors are too small.",
                 "covariance",
                 "Record longer; read the intervals as lower limits of the uncertainty.",
             )

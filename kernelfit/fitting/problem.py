@@ -172,9 +172,17 @@ class Problem:
             coefficient=np.ascontiguousarray(estimate.own[:, 1:].T),
         )
 
-    def evaluate(self, estimate: Estimate, *, blocks: TimeBlocks | None = None) -> Evaluation:
+    def evaluate(
+        self, estimate: Estimate, *, blocks: TimeBlocks | None = None, information_by_block: bool = False
+    ) -> Evaluation:
         """Sums at an estimate, derivatives by log alpha instead of alpha; penalties not included."""
-        sums = evaluate(self.data, self.point(estimate), blocks=blocks, threads=self.threads)
+        sums = evaluate(
+            self.data,
+            self.point(estimate),
+            blocks=blocks,
+            information_by_block=information_by_block,
+            threads=self.threads,
+        )
         self.clock.tick()
         if not self.fits_leak:
             return sums
@@ -182,8 +190,8 @@ class Problem:
         score, own_shared, shared = sums.score.copy(), sums.own_shared.copy(), sums.shared_shared.copy()
         score[..., -1] *= alpha
         own_shared[..., -1] *= alpha
-        shared[-1] *= alpha
-        shared[:, -1] *= alpha
+        shared[..., -1, :] *= alpha
+        shared[..., -1] *= alpha
         return replace(sums, score=score, own_shared=own_shared, shared_shared=shared)
 
     def with_kernel(self, kernel: Kernel) -> Problem:

@@ -8,7 +8,7 @@ from dataclasses import dataclass, field
 import numpy as np
 
 from kernelfit._typing import FloatArray, IntArray
-from kernelfit.fitting.covariance import Covariances, covariances
+from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, NullSweep, null_blocks, null_sweep
 from kernelfit.fitting.problem import Estimate, Problem
@@ -54,7 +54,7 @@ def edge_critical(level: float) -> float:
     return -2.0 * math.log(1.0 - math.sqrt(level))
 
 
-def variance_inflation(spread: Covariances) -> float:
+def variance_inflation(spread: Uncertainty) -> float:
     """Robust over model variance of the amplitude, the first shared parameter; 1 at least, and where there is none."""
     model, robust = spread.shared_model[0, 0], spread.shared_robust[0, 0]
     return max(float(robust / model), 1.0) if model > 0 and np.isfinite(robust / model) else 1.0

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, cast, get_args
 
 import numpy as np
 import pandas as pd
@@ -12,6 +12,7 @@ import pandas as pd
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.engine.evaluate import Point, SweepData, compensate, evaluate, expected_counts
 from kernelfit.errors import ArgumentError, StorageError, Unavailable
+from kernelfit.fitting.covariance import Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.outcome import FittedRates, Note, ScoreTest, SolverReport
 from kernelfit.kernels import DistanceRange, KernelCurve
@@ -26,36 +27,6 @@ LEVEL = 0.95
 SAME_LIKELIHOOD = 1e-9  # relative: sums in another order differ by less, another recording by more
 SAME_SITE_NAME = "same_site"
 LEAK_NAME = "leak_rate"
-
-
-@dataclass(frozen=True, eq=False)
-class Uncertainty:
-    """Both covariances on the working scale. Q shared parameters, P own ones of n targets, G blocks of time.
-
-    shared_model, shared_robust (Q, Q), rows of NaN for what was not estimated; own_model, own_robust (n, P, P);
-    block_influence (G, Q): what each block of time moved the shared estimates by; n_blocks, block_length_s: the
-    clusters.
-    """
-
-    shared_model: FloatArray
-    shared_robust: FloatArray
-    own_model: FloatArray
-    own_robust: FloatArray
-    block_influence: FloatArray
-    n_blocks: int
-    block_length_s: float
-
-    def shared(self, kind: CovarianceKind) -> FloatArray:
-        """(Q, Q) of that kind."""
-        return self.shared_robust if kind == "robust" else self.shared_model
-
-    def own(self, kind: CovarianceKind) -> FloatArray:
-        """(n, P, P) of that kind."""
-        return self.own_robust if kind == "robust" else self.own_model
-
-    def degrees_of_freedom(self, kind: CovarianceKind) -> float:
-        """Blocks less one for the robust kind, infinite for the other."""
-        return float(self.n_blocks - 1) if kind == "robust" else np.inf
 
 
 @dataclass(frozen=True, eq=False)
@@ -400,13 +371,20 @@ class CouplingFit:
     # --- copies, words, files -------------------------------------------------------------------------
 
     def with_covariance(self, kind: CovarianceKind) -> CouplingFit:
-        """The same fit with its tables by the other covariance; nothing is refitted.
+        """The same fit with its tables by another covariance; nothing is refitted.
+
+        Parameters
+        ----------
+        kind : "robust" (clustered by blocks of time), "jackknife" (each block left out in turn, one step: for few
+            blocks) or "model" (inverse expected information)
 
         Raises
         ------
-        ArgumentError : neither "robust" nor "model"
+        ArgumentError : none of these, or a jackknife that was not made because blocks are many
         """
-        return replace(self, covariance_kind=covariance_kind(kind))
+        kind = covariance_kind(kind)
+        self.uncertainty.shared(kind)  # says so where it was not made
+        return replace(self, covariance_kind=kind)
 
     def summary(self) -> str:
         """The result in plain text."""
@@ -439,11 +417,12 @@ def covariance_kind(kind: str) -> CovarianceKind:
 
     Raises
     ------
-    ArgumentError : neither "robust" nor "model"
+    ArgumentError : neither "robust" nor "jackknife" nor "model"
     """
-    if kind not in ("robust", "model"):
-        raise ArgumentError(f"covariance={kind!r} is not known. Say 'robust' or 'model'.")
-    return "robust" if kind == "robust" else "model"
+    for known in get_args(CovarianceKind):
+        if kind == known:
+            return cast(CovarianceKind, known)
+    raise ArgumentError(f"covariance={kind!r} is not known. Say 'robust', 'jackknife' or 'model'.")
 
 
 __all__ = ["CouplingFit", "Uncertainty", "covariance_kind"]

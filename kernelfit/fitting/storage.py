@@ -15,14 +15,13 @@ from dataclasses import asdict
 from pathlib import Path
 from typing import Any, cast
 
-import numpy as np
-
-from kernelfit._typing import AnyArray, FloatArray, IntArray
 from kernelfit.errors import KernelfitError, OutputError, StorageError
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.outcome import Note, ScoreTest, SolverReport
-from kernelfit.fitting.result import CouplingFit, Uncertainty, covariance_kind
+from kernelfit.fitting.plain_values import floats, plain, whole_numbers
+from kernelfit.fitting.result import CouplingFit, covariance_kind
 from kernelfit.fitting.search import StartRecord
+from kernelfit.fitting.uncertainty_storage import describe_uncertainty, restore_uncertainty
 from kernelfit.kernels import KERNELS, DistanceRange, kernel_from_description
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.model.terms import AfterSpike, NoAfterSpike
@@ -113,7 +112,6 @@ def check_sum(content: Mapping[str, Any]) -> str:
 def describe_fit(fit: CouplingFit) -> dict[str, Any]:
     """A fit as plain JSON values; NaN becomes null."""
     model = fit.model
-    spread = fit.uncertainty
     return {
         "format": FORMAT,
         "format_version": FORMAT_VERSION,
@@ -138,31 +136,22 @@ def describe_fit(fit: CouplingFit) -> dict[str, Any]:
             "windows_stated": fit.origin.windows_stated,
             "notes": list(fit.origin.notes),
             "unit_ids": list(fit.unit_ids),
-            "positions_um": _plain(fit.positions),
-            "windows_s": _plain(fit.window_bounds),
-            "counts": _plain(fit.counts),
+            "positions_um": plain(fit.positions),
+            "windows_s": plain(fit.window_bounds),
+            "counts": plain(fit.counts),
             "n_bins": fit.n_bins,
         },
-        "geometry": {**asdict(fit.span), "distinct_um": _plain(fit.distinct_um), "n_pairs": _plain(fit.n_pairs)},
+        "geometry": {**asdict(fit.span), "distinct_um": plain(fit.distinct_um), "n_pairs": plain(fit.n_pairs)},
         "estimate": {
-            "targets": _plain(fit.targets),
-            "own": _plain(fit.own),
-            "shared": _plain(fit.shared),
-            "at_bound": _plain(fit.at_bound),
+            "targets": plain(fit.targets),
+            "own": plain(fit.own),
+            "shared": plain(fit.shared),
+            "at_bound": plain(fit.at_bound),
             "bound_reasons": list(fit.bound_reasons),
             "has_same_site": fit.has_same_site,
             "radius_interval_um": fit.radius_interval,
         },
-        "uncertainty": {
-            "covariance": fit.covariance_kind,
-            "shared_model": _plain(spread.shared_model),
-            "shared_robust": _plain(spread.shared_robust),
-            "own_model": _plain(spread.own_model),
-            "own_robust": _plain(spread.own_robust),
-            "block_influence": _plain(spread.block_influence),
-            "n_blocks": spread.n_blocks,
-            "block_length_s": spread.block_length_s,
-        },
+        "uncertainty": {"covariance": fit.covariance_kind, **describe_uncertainty(fit.uncertainty)},
         "log_likelihood": {
             "fit": fit.log_likelihood,
             "constant_rates": fit.null_log_likelihood,
@@ -178,25 +167,8 @@ def describe_fit(fit: CouplingFit) -> dict[str, Any]:
     }
 
 
-def _plain(array: AnyArray) -> Any:
-    """Nested lists, NaN as null."""
-    if array.dtype.kind == "f" and np.isnan(array).any():
-        boxed = array.astype(object)
-        boxed[np.isnan(array)] = None
-        return boxed.tolist()
-    return array.tolist()
-
-
 def _finite(record: dict[str, Any]) -> dict[str, Any]:
     return {k: None if isinstance(v, float) and not math.isfinite(v) else v for k, v in record.items()}
-
-
-def _floats(values: Any, *shape: int) -> FloatArray:
-    return np.array(values, dtype=np.float64).reshape(shape)
-
-
-def _whole(values: Any) -> IntArray:
-    return np.array(values, dtype=np.int64)
 
 
 def _restore(c: Mapping[str, Any]) -> CouplingFit:
@@ -207,30 +179,22 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
     return CouplingFit(
         model=_model(m),
         unit_ids=tuple(r["unit_ids"]),
-        positions=_floats(r["positions_um"], n_units, -1),
+        positions=floats(r["positions_um"], n_units, -1),
         origin=Origin(tuple(SourceFile(**f) for f in r["files"]), r["windows_stated"], tuple(r["notes"])),
-        window_bounds=_floats(r["windows_s"], -1, 2),
-        targets=_whole(e["targets"]),
-        counts=_whole(r["counts"]),
+        window_bounds=floats(r["windows_s"], -1, 2),
+        targets=whole_numbers(e["targets"]),
+        counts=whole_numbers(r["counts"]),
         n_bins=int(r["n_bins"]),
-        own=_floats(e["own"], n_targets, n_own),
-        shared=_floats(e["shared"], n_shared),
-        at_bound=_floats(e["at_bound"], n_shared),
+        own=floats(e["own"], n_targets, n_own),
+        shared=floats(e["shared"], n_shared),
+        at_bound=floats(e["at_bound"], n_shared),
         bound_reasons=tuple(e["bound_reasons"]),
         span=DistanceRange(g["reference_um"], g["smallest_um"], g["largest_um"], g["n_coordinates"]),
-        distinct_um=_floats(g["distinct_um"], -1),
-        n_pairs=_whole(g["n_pairs"]),
+        distinct_um=floats(g["distinct_um"], -1),
+        n_pairs=whole_numbers(g["n_pairs"]),
         has_same_site=bool(e["has_same_site"]),
         radius_interval=None if e["radius_interval_um"] is None else _pair(e["radius_interval_um"]),
-        uncertainty=Uncertainty(
-            shared_model=_floats(u["shared_model"], n_shared, n_shared),
-            shared_robust=_floats(u["shared_robust"], n_shared, n_shared),
-            own_model=_floats(u["own_model"], n_targets, n_own, n_own),
-            own_robust=_floats(u["own_robust"], n_targets, n_own, n_own),
-            block_influence=_floats(u["block_influence"], int(u["n_blocks"]), n_shared),
-            n_blocks=int(u["n_blocks"]),
-            block_length_s=float(u["block_length_s"]),
-        ),
+        uncertainty=restore_uncertainty(u, n_targets, n_own, n_shared),
         covariance_kind=covariance_kind(u["covariance"]),
         log_likelihood=float(ll["fit"]),
         null_log_likelihood=float(ll["constant_rates"]),

@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray
+from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.inference.bands import standard_errors, sup_t_critical
 from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
 
@@ -17,7 +18,6 @@ if TYPE_CHECKING:
     from kernelfit.model.coupling import CovarianceKind
 
 FIXED = "fixed"
-ONE_BLOCK = "no robust standard error: a single block of time; fit.with_covariance('model') has one"
 
 
 def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], BoolArray]:
@@ -106,7 +106,15 @@ def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> s
         if used[0] < len(family) and family[used[0]].discrete:
             return ""
         return "not identified: the recording says nothing about it (see notes)"
-    return ONE_BLOCK if kind == "robust" and fit.n_blocks < 2 else ""
+    return _too_few_blocks(fit, kind)
+
+
+def _too_few_blocks(fit: CouplingFit, kind: CovarianceKind) -> str:
+    """Why there is no standard error from blocks of time, where there is none."""
+    if kind == "model" or fit.n_blocks >= REFUSED_BELOW:
+        return ""
+    blocks = f"{fit.n_blocks} block{'s' * (fit.n_blocks != 1)} of time"
+    return f"no {kind} standard error: {blocks}, {REFUSED_BELOW} are needed; fit.with_covariance('model') has one"
 
 
 def std_error_table(fit: CouplingFit) -> pd.DataFrame:
@@ -131,8 +139,7 @@ def baseline_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.D
     explained = np.zeros(n, dtype=bool)
     explained[fit.targets] = True
     notes = np.array([""] * n, dtype=object)
-    if kind == "robust" and fit.n_blocks < 2:
-        notes[fit.targets] = ONE_BLOCK
+    notes[fit.targets] = _too_few_blocks(fit, kind)
     silent = ~explained & (fit.counts == 0)
     rate[silent] = 0.0
     notes[silent] = "silent in the bins that count: baseline minus infinity, rate 0; still drives others"

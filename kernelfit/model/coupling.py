@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
     from kernelfit.recording.recording import Recording
 
-CovarianceKind = Literal["robust", "model"]
+CovarianceKind = Literal["robust", "jackknife", "model"]
 
 
 @dataclass(frozen=True, init=False)

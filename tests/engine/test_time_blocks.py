@@ -115,3 +115,29 @@ def test_every_bin_has_one_block_on_an_irregular_grid(length_s):
     grid = grid_of(((0.0, 5.0), (5.35, 6.0), (9.0, 9.2)), ((2.0, 2.05), (4.9, 5.5)), bin_s=0.01)
     blocks = time_blocks(grid, length_s)
     assert blocks.n_bins.sum() == grid.n_bins
+
+
+@given(
+    lengths=st.lists(st.integers(1, 40), min_size=1, max_size=6),
+    target=st.integers(1, 30),
+    parts=st.integers(1, 6),
+    size=st.integers(1, 5),
+)
+@settings(deadline=None, max_examples=60)
+def test_blocks_split_and_joined_still_hold_every_bin_once(lengths, target, parts, size):
+    starts = np.cumsum([0, *lengths[:-1]]) + 3 * np.arange(len(lengths))
+    windows = tuple((0.1 * a, 0.1 * (a + n)) for a, n in zip(starts, lengths, strict=True))
+    blocks = time_blocks(grid_of(windows), 0.1 * target)
+    fine = blocks.split(parts)
+    finer = fine.n_blocks // blocks.n_blocks
+    assert 1 <= finer <= parts
+    assert finer == parts or finer == blocks.n_bins.min()
+    wide = blocks.join(size)
+    assert wide.n_blocks == -(-blocks.n_blocks // size)
+    for other, group in ((fine.join(finer), 1), (wide, size)):
+        want = [[t for b in bins_by_block(blocks)[k : k + group] for t in b] for k in range(0, blocks.n_blocks, group)]
+        assert bins_by_block(other) == want
+        np.testing.assert_array_equal(other.n_bins, [len(b) for b in want])
+    np.testing.assert_array_equal(fine.n_bins, [len(b) for b in bins_by_block(fine)])
+    by_block = fine.n_bins.reshape(blocks.n_blocks, finer)
+    assert (by_block.max(axis=1) - by_block.min(axis=1) <= 1).all()

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+from typing import NamedTuple
 
 import numpy as np
 import pytest
@@ -11,7 +12,8 @@ from worlds import BIN_S, LEAK, model, simulated
 from kernelfit import kernels, terms
 from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.engine.twin import dense_counts, dense_gradients
-from kernelfit.fitting.covariance import block_length_s, covariances
+from kernelfit.errors import ArgumentError
+from kernelfit.fitting.covariance import JACKKNIFE_BELOW, block_length_s, covariances
 from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.null import first_estimate
 from kernelfit.fitting.problem import Estimate, make_problem
@@ -37,7 +39,18 @@ def case(request, recording):
     the_model, start = request.param
     problem = make_problem(the_model, recording, threads=2)
     optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array(start)))
-    return problem, optimum, covariances(problem, optimum)
+    return problem, optimum, covariances(problem, optimum, jackknife=True)
+
+
+class Dense(NamedTuple):
+    """inverse (K, K) of the penalised information; scores (G, K) and information (G, K, K) by block of time; units and
+    own parameters of each."""
+
+    inverse: np.ndarray
+    scores: np.ndarray
+    within: np.ndarray
+    n: int
+    p: int
 
 
 @pytest.fixture(scope="module")
@@ -66,12 +79,18 @@ def dense(case):
     block = np.concatenate([np.full(b - a, g) for a, b, g in blocks.stretches])
     pull = np.einsum("tn,tnj->tj", counts - mean, design)
     scores = np.array([pull[block == g].sum(axis=0) for g in range(blocks.n_blocks)])
-    return np.linalg.inv(information), scores, n, p
+    within = np.array(
+        [
+            np.einsum("tn,tnj,tnk->jk", mean[rows], design[rows], design[rows], optimize=True)
+            for rows in (block == g for g in range(blocks.n_blocks))
+        ]
+    )
+    return Dense(np.linalg.inv(information), scores, within, n, p)
 
 
 def test_model_based_covariance_is_the_inverse_information(case, dense):
     _, _, spread = case
-    inverse, _, n, p = dense
+    inverse, _, _, n, p = dense
     np.testing.assert_allclose(spread.shared_model, inverse[n * p :, n * p :], rtol=1e-7)
     for i in range(n):
         rows = slice(i * p, (i + 1) * p)
@@ -81,7 +100,7 @@ def test_model_based_covariance_is_the_inverse_information(case, dense):
 def test_robust_covariance_is_the_sandwich_of_block_scores(case, dense):
     """G/(G - 1) H^-1 (sum of s s') H^-1, all parameters together (Liang and Zeger 1986)."""
     _, _, spread = case
-    inverse, scores, n, p = dense
+    inverse, scores, _, n, p = dense
     G = len(scores)
     sandwich = G / (G - 1) * inverse @ (scores.T @ scores) @ inverse
     assert spread.n_blocks == G
@@ -94,9 +113,41 @@ def test_robust_covariance_is_the_sandwich_of_block_scores(case, dense):
         )
 
 
+def test_the_jackknife_leaves_out_each_block_in_one_step(case, dense):
+    """(G - 1)/G sum of d d', d = (H - H_g)^-1 s_g (Bell and McCaffrey 2002), all parameters together."""
+    _, _, spread = case
+    total, (n, p) = np.linalg.inv(dense.inverse), (dense.n, dense.p)
+    moves = np.array([np.linalg.solve(total - h, s) for h, s in zip(dense.within, dense.scores, strict=True)])
+    G = len(moves)
+    want = (G - 1) / G * moves.T @ moves
+    np.testing.assert_allclose(spread.shared_jackknife, want[n * p :, n * p :], rtol=1e-6)
+    for i in range(n):
+        rows = slice(i * p, (i + 1) * p)
+        size = np.sqrt(np.diag(want)[rows])
+        np.testing.assert_allclose(
+            spread.own_jackknife[i] / np.outer(size, size), want[rows, rows] / np.outer(size, size), atol=1e-6
+        )
+
+
+def test_the_jackknife_is_made_where_blocks_are_few_or_where_it_is_asked_for(recording):
+    problem = make_problem(model("flat", leak_rate=LEAK), simulated(1, duration_s=60.0), threads=1)
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05])))
+    many = covariances(problem, optimum)
+    assert many.n_blocks >= JACKKNIFE_BELOW
+    assert many.shared_jackknife is None
+    with pytest.raises(ArgumentError, match="hardly differs from 'robust'. Refit with covariance='jackknife'"):
+        many.shared("jackknife")
+    short = make_problem(model("flat", leak_rate=LEAK), recording.select(stop_s=20.0), threads=1)
+    few = covariances(short, maximise(short, Estimate(first_estimate(short).own, np.array([0.05]))))
+    assert few.n_blocks < JACKKNIFE_BELOW
+    # leaving out blocks costs information: with equal blocks the jackknife is wider by about G / (G - 1)
+    assert 1.0 < few.shared("jackknife")[0, 0] / few.shared("robust")[0, 0] < 2.0
+    assert few.degrees_of_freedom("jackknife") == few.n_blocks - 1
+
+
 def test_block_influence_is_the_one_step_move_of_each_block(case, dense):
     _, _, spread = case
-    inverse, scores, n, p = dense
+    inverse, scores, _, n, p = dense
     np.testing.assert_allclose(spread.block_influence, (scores @ inverse)[:, n * p :], rtol=1e-5, atol=1e-9)
 
 

@@ -117,7 +117,7 @@ def test_changing_the_covariance_changes_nothing_else(fit):
     np.testing.assert_array_equal(other.parameters["estimate"], fit.parameters["estimate"])
     assert not np.allclose(other.parameters["std_error"], fit.parameters["std_error"])
     assert not np.allclose(other.baselines["std_error"], fit.baselines["std_error"])
-    with pytest.raises(ArgumentError, match="'robust' or 'model'"):
+    with pytest.raises(ArgumentError, match="'robust', 'jackknife' or 'model'"):
         fit.with_covariance("bootstrap")
 
 

@@ -90,7 +90,7 @@ def test_without_blocks_of_time_the_missing_intervals_have_their_reason(recordin
     assert not any("1 blocks" in note.what for note in fit.notes)
     row = fit.parameters.loc["amplitude"]
     assert np.isnan(row["std_error"])
-    assert "single block of time" in row["note"]
+    assert "1 block of time, 6 are needed" in row["note"]
     assert fit.baselines.loc[np.isnan(fit.baselines["std_error"]), "note"].ne("").all()
     model_based = fit.with_covariance("model")
     assert np.isfinite(model_based.parameters.loc["amplitude", ["std_error", "lower", "upper"]].astype(float)).all()
