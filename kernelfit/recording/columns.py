@@ -1,8 +1,8 @@
-"""Columns of a raw table: found by exact name, in the unit of measure asked for, as numbers or labels."""
+"""Columns of a raw table as numbers or labels, and the units of measure they are written in."""
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,7 +10,7 @@ import numpy as np
 from kernelfit._typing import FloatArray
 from kernelfit.errors import ArgumentError, Fault
 from kernelfit.recording.cells import BadCell, read_labels, read_numbers, written
-from kernelfit.recording.raw_table import KNOWN_COLUMNS, LENGTH_UNITS, TIME_UNITS, RawTable
+from kernelfit.recording.raw_table import LENGTH_UNITS, TIME_UNITS, RawTable
 
 # Beyond these a number is a slip or in another unit, and squares and bin numbers would overflow later.
 MAX_TIME_S = 1e10
@@ -73,69 +73,6 @@ class Measures:
         return values if self.length_unit == "um" else np.round(values * 1e3, 9)
 
 
-def _missing(table: RawTable, wanted: str, remedy: str) -> Fault:
-    found = ", ".join(n or "(no name)" for n in table.names)
-    return table.fault(f"There is no column {wanted!r}; found: {found}.", table.hint or remedy)
-
-
-def _closest_column(table: RawTable, wanted: str) -> str | None:
-    """A column that may have been meant: not one that has a meaning of its own."""
-    from difflib import get_close_matches
-
-    free = [n for n in table.names if n not in KNOWN_COLUMNS[table.source.role]]
-    lower = {n.casefold(): n for n in reversed(free)}
-    close = get_close_matches(wanted.casefold(), lower, n=1, cutoff=0.5)
-    if close:
-        return lower[close[0]]
-    stem = wanted.partition("_")[0]
-    return next((n for n in free if stem in n.casefold().replace("_", " ").split()), None)
-
-
-def find(table: RawTable, wanted: str, faults: list[Fault]) -> str | None:
-    """A column by its exact name; faults say what is there instead."""
-    if wanted not in table.names:
-        close = _closest_column(table, wanted)
-        rename = (
-            f"Rename column {close!r} to {wanted!r} if that is it"
-            if close
-            else f"Call the column that holds it {wanted!r}"
-        )
-        faults.append(_missing(table, wanted, f"{rename}; names must match exactly."))
-        return None
-    if table.names.count(wanted) > 1:
-        remedy = "Keep one of them, or rename the others."
-        faults.append(
-            table.fault(f"There are {table.names.count(wanted)} columns of this name.", remedy, column=wanted)
-        )
-        return None
-    return wanted
-
-
-def find_time(table: RawTable, stem: str, measures: Measures, faults: list[Fault]) -> str | None:
-    """``time_ms`` or ``time_s`` for milliseconds: the name with the unit first, then the standard name."""
-    return _find_measured(table, stem, (measures.time_unit, *TIME_UNITS), "time_unit", faults)
-
-
-def find_length(table: RawTable, stem: str, measures: Measures, faults: list[Fault]) -> str | None:
-    """``x_mm`` or ``x_um`` for millimetres: the name with the unit first, then the standard name."""
-    return _find_measured(table, stem, (measures.length_unit, *LENGTH_UNITS), "length_unit", faults)
-
-
-def _find_measured(table: RawTable, stem: str, units: Sequence[str], option: str, faults: list[Fault]) -> str | None:
-    """`units`: the unit asked for, the standard unit, then all others."""
-    plain = f"{stem}_{units[1]}"
-    for name in (f"{stem}_{units[0]}", plain):
-        if name in table.names:
-            return find(table, name, faults)
-    other = next((u for u in units if f"{stem}_{u}" in table.names), None)
-    if other is None:
-        return find(table, plain, faults)
-    rate = " and sampling_rate_hz=..., the samples per second" if other == "samples" else ""
-    remedy = f"Load with {option}={other!r}{rate}, or convert the column and call it {plain!r}."
-    faults.append(_missing(table, plain, remedy))
-    return None
-
-
 def add_bad(table: RawTable, column: str, bad: Iterable[BadCell], faults: list[Fault]) -> None:
     """Bad cells of a column as faults of the table."""
     cells = table.column(column)
@@ -182,10 +119,3 @@ def labels_of(table: RawTable, column: str, faults: list[Fault], *, required: bo
     labels, bad = read_labels(table.column(column), required=required)
     add_bad(table, column, bad, faults)
     return labels
-
-
-def optional_labels_of(table: RawTable, column: str, faults: list[Fault]) -> list[str] | None:
-    """Labels of a column that may be absent: then None."""
-    if column not in table.names or find(table, column, faults) is None:
-        return None
-    return labels_of(table, column, faults, required=False)

@@ -21,6 +21,7 @@ from kernelfit.recording.recording import SourceFile
 
 DELIMITERS = {",": "commas", ";": "semicolons", "\t": "tabs", "|": "vertical bars"}
 COMMENT = "#"
+_HEADER_WITHIN = 20  # lines: where a header is looked for below a title
 
 _GZIP_MAGIC = b"\x1f\x8b"
 # What people hand over in place of a text table, by its first bytes.
@@ -285,6 +286,9 @@ def _header_hint(lines: list[str], first: int, names: tuple[str, ...], known: tu
         text = line.lstrip().lstrip(COMMENT)
         if any(set(_header_fields(text, d)) & set(known) for d in DELIMITERS):
             return f"Line {number} holds column names behind a comment sign; remove the {COMMENT} there."
+    for number, line in enumerate(lines[first + 1 : first + 1 + _HEADER_WITHIN], start=first + 2):
+        if any(len(set(_header_fields(line, d)) & set(known)) > 1 for d in DELIMITERS):
+            return f"Line {number} seems to be the header: delete what is above, or put {COMMENT} before it."
     if len(names) == 1 and set(names[0].replace(":", " ").split()) & set(known):
         return "Separate the columns by commas, semicolons or tabs, not by blanks."
     if any(n.lstrip("+-")[:1].isdigit() for n in names):

@@ -14,17 +14,8 @@ import numpy as np
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.errors import MAX_FAULTS_SHOWN, Fault
 from kernelfit.recording.cells import BadCell, closest_note, read_labels, written
-from kernelfit.recording.columns import (
-    Measures,
-    add_bad,
-    coordinates_of,
-    find,
-    find_length,
-    find_time,
-    labels_of,
-    optional_labels_of,
-    times_of,
-)
+from kernelfit.recording.columns import Measures, add_bad, coordinates_of, labels_of, times_of
+from kernelfit.recording.header import Header
 from kernelfit.recording.raw_table import LENGTH_UNITS, RawTable
 
 _YES, _NO = frozenset({"yes", "true", "1"}), frozenset({"", "no", "false", "0"})
@@ -62,42 +53,46 @@ class Stretches:
 
 
 def check_sites(table: RawTable, measures: Measures, faults: list[Fault]) -> Sites | None:
-    """Ids, positions and labels of the sites table, or None when no unit can be made out."""
-    unit = find(table, "unit", faults)
-    axes = _coordinate_columns(table, measures, faults)
-    if table.n_rows == 0 and not table.faults:
-        faults.append(table.fault("The table has no rows.", "Give one row for each unit."))
-    positions = np.full((table.n_rows, max(len(axes), 1)), np.nan)
-    for k, column in enumerate(axes):
-        positions[:, k] = coordinates_of(table, column, measures, faults)
-    groups = optional_labels_of(table, "group", faults)
-    if unit is None or table.n_rows == 0:
+    """Ids, positions and labels of the sites table, or None when the units cannot be made out."""
+    header = Header(table)
+    unit = header.find("unit")
+    axes = _coordinate_columns(header, measures)
+    group, source_only = header.optional("group"), header.optional("source_only")
+    if not header.is_sound(faults) or unit is None:
         return None
+    if table.n_rows == 0:
+        if not table.faults:
+            faults.append(table.fault("The table has no rows.", "Give one row for each unit."))
+        return None
+    positions = np.column_stack([coordinates_of(table, column, measures, faults) for column in axes])
+    groups = None if group is None else tuple(labels_of(table, group, faults, required=False))
     ids = labels_of(table, unit, faults, required=True)
     _find_repeated_units(table, ids, faults)
-    source_only = _source_only(table, ids, faults)
-    return Sites(tuple(ids), positions, None if groups is None else tuple(groups), source_only)
+    drives_only = frozenset[str]() if source_only is None else _source_only(table, source_only, ids, faults)
+    # A row that could not be taken apart may hold the unit that others would seem to lack.
+    return None if table.faults else Sites(tuple(ids), positions, groups, drives_only)
 
 
-def _coordinate_columns(table: RawTable, measures: Measures, faults: list[Fault]) -> list[str]:
+def _coordinate_columns(header: Header, measures: Measures) -> list[str]:
     """x, then y and z where they are there; all in one unit of measure."""
+    names = header.table.names
     columns: list[str] = []
     for axis in "xyz":
-        present = any(f"{axis}_{u}" in table.names for u in LENGTH_UNITS)
+        present = any(f"{axis}_{u}" in names for u in LENGTH_UNITS)
         if axis == "z" and present and len(columns) == 1:
-            name = next(n for n in table.names if n in ("z_um", "z_mm"))
+            name = next(n for n in names if n in ("z_um", "z_mm"))
             remedy = f"Add y, or rename {name} to y{name[1:]} if the array has two coordinates."
-            faults.append(table.fault("There is a z coordinate without a y coordinate.", remedy, column=name))
+            header.refuse("There is a z coordinate without a y coordinate.", remedy, column=name)
             break
         if axis == "x" or present:
-            found = find_length(table, axis, measures, faults)
+            found = header.find_length(axis, measures)
             if found is None:
                 break
             columns.append(found)
     endings = {c.partition("_")[2] for c in columns}
     if len(endings) > 1:
         remedy = "Convert them to one unit of measure and name them alike."
-        faults.append(table.fault(f"The coordinates {', '.join(columns)} are named in different units.", remedy))
+        header.refuse(f"The coordinates {', '.join(columns)} are named in different units.", remedy)
     return columns
 
 
@@ -109,11 +104,8 @@ def _find_repeated_units(table: RawTable, ids: list[str], faults: list[Fault]) -
             faults.append(table.fault(problem, "List each unit once.", at=k, column="unit", value=unit))
 
 
-def _source_only(table: RawTable, ids: list[str], faults: list[Fault]) -> frozenset[str]:
-    """Ids marked yes; empty where there is no such column. A DataFrame may hold truth values."""
-    column = "source_only"
-    if column not in table.names or find(table, column, faults) is None:
-        return frozenset()
+def _source_only(table: RawTable, column: str, ids: list[str], faults: list[Fault]) -> frozenset[str]:
+    """Ids marked yes. A DataFrame may hold truth values."""
     cells = [str(c) if isinstance(c, (bool, np.bool_)) else c for c in table.column(column)]
     marks, bad = read_labels(cells, required=False)
     remedy = "Write yes for units that drive others and are not explained, else no."
@@ -127,19 +119,21 @@ def _source_only(table: RawTable, ids: list[str], faults: list[Fault]) -> frozen
 def check_spikes(
     table: RawTable, sites: Sites | None, sites_name: str, measures: Measures, faults: list[Fault]
 ) -> Spikes | None:
-    """Unit and time of each spike; None where the units are unknown because a table is unusable."""
-    unit = find(table, "unit", faults)
-    time = find_time(table, "time", measures, faults)
+    """Unit and time of each spike; None where a table is unusable."""
+    header = Header(table)
+    unit, time = header.find("unit"), header.find_time("time", measures)
+    if not header.is_sound(faults) or unit is None or time is None:
+        return None
     if table.n_rows == 0 and not table.faults:
         faults.append(table.fault("The table has no rows.", "Give one row for each spike."))
-    time_s = None if time is None else times_of(table, time, measures, faults)
-    ids = None if unit is None else labels_of(table, unit, faults, required=True)
-    if ids is None or sites is None:
+    time_s = times_of(table, time, measures, faults)
+    ids = labels_of(table, unit, faults, required=True)
+    if sites is None:
         return None
     place = {u: k for k, u in enumerate(sites.ids)}
     index = np.array([place.get(u, -1) for u in ids], dtype=np.int64)
     _find_unknown_units(table, ids, index < 0, sites.ids, sites_name, faults)
-    return None if time is None or time_s is None else Spikes(index, time_s, time)
+    return Spikes(index, time_s, time)
 
 
 def _find_unknown_units(
@@ -186,19 +180,21 @@ def find_repeated_spikes(
 
 def check_stretches(table: RawTable, measures: Measures, faults: list[Fault]) -> Stretches | None:
     """Windows or exclusions, sorted by start; windows must not overlap, exclusions that do are merged."""
-    start, stop = (find_time(table, end, measures, faults) for end in ("start", "stop"))
+    header = Header(table)
+    start, stop = (header.find_time(end, measures) for end in ("start", "stop"))
     is_windows = table.source.role == "windows"
-    conditions = optional_labels_of(table, "condition", faults) if is_windows else None
-    trials = optional_labels_of(table, "trial", faults) if is_windows else None
+    condition, trial = (header.optional(name) if is_windows else None for name in ("condition", "trial"))
+    if start is not None and stop is not None and start.partition("_")[2] != stop.partition("_")[2]:
+        remedy = "Convert them to one unit of measure and name them alike."
+        header.refuse(f"The columns {start} and {stop} are named in different units.", remedy)
+    if not header.is_sound(faults) or start is None or stop is None:
+        return None
     if is_windows and table.n_rows == 0 and not table.faults:
         remedy = "Give one row for each stretch that was observed, or leave the table out."
         faults.append(table.fault("The table has no rows.", remedy))
-    if start is None or stop is None:
-        return None
-    if start.partition("_")[2] != stop.partition("_")[2]:
-        remedy = "Convert them to one unit of measure and name them alike."
-        faults.append(table.fault(f"The columns {start} and {stop} are named in different units.", remedy))
-        return None
+    conditions, trials = (
+        None if column is None else labels_of(table, column, faults, required=False) for column in (condition, trial)
+    )
     start_s, stop_s = times_of(table, start, measures, faults), times_of(table, stop, measures, faults)
     backward = stop_s <= start_s  # False where either is NaN, which is a fault already
     for k in np.flatnonzero(backward).tolist():
@@ -245,8 +241,11 @@ def check_pairs(
     table: RawTable, sites: Sites | None, sites_name: str, faults: list[Fault]
 ) -> tuple[tuple[str, str], ...]:
     """Pairs of different known units, each once, in the order of the table."""
-    columns = [find(table, name, faults) for name in ("unit_a", "unit_b")]
-    ids = {c: labels_of(table, c, faults, required=True) for c in columns if c is not None}
+    header = Header(table)
+    columns = [c for c in map(header.find, ("unit_a", "unit_b")) if c is not None]
+    if not header.is_sound(faults):
+        return ()
+    ids = {c: labels_of(table, c, faults, required=True) for c in columns}
     if sites is not None:
         known = set(sites.ids)
         for column, labels in ids.items():
@@ -256,8 +255,6 @@ def check_pairs(
                     problem = f"The unit is not in {sites_name}.{closest}"
                     remedy = "Correct the id, or delete the row."
                     faults.append(table.fault(problem, remedy, at=k, column=column, value=unit))
-    if len(ids) < 2:
-        return ()
     pairs: dict[frozenset[str], tuple[str, str]] = {}
     for k, (a, b) in enumerate(zip(ids["unit_a"], ids["unit_b"], strict=True)):
         if a and a == b:

@@ -137,13 +137,9 @@ def _checked(
     """Every table checked as far as it goes; None where sites or spikes are unusable, which left a fault."""
     spike_table, site_table, window_table = (tables.get(role) for role in ("spikes", "sites", "windows"))
     exclusion_table, pair_table = tables.get("exclusions"), tables.get("exclude_pairs")
-    for table in tables.values():
-        faults.extend(table.faults)
     timed = [t for t in (spike_table, window_table, exclusion_table) if t is not None]
     check_same_naming(timed, measures, faults)
     sites = None if site_table is None else check_sites(site_table, measures, faults)
-    if site_table is not None and site_table.faults:
-        sites = None  # a row that could not be taken apart may hold the unit that others would seem to lack
     spikes = None if spike_table is None else check_spikes(spike_table, sites, sites_name, measures, faults)
     windows = None if window_table is None else check_stretches(window_table, measures, faults)
     exclusions = None if exclusion_table is None else check_stretches(exclusion_table, measures, faults)

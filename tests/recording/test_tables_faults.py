@@ -81,9 +81,8 @@ BAD_SPIKES = {
     ),
     "capitals": (
         "Unit,Time_s\nu1,0.5\n",
-        "no column 'unit'; found: Unit, Time_s.",
-        "Rename column 'Unit' to 'unit'",
-        "Rename column 'Time_s' to 'time_s'",
+        "There is no column 'unit' and no column 'time_s'; found: Unit, Time_s.",
+        "Rename column 'Unit' to 'unit' and column 'Time_s' to 'time_s', if that is what they hold",
     ),
     "milliseconds unsaid": (
         "unit,time_ms\nu1,500\n",
@@ -91,7 +90,32 @@ BAD_SPIKES = {
         "Load with time_unit='ms'",
     ),
     "samples unsaid": ("unit,time_samples\nu1,500\n", "Load with time_unit='samples' and sampling_rate_hz=..."),
-    "no header": ("u1,0.5\nu2,0.25\n", "no column 'unit'; found: u1, 0.5.", "Line 1 looks like data: put a header"),
+    "no header": ("u1,0.5\nu2,0.25\n", "no column 'time_s'; found: u1, 0.5.", "Line 1 looks like data: put a header"),
+    "no header and ragged rows": ("u1,0.5\nu2\nu1,x,2\n", "found: u1, 0.5.", "Line 1 looks like data: put a header"),
+    "names of another kind": (
+        "cluster_id,spike_times\n1,0.5\n",
+        "Rename column 'cluster_id' to 'unit' and column 'spike_times' to 'time_s', if that is what they hold",
+    ),
+    "another unit in another name": (
+        "unit,Time [ms]\nu1,500\n",
+        "Rename column 'Time [ms]' to 'time_ms' and load with time_unit='ms', if that is what it holds",
+    ),
+    "a title above the header": (
+        "Retina, day 11\n\nunit,time_s\nu1,0.5\n",
+        "found: Retina, day 11.",
+        "Line 3 seems to be the header: delete what is above, or put # before it.",
+    ),
+    "sites in the place of spikes": (
+        SITES,
+        "There is no column 'time_s'; found: unit, x_um, y_um. These are the columns of a sites table.",
+        "spikes, then sites",
+    ),
+    "thousands of columns": (
+        ",".join(f"neuron {k}" for k in range(3000)) + "\n",
+        "found: neuron 0, neuron 1,",
+        "neuron 11 and 2,988 more.",
+    ),
+    "a column name without end": ("x" * 500 + ",time_s\nu1,0.5\n", "found: " + "x" * 37 + "..., time_s."),
     "header commented out": ("# unit,time_s\nu1,0.5\n", "Line 1 holds column names behind a comment sign"),
     "separated by blanks": (
         "unit time_s\nu1 0.5\n",
@@ -179,9 +203,13 @@ BAD_WINDOWS = {
     "no stop": (
         "start_s,end_s\n0,2\n",
         "There is no column 'stop_s'; found: start_s, end_s.",
-        "Call the column that holds it 'stop_s'",
+        "Rename column 'end_s' to 'stop_s'",
     ),
-    "milliseconds unsaid": ("start_ms,stop_ms\n0,2\n", "no column 'start_s'", "Load with time_unit='ms'"),
+    "milliseconds unsaid": (
+        "start_ms,stop_ms\n0,2\n",
+        "There is no column 'start_s' and no column 'stop_s'; found: start_ms, stop_ms. Load with time_unit='ms', or "
+        "convert 'start_ms' and 'stop_ms' and write 'start_s' and 'stop_s' in the header.",
+    ),
     "empty": ("start_s,stop_s\n", "windows.csv: The table has no rows.", "or leave the table out"),
     "not a number": ("start_s,stop_s\n0,end\n", "row 2, column stop_s: 'end': Not a number."),
     "missing": ("start_s,stop_s\n,5\n", "row 2, column start_s: '': Empty cell"),
@@ -206,7 +234,11 @@ BAD_PAIRS = {
         "row 3, column unit_b: 'u1': Both ends of the pair are the same unit.",
     ),
     "empty id": ("unit_a,unit_b\nu1,\n", "row 2, column unit_b: '': Empty cell"),
-    "other names": ("a,b\nu1,u2\n", "There is no column 'unit_a'; found: a, b.", "There is no column 'unit_b'"),
+    "other names": (
+        "a,b\nu1,u2\n",
+        "There is no column 'unit_a' and no column 'unit_b'; found: a, b.",
+        "Rename column 'a' to 'unit_a' and column 'b' to 'unit_b'",
+    ),
 }
 
 CASES = [
@@ -264,6 +296,30 @@ def test_the_message_names_place_value_and_remedy(tmp_path, role, case):
     for line in message.splitlines():
         assert line.startswith(FILES[role])  # the sound tables are not blamed
         assert line.endswith((".", "?"))  # ends with a remedy, a sentence
+
+
+@pytest.mark.parametrize(
+    ("role", "table", "missing"),
+    [
+        ("spikes", "unit,when\nu1,0.5,7\nu2\nzz,x\n,\n", "no column 'time_s'; found: unit, when."),
+        ("spikes", "cell;when\n\nu1\nu2,5\n", "no column 'unit' and no column 'time_s'; found: cell, when."),
+        ("sites", "unit,y_um\nu1\nu1,oops\nu1,1\n", "no column 'x_um'; found: unit, y_um."),
+        ("windows", "start_s\n0,2\nx\n9,1\n", "no column 'stop_s'; found: start_s."),
+        ("exclusions", "stop_s,note\n0\nx,y,z\n", "no column 'start_s'; found: stop_s, note."),
+        ("exclude_pairs", "unit_a,other\nu1\nu77,u2\n", "no column 'unit_b'; found: unit_a, other."),
+    ],
+)
+def test_without_its_columns_a_table_is_not_blamed_for_its_rows(tmp_path, role, table, missing):
+    with pytest.raises(TableError) as caught:
+        kf.read_recording(**write(tmp_path, **{role: table}))
+    (fault,) = caught.value.faults
+    assert missing in fault.problem
+    assert fault.row is None
+
+
+def test_a_table_with_its_columns_still_names_every_row(tmp_path):
+    message = message_of(tmp_path, spikes="unit,time_s\nu1\nu2,0.5,7\n")
+    assert [line.partition(":")[0] for line in message.splitlines()] == ["spikes.csv, row 2", "spikes.csv, row 3"]
 
 
 def test_faults_carry_their_parts(tmp_path):

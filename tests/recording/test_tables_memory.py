@@ -139,7 +139,7 @@ BAD_FRAMES = {
         {"unit": ["u1", "u2", "u1"], "time_s": [1.0, 1.0, 1.0]},
         "row 2, column time_s: '1.0': Unit 'u1' has a spike at this time already in row 0.",
     ),
-    "no columns": ({}, "There is no column 'unit'; found: ."),
+    "no columns": ({}, "There is no column 'unit' and no column 'time_s'; found: none."),
     "half a character": (
         {"unit": pd.Series(["\ud800"], dtype=object), "time_s": [1.0]},
         "column unit",
