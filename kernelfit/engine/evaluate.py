@@ -162,7 +162,7 @@ class Evaluation:
     """Sums over time at one point. G blocks of time, n targets, M traces, Q shared parameters; nats and per parameter.
 
     log_likelihood (G, n), without -log y!; score (G, n, 1 + M + Q), baseline, traces, shared; own_own (n, 1 + M, 1 +
-    M); own_shared (n, 1 + M, Q); shared_shared (Q, Q). Information by block of time has a leading axis G. Without
+    M); own_shared (n, 1 + M, Q); shared_shared (Q, Q). Information by parts of time has a leading axis. Without
     derivatives all but the first are empty.
     """
 
@@ -214,7 +214,7 @@ def evaluate(
     derivatives: bool = True,
     blocks: TimeBlocks | None = None,
     block_weight: FloatArray | None = None,
-    information_by_block: bool = False,
+    information_slot: IntArray | None = None,
     threads: int | None = None,
 ) -> Evaluation:
     """Log-likelihood, and with `derivatives` score and expected information, at one point.
@@ -226,7 +226,8 @@ def evaluate(
     blocks : blocks of time to keep apart in log-likelihood and score; None: one
     block_weight : (n_blocks,) weight of each block in the information; log-likelihood and score come by block,
         unweighted
-    information_by_block : keep the information of each block apart too, which takes G times its memory
+    information_slot : (n_blocks,) part of the information that each block is added to, parts numbered from 0, where
+        it is to be kept by parts of time; None: all together
     threads : at most this many; None: as many as the machine has. The result does not depend on it
 
     Returns
@@ -240,8 +241,9 @@ def evaluate(
     padded = -(-n_shared // GRAM) * GRAM
     n_rows = n_own + n_shared if derivatives else 0
     n_tables = point.tables.shape[0] if derivatives else 1
-    slot = np.arange(blocks.n_blocks) if information_by_block else np.zeros(blocks.n_blocks, dtype=np.int64)
-    n_slots = blocks.n_blocks if information_by_block else 1
+    by_part = information_slot is not None
+    slot = np.zeros(blocks.n_blocks, dtype=np.int64) if information_slot is None else np.asarray(information_slot)
+    n_slots = int(slot.max(initial=0)) + 1
 
     def sweep(part: slice) -> Sums:
         lanes = data.targets[part].size
@@ -274,9 +276,9 @@ def evaluate(
     return Evaluation(
         log_likelihood=log_likelihood,
         score=np.concatenate([np.moveaxis(p.score, -1, 1) for p in parts], axis=1),
-        own_own=own if information_by_block else own[0],
-        own_shared=own_shared if information_by_block else own_shared[0],
-        shared_shared=shared if information_by_block else shared[0],
+        own_own=own if by_part else own[0],
+        own_shared=own_shared if by_part else own_shared[0],
+        shared_shared=shared if by_part else shared[0],
     )
 
 

@@ -1,7 +1,8 @@
 """Both covariances of a fit: inverse expected information, and the sandwich of scores clustered by blocks of time.
 
-With few blocks the sandwich is too narrow, because the estimates follow the blocks they are judged by. There the
-one-step jackknife takes its place: what the estimates would be without each block, from the information that is left.
+Where few blocks carry most of the information the sandwich is too narrow, because the estimates follow the blocks they
+are judged by. The one-step jackknife sees that: what the estimates would be without each block, from the information
+that is left.
 
 References
 ----------
@@ -11,7 +12,7 @@ cluster variance: Bell and McCaffrey (2002), Survey Methodology 28, 169-181.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -22,7 +23,7 @@ from kernelfit.errors import ArgumentError
 from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_symmetric
 from kernelfit.fitting.block_length import FINER, BlockCurve, block_curve, joined
 from kernelfit.fitting.maximise import Optimum, penalised
-from kernelfit.fitting.problem import Problem
+from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.model.coupling import CovarianceKind
 
 N_BLOCKS = 100
@@ -30,10 +31,9 @@ SHORTEST_BLOCK_S = 1.0
 SHORTEST_BLOCK_TAUS = 20.0
 FEWEST_BLOCKS = 10  # with 20 tau above a tenth of the recording there would soon be one block, and no variance
 REFUSED_BELOW = 6  # blocks: a variance of fewer numbers means nothing
-JACKKNIFE_BELOW = 50  # blocks: from there on jackknife and sandwich differ by under 2 %
-SMALLEST_EIGENVALUE = (
-    1e-9  # of the information scaled to a unit diagonal: below this two parameters cannot be told apart
-)
+MOST_NUMBERS = 20_000_000  # of the information by block: 160 MB
+LEAST_LEFT = 1e-6  # of the information on a parameter, once a block is left out
+SMALLEST_EIGENVALUE = 1e-9  # of the information scaled to a unit diagonal: below this parameters cannot be told apart
 
 
 @dataclass(frozen=True, eq=False)
@@ -44,8 +44,8 @@ class Uncertainty:
     ----------
     shared_model, shared_robust : (Q, Q)
     own_model, own_robust : (n_targets, P, P), each unit's own parameters
-    shared_jackknife, own_jackknife : the same, one-step jackknife over blocks; None where it was not asked for and
-        there are blocks enough
+    shared_jackknife, own_jackknife : the same, one-step jackknife over blocks; None where a block holds all that is
+        known of some parameter, or where information by block would fill the memory
     block_influence : (G, Q) what each block of time moved the shared estimates by (one step)
     n_blocks, block_length_s : clusters of the robust kind
     block_curve : standard errors against the length of the blocks, from which it was chosen
@@ -83,8 +83,8 @@ class Uncertainty:
     def _made(self, jackknife: FloatArray | None) -> FloatArray:
         if jackknife is None:
             raise ArgumentError(
-                f"covariance='jackknife' was not computed: with {self.n_blocks} blocks of time it hardly differs from "
-                "'robust'. Refit with covariance='jackknife' (--intervals jackknife) to have it."
+                "covariance='jackknife' cannot be had here: without one of the blocks of time some parameter would not "
+                "be determined, or there are too many units for the information of every block. Use 'robust'."
             )
         return jackknife
 
@@ -104,35 +104,29 @@ def usual_blocks(problem: Problem, leak: float) -> TimeBlocks:
     return time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
 
 
-def covariances(problem: Problem, optimum: Optimum, *, jackknife: bool = False) -> Uncertainty:
-    """All covariances at an optimum: one sweep with scores by block of time, one more where blocks are few or joined.
-
-    Parameters
-    ----------
-    problem, optimum : the model on the recording, and its estimate
-    jackknife : make the jackknife although there are blocks enough
-    """
+def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
+    """All covariances at an optimum: one sweep with scores by block of time, one more where blocks are joined."""
     free = optimum.free
     usual = usual_blocks(problem, problem.leak(optimum.estimate.shared))
-    fine = usual.split(FINER if usual.n_bins.min() >= FINER else 1)
+    finer = FINER if usual.n_bins.min() >= FINER else 1
     problem.clock.stage = "standard errors"
-    sums = problem.evaluate(optimum.estimate, blocks=fine)
-    information = penalised(problem, optimum.estimate, sums).information.only(free)
+    sums = _by_block(problem, optimum.estimate, usual.split(finer), finer)
+    information = penalised(problem, optimum.estimate, _together(sums)).information.only(free)
     elimination = eliminate(information)
     weak = _weak_direction(elimination.schur)
     influence = _influence(sums, elimination, free, weak is None)
-    finer = fine.n_blocks // usual.n_blocks
     curve = block_curve(influence.shared, finer, problem.grid.duration_s)
-    influence, blocks = influence.joined(finer), usual
+    blocks = usual
     if curve.factor(finer) > 1:
-        blocks = time_blocks(problem.grid, curve.factor(finer) * problem.grid.duration_s / usual.n_blocks)
-        sums = problem.evaluate(optimum.estimate, blocks=blocks)
+        finer, blocks = 1, time_blocks(problem.grid, curve.factor(finer) * problem.grid.duration_s / usual.n_blocks)
+        sums = _by_block(problem, optimum.estimate, blocks, 1)
         influence = _influence(sums, elimination, free, weak is None)
+    influence = influence.joined(finer)
     n_blocks = blocks.n_blocks
     correction = n_blocks / (n_blocks - 1.0) if n_blocks >= REFUSED_BELOW else np.nan
     left_out = None
-    if weak is None and n_blocks >= REFUSED_BELOW and (jackknife or n_blocks < JACKKNIFE_BELOW):
-        left_out = _left_out(problem, optimum, blocks, information)
+    if weak is None and n_blocks >= REFUSED_BELOW and len(sums.own_own) == n_blocks:
+        left_out = _left_out(sums, information, free, finer)
     inverse = (
         solve_symmetric(elimination.schur, np.eye(int(free.sum())))
         if weak is None
@@ -189,22 +183,45 @@ def _influence(sums: Evaluation, elimination: Elimination, free: BoolArray, dete
     return _Influence(own, shared)
 
 
-def _left_out(problem: Problem, optimum: Optimum, blocks: TimeBlocks, information: Arrow) -> _Influence | None:
+def _by_block(problem: Problem, estimate: Estimate, blocks: TimeBlocks, size: int) -> Evaluation:
+    """Sums with scores by block, and information by `size` neighbouring ones where that does not fill the memory."""
+    slot = np.arange(blocks.n_blocks) // size
+    n_own = 1 + problem.trace_decay.size
+    size_of_part = problem.data.n_targets * n_own * (n_own + problem.n_shared) + problem.n_shared**2
+    if (slot[-1] + 1) * size_of_part > MOST_NUMBERS:
+        slot = np.zeros_like(slot)
+    return problem.evaluate(estimate, blocks=blocks, information_slot=slot)
+
+
+def _together(sums: Evaluation) -> Evaluation:
+    """The same with the information of all parts added up."""
+    return replace(
+        sums,
+        own_own=sums.own_own.sum(axis=0),
+        own_shared=sums.own_shared.sum(axis=0),
+        shared_shared=sums.shared_shared.sum(axis=0),
+    )
+
+
+def _left_out(sums: Evaluation, information: Arrow, free: BoolArray, finer: int) -> _Influence | None:
     """What leaving out each block would take from the estimates, in one step from the information that is left.
 
     None where all that is known of some parameter stands in one block: without it nothing is left to estimate from.
     """
-    free = optimum.free
-    sums = problem.evaluate(optimum.estimate, blocks=blocks, information_by_block=True)
+    whole = np.diag(eliminate(information).schur)
     n_own = sums.own_own.shape[-1]
+    n_fine = len(sums.score)
+    scores = joined(sums.score.reshape(n_fine, -1), finer).reshape(-1, *sums.score.shape[1:])
     own, shared = [], []
-    for g in range(blocks.n_blocks):
+    for g, score in enumerate(scores):
         here = Arrow(sums.own_own[g], sums.own_shared[g], sums.shared_shared[g]).only(free)
         rest = Arrow(information.own - here.own, information.cross - here.cross, information.shared - here.shared)
-        score = sums.score[g]
         try:
-            own_step, shared_step = eliminate(rest).solve(score[:, :n_own], score[:, n_own:].sum(axis=0)[free])
+            left = eliminate(rest)
+            own_step, shared_step = left.solve(score[:, :n_own], score[:, n_own:].sum(axis=0)[free])
         except np.linalg.LinAlgError:
+            return None
+        if (np.diag(left.schur) < LEAST_LEFT * whole).any():
             return None
         own.append(own_step)
         shared.append(shared_step)

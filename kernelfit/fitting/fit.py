@@ -50,7 +50,7 @@ def fit_model(
         verdict = detect_coupling(null, seed)
         found, profile = _best(problem, null)
         optimum = found.best
-        spread = covariances(problem, optimum, jackknife=kind == "jackknife")
+        spread = covariances(problem, optimum)
     except SingularOwnBlock as error:
         raise NotIdentifiedError(_undetermined_unit(problem, recording, error.place)) from error
     added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None

@@ -110,8 +110,8 @@ def fit_notes(
         notes.append(
             Note(
                 "warning",
-                f"The {problem.grid.duration_s:.3g} s that count are {many} of time ({REFUSED_BELOW} are needed): there "
-                "are no robust standard errors.",
+                f"The {problem.grid.duration_s:.3g} s that count are {many} of time ({REFUSED_BELOW} are needed): "
+                "there are no robust standard errors.",
                 "covariance",
                 "Record longer, or read the model-based ones: fit.with_covariance('model') (--covariance model).",
             )
@@ -131,8 +131,8 @@ def fit_notes(
         notes.append(
             Note(
                 "warning",
-                f"Neighbouring blocks of time of {spread.block_length_s:.3g} s still go together, and there are too few "
-                "to join more of them: slow states outlast a block, and the robust standard errors are too small.",
+                f"Neighbouring blocks of time of {spread.block_length_s:.3g} s still go together, and there are too "
+                "few to join more of them: slow states outlast a block, and robust standard errors are too small.",
                 "covariance",
                 "Record longer; read the intervals as lower limits of the uncertainty.",
             )

@@ -173,14 +173,14 @@ class Problem:
         )
 
     def evaluate(
-        self, estimate: Estimate, *, blocks: TimeBlocks | None = None, information_by_block: bool = False
+        self, estimate: Estimate, *, blocks: TimeBlocks | None = None, information_slot: IntArray | None = None
     ) -> Evaluation:
         """Sums at an estimate, derivatives by log alpha instead of alpha; penalties not included."""
         sums = evaluate(
             self.data,
             self.point(estimate),
             blocks=blocks,
-            information_by_block=information_by_block,
+            information_slot=information_slot,
             threads=self.threads,
         )
         self.clock.tick()

@@ -380,7 +380,7 @@ class CouplingFit:
 
         Raises
         ------
-        ArgumentError : none of these, or a jackknife that was not made because blocks are many
+        ArgumentError : none of these, or a jackknife that cannot be had
         """
         kind = covariance_kind(kind)
         self.uncertainty.shared(kind)  # says so where it was not made

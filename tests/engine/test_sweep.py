@@ -133,16 +133,17 @@ def test_blocks_and_weights_only_split_and_weigh():
     np.testing.assert_allclose(one.shared_shared, np.sum(parts, axis=0), rtol=1e-11, atol=1e-11)
 
 
-def test_information_by_block_is_that_of_each_block_alone():
+def test_information_by_parts_is_that_of_each_part_alone():
     case = make_case(2, 9, 2, 2)
+    slot = np.arange(case.blocks.n_blocks) // 2
     kept = evaluate(
-        case.data, case.point, blocks=case.blocks, block_weight=case.weight, information_by_block=True, threads=2
+        case.data, case.point, blocks=case.blocks, block_weight=case.weight, information_slot=slot, threads=2
     )
-    for b in range(case.blocks.n_blocks):
-        only = np.where(np.arange(case.blocks.n_blocks) == b, case.weight, 0.0)
-        alone = evaluate(case.data, case.point, blocks=case.blocks, block_weight=only)
+    assert len(kept.shared_shared) == slot[-1] + 1 > 1
+    for part in range(slot[-1] + 1):
+        alone = evaluate(case.data, case.point, blocks=case.blocks, block_weight=np.where(slot == part, case.weight, 0))
         for name in ("own_own", "own_shared", "shared_shared"):
-            np.testing.assert_array_equal(getattr(kept, name)[b], getattr(alone, name))
+            np.testing.assert_array_equal(getattr(kept, name)[part], getattr(alone, name))
         np.testing.assert_array_equal(kept.score, alone.score)
 
 

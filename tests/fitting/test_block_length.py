@@ -42,7 +42,7 @@ def test_independent_blocks_keep_the_usual_length():
 
 
 def variance_of_sum(n, memory):
-    """Of n steps of white noise plus a first-order autoregression, both of variance 1 (the finite sum in closed form)."""
+    """Of n steps of white noise plus a first-order autoregression, both of variance 1: the sum in closed form."""
     slow = (1 + memory) / (1 - memory) - 2 * memory * (1 - memory**n) / (n * (1 - memory) ** 2)
     return n * (1.0 + slow)
 

@@ -9,11 +9,12 @@ import numpy as np
 import pytest
 from worlds import BIN_S, LEAK, model, simulated
 
+import kernelfit as kf
 from kernelfit import kernels, terms
 from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.engine.twin import dense_counts, dense_gradients
 from kernelfit.errors import ArgumentError
-from kernelfit.fitting.covariance import JACKKNIFE_BELOW, block_length_s, covariances
+from kernelfit.fitting.covariance import block_length_s, covariances
 from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.null import first_estimate
 from kernelfit.fitting.problem import Estimate, make_problem
@@ -39,7 +40,7 @@ def case(request, recording):
     the_model, start = request.param
     problem = make_problem(the_model, recording, threads=2)
     optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array(start)))
-    return problem, optimum, covariances(problem, optimum, jackknife=True)
+    return problem, optimum, covariances(problem, optimum)
 
 
 class Dense(NamedTuple):
@@ -129,20 +130,28 @@ def test_the_jackknife_leaves_out_each_block_in_one_step(case, dense):
         )
 
 
-def test_the_jackknife_is_made_where_blocks_are_few_or_where_it_is_asked_for(recording):
-    problem = make_problem(model("flat", leak_rate=LEAK), simulated(1, duration_s=60.0), threads=1)
-    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05])))
-    many = covariances(problem, optimum)
-    assert many.n_blocks >= JACKKNIFE_BELOW
-    assert many.shared_jackknife is None
-    with pytest.raises(ArgumentError, match="hardly differs from 'robust'. Refit with covariance='jackknife'"):
-        many.shared("jackknife")
-    short = make_problem(model("flat", leak_rate=LEAK), recording.select(stop_s=20.0), threads=1)
-    few = covariances(short, maximise(short, Estimate(first_estimate(short).own, np.array([0.05]))))
-    assert few.n_blocks < JACKKNIFE_BELOW
-    # leaving out blocks costs information: with equal blocks the jackknife is wider by about G / (G - 1)
+def test_the_jackknife_is_wider_and_has_the_degrees_of_freedom_of_its_blocks(recording):
+    """Leaving out blocks costs information: with equal blocks the variance is larger by about G / (G - 1)."""
+    problem = make_problem(model("flat", leak_rate=LEAK), recording.select(stop_s=20.0), threads=1)
+    few = covariances(problem, maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05]))))
     assert 1.0 < few.shared("jackknife")[0, 0] / few.shared("robust")[0, 0] < 2.0
     assert few.degrees_of_freedom("jackknife") == few.n_blocks - 1
+
+
+def test_no_jackknife_where_one_block_holds_all_that_is_known(recording):
+    """One source alone drives, and falls silent after the first block."""
+    trains = {u: recording.spike_times(u) for u in recording.unit_ids[:3]}
+    early = {**trains, recording.unit_ids[0]: trains[recording.unit_ids[0]][:5]}
+    assert early[recording.unit_ids[0]][-1] < 2.0
+    one_way = kf.Recording.from_arrays(
+        early, recording.positions[:3], [(0.0, 30.0)], exclude_pairs=[recording.unit_ids[1:3]]
+    )
+    problem = make_problem(model("flat", leak_rate=LEAK), one_way.select(source_only=one_way.unit_ids[:1]), threads=1)
+    spread = covariances(problem, maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05]))))
+    assert np.isfinite(spread.shared_robust).all()
+    assert spread.shared_jackknife is None
+    with pytest.raises(ArgumentError, match="cannot be had here: without one of the blocks of time"):
+        spread.shared("jackknife")
 
 
 def test_block_influence_is_the_one_step_move_of_each_block(case, dense):

@@ -292,7 +292,6 @@ def test_progress_tells_how_much_memory_the_process_holds(recording):
     assert held.nbytes < told[-1].peak_bytes < 1e12
 
 
-
 @pytest.mark.parametrize("at", [1, 12, 25])
 def test_an_interruption_leaves_cleanly(recording, at):
     """Ctrl-C arrives as KeyboardInterrupt wherever the program is; here in the callback. No thread may stay behind."""
