@@ -15,6 +15,7 @@ from kernelfit.errors import ArgumentError, StorageError, Unavailable
 from kernelfit.fitting.covariance import Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.outcome import FittedRates, Note, ScoreTest, SolverReport
+from kernelfit.fitting.problem import Estimate, Problem, geometry_of, make_problem
 from kernelfit.kernels import DistanceRange, KernelCurve
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.grid import Grid, make_grid
@@ -277,8 +278,6 @@ class CouplingFit:
 
     def _with_recording(self, recording: Recording | None) -> tuple[Grid, SweepData, Point]:
         """Grid, data and point for a recording, checked to be the one that was fitted."""
-        from kernelfit.fitting.problem import geometry_of
-
         recording = self.recording if recording is None else recording
         if recording is None:
             raise StorageError(
@@ -306,6 +305,31 @@ class CouplingFit:
                 "pairs do not. Give the same tables."
             )
         return grid, data, point
+
+    def problem(self, recording: Recording | None = None, *, threads: int | None = None) -> Problem:
+        """The model on the recording again, ready to be evaluated or refitted.
+
+        Parameters
+        ----------
+        recording : the one that was fitted; None where the fit was made in this process
+        threads : at most this many; None: as many as the machine has
+
+        Raises
+        ------
+        StorageError : no recording at hand, or another one
+        """
+        self._with_recording(recording)  # refuses another recording
+        return make_problem(self.model, cast(Recording, recording or self.recording), threads=threads)
+
+    @property
+    def estimate(self) -> Estimate:
+        """Own and shared parameters on the working scale, as `problem` takes them."""
+        return Estimate(self.own, self.shared)
+
+    @property
+    def free(self) -> BoolArray:
+        """(Q,) True for shared parameters that were estimated and do not sit at a bound."""
+        return np.asarray(np.isfinite(np.diag(self.uncertainty.shared_model)))
 
     def _likelihood_is(self, data: SweepData, point: Point) -> bool:
         """Whether the log-likelihood on these data is the fit's: it is not on another recording."""

@@ -121,6 +121,18 @@ def test_changing_the_covariance_changes_nothing_else(fit):
         fit.with_covariance("bootstrap")
 
 
+def test_the_problem_of_a_fit_is_the_one_it_was_fitted_to(fit, tmp_path):
+    problem = fit.problem(threads=1)
+    sums = problem.evaluate(fit.estimate)
+    assert float(sums.log_likelihood.sum()) - problem.data.log_factorials == pytest.approx(fit.log_likelihood, rel=1e-12)
+    assert fit.free.all()
+    fit.save(tmp_path / "fit.json")
+    loaded = kf.load_fit(tmp_path / "fit.json")
+    with pytest.raises(StorageError, match="does not hold the spikes"):
+        loaded.problem()
+    np.testing.assert_array_equal(loaded.problem(fit.recording).data.counts, problem.data.counts)
+
+
 def test_bands_widen_when_they_are_to_cover_the_whole_curve(fit):
     d = np.linspace(60, 280, 12)
     one, all_at_once = fit.kernel_band(d), fit.kernel_band(d, simultaneous=True)
