@@ -13,7 +13,7 @@ from scipy.stats import t
 from worlds import BIN_S, LEAK, NOTHING, array, model, simulated
 
 import kernelfit as kf
-from kernelfit.errors import ArgumentError
+from kernelfit.errors import ArgumentError, StorageError
 from kernelfit.fitting import search as search_module
 from kernelfit.fitting.maximise import maximise
 from kernelfit.recording.recording import Recording
@@ -123,8 +123,8 @@ def test_changing_the_covariance_changes_nothing_else(fit):
 
 def test_the_problem_of_a_fit_is_the_one_it_was_fitted_to(fit, tmp_path):
     problem = fit.problem(threads=1)
-    sums = problem.evaluate(fit.estimate)
-    assert float(sums.log_likelihood.sum()) - problem.data.log_factorials == pytest.approx(fit.log_likelihood, rel=1e-12)
+    here = float(problem.evaluate(fit.estimate).log_likelihood.sum())
+    assert here - problem.data.log_factorials == pytest.approx(fit.log_likelihood, rel=1e-12)
     assert fit.free.all()
     fit.save(tmp_path / "fit.json")
     loaded = kf.load_fit(tmp_path / "fit.json")
