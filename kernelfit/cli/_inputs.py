@@ -11,7 +11,7 @@ import typer
 
 from kernelfit.cli._parsing import above_zero, number, one_of, whole
 from kernelfit.errors import ArgumentError
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import Recording, clock_text
 from kernelfit.recording.tables import read_recording
 
 TIME_UNITS = ("s", "ms", "us", "samples")
@@ -200,7 +200,9 @@ def _check(tables: TableOptions, selection: Selection) -> None:
         )
     start, stop = selection.start_s, selection.stop_s
     if start is not None and stop is not None and stop <= start:
-        raise ArgumentError(f"--stop-s: {stop:g} is not after --start-s {start:g}. Give a later stop.")
+        raise ArgumentError(
+            f"--stop-s: {clock_text(stop)} is not after --start-s {clock_text(start)}. Give a later stop."
+        )
 
 
 def _kept(selection: Selection, recording: Recording) -> list[str] | None:

@@ -9,7 +9,7 @@ import numpy as np
 
 from kernelfit._typing import FloatArray
 from kernelfit.errors import RecordingError
-from kernelfit.recording.recording import Origin, Recording
+from kernelfit.recording.recording import Origin, Recording, clock_text
 from kernelfit.recording.table_checks import Sites, Stretches
 
 
@@ -74,7 +74,8 @@ def assembled(parts: Parts, origin: Origin) -> Recording:
     if recording.n_spikes == 0:
         raise RecordingError(
             f"{origin.name('windows')}: none of the {n_spikes} spikes of {origin.name('spikes')} "
-            f"({first:g} to {last:g} s) lies in the windows ({bounds[0, 0]:g} to {bounds[-1, 1]:g} s). "
+            f"({clock_text(first)} to {clock_text(last)} s) lies in the windows "
+            f"({clock_text(bounds[0, 0])} to {clock_text(bounds[-1, 1])} s). "
             "Check that both tables use the same unit of time and the same clock (time_unit holds for both)."
         )
     n_outside = n_spikes - recording.n_spikes

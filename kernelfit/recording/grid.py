@@ -2,7 +2,9 @@
 
 All windows of a recording lie on one timeline of bins. Bin 0 starts with the first window; each further window starts
 on a whole bin, the gap before it rounded up. A spike in a window falls into bin floor((t - start)/width + 1e-6) of
-that window; a spike between windows is history, counted back from the start of the next one.
+that window; a spike between windows is history, counted back from the start of the next one. Where the clock counts
+from long ago (seconds since 1970), doubles are coarser than the 1e-6: then twice the step between two of them is
+allowed for, so that the same recording on another clock has the same counts.
 """
 
 from __future__ import annotations
@@ -14,9 +16,11 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.errors import GridError
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import Recording, clock_text
 
 EDGE_TOLERANCE = 1e-6  # of a bin; times that lie on bin edges fall the same way on every machine
+STEPS_ALLOWED = 2  # a time and the start it is taken from are each half a step of doubles off, at most
+MAX_TOLERANCE = 0.1  # of a bin; beyond it the clock is too coarse to tell bins apart
 MAX_BINS = 2**40
 
 
@@ -85,19 +89,19 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
     """
     _check_width(recording, bin_width, warm_up_s)
     bounds = recording.window_bounds
-    n_bins = np.floor((bounds[:, 1] - bounds[:, 0]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+    ruler = _Ruler(bin_width, _tolerance(recording, bin_width))
+    n_bins = ruler.floor(bounds[:, 1] - bounds[:, 0])
     _check_windows(recording, bin_width, n_bins)
-    steps = np.ceil(np.diff(bounds[:, 0]) / bin_width - EDGE_TOLERANCE).astype(np.int64)
-    first_bin = np.concatenate([[0], np.cumsum(steps)]).astype(np.int64)
+    first_bin = np.concatenate([[0], np.cumsum(ruler.ceil(np.diff(bounds[:, 0])))]).astype(np.int64)
 
-    stretches, window_of = _stretches(recording, bin_width, warm_up_s, first_bin, n_bins)
+    stretches, window_of = _stretches(recording, ruler, warm_up_s, first_bin, n_bins)
     if len(stretches) == 0:
         table = recording.origin.name("exclusions" if len(recording.exclusion_bounds) else "windows")
         raise GridError(
             f"{table}: with bins of {bin_width:g} s, exclusions and a warm-up of {warm_up_s:g} s leave no bin of any "
             "window. Use fewer exclusions, a shorter warm-up or narrower bins."
         )
-    event_bin, event_unit, event_count, n_outside, n_excluded = _events(recording, bin_width, first_bin, n_bins)
+    event_bin, event_unit, event_count, n_outside, n_excluded = _events(recording, ruler, first_bin, n_bins)
     grid = Grid(
         bin_width=float(bin_width),
         n_units=recording.n_units,
@@ -116,6 +120,37 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
     inside = grid.bins_in_sum(event_bin)
     np.add.at(grid.counts_in_sum, event_unit[inside], event_count[inside])
     return grid
+
+
+@dataclass(frozen=True, slots=True)
+class _Ruler:
+    """Spans of time in whole bins; a span within `tolerance` (of a bin) of a whole number counts as that number.
+
+    Spans are differences of times close to each other, which doubles hold exactly: never divide times of the clock.
+    """
+
+    bin_width: float
+    tolerance: float
+
+    def floor(self, span_s: FloatArray) -> IntArray:
+        return np.floor(span_s / self.bin_width + self.tolerance).astype(np.int64)
+
+    def ceil(self, span_s: FloatArray) -> IntArray:
+        return np.ceil(span_s / self.bin_width - self.tolerance).astype(np.int64)
+
+
+def _tolerance(recording: Recording, bin_width: float) -> float:
+    """By how much of a bin a time may miss an edge and still lie on it."""
+    furthest = float(np.abs(recording.window_bounds).max())
+    step_s = float(np.spacing(furthest))
+    tolerance = max(EDGE_TOLERANCE, STEPS_ALLOWED * step_s / bin_width)
+    if tolerance > MAX_TOLERANCE:
+        raise GridError(
+            f"{recording.origin.name('windows')}: bin_width={bin_width:g} s is too fine for times near "
+            f"{clock_text(furthest)} s, which the computer holds to {step_s:.1g} s. Subtract the start of the "
+            f"recording from all times, or use bins of at least {STEPS_ALLOWED * step_s / MAX_TOLERANCE:.1g} s."
+        )
+    return tolerance
 
 
 def _check_width(recording: Recording, bin_width: float, warm_up_s: float) -> None:
@@ -137,23 +172,23 @@ def _check_windows(recording: Recording, bin_width: float, n_bins: IntArray) -> 
     start, stop = recording.window_bounds[k]
     raise GridError(
         f"{recording.origin.name('windows')}: bin_width={bin_width:g} s is wider than window {k + 1} "
-        f"({start:g} to {stop:g} s). Use bins of at most {stop - start:g} s. Is the width in seconds? 10 ms is 0.01."
+        f"({clock_text(start)} to {clock_text(stop)} s). Use bins of at most {stop - start:g} s. "
+        "Is the width in seconds? 10 ms is 0.01."
     )
 
 
 def _stretches(
-    recording: Recording, bin_width: float, warm_up_s: float, first_bin: IntArray, n_bins: IntArray
+    recording: Recording, ruler: _Ruler, warm_up_s: float, first_bin: IntArray, n_bins: IntArray
 ) -> tuple[IntArray, IntArray]:
     """Windows less exclusions and warm-up: (n, 2) timeline bins and the window of each."""
-    warm = math.ceil(warm_up_s / bin_width - EDGE_TOLERANCE)
+    warm = math.ceil(warm_up_s / ruler.bin_width - EDGE_TOLERANCE)
     rows: list[tuple[int, int]] = []
     owner: list[int] = []
     for w, (start, stop) in enumerate(recording.window_bounds):
         at = warm
         cut = recording.exclusion_bounds
         cut = cut[(cut[:, 1] > start) & (cut[:, 0] < stop)]
-        low = np.floor((cut[:, 0] - start) / bin_width + EDGE_TOLERANCE).astype(np.int64)
-        high = np.ceil((cut[:, 1] - start) / bin_width - EDGE_TOLERANCE).astype(np.int64)
+        low, high = ruler.floor(cut[:, 0] - start), ruler.ceil(cut[:, 1] - start)
         for a, b in zip([*low, n_bins[w]], [*high, n_bins[w]], strict=True):
             end = min(int(a), int(n_bins[w]))
             if end > at:
@@ -164,7 +199,7 @@ def _stretches(
 
 
 def _events(
-    recording: Recording, bin_width: float, first_bin: IntArray, n_bins: IntArray
+    recording: Recording, ruler: _Ruler, first_bin: IntArray, n_bins: IntArray
 ) -> tuple[IntArray, IntArray, IntArray, int, int]:
     """Non-empty (bin, unit) with their counts, and how many spikes lay outside windows and inside exclusions."""
     unit = np.repeat(np.arange(recording.n_units, dtype=np.int64), [t.size for t in recording.trains])
@@ -179,10 +214,10 @@ def _events(
 
     start = recording.window_bounds[:, 0]
     w = np.searchsorted(start, time_s, side="right") - 1
-    within = np.floor((time_s - start[np.maximum(w, 0)]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+    within = ruler.floor(time_s - start[np.maximum(w, 0)])
     inside = (w >= 0) & (within < n_bins[np.maximum(w, 0)])
     following = np.minimum(w + 1, len(start) - 1)
-    back = np.floor((time_s - start[following]) / bin_width + EDGE_TOLERANCE).astype(np.int64)
+    back = ruler.floor(time_s - start[following])
     bins = np.where(inside, first_bin[np.maximum(w, 0)] + within, first_bin[following] + np.minimum(back, -1))
     useful = inside | (w + 1 < len(start))  # after the last window nothing is left to drive
     bins, unit = bins[useful], unit[useful]

@@ -58,9 +58,14 @@ class Origin:
         return replace(self, notes=(*self.notes, note))
 
 
+def clock_text(time_s: float) -> str:
+    """A time on the recording's clock as a user would write it, without its unit: "12.5", "1700000012.5"."""
+    return f"{time_s:.6f}".rstrip("0").rstrip(".") if abs(time_s) >= 1.0 else f"{time_s:g}"
+
+
 def _between(start_s: float | None, stop_s: float | None) -> str:
-    start = "" if start_s is None else f" from start_s={start_s:g} on"
-    return start if stop_s is None else f"{start} up to stop_s={stop_s:g}"
+    start = "" if start_s is None else f" from start_s={clock_text(start_s)} on"
+    return start if stop_s is None else f"{start} up to stop_s={clock_text(stop_s)}"
 
 
 def _frozen(values: FloatArray) -> FloatArray:
@@ -322,9 +327,7 @@ class Recording:
             )
         return result if keep.all() else result._of_units(keep)
 
-    def _in_time(
-        self, start_s: float | None, stop_s: float | None, conditions: Iterable[str] | None
-    ) -> Recording:
+    def _in_time(self, start_s: float | None, stop_s: float | None, conditions: Iterable[str] | None) -> Recording:
         if start_s is None and stop_s is None and conditions is None:
             return self
         bounds = np.array(self.window_bounds)
@@ -349,7 +352,7 @@ class Recording:
             first, last = self.window_bounds[0, 0], self.window_bounds[-1, 1]
             raise RecordingError(
                 f"{self.origin.name('windows')}: nothing of the windows is left{_between(start_s, stop_s)}. "
-                f"The recording runs from {first:g} s to {last:g} s. Give times within."
+                f"The recording runs from {clock_text(first)} s to {clock_text(last)} s. Give times within."
             )
 
         def kept(labels: tuple[str, ...] | None) -> tuple[str, ...] | None:
@@ -360,7 +363,7 @@ class Recording:
             window_bounds=bounds[keep],
             window_conditions=kept(self.window_conditions),
             window_trials=kept(self.window_trials),
-            origin=self.origin.noted(f"cut to {bounds[keep][0, 0]:g}-{bounds[keep][-1, 1]:g} s"),
+            origin=self.origin.noted(f"cut to {clock_text(bounds[keep][0, 0])}-{clock_text(bounds[keep][-1, 1])} s"),
         )
 
     def _group_mask(self, wanted: Sequence[str]) -> BoolArray:
@@ -416,5 +419,5 @@ class Recording:
     def __repr__(self) -> str:
         return (
             f"Recording({self.n_units} units, {self.n_coordinates} coordinates, {self.n_spikes} spikes in "
-            f"{len(self.window_bounds)} window{'s' * (len(self.window_bounds) != 1)} of {self.duration:g} s)"
+            f"{len(self.window_bounds)} window{'s' * (len(self.window_bounds) != 1)} of {clock_text(self.duration)} s)"
         )
