@@ -46,14 +46,15 @@ from kernelfit.report.page import Definition, Notice, Table
 from kernelfit.report.readings import (
     LEAK,
     LEVEL,
+    TEST_LEVEL,
     described_sentence,
-    distance_sentence,
-    headline,
+    gain_sentence,
     kernel_name,
     length_word,
     link_name,
     parameter_of,
     sure_lead,
+    verdict,
 )
 from kernelfit.report.truth import Truth
 
@@ -113,7 +114,7 @@ class FitContent:
     title, subtitle : of the page
     notices : what must be read before any number
     verdict : three sentences: what one spike does; how that depends on distance; whether the model describes
-        the recording
+        the recording. The last comes before any number where most units are rejected
     coupling_lead, coupling : the kernel in words, the first sentence apart
     sure_lead, sure : how sure the numbers are
     goodness_lead, goodness : whether the model describes the recording
@@ -174,24 +175,23 @@ def build_content(
         settings=settings_facts(fit, goodness),
         fit=fit_facts(fit, goodness),
     )
-    verdict = (headline(fit), distance_sentence(fit), described_sentence(goodness))
     return FitContent(
         title=f"Coupling in {recording_name(recording)}",
         subtitle=subtitle(fit, recording),
-        notices=notices(fit),
-        verdict=verdict,
+        notices=notices(fit, invented=truth is not None),
+        verdict=verdict(fit, goodness),
         coupling_lead=coupling_lead(fit),
         coupling=coupling_sentences(fit),
         sure_lead=sure_lead(fit),
         sure=sure_sentences(fit),
-        goodness_lead=verdict[2],
+        goodness_lead=described_sentence(goodness),
         goodness=goodness_sentences(fit, goodness),
         recording_lead=recording_lead(fit, recording),
         after_spike=after_spike_sentence(fit),
         notes=tuple(note_text(note) for note in fit.notes),
         methods=methods(fit, recording, goodness),
         truth_sentence="" if truth is None else truth.sentence,
-        captions=captions.captions(fit, recording, figures.kernel, figures.array, figures.raster),
+        captions=captions.captions(fit, recording, goodness, figures.kernel, figures.array, figures.ks, figures.raster),
         figures=figures,
         tables=tables,
     )
@@ -229,9 +229,17 @@ def note_text(note: Note) -> str:
     return f"{note.what}{where}{' ' if note.remedy else ''}{note.remedy}"
 
 
-def notices(fit: CouplingFit) -> tuple[Notice, ...]:
-    """What must be read before any number: a fit that did not converge, errors, warnings."""
+def notices(fit: CouplingFit, *, invented: bool = False) -> tuple[Notice, ...]:
+    """What must be read before any number: an invented recording, a fit that did not converge, errors, warnings."""
     marked = []
+    if invented:
+        marked.append(
+            Notice(
+                "info",
+                "This recording is invented. The numbers show how well a known truth is found again; they say "
+                "nothing about any tissue.",
+            )
+        )
     if not fit.converged:
         marked.append(
             Notice(
@@ -287,12 +295,13 @@ def stability_sentence(spectral_radius: float) -> str:
     size = number_text(spectral_radius, 2)
     if spectral_radius < 1.0:
         return (
-            f"Taken as a network, the fitted couplings multiply a small rise of activity by at most {size} "
-            "per round (spectral radius): activity dies down by itself."
+            "Taken as a network, the fitted couplings by themselves multiply a small rise of activity by about "
+            f"{size} per round in the long run (spectral radius): they do not keep activity going. Effects of own "
+            "spikes are not in this number."
         )
     return (
-        f"Taken as a network, the fitted couplings multiply a small rise of activity by up to {size} per "
-        "round (spectral radius above 1): a simulation from this fit may run away."
+        "Taken as a network, the fitted couplings by themselves multiply a small rise of activity by about "
+        f"{size} per round in the long run (spectral radius, 1 or more): a simulation from this fit may run away."
     )
 
 
@@ -314,10 +323,15 @@ def sure_sentences(fit: CouplingFit) -> tuple[str, ...]:
 
 def goodness_sentences(fit: CouplingFit, goodness: Goodness) -> tuple[str, ...]:
     """What the model explains, and what a failed or passed test means."""
-    statistics = goodness.units["ks_statistic"].to_numpy(dtype=np.float64)
+    units = goodness.units
+    tested = units["p_adjusted"].notna().to_numpy()
+    failing = units["p_adjusted"].to_numpy(dtype=np.float64) < TEST_LEVEL
+    n_spikes = units["n_spikes"].to_numpy(dtype=np.float64)
     sentences = [
-        words.explained_sentence(goodness.deviance_explained, goodness.bits_per_spike),
-        words.misfit_sentence(statistics),
+        words.untested_sentence(len(units), goodness.n_tested) if goodness.n_tested else "",
+        words.misfit_sentence(units["ks_statistic"].to_numpy(dtype=np.float64)),
+        words.few_spikes_sentence(n_spikes[tested & ~failing], n_spikes[failing]),
+        gain_sentence(fit, goodness),
     ]
     if goodness.n_rejected:
         sentences.append(
@@ -327,6 +341,8 @@ def goodness_sentences(fit: CouplingFit, goodness: Goodness) -> tuple[str, ...]:
         )
     elif goodness.n_tested:
         sentences.append("A unit that passes has too few spikes to show what the model misses, or nothing is missed.")
+    if fit.converged and words.mostly_rejected(goodness.n_tested, goodness.n_rejected):
+        sentences.append("As more than half of the units tested fail, the verdict says so before any number.")
     return tuple(s for s in sentences if s)
 
 

@@ -8,9 +8,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.errors import Unavailable
-from kernelfit.recording.recording import SAME_SITE_UM, Recording
+from kernelfit.recording.recording import Recording
+from kernelfit.report.content_array import array_data
 from kernelfit.report.figure_data import (
     AfterSpikeData,
     ArrayData,
@@ -23,12 +24,14 @@ from kernelfit.report.figure_data import (
     PairCounts,
     RasterData,
 )
+from kernelfit.report.look import NUMBERED, unit_label
 from kernelfit.report.numbers import (
     count_text,
     distance_label,
     duration_text,
     number_text,
     p_sentence,
+    range_text,
     time_text,
 )
 from kernelfit.report.readings import (
@@ -36,6 +39,7 @@ from kernelfit.report.readings import (
     change_text,
     coupling_at,
     is_exp,
+    is_nothing,
     time_constant_of,
     told_distances,
 )
@@ -55,8 +59,6 @@ RASTER_SPIKES = 6000  # a stretch of about so many spikes can still be read
 RASTER_SHORTEST_S, RASTER_LONGEST_S = 20.0, 60.0
 RASTER_CELLS = 4_000_000  # bins times units of the fitted rate held at once
 RATE_POINTS = 150
-LOG_SCALE_FROM = 20.0  # amounts further apart than this factor need a log scale
-DROPPED_ID = 18  # characters of a unit id that fit a panel's title
 
 
 # --- coupling -------------------------------------------------------------------------------------------
@@ -126,17 +128,21 @@ def kernel_title(fit: CouplingFit) -> str:
     if not fit.verdict.found:
         return "No coupling to describe"
     told = [(float(d), coupling_at(fit, float(d))) for d in told_distances(fit)]
-    decided = [(d, jump) for d, jump in told if jump.known and not jump.undecided][:2]
+    decided = [(d, jump) for d, jump in told if jump.known and not jump.undecided]
     if not decided:
         return "The direction of the effect is open at all distances"
-    (near_um, near), *rest = decided
+    near_um, near = decided[0]
+    # The farthest effect worth a number: the first two told distances often say the same.
+    far_um, far = next((d, jump) for d, jump in reversed(decided) if not is_nothing(jump, fit) or d == near_um)
     first = f"One spike {change_text(near.value, fit)} at {distance_label(near_um)}"
-    if not rest:
+    if far_um == near_um:
         return first
-    far_um, far = rest[0]
-    same_way = (far.value < 0.0) == (near.value < 0.0)
-    second = f"by {change_text(far.value, fit, verb=False)}" if same_way else change_text(far.value, fit)
-    return f"{first} and {second} at {distance_label(far_um)}"
+    if (far.value < 0.0) != (near.value < 0.0):
+        return f"{first} and {change_text(far.value, fit)} at {distance_label(far_um)}"
+    size = change_text(far.value, fit, verb=False)
+    if first.endswith(f" by {size} at {distance_label(near_um)}"):
+        return f"{first} as at {distance_label(far_um)}"
+    return f"{first} and by {size} at {distance_label(far_um)}"
 
 
 def course_data(fit: CouplingFit) -> CourseData | Unavailable:
@@ -219,8 +225,11 @@ def after_spike_title(lag_s: FloatArray, median: FloatArray) -> str:
     size = np.abs(np.log(np.maximum(median, 1e-12)))
     largest = int(np.argmax(size))
     places = [0] if largest == 0 or size[largest] < 1.2 * size[0] else [0, largest]
-    parts = [f"{number_text(float(median[k]), 2)} after {number_text(1e3 * float(lag_s[k]), 2)} ms" for k in places]
-    return f"A unit's own spike multiplies its rate by {listed(parts)}"
+    parts = [
+        f"{number_text(float(median[k]), 2, keep_zeros=True)} after {number_text(1e3 * float(lag_s[k]), 2)} ms"
+        for k in places
+    ]
+    return f"In the median unit an own spike multiplies the rate by {listed(parts)}"
 
 
 # --- quality of the fit -----------------------------------------------------------------------------------
@@ -238,11 +247,13 @@ def ks_data(goodness: Goodness) -> KsData | Unavailable:
     ratio = units["ks_statistic"].to_numpy(dtype=np.float64) / critical
     rejected = units["p_adjusted"].to_numpy(dtype=np.float64) < 1.0 - goodness.level
     order = np.argsort(ratio, kind="stable")
-    places = {int(order[-1]): "worst", int(order[order.size // 2]): "middle", int(order[0]): "best"}
+    places = {int(order[order.size // 2]): "median", int(order[-1]): "worst", int(order[0]): "best"}
+    if order.size == 1:
+        places = {int(order[0]): "tested"}
     panels = []
     for k, word in sorted(places.items(), key=lambda item: ratio[item[0]]):
         unit = str(units.index[k])
-        label = f"{word}: unit {short_id(unit)}"
+        label = f"{word}: {unit_label(unit, int(np.flatnonzero(tested)[k]))}"
         panels.append(ks_panel(label, curves[unit], float(units["p_adjusted"].iloc[k]), corrected=True))
     pooled_p = float(goodness.pooled["p_value"].iloc[0])
     if math.isfinite(pooled_p):
@@ -250,13 +261,9 @@ def ks_data(goodness: Goodness) -> KsData | Unavailable:
     return KsData(
         title=described_text(int(rejected.size), int(rejected.sum())),
         panels=tuple(panels),
+        numbered=any(NUMBERED in panel.title for panel in panels),
         glance=KsGlanceData(ratio=ratio[order], rejected=rejected[order], level=1.0 - goodness.level),
     )
-
-
-def short_id(unit: str) -> str:
-    """A unit id cut to what a panel's title can hold."""
-    return unit if len(unit) <= DROPPED_ID else f"{unit[: DROPPED_ID - 1]}…"
 
 
 def ks_panel(label: str, curve: KsCurve, p_value: float, *, corrected: bool = False) -> KsPanel:
@@ -277,77 +284,6 @@ def ks_panel(label: str, curve: KsCurve, p_value: float, *, corrected: bool = Fa
 # --- the recording ----------------------------------------------------------------------------------------
 
 
-def array_data(positions_um: FloatArray, value: FloatArray, title: str, quantity: str) -> ArrayData:
-    """Amounts at their sites, units of one site side by side around it.
-
-    Parameters
-    ----------
-    positions_um : (n_units, 1 to 3); a third coordinate is not drawn
-    value : (n_units,) NaN or not positive where there is nothing to show
-    """
-    plane = np.zeros((positions_um.shape[0], 2))
-    plane[:, : min(2, positions_um.shape[1])] = positions_um[:, :2]
-    site_of = sites_of(positions_um)
-    n_sites = int(site_of.max()) + 1
-    first = np.array([np.flatnonzero(site_of == s)[0] for s in range(n_sites)])
-    sites = plane[first]
-    spacing = neighbour_spacing(sites)
-    place = plane.copy()
-    n_shared = 0
-    for site in range(n_sites):
-        members = np.flatnonzero(site_of == site)
-        if members.size > 1:
-            n_shared += members.size
-            angle = 2.0 * np.pi * np.arange(members.size) / members.size
-            place[members] += 0.24 * spacing * np.column_stack([np.cos(angle), np.sin(angle)])
-    shown = np.where(value > 0.0, value, np.nan)
-    known = shown[np.isfinite(shown)]
-    extent = float(np.ptp(sites, axis=0).max()) if n_sites > 1 else spacing
-    return ArrayData(
-        title=title,
-        quantity=quantity,
-        place_um=place,
-        site_um=sites,
-        value=shown,
-        on_log_scale=bool(known.size and known.max() > LOG_SCALE_FROM * known.min()),
-        spacing_um=spacing,
-        scale_bar_um=round_length(0.3 * max(extent, spacing)),
-        n_shared=n_shared,
-    )
-
-
-def sites_of(positions_um: FloatArray) -> IntArray:
-    """(n_units,) index of each unit's site; positions closer than 1 µm are one site."""
-    from scipy.spatial import cKDTree
-
-    site = np.full(positions_um.shape[0], -1, dtype=np.int64)
-    tree = cKDTree(positions_um)
-    count = 0
-    for k in range(positions_um.shape[0]):
-        if site[k] < 0:
-            near = [j for j in tree.query_ball_point(positions_um[k], SAME_SITE_UM) if site[j] < 0]
-            site[near] = count
-            count += 1
-    return site
-
-
-def neighbour_spacing(sites_um: FloatArray) -> float:
-    """Median distance from a site to its nearest neighbour; 100 µm for a lone site."""
-    from scipy.spatial import cKDTree
-
-    if sites_um.shape[0] < 2:
-        return 100.0
-    nearest = np.asarray(cKDTree(sites_um).query(sites_um, k=2)[0])
-    spacing = float(np.median(nearest[:, 1]))
-    return spacing if spacing > 0.0 else 100.0
-
-
-def round_length(length_um: float) -> float:
-    """The largest of 1, 2, 5, 10, 20... that is not longer."""
-    decade = 10.0 ** math.floor(math.log10(length_um))
-    return float(max(m * decade for m in (1.0, 2.0, 5.0) if m * decade <= length_um * (1 + 1e-9)))
-
-
 def round_up(value: float) -> float:
     """The smallest of ... 0.1, 0.2, 0.5, 1, 2, 5 ... that is not smaller."""
     decade = 10.0 ** math.floor(math.log10(value))
@@ -361,8 +297,7 @@ def baseline_data(fit: CouplingFit) -> ArrayData:
     if known.size == 0:
         title = "No baseline rate could be estimated"
     else:
-        low, high = number_text(float(known.min()), 2), number_text(float(known.max()), 2)
-        title = f"Baseline rates run from {low} to {high} Hz"
+        title = f"Baseline rates run from {range_text(float(known.min()), float(known.max()))} Hz"
     return array_data(fit.positions, rate, title, "baseline rate (Hz)")
 
 
@@ -370,7 +305,7 @@ def raster_data(fit: CouplingFit, recording: Recording) -> RasterData | Unavaila
     """A stretch with about the mean number of spikes, and the observed and fitted rate in it."""
     longest = RASTER_CELLS * fit.model.bin_width / recording.n_units
     wanted = RASTER_SPIKES * recording.duration / max(recording.n_spikes, 1)
-    length = min(float(np.clip(wanted, RASTER_SHORTEST_S, RASTER_LONGEST_S)), max(longest, 2.0))
+    length = min(float(np.clip(round(wanted), RASTER_SHORTEST_S, RASTER_LONGEST_S)), max(longest, 2.0))
     stretch = representative_stretch(recording, length)
     if stretch is None:
         return Unavailable("the recording holds no stretch of a second without exclusions")
@@ -411,12 +346,16 @@ def mean_over(values: FloatArray, units: BoolArray) -> FloatArray:
 
 
 def raster_title(observed_hz: FloatArray, fitted_hz: FloatArray, length_s: float) -> str:
-    """The finding of the raster: how closely the fitted rate follows."""
+    """The finding of the raster: how far and how closely the fitted rate follows."""
     stretch = duration_text(length_s)
     if np.ptp(observed_hz) == 0.0 or np.ptp(fitted_hz) == 0.0:
         return f"{stretch} of the recording with the fitted rate"
     r = float(np.corrcoef(observed_hz, fitted_hz)[0, 1])
-    return f"Over {stretch}, fitted and observed rate of the array have a correlation of {number_text(r, 2)}"
+    swing = float(np.std(fitted_hz) / np.std(observed_hz))
+    return (
+        f"Over {stretch} the fitted rate swings {number_text(swing, 2, keep_zeros=True)} times as far as the observed "
+        f"one (correlation {number_text(r, 2, keep_zeros=True)})"
+    )
 
 
 def _between(times_s: FloatArray, start_s: float, stop_s: float) -> FloatArray:

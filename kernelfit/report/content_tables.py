@@ -22,6 +22,7 @@ from kernelfit.report.numbers import (
     interval_text,
     number_text,
     p_text,
+    powers_text,
     spaced_unit,
     time_text,
 )
@@ -152,7 +153,10 @@ def goodness_table(goodness: Goodness) -> Table:
     rows = [_goodness_row("all units together", goodness.pooled.iloc[0])]
     rows += [_goodness_row(str(unit), row) for unit, row in goodness.units.iterrows()]
     table = Table(
-        caption="Test of the model per unit",
+        caption=(
+            "Test of the model per unit (p: the mean of the rescaled intervals was estimated, as it was; p, plain: as "
+            "if it were known)"
+        ),
         columns=(
             Column("unit", numeric=False),
             Column("spikes"),
@@ -307,9 +311,14 @@ def recording_facts(fit: CouplingFit, recording: Recording) -> Definition:
         rows.append(("pairs left out", count_text(len(recording.excluded_pairs))))
     rows.append(("time in the likelihood", f"{duration_text(fit.duration_s)} ({count_text(fit.n_bins)} bins)"))
     rows.append(("spikes in the likelihood", count_text(fit.n_spikes)))
-    said = "windows not stated"  # in a row of its own above
-    rows += [("changed on reading", note) for note in origin.notes if not note.startswith(said)]
+    rows += changes_on_reading(origin.notes)
     return Definition(rows=tuple(rows), caption="The recording")
+
+
+def changes_on_reading(notes: tuple[str, ...]) -> list[tuple[str, str]]:
+    """Rows for what reading changed, without what rows of their own say: windows not stated, spikes outside them."""
+    told = ("windows not stated", "spikes lie outside the windows")
+    return [("changed on reading", note) for note in notes if not any(said in note for said in told)]
 
 
 def kernel_setting(kernel: Kernel) -> str:
@@ -378,7 +387,7 @@ def fit_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
         ("bits per spike", _or_reason(goodness.bits_per_spike, 1.0, "")),
         ("parameters", count_text(fit.n_parameters)),
         ("AIC, BIC", f"{number_text(fit.aic, 3)}, {number_text(fit.bic, 3)}"),
-        ("optimiser", f"{ended} after {count_text(solver.n_iterations)} steps: {solver.message}"),
+        ("optimiser", f"{ended} after {count_text(solver.n_iterations)} steps: {powers_text(solver.message)}"),
         ("computing time", duration_text(fit.seconds)),
     )
     return Definition(rows=rows, caption="The fit in numbers")

@@ -127,12 +127,14 @@ class ArrayData:
     title: str
     quantity: str  # label of the colour bar, with unit
     place_um: FloatArray  # (n_units, 2) where each unit's mark is drawn
-    site_um: FloatArray  # (n_sites, 2) sites as recorded
+    site_um: FloatArray  # (n_sites, 2) sites as seen
+    shared_um: FloatArray  # (n_shared_sites, 2) those with several units around them
     value: FloatArray  # (n_units,) NaN: nothing to show, an open mark
     on_log_scale: bool
     spacing_um: float  # typical distance between neighbouring sites; marks are sized by it
     scale_bar_um: float
-    n_shared: int  # units that share their site with another
+    n_shared: int  # units that share their place on the map with another
+    seen_along: str  # the coordinate that is not drawn, of three; "" where all are
 
 
 @dataclass(frozen=True, eq=False)
@@ -164,6 +166,7 @@ class KsData:
     title: str
     panels: tuple[KsPanel, ...]
     glance: KsGlanceData
+    numbered: bool  # a panel names its unit by its row, because the font cannot draw its id
 
 
 @dataclass(frozen=True, eq=False)

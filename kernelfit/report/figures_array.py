@@ -9,7 +9,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import FixedLocator, FuncFormatter, NullFormatter
 
 from kernelfit.report.figure_data import ArrayData, RasterData
-from kernelfit.report.figures_kernel import title
+from kernelfit.report.figures_kernel import WIDE_TITLE, title, title_over_all
 from kernelfit.report.look import (
     AMOUNTS,
     DATA,
@@ -23,10 +23,13 @@ from kernelfit.report.look import (
     look,
     new_figure,
     number_text,
+    thousands,
 )
 
 _POINTS_PER_MM = 72.0 / 25.4
 _MAP_MM = 62.0  # of one column, left for the map beside the colour bar
+_TALLEST_MM, _LOWEST_MM = 100.0, 24.0  # of the map; a line of sites still needs room for the colour bar
+_BAR_ROOM = 0.08  # of the map's longer side, below it, for the label of the scale bar
 _ROOM_FOR_LEGEND = 1.2
 _RASTERISE_FROM = 20_000  # spikes; beyond, a drawing of single strokes is too large to open
 
@@ -34,21 +37,22 @@ _RASTERISE_FROM = 20_000  # spikes; beyond, a drawing of single strokes is too l
 def draw_array(data: ArrayData) -> Figure:
     """The array in equal aspect, marks coloured by amount, a scale bar instead of axes."""
     with look():
-        extent = np.ptp(data.site_um, axis=0)
-        span = max(float(extent.max()), data.spacing_um)
-        height = float(np.clip(_MAP_MM * (extent[1] + data.spacing_um) / (span + data.spacing_um), 22.0, 90.0))
-        figure = new_figure(ONE_COLUMN_MM, height + 18.0)
+        low, high = data.site_um.min(axis=0), data.site_um.max(axis=0)
+        pad = max(data.spacing_um, 0.04 * float((high - low).max()))
+        wide, tall = (float(v) + 2.0 * pad for v in high - low)
+        tall += _BAR_ROOM * max(wide, tall)
+        points_per_um = _POINTS_PER_MM * min(_MAP_MM / wide, _TALLEST_MM / tall)
+        figure = new_figure(ONE_COLUMN_MM, max(tall * points_per_um / _POINTS_PER_MM, _LOWEST_MM) + 12.0)
         ax = figure.subplots()
         ax.plot(
-            data.site_um[:, 0],
-            data.site_um[:, 1],
+            data.shared_um[:, 0],
+            data.shared_um[:, 1],
             linestyle="none",
             marker="+",
             color=DATA,
             markersize=2.5,
             markeredgewidth=0.5,
         )
-        points_per_um = _MAP_MM * _POINTS_PER_MM / (span + 2.0 * data.spacing_um)
         diameter = float(np.clip(0.42 * data.spacing_um * points_per_um, 3.0, 11.0))
         outline = min(0.4, 0.06 * diameter)  # small marks would be nothing but outline
         known = np.isfinite(data.value)
@@ -82,11 +86,12 @@ def draw_array(data: ArrayData) -> Figure:
             zorder=3,
         )
         ax.set_aspect("equal")
-        ax.margins(0.12)
         ax.grid(False)
         ax.set_axis_off()
-        _scale_bar(ax, data)
-        title(ax, data.title)
+        ax.set_xlim(low[0] - pad, high[0] + pad)
+        ax.set_ylim(low[1] - pad - _BAR_ROOM * max(wide, tall), high[1] + pad)
+        _scale_bar(ax, data, float(low[0]), float(low[1]) - pad)
+        title_over_all(figure, data.title)
         return figure
 
 
@@ -100,20 +105,17 @@ def _norm(data: ArrayData) -> Normalize:
     return Normalize(0.0, high if high > 0.0 else 1.0)
 
 
-def _scale_bar(ax: Axes, data: ArrayData) -> None:
-    left, low = data.site_um.min(axis=0)
-    y = low - 0.75 * data.spacing_um
-    ax.plot([left, left + data.scale_bar_um], [y, y], color=INK, linewidth=1.6, solid_capstyle="butt")
+def _scale_bar(ax: Axes, data: ArrayData, left_um: float, y_um: float) -> None:
+    ax.plot([left_um, left_um + data.scale_bar_um], [y_um, y_um], color=INK, linewidth=1.6, solid_capstyle="butt")
     ax.annotate(
         distance_label(data.scale_bar_um),
-        xy=(left + data.scale_bar_um / 2.0, y),
+        xy=(left_um + data.scale_bar_um / 2.0, y_um),
         xytext=(0, -3),
         textcoords="offset points",
         ha="center",
         va="top",
         fontsize=7,
     )
-    ax.set_ylim(bottom=y - 0.75 * data.spacing_um)
 
 
 def draw_raster(data: RasterData) -> Figure:
@@ -142,7 +144,7 @@ def draw_raster(data: RasterData) -> Figure:
         top.spines["bottom"].set_visible(False)
         top.tick_params(bottom=False)
         top.set_ylabel(f"{count_text(n_rows)} units" if n_rows != 1 else "1 unit")
-        title(top, data.title, characters=100)
+        title(top, data.title, characters=WIDE_TITLE)
         under.fill_between(
             data.time_s,
             0.0,
@@ -156,6 +158,7 @@ def draw_raster(data: RasterData) -> Figure:
         under.plot(data.time_s, data.fitted_hz, color=RAISING, label="fitted")
         under.set_xlim(data.start_s, data.stop_s)
         under.set_ylim(0.0, under.get_ylim()[1] * _ROOM_FOR_LEGEND)
+        thousands(under.xaxis)
         under.set_xlabel("time on the recording's clock (s)")
         under.set_ylabel("rate per unit (Hz)")
         under.legend(loc="upper right", ncols=2)

@@ -8,7 +8,7 @@ from matplotlib.figure import Figure
 from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullFormatter
 
 from kernelfit.report.figure_data import AfterSpikeData, KsData, KsGlanceData, KsPanel
-from kernelfit.report.figures_kernel import title
+from kernelfit.report.figures_kernel import WIDE_TITLE, title, title_over_all
 from kernelfit.report.look import (
     BAND_ALPHA,
     DATA,
@@ -21,6 +21,7 @@ from kernelfit.report.look import (
     look,
     new_figure,
     number_text,
+    thousands,
 )
 
 _SMALLEST_SHOWN = 0.01  # a refractory trough goes to 0, which a log axis cannot show
@@ -36,7 +37,7 @@ def draw_after_spike(data: AfterSpikeData) -> Figure:
         for k, curve in enumerate(few):
             ax.plot(lag_ms, curve, color=DATA, alpha=0.45, linewidth=0.6, label="single units" if k == 0 else None)
         low, high = (np.maximum(v, _SMALLEST_SHOWN) for v in (data.lower_quartile, data.upper_quartile))
-        ax.fill_between(lag_ms, low, high, color=RAISING, alpha=BAND_ALPHA, linewidth=0, label="middle half")
+        ax.fill_between(lag_ms, low, high, color=RAISING, alpha=BAND_ALPHA, linewidth=0, label="half of the units")
         ax.plot(lag_ms, np.maximum(data.median, _SMALLEST_SHOWN), color=RAISING, label="median")
         ax.axhline(1.0, color=NULL, linestyle="--", linewidth=0.8)
         ax.set_xscale("log")
@@ -68,7 +69,7 @@ def draw_ks(data: KsData) -> Figure:
             if k == 0:
                 ax.set_ylabel("observed share of intervals")
         upper.supxlabel("share expected under the fitted model", fontsize=7.5)
-        figure.suptitle(data.title, x=0.01, ha="left", fontsize=8.5, fontweight="bold")
+        title_over_all(figure, data.title, WIDE_TITLE)
         _ks_glance(lower.subplots(), data.glance)
         return figure
 
@@ -102,7 +103,7 @@ def _ks_glance(ax: Axes, data: KsGlanceData) -> None:
             data.ratio[chosen],
             linestyle="none",
             marker=marker,
-            markersize=4.0 if data.ratio.size <= 150 else 2.0,
+            markersize=4.0 if data.ratio.size <= 150 else 3.0,
             markeredgewidth=0.0,
             color=colour,
             label=f"{label}: {int(chosen.sum())}",
@@ -110,7 +111,8 @@ def _ks_glance(ax: Axes, data: KsGlanceData) -> None:
     ax.axhline(1.0, color=NULL, linestyle="--", linewidth=0.8)
     ax.set_xlim(0.0, data.ratio.size + 1.0)
     ax.set_ylim(0.0, max(1.5, float(data.ratio.max()) * 1.08))
-    ax.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True))
+    ax.xaxis.set_major_locator(MaxNLocator(nbins=8, integer=True, steps=[1, 2, 5, 10]))
+    thousands(ax.xaxis)
     ax.set_xlabel("units, best described first")
     ax.set_ylabel("KS statistic / critical value")
     ax.legend(

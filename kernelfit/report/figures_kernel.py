@@ -22,17 +22,26 @@ from kernelfit.report.look import (
     distance_label,
     look,
     new_figure,
+    thousands,
     zero_line,
 )
 from kernelfit.report.numbers import tied
 
 TITLE_CHARACTERS = 48
+WIDE_TITLE = 112  # characters that fit over axes two columns wide
+_OFF_FRAME, _LABEL_ROOM = 0.04, 0.07  # of the height of the axes
 _LINE_STYLES = ("-", (0, (4, 1.5)), (0, (1.5, 1.2)))
 
 
 def title(ax: Axes, text: str, characters: int = TITLE_CHARACTERS) -> None:
     """A finding as the title, broken into lines that fit one column."""
     ax.set_title("\n".join(textwrap.wrap(tied(text), characters)))
+
+
+def title_over_all(figure: Figure, text: str, characters: int = TITLE_CHARACTERS) -> None:
+    """A finding as the title over all panels of a figure."""
+    shown = "\n".join(textwrap.wrap(tied(text), characters))
+    figure.suptitle(shown, x=0.01, ha="left", fontsize=8.5, fontweight="bold")
 
 
 def hue(values: FloatArray) -> str:
@@ -57,11 +66,13 @@ def draw_kernel(data: KernelData) -> Figure:
             ends = np.nan_to_num([[value - lower], [upper - value]])
             top.errorbar([data.reference_um], [value], yerr=ends, color=colour, fmt="o", capsize=2.5)
         zero_line(top)
+        low = colour == LOWERING
+        _room(top, low=low)
         _reference_mark(
             top,
             data.reference_um,
             on_left=data.reference_um > 0.6 * data.reach_um,
-            low=colour == LOWERING,
+            low=low,
             gap=3.0 if curve else 7.0,  # beside the cap of the bar
         )
         top.set_ylabel("J, effect of one spike on the drive")
@@ -73,8 +84,17 @@ def draw_kernel(data: KernelData) -> Figure:
         _pair_bars(under, data.pairs)
         under.axvline(data.reference_um, color=NULL, linestyle="--", linewidth=0.8, zorder=0)
         under.set_xlim(0.0, data.reach_um)
+        thousands(under.xaxis, under.yaxis)
         under.set_xlabel("distance (µm)")
         return figure
+
+
+def _room(ax: Axes, *, low: bool) -> None:
+    """Room for the label of the reference distance, and for the zero line off the frame."""
+    bottom, top = ax.get_ylim()
+    span = top - bottom
+    bottom, top = min(bottom, -_OFF_FRAME * span), max(top, _OFF_FRAME * span)
+    ax.set_ylim(bottom - _LABEL_ROOM * span * low, top + _LABEL_ROOM * span * (not low))
 
 
 def _reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool, gap: float) -> None:
@@ -142,6 +162,7 @@ def draw_time_course(data: CourseData) -> Figure:
             fontsize=7,
         )
         ax.set_xlim(0.0, lag[-1])
+        thousands(ax.xaxis)
         ax.set_xlabel(f"time since the spike ({unit})")
         ax.set_ylabel("effect of one spike (% of rate)" if data.in_percent else "effect of one spike on the drive")
         ax.legend(loc="center right")

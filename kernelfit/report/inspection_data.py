@@ -14,9 +14,11 @@ from kernelfit.recording.inspection import Inspection
 from kernelfit.recording.layout import SAME_SITE
 from kernelfit.recording.merged import MergedTrain, merge_trains, time_step
 from kernelfit.recording.recording import Recording
-from kernelfit.report.content_figures import array_data, representative_stretch
+from kernelfit.report.content_array import array_data
+from kernelfit.report.content_figures import representative_stretch
 from kernelfit.report.figure_data import ArrayData
-from kernelfit.report.numbers import count_text, duration_text, number_text
+from kernelfit.report.look import unit_label
+from kernelfit.report.numbers import count_text, duration_text, number_text, range_text
 
 RASTER_S = 60.0
 RASTER_SPIKES = 12_000  # more make a raster black: the stretch is cut
@@ -70,7 +72,7 @@ class RateCourseData:
 class IntervalPanel:
     """Histogram of the intervals of one unit, or of all, on a log axis."""
 
-    label: str
+    label: str  # "all units", "unit x"
     edges_s: FloatArray  # (n_bins + 1,)
     per_decade: FloatArray  # (n_bins,) share of the intervals per factor of ten of interval
     n_intervals: int
@@ -173,8 +175,7 @@ def _array(inspection: Inspection) -> ArrayData:
     elif known.size == 1:
         title = f"One unit fires, at {number_text(float(known[0]), 2)} Hz"
     else:
-        low, high = number_text(float(known.min()), 2), number_text(float(known.max()), 2)
-        title = f"Rates run from {low} to {high} Hz"
+        title = f"Rates run from {range_text(float(known.min()), float(known.max()))} Hz"
     return array_data(np.array(inspection.recording.positions), rate, title, "rate (Hz)")
 
 
@@ -312,7 +313,7 @@ def _intervals(inspection: Inspection, train: MergedTrain) -> IntervalData | Una
     worst = [int(k) for k in rank if enough[k] and held.n_medium[k] > 0][:WORST_UNITS]
     unit_ids = inspection.recording.unit_ids
     panels = [_panel("all units", held.length_s, edges)]
-    panels += [_panel(f"unit {unit_ids[k]}", held.length_s[held.unit == k], edges) for k in worst]
+    panels += [_panel(unit_label(unit_ids[k], k), held.length_s[held.unit == k], edges) for k in worst]
     short = panels[0].share_short
     n_marked = int(np.sum((np.nan_to_num(held.share_short) > 0.01) & (held.n_short >= 3)))
     return IntervalData(

@@ -2,15 +2,13 @@
 
 from __future__ import annotations
 
-import textwrap
-
 import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import FixedLocator, FuncFormatter, MaxNLocator, NullFormatter
 
 from kernelfit._typing import FloatArray
-from kernelfit.report.figures_kernel import title
+from kernelfit.report.figures_kernel import WIDE_TITLE, title, title_over_all
 from kernelfit.report.inspection_data import (
     BandCurve,
     CorrelogramData,
@@ -19,13 +17,13 @@ from kernelfit.report.inspection_data import (
     RateCourseData,
     StretchData,
 )
-from kernelfit.report.look import DATA, INK, LOWERING, NULL, RAISING, TWO_COLUMNS_MM, look, new_figure
+from kernelfit.report.look import DATA, INK, LOWERING, NULL, RAISING, TWO_COLUMNS_MM, look, new_figure, thousands
 from kernelfit.report.numbers import count_text, number_text, time_text
 
 _POINTS_PER_MM = 72.0 / 25.4
 _RASTERISE_FROM = 20_000  # strokes; beyond, a drawing of single strokes is too large to open
+MOST_TICKS = 3  # with their units, on an axis a quarter of two columns wide
 _ABOVE = 1.15  # of the largest value shown
-_WIDE_TITLE = 100  # characters that fit over axes two columns wide
 
 
 def draw_stretch(data: StretchData) -> Figure:
@@ -53,11 +51,12 @@ def draw_stretch(data: StretchData) -> Figure:
         top.spines["bottom"].set_visible(False)
         top.tick_params(bottom=False)
         top.set_ylabel("1 unit" if n_rows == 1 else f"{count_text(n_rows)} units")
-        title(top, data.title, characters=_WIDE_TITLE)
+        title(top, data.title, characters=WIDE_TITLE)
         under.fill_between(data.time_s, 0.0, data.rate_hz, color=DATA, alpha=0.6, linewidth=0, step="mid")
         under.set_xlim(data.start_s, data.stop_s)
         under.set_ylim(bottom=0.0)
         under.yaxis.set_major_locator(MaxNLocator(4))
+        thousands(under.xaxis)
         under.set_xlabel("time on the recording's clock (s)")
         under.set_ylabel("rate per unit (Hz)")
         _marks(top, data.marked.mean(axis=1) if data.marked.size else np.empty(0))
@@ -65,11 +64,6 @@ def draw_stretch(data: StretchData) -> Figure:
             for ax in (top, under):
                 ax.axvspan(start, stop, facecolor="none", edgecolor=NULL, hatch="////", linewidth=0.0)
         return figure
-
-
-def _over_all(figure: Figure, text: str) -> None:
-    """A finding as the title over all panels."""
-    figure.suptitle("\n".join(textwrap.wrap(text, _WIDE_TITLE)), x=0.01, ha="left", fontsize=8.5, fontweight="bold")
 
 
 def _marks(ax: Axes, times_s: FloatArray) -> None:
@@ -104,9 +98,10 @@ def draw_rate_course(data: RateCourseData) -> Figure:
         ax.set_xlim(np.nanmin(data.time_s) - data.bin_s / 2.0, np.nanmax(data.time_s) + data.bin_s / 2.0)
         ax.set_ylim(0.0, _ABOVE * max(float(np.nanmax(data.rate_hz)), 1e-9))
         _marks(ax, data.marked_s)
+        thousands(ax.xaxis)
         ax.set_xlabel("time on the recording's clock (s)")
         ax.set_ylabel("rate per unit (Hz)")
-        title(ax, data.title, characters=_WIDE_TITLE)
+        title(ax, data.title, characters=WIDE_TITLE)
         return figure
 
 
@@ -121,7 +116,7 @@ def draw_intervals(data: IntervalData) -> Figure:
         for ax in axes[n:]:
             ax.set_visible(False)
         axes[0].set_ylabel("share per factor of ten (%)")
-        _over_all(figure, data.title)
+        title_over_all(figure, data.title, WIDE_TITLE)
         return figure
 
 
@@ -134,21 +129,17 @@ def _interval_panel(ax: Axes, panel: IntervalPanel) -> None:
         ax.axvline(mark, color=NULL, linestyle="--", linewidth=0.8)
     low, high = float(panel.edges_s[0]), float(panel.edges_s[-1])
     ticks = [10.0**k for k in range(-5, 7) if low <= 10.0**k <= high]
-    ax.xaxis.set_major_locator(FixedLocator(ticks if len(ticks) < 6 else ticks[::2]))
+    ax.xaxis.set_major_locator(FixedLocator(ticks[:: 1 + (len(ticks) - 1) // MOST_TICKS]))
     ax.xaxis.set_major_formatter(FuncFormatter(lambda v, _: time_text(v).replace("\N{NO-BREAK SPACE}", " ")))
     ax.xaxis.set_minor_formatter(NullFormatter())
     ax.yaxis.set_major_locator(MaxNLocator(4))
     ax.set_xlabel("interval")
     below = number_text(100.0 * panel.share_short, 2)
     ax.set_title(
-        f"{_short(panel.label)}\n{count_text(panel.n_intervals)} intervals,\n{below} % below 1 ms",
+        f"{panel.label}\n{count_text(panel.n_intervals)} intervals,\n{below} % below 1 ms",
         fontweight="normal",
         fontsize=7.5,
     )
-
-
-def _short(label: str, characters: int = 24) -> str:
-    return label if len(label) <= characters else f"{label[: characters - 1]}…"
 
 
 def draw_correlograms(data: CorrelogramData) -> Figure:
@@ -176,7 +167,7 @@ def draw_correlograms(data: CorrelogramData) -> Figure:
             ax.axvline(1e3 * data.bin_width_s, color=INK, linewidth=0.6, linestyle="-.")
             pairs = f"{count_text(band.n_pairs)} pair{'s' * (band.n_pairs != 1)}"
             ax.set_title(f"{band.label}\n{pairs}", fontweight="normal", fontsize=7.5)
-        _over_all(figure, data.title)
+        title_over_all(figure, data.title, WIDE_TITLE)
         return figure
 
 

@@ -8,6 +8,7 @@ from collections.abc import Iterable, Sequence
 import numpy as np
 import pandas as pd
 
+from kernelfit._typing import FloatArray
 from kernelfit.recording.artefacts import (
     MARGIN_S,
     MIN_UNITS,
@@ -31,7 +32,16 @@ from kernelfit.recording.coincidence import (
 )
 from kernelfit.recording.findings import Finding
 from kernelfit.recording.inspection import Inspection
-from kernelfit.report.numbers import count_text, distance_label, duration_text, number_text, p_text, time_text
+from kernelfit.report.content_tables import changes_on_reading
+from kernelfit.report.numbers import (
+    count_text,
+    distance_label,
+    duration_text,
+    fixed_text,
+    number_text,
+    p_text,
+    time_text,
+)
 from kernelfit.report.page import Cell, Column, Definition, Table, without_empty_notes
 
 HASH_SHOWN = 12
@@ -79,11 +89,11 @@ def findings_list(findings: Sequence[Finding]) -> Definition:
     rows = tuple(
         (
             f"{SEVERITY_WORDS[f.severity]}: {KINDS[f.key]}",
-            f"{f.what} {f.remedy} Where: {f.where.rstrip('.')}.",
+            f"{f.what} Where: {f.where.rstrip('.')}. {f.remedy}",
         )
         for f in findings
     )
-    return Definition(rows, "All findings (findings.csv)", ("kind", "what was found, what can be done, and where"))
+    return Definition(rows, "All findings (findings.csv)", ("kind", "what was found, where, and what can be done"))
 
 
 def pairs_table(pairs: pd.DataFrame) -> Table:
@@ -144,19 +154,20 @@ def units_table(inspection: Inspection) -> Table:
         *[Column("in proposed (%)")] * proposed,
         Column("remarks", numeric=False, wraps=True),
     ]
+    decimals = decimals_of(units[places].to_numpy(dtype=np.float64))
     numbers = {c: _floats(units[c]) for c in units.columns if c not in ("group", "remarks")}
     rows = []
     for k, unit in enumerate(units.index):
         row = [Cell(str(unit))]
         row += [Cell(str(units["group"].iloc[k]))] if grouped else []
-        row += [_number(float(numbers[c][k]), digits=4) for c in places]
+        row += [_fixed(float(numbers[c][k]), decimals) for c in places]
         row += [
             _count(float(numbers["n_spikes"][k])),
             _number(float(numbers["rate_hz"][k]), digits=3, keep_zeros=True),
-            _number(100.0 * float(numbers["share_below_1ms"][k]), digits=2),
-            _number(100.0 * float(numbers["share_below_2ms"][k]), digits=2),
+            _fixed(100.0 * float(numbers["share_below_1ms"][k]), 1),
+            _fixed(100.0 * float(numbers["share_below_2ms"][k]), 1),
             *[_count(float(numbers["n_same_site"][k]))] * shared,
-            *[_number(100.0 * float(numbers["share_in_proposed"][k]), digits=2)] * proposed,
+            *[_fixed(100.0 * float(numbers["share_in_proposed"][k]), 1)] * proposed,
             Cell(str(units["remarks"].iloc[k])),
         ]
         rows.append(tuple(row))
@@ -172,10 +183,11 @@ def units_table(inspection: Inspection) -> Table:
 
 def blocks_table(blocks: pd.DataFrame) -> Table:
     """Rates over blocks of time."""
+    decimals = decimals_of(blocks[["start_s", "stop_s"]].to_numpy(dtype=np.float64))
     rows = tuple(
         (
-            _number(a, digits=4),
-            _number(b, digits=4),
+            _fixed(a, decimals),
+            _fixed(b, decimals),
             _count(n),
             _number(rate, digits=3, keep_zeros=True),
             _count(active),
@@ -198,7 +210,7 @@ def gaps_table(gaps: pd.DataFrame) -> Table:
     """The longest stretches without a spike."""
     shown = gaps.head(GAPS_SHOWN)
     rows = tuple(
-        (_number(length), _number(a, digits=4), _number(b, digits=4))
+        (_fixed(length, 1), _fixed(a, 1), _fixed(b, 1))
         for a, b, length in zip(*(_floats(shown[c]) for c in ("start_s", "stop_s", "length_s")), strict=True)
     )
     cut = f", the longest {GAPS_SHOWN} of {count_text(len(gaps))}" if len(gaps) > GAPS_SHOWN else ""
@@ -213,8 +225,14 @@ def gaps_table(gaps: pd.DataFrame) -> Table:
 def ranges_table(inspection: Inspection) -> Table:
     """What a kernel of each range would rest on."""
     ranges = inspection.ranges
+    largest = float(ranges["max_distance_um"].max())
     rows = tuple(
-        (_number(reach), _count(pairs), _count(distances), _count(units))
+        (
+            Cell(f"{number_text(reach)}{' (all)' if reach == largest else ''}", reach),
+            _count(pairs),
+            _count(distances),
+            _count(units),
+        )
         for reach, pairs, distances, units in zip(
             *(_floats(ranges[c]) for c in ("max_distance_um", "n_pairs", "n_distances", "n_units")), strict=True
         )
@@ -246,7 +264,7 @@ def recording_facts(inspection: Inspection) -> Definition:
         rows.append(("exclusions", f"{count_text(len(excluded))} stretches, {length} s in all; not looked at"))
     if recording.excluded_pairs:
         rows.append(("pairs left out", f"{count_text(len(recording.excluded_pairs))}; not in the correlograms"))
-    rows += [("changed on reading", note) for note in origin.notes]
+    rows += changes_on_reading(origin.notes)
     return Definition(rows=tuple(rows), caption="The recording")
 
 
@@ -298,6 +316,17 @@ def _floats(column: Iterable[object]) -> np.ndarray[tuple[int], np.dtype[np.floa
 def _number(value: float, digits: int = 3, *, keep_zeros: bool = False) -> Cell:
     value = float(value)
     return Cell("none", None) if math.isnan(value) else Cell(number_text(value, digits, keep_zeros=keep_zeros), value)
+
+
+def decimals_of(values: FloatArray) -> int:
+    """Decimals that all numbers of a column share: none where all are whole, else one."""
+    known = values[np.isfinite(values)]
+    return 0 if np.array_equal(known, np.round(known)) else 1
+
+
+def _fixed(value: float, decimals: int) -> Cell:
+    value = float(value)
+    return Cell("none", None) if math.isnan(value) else Cell(fixed_text(value, decimals), value)
 
 
 def _count(value: float) -> Cell:

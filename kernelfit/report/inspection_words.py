@@ -9,8 +9,10 @@ import numpy as np
 
 from kernelfit.errors import Unavailable
 from kernelfit.recording.inspection import Inspection
+from kernelfit.report.captions import NUMBERED_SAID, places_said
 from kernelfit.report.inspection_data import BandCurve, InspectionFigures
-from kernelfit.report.numbers import count_text, distance_label, duration_text, number_text, time_text
+from kernelfit.report.look import NUMBERED
+from kernelfit.report.numbers import count_text, distance_label, duration_text, number_text, range_text, time_text
 from kernelfit.report.words import listed
 
 TOGETHER = (
@@ -56,7 +58,7 @@ def inspection_words(inspection: Inspection, figures: InspectionFigures) -> Insp
         verdict=(
             _verdict(inspection),
             units_lead,
-            f"{bin_width_lead} Why stands under \N{LEFT DOUBLE QUOTATION MARK}Which bin "
+            f"{bin_width_lead} The reason stands under \N{LEFT DOUBLE QUOTATION MARK}Which bin "
             "width\N{RIGHT DOUBLE QUOTATION MARK}.",
         ),
         proposals_lead=_proposals_lead(inspection),
@@ -125,9 +127,9 @@ def _units_lead(inspection: Inspection) -> str:
         return "No unit fires in the windows and outside the exclusions."
     active = rate[rate > 0.0]
     return (
-        f"{_counted(active.size, 'unit')} fire{'s' * (active.size == 1)} at {number_text(float(active.min()), 2)} to "
-        f"{number_text(float(active.max()), 2)} Hz, half of them above {number_text(float(np.median(active)), 2)} "
-        f"Hz{quiet}."
+        f"{_counted(active.size, 'unit')} fire{'s' * (active.size == 1)} at "
+        f"{range_text(float(active.min()), float(active.max()))} Hz, half of them above "
+        f"{number_text(float(np.median(active)), 2)} Hz{quiet}."
     )
 
 
@@ -205,11 +207,10 @@ def _last_lag(curve: BandCurve) -> float:
 def _captions(inspection: Inspection, figures: InspectionFigures) -> dict[str, tuple[str, str]]:
     based_on = _based_on(inspection)
     array = figures.array
-    shared = f" {_counted(array.n_shared, 'unit')} share a site and are drawn around it." if array.n_shared else ""
     captions = {
         "array": (
-            "Each mark is a unit, coloured by its mean rate; open marks are silent units; crosses are the sites as "
-            f"recorded.{shared} Bar: {distance_label(array.scale_bar_um)}. {based_on}",
+            "Each mark is a unit, at its site, coloured by its mean rate; open marks are silent "
+            f"units.{places_said(array)} Bar: {distance_label(array.scale_bar_um)}. {based_on}",
             f"{array.title}. Map of the array, each unit coloured by its rate.",
         )
     }
@@ -234,11 +235,12 @@ def _captions(inspection: Inspection, figures: InspectionFigures) -> dict[str, t
         )
     held = figures.intervals
     if not isinstance(held, Unavailable):
+        numbered = NUMBERED_SAID * any(NUMBERED in panel.label for panel in held.panels)
         worst = " Right: the units with the largest share of intervals below 1 ms." if len(held.panels) > 1 else ""
         captions["intervals"] = (
             "Histograms of the intervals between successive spikes of one unit, on a logarithmic axis; the area "
-            f"over a factor of ten is the share of the intervals in it. Left: all units.{worst} Dashed: 1 and 2 ms. "
-            f"{based_on}",
+            f"over a factor of ten is the share of the intervals in it. Left: all units.{worst} Dashed: 1 and 2 ms."
+            f"{numbered} {based_on}",
             f"{held.title}. Interval histograms of all units and of the worst ones.",
         )
     correlograms = figures.correlograms

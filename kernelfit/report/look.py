@@ -9,6 +9,7 @@ from __future__ import annotations
 import html
 import io
 import re
+import unicodedata
 from collections.abc import Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -16,8 +17,11 @@ from typing import Any
 
 import matplotlib as mpl
 from matplotlib.axes import Axes
+from matplotlib.axis import Axis
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.figure import Figure
+from matplotlib.font_manager import FontProperties, findfont, get_font
+from matplotlib.ticker import ScalarFormatter
 
 from kernelfit.report.numbers import (
     COULD_NOT,
@@ -43,6 +47,7 @@ __all__ = [
     "INK",
     "LOWERING",
     "NULL",
+    "NUMBERED",
     "ONE_COLUMN_MM",
     "RAISING",
     "SIGNED",
@@ -61,7 +66,9 @@ __all__ = [
     "p_text",
     "save_figure",
     "spaced_unit",
+    "thousands",
     "time_text",
+    "unit_label",
     "zero_line",
 ]
 
@@ -153,9 +160,50 @@ def new_figure(width_mm: float, height_mm: float) -> Figure:
     return Figure(figsize=(width_mm / MM_PER_INCH, height_mm / MM_PER_INCH), layout="constrained")
 
 
+NUMBERED = "unit no."
+_ID_CHARACTERS = 18  # of a unit id that fit a panel's title
+
+
+def unit_label(unit: str, row: int) -> str:
+    """A unit's id as a panel's title can show it: cut in the middle, or "unit no. 6" where no font can draw it.
+
+    Parameters
+    ----------
+    unit : id
+    row : place in the table of units, from 0
+    """
+    if not _drawable(unit):
+        return f"{NUMBERED} {row + 1}"
+    if len(unit) > _ID_CHARACTERS:
+        unit = f"{unit[: _ID_CHARACTERS // 2]}…{unit[-(_ID_CHARACTERS // 2 - 1) :]}"
+    return f"unit {unit}"
+
+
+def _drawable(text: str) -> bool:
+    """True where the figures' font has every character, in the order in which they are drawn."""
+    if any(unicodedata.bidirectional(c) in {"R", "AL"} for c in text):
+        return False  # matplotlib neither joins letters nor turns their order
+    font = get_font(findfont(FontProperties(family=_PARAMETERS["font.sans-serif"])))
+    return {ord(c) for c in text} <= set(font.get_charmap())
+
+
 def zero_line(ax: Axes) -> None:
     """The zero line that every signed axis shows."""
     ax.axhline(0.0, color=INK, linewidth=0.7, zorder=1.5)
+
+
+class _Apart(ScalarFormatter):
+    """Tick labels as matplotlib writes them, whole numbers from 1,000 with their thousands apart."""
+
+    def __call__(self, x: float, pos: int | None = None) -> str:
+        text = super().__call__(x, pos)
+        return fixed_text(x, 0) if abs(x) >= 1000.0 and x == round(x) else text
+
+
+def thousands(*axes: Axis) -> None:
+    """Thousands apart on axes of large numbers, as prose has them: "1,500"."""
+    for axis in axes:
+        axis.set_major_formatter(_Apart(useOffset=False))
 
 
 _LOG_STEPS = ((1.0, 3.0), (1.0, 2.0, 5.0), (1.0, 1.5, 2.0, 3.0, 5.0, 7.0), (1.0, 1.1, 1.2, 1.5, 2.0, 5.0, 8.0, 9.0))

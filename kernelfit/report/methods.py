@@ -104,7 +104,7 @@ def _data_sentence(fit: CouplingFit, recording: Recording) -> str:
         without += f"; {units} not explained"
     return (
         f"Spike trains of {count_text(recording.n_units)} units ({count_text(fit.n_spikes)} spikes in "
-        f"{count_text(fit.duration_s)} s{in_windows}{without}) were described by a mutually exciting point "
+        f"{count_text(fit.duration_s)} s{in_windows}{without}) were fitted with a mutually exciting point "
         "process in discrete time (Hawkes 1971; Truccolo et al. 2005) with bins of "
         f"{time_text(fit.model.bin_width)}."
     )

@@ -49,6 +49,11 @@ def number_text(value: float, digits: int = 3, *, max_decimals: int = PROSE_DECI
     return text if keep_zeros or "." not in text else text.rstrip("0").rstrip(".")
 
 
+def range_text(low: float, high: float, digits: int = 2, *, max_decimals: int = 6) -> str:
+    """The ends of a range, each to its own digits: "0.00063 to 0.31"."""
+    return " to ".join(number_text(v, digits, max_decimals=max_decimals, keep_zeros=True) for v in (low, high))
+
+
 def count_text(value: float) -> str:
     """A count: "90,145"."""
     return f"{round(value):,}"
@@ -135,6 +140,18 @@ def time_text(seconds: float, lower_s: float = math.nan, upper_s: float = math.n
     """A time with its interval, in ms below 1 s: "13 ms (11 to 15)"."""
     factor, unit = time_unit_for(seconds)
     return interval_text(seconds * factor, lower_s * factor, upper_s * factor, unit)
+
+
+_SUPERSCRIPTS = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
+
+
+def powers_text(text: str) -> str:
+    """Numbers such as 2.4e-07 inside a text as people write them: 2.4 × 10⁻⁷."""
+
+    def written(match: re.Match[str]) -> str:
+        return f"{match[1]} × 10{str(int(match[2])).translate(_SUPERSCRIPTS)}"
+
+    return re.sub(r"(\d(?:\.\d+)?)e([+-]?\d+)\b", written, text)
 
 
 def duration_text(seconds: float) -> str:

@@ -8,11 +8,12 @@ the pictures that `look.inline_svg` made.
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass, replace
 from typing import ClassVar, TypeAlias
 
 import jinja2
-from markupsafe import Markup
+from markupsafe import Markup, escape
 from matplotlib.figure import Figure
 
 from kernelfit.report.look import inline_svg
@@ -186,6 +187,15 @@ class Page:
     footer: str = ""
 
 
+# Names of options must not break at their hyphens: "--stop-" on one line and "s" on the next is another option.
+_OPTION = re.compile(r"(?<![\w-])--[a-z][a-z-]*[a-z]")
+
+
+def prose(text: str) -> Markup:
+    """Text escaped for a page, numbers tied to their units, options kept on one line."""
+    return Markup(_OPTION.sub(r'<span class="option">\g<0></span>', str(escape(tied(text)))))
+
+
 def _tied_value(value: object) -> object:
     return tied(value) if isinstance(value, str) and not isinstance(value, Markup) else value
 
@@ -201,4 +211,5 @@ def render_page(page: Page) -> str:
         lstrip_blocks=True,
         keep_trailing_newline=True,
     )
+    environment.filters["prose"] = prose
     return environment.get_template("page.html.j2").render(page=page)

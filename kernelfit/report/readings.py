@@ -15,9 +15,11 @@ from kernelfit.report.words import (
     distances_sentence,
     explained_sentence,
     goodness_sentence,
+    mostly_rejected,
     not_ruled_out_sentence,
     one_spike_sentence,
     percent_of_rate,
+    rejected_sentence,
     sureness_sentence,
 )
 
@@ -90,17 +92,34 @@ def change_text(jump: float, fit: CouplingFit, *, verb: bool = True) -> str:
     return f"{'lowers' if jump < 0 else 'raises'} the rate by {size}" if verb else size
 
 
+def is_nothing(jump: Estimate, fit: CouplingFit) -> bool:
+    """True where an effect is too small for a number in a title: below 0.1 % of the rate, or exactly none."""
+    if not is_exp(fit):
+        return jump.value == 0.0
+    return abs(float(percent_of_rate(np.array([jump.value]))[0])) < NOTHING_PERCENT
+
+
 # --- the findings in a sentence each ------------------------------------------------------------------
 
 
-def headline(fit: CouplingFit) -> str:
-    """What one spike does, in one sentence; marked where the fit did not converge."""
+def verdict(fit: CouplingFit, goodness: Goodness) -> tuple[str, str, str]:
+    """Three sentences: what one spike does, how that depends on distance, whether the model describes the recording.
+
+    Where a fit that converged describes less than half of the units tested, the last comes first, as a caution; where
+    it found no coupling either, in the middle, before the numbers that cannot be ruled out.
+    """
     if not fit.converged:
-        return f"The fit did not converge. Where it stopped: {_headline(fit)}"
-    return _headline(fit)
+        stopped = f"The fit did not converge. Where it stopped: {_headline(fit)}"
+        return stopped, distance_sentence(fit), described_sentence(goodness)
+    if not mostly_rejected(goodness.n_tested, goodness.n_rejected):
+        return _headline(fit), distance_sentence(fit), described_sentence(goodness)
+    caution = rejected_sentence(goodness.n_tested, goodness.n_rejected, 1.0 - goodness.level)
+    if not fit.verdict.found:
+        return _headline(fit), caution, distance_sentence(fit)
+    return caution, _headline(fit, in_model=True), distance_sentence(fit)
 
 
-def _headline(fit: CouplingFit) -> str:
+def _headline(fit: CouplingFit, *, in_model: bool = False) -> str:
     if not fit.verdict.found:
         return fit.verdict.sentence
     return one_spike_sentence(
@@ -110,6 +129,7 @@ def _headline(fit: CouplingFit) -> str:
         link=link_name(fit),
         level=LEVEL,
         leak_fixed=fit.model.leak_rate is not None,
+        in_model=in_model,
     )
 
 
@@ -159,11 +179,11 @@ def sure_lead(fit: CouplingFit) -> str:
 
 
 def result_lines(fit: CouplingFit, goodness: Goodness) -> tuple[str, ...]:
-    """The result in five lines, for a console: effect, distance, sureness, description, gain."""
-    return (
-        headline(fit),
-        distance_sentence(fit),
-        sure_lead(fit),
-        described_sentence(goodness),
-        explained_sentence(goodness.deviance_explained, goodness.bits_per_spike),
-    )
+    """The result in five lines, for a console: the three of the verdict, sureness, gain."""
+    return (*verdict(fit, goodness), sure_lead(fit), gain_sentence(fit, goodness))
+
+
+def gain_sentence(fit: CouplingFit, goodness: Goodness) -> str:
+    """What the model adds over constant rates."""
+    own = bool(fit.model.after_spike.constants(fit.model.bin_width).size)
+    return explained_sentence(goodness.deviance_explained, goodness.bits_per_spike, own_spikes=own)

@@ -30,6 +30,8 @@ from kernelfit.report.numbers import (
 
 MULTIPLES_FROM = 2.0  # a rate that triples is "multiplied by 3.0", not "raised by 200 %"
 RATIO_WORTH_SAYING = 1.2
+MOSTLY_REJECTED = 0.5  # more than this share of the tested units rejected: the caution comes before any number
+FEWER_SPIKES = 3.0  # units that pass with this many times fewer spikes than those that fail: worth saying
 NOTHING_PERCENT = 0.1  # an effect all of whose interval is smaller is "below 0.1 %"
 
 
@@ -144,12 +146,17 @@ def one_spike_sentence(
     link: str,
     level: float,
     leak_fixed: bool,
+    in_model: bool = False,
 ) -> str:
-    """The headline: "One spike at 200 µm raises the rate by 12 % (...), fading with ..."."""
+    """The headline: "One spike at 200 µm raises the rate by 12 % (...), fading with ...".
+
+    `in_model`: "In this model, one spike ...", where the model does not describe most of the units.
+    """
     effect = effect_text(jump, link, level)
     fading = fading_text(time_constant_s, fixed=leak_fixed)
     joint = "; " if not time_constant_s.known and not leak_fixed else ", "
-    return f"One spike at {distance_label(distance_um)} {effect}{joint}{fading}."
+    one = "In this model, one" if in_model else "One"
+    return f"{one} spike at {distance_label(distance_um)} {effect}{joint}{fading}."
 
 
 def same_site_sentence(jump: Estimate, *, link: str, level: float) -> str:
@@ -229,8 +236,8 @@ def sureness_sentence(n_blocks: int, block_length_s: float, ratios: FloatArray, 
     if known.size == 0:
         return f"Standard errors could not be had in both ways, so they cannot be compared ({blocks})."
     low, high = float(known.min()), float(known.max())
-    span = number_text(high, 2) if number_text(low, 2) == number_text(high, 2) else ""
-    times = span or f"{number_text(low, 2)} to {number_text(high, 2)}"
+    low_text, high_text = (number_text(v, 2, keep_zeros=True) for v in (low, high))
+    times = high_text if low_text == high_text else f"{low_text} to {high_text}"
     if high < RATIO_WORTH_SAYING:
         return (
             f"Robust standard errors, from {blocks}, are {times} times those that take the model at its word: "
@@ -247,8 +254,8 @@ def worth_sentence(ratio: float) -> str:
     if not math.isfinite(ratio) or ratio < RATIO_WORTH_SAYING:
         return ""
     return (
-        f"A ratio of {number_text(ratio, 2)} means that bursts and slow changes carry much of the estimate: "
-        f"it is as uncertain as a recording {number_text(ratio**2, 2)} times shorter would leave it if the "
+        f"A ratio of {number_text(ratio, 2, keep_zeros=True)} means that bursts and slow changes carry much of the "
+        f"estimate: it is as uncertain as a recording {number_text(ratio**2, 2)} times shorter would leave it if the "
         "model were exactly right."
     )
 
@@ -261,28 +268,89 @@ def block_text(seconds: float) -> str:
 
 
 def described_text(n_tested: int, n_rejected: int) -> str:
-    """How many units the model describes, in a clause: "The model describes the spike times of 31 of 35 units"."""
+    """How many units the model describes, in a clause: "The model describes the spike times of 31 of the 35 units
+    tested"."""
     kept = n_tested - n_rejected
     if n_tested == 1:
         return f"The model {'describes' if kept else 'does not describe'} the spike times of the one unit tested"
     if kept == 0:
-        return f"The model does not describe the spike times of any of the {count_text(n_tested)} units"
+        which = "either of the two" if n_tested == 2 else f"any of the {count_text(n_tested)}"
+        return f"The model does not describe the spike times of {which} units tested"
     if n_rejected == 0:
-        return f"The model describes the spike times of all {count_text(n_tested)} units"
-    return f"The model describes the spike times of {count_text(kept)} of {count_text(n_tested)} units"
+        return f"The model describes the spike times of {all_of(n_tested)} units tested"
+    return f"The model describes the spike times of {count_text(kept)} of the {count_text(n_tested)} units tested"
+
+
+def all_of(n: int) -> str:
+    """ "both", "all 35" """
+    return "both" if n == 2 else f"all {count_text(n)}"
+
+
+def mostly_rejected(n_tested: int, n_rejected: int) -> bool:
+    """True where more than half of the units tested are rejected: what the model says is then told with a caution."""
+    return n_tested > 0 and n_rejected > MOSTLY_REJECTED * n_tested
+
+
+def rejected_sentence(n_tested: int, n_rejected: int, level: float) -> str:
+    """The caution that comes before any number where most units are rejected, and what it means for the numbers."""
+    if n_tested == 1:
+        which = "the one unit tested"
+    elif n_rejected == n_tested:
+        which = "either of the two units tested" if n_tested == 2 else f"any of the {count_text(n_tested)} units tested"
+    else:
+        which = f"{count_text(n_rejected)} of the {count_text(n_tested)} units tested"
+    return (
+        f"The model does not describe the spike times of {which} ({_how_tested(level)}): the numbers below are its "
+        "best summary of the recording, and their intervals do not cover what it misses."
+    )
+
+
+def _how_tested(level: float) -> str:
+    return f"time rescaling, Kolmogorov-Smirnov, {level_text(level)} after correction for many tests"
 
 
 def misfit_sentence(ks_statistics: FloatArray) -> str:
-    """How far observed and expected shares are apart in the middle unit; "" without a test."""
+    """How far observed and expected shares are apart in the median unit; "" without a test."""
     known = ks_statistics[np.isfinite(ks_statistics)]
     if known.size == 0:
         return ""
-    middle, largest = number_text(float(np.median(known)), 2), number_text(float(known.max()), 2)
-    if known.size == 1:
-        return f"Observed and expected share of its intervals are at most {largest} apart."
+    middle, largest = (number_text(float(v), 2, keep_zeros=True) for v in (np.median(known), known.max()))
+    if known.size < 3:
+        of = "its intervals" if known.size == 1 else "a unit's intervals"
+        return f"Observed and expected share of {of} are at most {largest} apart."
     return (
-        f"In the middle unit the observed share of intervals is at most {middle} away from the expected one, in the "
-        f"worst {largest}."
+        f"Between the observed and the expected share of a unit's intervals the largest difference is {middle} in the "
+        f"median unit, {largest} in the worst."
+    )
+
+
+def few_spikes_sentence(passing_spikes: FloatArray, failing_spikes: FloatArray) -> str:
+    """What passing means where the units that pass have far fewer spikes than those that fail; "" elsewhere."""
+    if passing_spikes.size == 0 or failing_spikes.size == 0:
+        return ""
+    passing, failing = float(np.median(passing_spikes)), float(np.median(failing_spikes))
+    if passing > failing / FEWER_SPIKES:
+        return ""
+    have = "The unit that passes has" if passing_spikes.size == 1 else "The units that pass have a median of"
+    others = "the one that fails" if failing_spikes.size == 1 else "those that fail"
+    return (
+        f"{have} {_spikes(passing)}, {others} {'a median of ' * (failing_spikes.size > 1)}{count_text(failing)}: with "
+        "few spikes only gross misses show, so passing says little."
+    )
+
+
+def _spikes(n: float) -> str:
+    return "1 spike" if round(n) == 1 else f"{count_text(n)} spikes"
+
+
+def untested_sentence(n_units: int, n_tested: int) -> str:
+    """How many units have no test; "" where all have."""
+    left = n_units - n_tested
+    if left <= 0:
+        return ""
+    return (
+        f"{count_text(left)} of the {count_text(n_units)} units {'is' if left == 1 else 'are'} not tested: too few "
+        "spikes, or none; the table says why."
     )
 
 
@@ -298,7 +366,7 @@ def goodness_sentence(n_tested: int, n_rejected: int, pooled_p: float, level: fl
     if n_tested == 0:
         return "No unit has enough spikes for a test of the model."
     first = described_text(n_tested, n_rejected)
-    how = f"time rescaling, Kolmogorov-Smirnov, {level_text(level)} after correction for many tests"
+    how = _how_tested(level)
     if math.isnan(pooled_p):
         return f"{first} ({how})."
     if pooled_p < level:
@@ -308,14 +376,17 @@ def goodness_sentence(n_tested: int, n_rejected: int, pooled_p: float, level: fl
     return f"{first} ({how}); {together}."
 
 
-def explained_sentence(deviance_explained: float | Unavailable, bits_per_spike: float | Unavailable) -> str:
-    """What the model adds over constant rates."""
+def explained_sentence(
+    deviance_explained: float | Unavailable, bits_per_spike: float | Unavailable, *, own_spikes: bool
+) -> str:
+    """What the model adds over constant rates; `own_spikes`: it holds after-spike terms, whose part is in it."""
     if isinstance(deviance_explained, Unavailable) or isinstance(bits_per_spike, Unavailable):
         reason = next(v.reason for v in (deviance_explained, bits_per_spike) if isinstance(v, Unavailable))
         return f"The gain over constant rates {could_not(reason.rstrip('.'))}."
+    what = "coupling and units' own earlier spikes together explain" if own_spikes else "coupling explains"
     return (
-        f"Over constant rates it explains {number_text(100.0 * deviance_explained, 2)}{spaced_unit('%')} of "
-        f"the deviance and gains {number_text(bits_per_spike, 2)} bits per spike."
+        f"Over constant rates, {what} {number_text(100.0 * deviance_explained, 2)}{spaced_unit('%')} of "
+        f"the deviance, {number_text(bits_per_spike, 2)} bits per spike."
     )
 
 

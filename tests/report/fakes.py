@@ -269,8 +269,8 @@ def fake_recording(
     )
 
 
-def fake_goodness(recording: Recording, *, bend: float = 0.35, seed: int = 0) -> Goodness:
-    """Goodness of a model that is right for even units and bent for odd ones, pooled right."""
+def fake_goodness(recording: Recording, *, bend: float = 0.35, right_every: int = 2, seed: int = 0) -> Goodness:
+    """Goodness of a model that is right for every second unit (or every tenth) and bent for the rest, pooled right."""
     rng = np.random.default_rng(seed + 3)
 
     def times(n: int, shape: float) -> np.ndarray:
@@ -278,7 +278,7 @@ def fake_goodness(recording: Recording, *, bend: float = 0.35, seed: int = 0) ->
 
     unit, before, count, total = [], [], [], []
     for k, n in enumerate(recording.counts):
-        t = times(int(n), 1.0 if k % 2 == 0 else 1.0 - bend)
+        t = times(int(n), 1.0 if k % right_every == 0 else 1.0 - bend)
         unit.append(np.full(n, k, dtype=np.int32))
         before.append(t)
         count.append(np.ones(n, dtype=np.int64))

@@ -24,17 +24,17 @@ from fakes import (
 from kernelfit.errors import Unavailable
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.recording.recording import Recording
+from kernelfit.report.captions import places_said
 from kernelfit.report.content import build_content
+from kernelfit.report.content_array import array_data, round_length, sites_of, view
 from kernelfit.report.content_figures import (
-    array_data,
     clear_pieces,
     curve_grid,
     kernel_data,
     pair_counts,
     representative_stretch,
-    round_length,
-    sites_of,
 )
+from kernelfit.report.look import unit_label
 from kernelfit.report.readings import result_lines
 from kernelfit.report.truth import Truth, TruthValue
 
@@ -65,7 +65,56 @@ def test_the_verdict_is_three_sentences_with_the_fits_own_numbers(content):
     )
     assert "at 400 µm" in content.verdict[1]
     assert "at 800 µm" in content.verdict[1]
-    assert content.verdict[2].startswith("The model describes the spike times of 30 of 59 units (")
+    assert content.verdict[2].startswith("The model describes the spike times of 30 of the 59 units tested (")
+
+
+def test_a_model_most_units_reject_is_said_before_any_number(fit):
+    bent = fake_goodness(fit.recording, right_every=10)
+    assert bent.n_rejected > 0.5 * bent.n_tested
+    found = build_content(fit, fit.recording, bent)
+    share = f"{bent.n_rejected} of the {bent.n_tested} units tested"
+    assert found.verdict[0].startswith(f"The model does not describe the spike times of {share}")
+    assert found.verdict[1].startswith("In this model, one spike at 200 µm raises the rate by 12 %")
+    assert "at 400 µm" in found.verdict[2]
+    assert share in found.captions.kernel
+    assert result_lines(fit, bent)[:3] == found.verdict
+    assert any("more than half of the units tested fail" in s for s in found.goodness)
+    assert found.goodness_lead.startswith(
+        f"The model describes the spike times of {bent.n_tested - bent.n_rejected} of"
+    )
+
+
+def test_without_coupling_the_caution_stands_before_what_cannot_be_ruled_out(fit):
+    none = fake_fit(verdict=FakeVerdict(False, 0.42, "No coupling to describe: p = 0.42."))
+    found = build_content(none, none.recording, fake_goodness(none.recording, right_every=10))
+    assert found.verdict[0].startswith("No coupling to describe")
+    assert found.verdict[1].startswith("The model does not describe")
+    assert "cannot be ruled out" in found.verdict[2]
+
+
+def test_a_fit_that_stopped_says_so_first_whatever_its_goodness():
+    stopped = fake_fit(converged=False, solver=FakeSolver(converged=False, message="the step limit was reached"))
+    found = build_content(stopped, stopped.recording, fake_goodness(stopped.recording, right_every=10))
+    assert found.verdict[0].startswith("The fit did not converge.")
+    assert not any("before any number" in s for s in found.goodness)
+
+
+def test_an_invented_recording_is_named_at_the_top(fit):
+    truth = Truth((TruthValue("amplitude", 0.12, "per spike"),), "Invented for a test.")
+    found = build_content(fit, fit.recording, fit.goodness(), truth=truth)
+    assert found.notices[0].severity == "info"
+    assert "invented" in found.notices[0].text
+
+
+def test_the_kernels_title_tells_the_farthest_effect_worth_a_number(content):
+    # 100 (e^J - 1) at 800 µm: 0.1133 exp(-(800^2 - 200^2) / (2 262^2)) is 0.0014, or 0.14 %
+    assert content.figures.kernel.title == "One spike raises the rate by 12 % at 200 µm and by 0.14 % at 800 µm"
+
+
+def test_own_spikes_are_not_in_the_number_for_the_network(content):
+    (said,) = [s for s in content.coupling if "spectral radius" in s]
+    assert "0.42" in said
+    assert "Effects of own spikes are not in this number" in said
 
 
 def test_effects_at_other_distances_follow_the_kernel(content):
@@ -285,7 +334,7 @@ def test_ks_panels_go_from_best_to_worst_and_agree_with_the_table(content, fit):
     goodness = fit.goodness()
     assert [p.title.split(":")[0].split("\n")[0] for p in data.panels] == [
         "best",
-        "middle",
+        "median",
         "worst",
         "all units together",
     ]
@@ -303,6 +352,38 @@ def test_units_of_one_site_stand_apart_and_sites_stay_where_they_are():
     gaps = np.linalg.norm(data.place_um[:, None] - data.place_um[None], axis=-1)
     assert (gaps[~np.eye(4, dtype=bool)] > 10.0).all()
     assert np.isnan(data.value[2:]).all()
+
+
+def test_an_array_in_space_is_seen_along_its_shortest_side():
+    # a shank along z with two columns in x: y is not drawn, and no unit hides another
+    shank = np.array([[x, 0.0, z] for x in (0.0, 30.0) for z in (0.0, 25.0, 50.0, 75.0)])
+    assert view(shank) == ([0, 2], "y")
+    data = array_data(shank, np.ones(8), "t", "q")
+    assert data.seen_along == "y"
+    assert data.n_shared == 0
+    assert np.ptp(data.site_um, axis=0).tolist() == [30.0, 75.0]
+    flat = np.column_stack([shank[:, 0], shank[:, 2], np.zeros(8)])
+    assert view(flat) == ([0, 1], "z")
+
+
+def test_units_above_one_another_stand_apart():
+    layers = np.array([[x, 100.0 * x, z] for x in (0.0, 100.0, 200.0) for z in (0.0, 40.0)])
+    data = array_data(layers, np.ones(6), "t", "q")
+    gaps = np.linalg.norm(data.place_um[:, None] - data.place_um[None], axis=-1)
+    assert (gaps[~np.eye(6, dtype=bool)] > 10.0).all()
+    assert data.n_shared == 6
+    assert "lie above one another in z; they stand around it" in places_said(data)
+
+
+def test_ids_no_font_can_draw_are_named_by_their_row():
+    assert unit_label("c11", 4) == "unit c11"
+    assert unit_label("Ячейка-7", 4) == "unit Ячейка-7"
+    assert unit_label("\N{CJK UNIFIED IDEOGRAPH-7D30}-1", 4) == "unit no. 5"
+    assert unit_label("\N{ARABIC LETTER ALEF}1", 0) == "unit no. 1"  # runs from right to left
+    long = unit_label("probe-A/shank-3/electrode-0117/cluster-0042", 0)
+    assert long.startswith("unit probe-A")
+    assert long.endswith("0042")  # ends tell units apart
+    assert len(long) <= 23
 
 
 def test_sites_are_positions_closer_than_a_micrometre():

@@ -5,12 +5,14 @@ from __future__ import annotations
 import html.parser
 import re
 import xml.etree.ElementTree as ET
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
 from fakes import FakeSolver, fake_fit, fake_recording
 
+import kernelfit.report.page as page_module
 from kernelfit.errors import OutputError
 from kernelfit.report.content import build_content
 from kernelfit.report.figures_array import draw_array
@@ -293,6 +295,20 @@ def test_drawing_leaves_the_callers_settings_alone():
 
 
 # --- pages ------------------------------------------------------------------------------------------------
+
+
+def test_names_of_options_stay_on_one_line():
+    shown = render_page(Page("t", "s", (Section("one", "One", "l", (Text("Cut it (--stop-s 5, a--b <i>--x</i>)."),)),)))
+    assert '<span class="option">--stop-s</span> 5, a--b &lt;i&gt;<span class' not in shown  # one letter is no option
+    assert '<span class="option">--stop-s</span> 5, a--b &lt;i&gt;--x&lt;/i&gt;' in shown
+
+
+def test_printing_is_not_ruled_by_the_width_of_a_screen():
+    # a printed page is as wide as a small tablet: rules for those must name the screen
+    css = (Path(page_module.__file__).parent / "templates" / "page.css").read_text(encoding="utf-8")
+    rules = re.findall(r"@media ([^{]+)\{", css)
+    assert len(rules) > 3
+    assert all(rule.startswith(("screen and", "print")) for rule in rules)
 
 
 def test_numbers_stay_with_their_units_and_text_is_escaped():

@@ -126,7 +126,7 @@ def test_figures_are_files_of_their_own(folder: Path, name: str) -> None:
 
 
 def test_the_page_says_what_was_found(folder: Path, inspection: Inspection) -> None:
-    text = " ".join(read(folder / PAGE).text).replace("\N{NO-BREAK SPACE}", " ")
+    text = "".join(read(folder / PAGE).text).replace("\N{NO-BREAK SPACE}", " ")
     assert "Nothing forbids a fit, but" in text
     assert "for research" in text.lower()
     assert "not for clinical decisions" in text.lower()

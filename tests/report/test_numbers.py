@@ -14,6 +14,8 @@ from kernelfit.report.numbers import (
     number_text,
     p_sentence,
     p_text,
+    powers_text,
+    range_text,
     time_text,
 )
 
@@ -124,3 +126,13 @@ def test_counts_and_distances():
     assert distance_label(200.0) == "200 µm"
     assert distance_label(0.23) == "0.2 µm"
     assert distance_label(12_500.0) == "12.5 mm"
+
+
+def test_ranges_keep_both_ends_to_their_own_digits():
+    assert range_text(0.00063, 0.4) == "0.00063 to 0.40"
+    assert range_text(6.0, 11.2) == "6.0 to 11"
+
+
+def test_powers_of_ten_are_written_as_people_do():
+    assert powers_text("the last step was 2.4e-07 long") == "the last step was 2.4 × 10⁻⁷ long"
+    assert powers_text("unit e15, 1e+12 bins") == "unit e15, 1 × 10¹² bins"

@@ -80,7 +80,7 @@ def test_effects_at_several_distances():
     ("ratios", "wanted"),
     [
         ([3.1, 3.1], "are 3.1 times those"),
-        ([2.0, 4.26], "are 2 to 4.3 times those"),
+        ([2.0, 4.26], "are 2.0 to 4.3 times those"),
         ([0.9, 1.05], "scatter as the model says"),
         ([math.nan], "cannot be compared"),
     ],
@@ -97,7 +97,7 @@ def test_worth_is_the_square_of_the_ratio():
 
 def test_goodness():
     text = words.goodness_sentence(35, 4, 0.042, 0.05)
-    assert text.startswith("The model describes the spike times of 31 of 35 units (")
+    assert text.startswith("The model describes the spike times of 31 of the 35 units tested (")
     assert "p = 0.042" in text
     assert "all 35 units" in words.goodness_sentence(35, 0, 0.4, 0.05)
     assert "nothing speaks against it" in words.goodness_sentence(35, 0, 0.4, 0.05)
@@ -110,18 +110,49 @@ def test_the_size_of_the_misfit():
     # median of 0.1, 0.2, 0.4 is 0.2
     text = words.misfit_sentence(np.array([0.4, 0.1, math.nan, 0.2]))
     assert text == (
-        "In the middle unit the observed share of intervals is at most 0.2 away from the expected one, in the "
-        "worst 0.4."
+        "Between the observed and the expected share of a unit's intervals the largest difference is 0.20 in the "
+        "median unit, 0.40 in the worst."
     )
     assert words.misfit_sentence(np.array([math.nan])) == ""
 
 
 def test_gain_over_constant_rates():
-    text = words.explained_sentence(0.1063, 0.278)
-    assert text == "Over constant rates it explains 11 % of the deviance and gains 0.28 bits per spike."
+    text = words.explained_sentence(0.1063, 0.278, own_spikes=False)
+    assert text == "Over constant rates, coupling explains 11 % of the deviance, 0.28 bits per spike."
+    # own spikes have their part in the gain: it must not be read as that of the coupling
+    assert "coupling and units' own earlier spikes together" in words.explained_sentence(0.1, 0.2, own_spikes=True)
     assert "could not be estimated: there is no spike" in words.explained_sentence(
-        Unavailable("there is no spike in the likelihood."), 0.2
+        Unavailable("there is no spike in the likelihood."), 0.2, own_spikes=True
     )
+
+
+def test_two_units_are_both_or_neither():
+    assert "both units tested" in words.goodness_sentence(2, 0, 0.4, 0.05)
+    assert "either of the two units tested" in words.goodness_sentence(2, 2, 0.4, 0.05)
+    assert "either of the two units tested" in words.rejected_sentence(2, 2, 0.05)
+
+
+def test_most_units_are_more_than_half():
+    assert not words.mostly_rejected(0, 0)
+    assert not words.mostly_rejected(10, 5)
+    assert words.mostly_rejected(10, 6)
+    text = words.rejected_sentence(10, 6, 0.05)
+    assert text.startswith("The model does not describe the spike times of 6 of the 10 units tested (time rescaling")
+    assert "intervals do not cover what it misses" in text
+    assert "any of the 10 units tested" in words.rejected_sentence(10, 10, 0.05)
+
+
+def test_passing_with_few_spikes_says_little():
+    text = words.few_spikes_sentence(np.array([8.0, 20.0]), np.array([300.0, 500.0, 400.0]))
+    assert text.startswith("The units that pass have a median of 14 spikes, those that fail a median of 400")
+    assert "has 1 spike, the one that fails 9" in words.few_spikes_sentence(np.array([1.0]), np.array([9.0]))
+    assert words.few_spikes_sentence(np.array([200.0]), np.array([400.0])) == ""
+    assert words.few_spikes_sentence(np.array([8.0]), np.array([])) == ""
+
+
+def test_units_without_a_test_are_counted():
+    assert words.untested_sentence(58, 50).startswith("8 of the 58 units are not tested")
+    assert words.untested_sentence(58, 58) == ""
 
 
 def test_no_praise_and_no_exclamation():
