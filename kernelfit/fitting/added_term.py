@@ -15,7 +15,7 @@ from scipy.stats import chi2
 
 from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.fitting.arrow import Arrow, eliminate, solve_leniently
-from kernelfit.fitting.covariance import block_length_s
+from kernelfit.fitting.by_block import block_length_s
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.outcome import ScoreTest
 from kernelfit.fitting.problem import Estimate, Problem

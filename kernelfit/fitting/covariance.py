@@ -12,26 +12,22 @@ cluster variance: Bell and McCaffrey (2002), Survey Methodology 28, 169-181.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.engine.evaluate import Evaluation, TimeBlocks
+from kernelfit.engine.evaluate import Evaluation
 from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.errors import ArgumentError
 from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_symmetric
-from kernelfit.fitting.block_length import FINER, BlockCurve, block_curve, joined
+from kernelfit.fitting.block_length import BlockCurve, block_curve, joined
+from kernelfit.fitting.by_block import BlockSums, sums_by_block
 from kernelfit.fitting.maximise import Optimum, penalised
-from kernelfit.fitting.problem import Estimate, Problem
+from kernelfit.fitting.problem import Problem
 from kernelfit.model.coupling import CovarianceKind
 
-N_BLOCKS = 100
-SHORTEST_BLOCK_S = 1.0
-SHORTEST_BLOCK_TAUS = 20.0
-FEWEST_BLOCKS = 10  # with 20 tau above a tenth of the recording there would soon be one block, and no variance
 REFUSED_BELOW = 6  # blocks: a variance of fewer numbers means nothing
-MOST_NUMBERS = 20_000_000  # of the information by block: 160 MB
 LEAST_LEFT = 1e-6  # of the information on a parameter, once a block is left out
 SMALLEST_EIGENVALUE = 1e-9  # of the information scaled to a unit diagonal: below this parameters cannot be told apart
 
@@ -89,44 +85,28 @@ class Uncertainty:
         return jackknife
 
 
-def block_length_s(duration_s: float, leak: float) -> float:
-    """About a hundred blocks, none shorter than max(1 s, 20 tau) (docs/model.md section 8).
-
-    A leak so slow that fewer than `FEWEST_BLOCKS` would be left, as one not identified may be, gets shorter ones.
-    """
-    slow = min(SHORTEST_BLOCK_TAUS / leak, duration_s / FEWEST_BLOCKS)
-    return max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S, slow)
-
-
-def usual_blocks(problem: Problem, leak: float) -> TimeBlocks:
-    """Blocks of the usual length at a leak rate (1/s)."""
-    length_s = block_length_s(problem.grid.duration_s, leak)
-    return time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
-
-
 def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
     """All covariances at an optimum: one sweep with scores by block of time, one more where blocks are joined."""
     free = optimum.free
-    usual = usual_blocks(problem, problem.leak(optimum.estimate.shared))
-    finer = FINER if usual.n_bins.min() >= FINER else 1
     problem.clock.stage = "standard errors"
-    sums = _by_block(problem, optimum.estimate, usual.split(finer), finer)
-    information = penalised(problem, optimum.estimate, _together(sums)).information.only(free)
+    usual = optimum.by_block if optimum.by_block is not None else sums_by_block(problem, optimum.estimate)
+    information = penalised(problem, optimum.estimate, usual.together).information.only(free)
     elimination = eliminate(information)
     weak = _weak_direction(elimination.schur)
-    influence = _influence(sums, elimination, free, weak is None)
-    curve = block_curve(influence.shared, finer, problem.grid.duration_s)
-    blocks = usual
-    if curve.factor(finer) > 1:
-        finer, blocks = 1, time_blocks(problem.grid, curve.factor(finer) * problem.grid.duration_s / usual.n_blocks)
-        sums = _by_block(problem, optimum.estimate, blocks, 1)
-        influence = _influence(sums, elimination, free, weak is None)
-    influence = influence.joined(finer)
-    n_blocks = blocks.n_blocks
+    influence = _influence(usual.sums, elimination, free, weak is None)
+    curve = block_curve(influence.shared, usual.finer, problem.grid.duration_s)
+    longer = curve.factor(usual.finer)
+    used = usual
+    if longer > 1:
+        length_s = longer * problem.grid.duration_s / usual.blocks.n_blocks
+        used = sums_by_block(problem, optimum.estimate, time_blocks(problem.grid, length_s))
+        influence = _influence(used.sums, elimination, free, weak is None)
+    influence = influence.joined(used.finer)
+    n_blocks = used.blocks.n_blocks
     correction = n_blocks / (n_blocks - 1.0) if n_blocks >= REFUSED_BELOW else np.nan
     left_out = None
-    if weak is None and n_blocks >= REFUSED_BELOW and len(sums.own_own) == n_blocks:
-        left_out = _left_out(sums, information, free, finer)
+    if weak is None and n_blocks >= REFUSED_BELOW and used.has_information:
+        left_out = _left_out(used, information, free)
     inverse = (
         solve_symmetric(elimination.schur, np.eye(int(free.sum())))
         if weak is None
@@ -142,7 +122,7 @@ def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
         own_jackknife=None if left_out is None else left_out.squared_own / correction,
         block_influence=_columns(influence.shared, free),
         n_blocks=n_blocks,
-        block_length_s=float(np.mean(blocks.n_bins)) * problem.data.bin_width,
+        block_length_s=float(np.mean(used.blocks.n_bins)) * problem.data.bin_width,
         block_curve=curve.over(free),
         weak_direction=None if weak is None else _columns(weak[None], free)[0],
     )
@@ -183,35 +163,16 @@ def _influence(sums: Evaluation, elimination: Elimination, free: BoolArray, dete
     return _Influence(own, shared)
 
 
-def _by_block(problem: Problem, estimate: Estimate, blocks: TimeBlocks, size: int) -> Evaluation:
-    """Sums with scores by block, and information by `size` neighbouring ones where that does not fill the memory."""
-    slot = np.arange(blocks.n_blocks) // size
-    n_own = 1 + problem.trace_decay.size
-    size_of_part = problem.data.n_targets * n_own * (n_own + problem.n_shared) + problem.n_shared**2
-    if (slot[-1] + 1) * size_of_part > MOST_NUMBERS:
-        slot = np.zeros_like(slot)
-    return problem.evaluate(estimate, blocks=blocks, information_slot=slot)
-
-
-def _together(sums: Evaluation) -> Evaluation:
-    """The same with the information of all parts added up."""
-    return replace(
-        sums,
-        own_own=sums.own_own.sum(axis=0),
-        own_shared=sums.own_shared.sum(axis=0),
-        shared_shared=sums.shared_shared.sum(axis=0),
-    )
-
-
-def _left_out(sums: Evaluation, information: Arrow, free: BoolArray, finer: int) -> _Influence | None:
+def _left_out(by_block: BlockSums, information: Arrow, free: BoolArray) -> _Influence | None:
     """What leaving out each block would take from the estimates, in one step from the information that is left.
 
     None where all that is known of some parameter stands in one block: without it nothing is left to estimate from.
     """
     whole = np.diag(eliminate(information).schur)
+    sums = by_block.sums
     n_own = sums.own_own.shape[-1]
     n_fine = len(sums.score)
-    scores = joined(sums.score.reshape(n_fine, -1), finer).reshape(-1, *sums.score.shape[1:])
+    scores = joined(sums.score.reshape(n_fine, -1), by_block.finer).reshape(-1, *sums.score.shape[1:])
     own, shared = [], []
     for g, score in enumerate(scores):
         here = Arrow(sums.own_own[g], sums.own_shared[g], sums.shared_shared[g]).only(free)

@@ -17,8 +17,9 @@ import numpy as np
 import scipy.linalg
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.engine.evaluate import Evaluation
+from kernelfit.engine.evaluate import Evaluation, TimeBlocks
 from kernelfit.fitting.arrow import Arrow, eliminate
+from kernelfit.fitting.by_block import BlockSums, sums_by_block
 from kernelfit.fitting.problem import Estimate, Problem
 
 TIGHT = 1e-10  # squared length of the next step in standard errors; that step is taken too, which squares the error
@@ -60,12 +61,21 @@ class Local:
 
 
 @dataclass(frozen=True, eq=False)
+class Weighting:
+    """Weights of blocks of time in the objective: blocks, and (G,) one weight for each."""
+
+    blocks: TimeBlocks
+    weight: FloatArray
+
+
+@dataclass(frozen=True, eq=False)
 class Optimum:
     """Where the optimiser stopped.
 
     `free` marks the shared parameters that were estimated; the others were held or sit at `at_bound` (-1 lower, 1
     upper).
-    `decrement` is the squared length of the next step in standard errors.
+    `decrement` is the squared length of the next step in standard errors. `by_block` holds the sums of the last sweep
+    by blocks of time, where it was made so.
     """
 
     local: Local
@@ -75,6 +85,7 @@ class Optimum:
     n_iterations: int
     decrement: float
     message: str
+    by_block: BlockSums | None = None
 
     @property
     def estimate(self) -> Estimate:
@@ -102,28 +113,38 @@ def penalised(problem: Problem, estimate: Estimate, sums: Evaluation) -> Local:
     )
 
 
-def evaluate_locally(problem: Problem, estimate: Estimate) -> Local:
-    """Penalised objective and derivatives at an estimate: one sweep. Not finite where rates overflow."""
+def evaluate_locally(problem: Problem, estimate: Estimate, weighting: Weighting | None = None) -> Local:
+    """Penalised objective and derivatives at an estimate: one sweep. Not finite where rates overflow.
+
+    With a weighting every block of time counts as often as its weight says; log y! counts once.
+    """
     with np.errstate(over="ignore", invalid="ignore"):  # a step too far is seen by its objective and taken back
-        return penalised(problem, estimate, problem.evaluate(estimate))
+        if weighting is None:
+            return penalised(problem, estimate, problem.evaluate(estimate))
+        sums = problem.evaluate(estimate, blocks=weighting.blocks, block_weight=weighting.weight)
+        weight = weighting.weight[:, None]
+        weighted = replace(sums, log_likelihood=weight * sums.log_likelihood, score=weight[..., None] * sums.score)
+        return penalised(problem, estimate, weighted)
 
 
 def maximise(
     problem: Problem,
-    start: Estimate,
+    start: Estimate | Local,
     *,
     held: BoolArray | None = None,
     tolerance: float = TIGHT,
     max_iterations: int = MAX_ITERATIONS,
+    weighting: Weighting | None = None,
 ) -> Optimum:
     """Climb from `start` to the nearest optimum of the penalised log-likelihood.
 
     Parameters
     ----------
-    problem, start : what to maximise and where from; `start` is moved into the bounds
+    problem, start : what to maximise and where from, moved into the bounds; a point evaluated before saves a sweep
     held : (Q,) True for shared parameters that stay where they are
     tolerance : stop when the next step is shorter than the square root of this, in standard errors
     max_iterations : steps tried before giving up
+    weighting : weights of blocks of time; None: all count once
 
     Returns
     -------
@@ -131,14 +152,18 @@ def maximise(
     """
     bounds = problem.bounds
     held = np.zeros(problem.n_shared, dtype=bool) if held is None else held
-    inside = np.clip(start.shared, bounds[:, 0], bounds[:, 1]) if problem.n_shared else start.shared
-    local = evaluate_locally(problem, Estimate(start.own, inside))
+    inside = _inside(start.estimate if isinstance(start, Local) else start, bounds)
+    if isinstance(start, Local) and np.array_equal(inside.shared, start.estimate.shared):
+        local = start
+    else:
+        local = evaluate_locally(problem, inside, weighting)
     if not local.finite:
         nowhere = np.zeros(problem.n_shared)
         return Optimum(local, ~held, nowhere, False, 0, np.inf, "the likelihood at the start is not finite")
     correction = np.zeros((problem.n_shared, problem.n_shared))
     damping, decrement, stale = FIRST_DAMPING, np.inf, 0
     gains: list[float] = []
+    by_block: BlockSums | None = None
     message, converged, iteration = "", False, 0
     while iteration < max_iterations:
         iteration += 1
@@ -148,7 +173,8 @@ def maximise(
             decrement = step.gain
             if decrement < tolerance:
                 converged, message = True, f"the last step was {np.sqrt(max(decrement, 0.0)):.1e} standard errors long"
-                local = _last_step(problem, local, step, bounds) if tolerance <= TIGHT else local
+                if tolerance <= TIGHT:
+                    local, by_block = _last_step(problem, local, step, bounds, weighting)
                 break
         except np.linalg.LinAlgError:
             decrement = np.inf
@@ -156,13 +182,14 @@ def maximise(
         if trial is None:
             message = "no step short enough to trust leads on: the information is singular here"
             break
-        candidate = evaluate_locally(problem, trial.estimate)
+        candidate = evaluate_locally(problem, trial.estimate, weighting)
         slack = ROUNDING * abs(local.objective)
         gained = candidate.objective - local.objective
         if candidate.finite and gained >= -slack:
             stale = stale + 1 if gained <= slack else 0
             damping = _next_damping(damping, gained, trial.predicted)
-            correction = _corrected(correction, local, candidate)
+            if not problem.concave:
+                correction = _corrected(correction, local, candidate)
             local = candidate
             if stale >= 3:
                 converged, message = True, "the log-likelihood no longer changes in its last digits"
@@ -182,7 +209,7 @@ def maximise(
         )
     pushed = _pushed_out(local, bounds)
     at_bound = np.where(pushed, np.where(local.estimate.shared <= bounds[:, 0], -1.0, 1.0), 0.0)
-    return Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message)
+    return Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message, by_block)
 
 
 @dataclass(frozen=True, eq=False)
@@ -206,13 +233,28 @@ def _pushed_out(local: Local, bounds: FloatArray) -> BoolArray:
     return np.asarray(((x <= bounds[:, 0]) & (g < 0)) | ((x >= bounds[:, 1]) & (g > 0)), dtype=bool)
 
 
-def _last_step(problem: Problem, local: Local, step: _Step, bounds: FloatArray) -> Local:
-    """The point one undamped step on, unless rounding makes it a worse one."""
-    shared = local.estimate.shared + step.shared
-    inside = np.clip(shared, bounds[:, 0], bounds[:, 1]) if shared.size else shared
-    candidate = evaluate_locally(problem, Estimate(local.estimate.own + step.own, inside))
+def _inside(estimate: Estimate, bounds: FloatArray) -> Estimate:
+    """The estimate with its shared parameters moved into their bounds."""
+    if not estimate.shared.size:
+        return estimate
+    return Estimate(estimate.own, np.clip(estimate.shared, bounds[:, 0], bounds[:, 1]))
+
+
+def _last_step(
+    problem: Problem, local: Local, step: _Step, bounds: FloatArray, weighting: Weighting | None
+) -> tuple[Local, BlockSums | None]:
+    """The point one undamped step on, unless rounding makes it a worse one, and its sums by block of time."""
+    estimate = _inside(Estimate(local.estimate.own + step.own, local.estimate.shared + step.shared), bounds)
+    by_block = None
+    if weighting is None:
+        with np.errstate(over="ignore", invalid="ignore"):
+            by_block = sums_by_block(problem, estimate)
+            candidate = penalised(problem, estimate, by_block.together)
+    else:
+        candidate = evaluate_locally(problem, estimate, weighting)
     slack = ROUNDING * abs(local.objective)
-    return candidate if candidate.finite and candidate.objective >= local.objective - slack else local
+    better = candidate.finite and candidate.objective >= local.objective - slack
+    return (candidate, by_block) if better else (local, None)
 
 
 def _solve(local: Local, free: BoolArray, damping: float, correction: FloatArray) -> _Step:
@@ -278,10 +320,8 @@ def _bounded_step(
         if shared_too_long or np.max(np.abs(step.own[:, 0]), initial=0.0) > LONGEST_OWN_STEP:
             damping = max(4.0 * damping, FIRST_DAMPING)
             continue
-        x = local.estimate.shared + step.shared
-        if x.size:
-            x = np.clip(x, bounds[:, 0], bounds[:, 1])
-        return _Trial(Estimate(local.estimate.own + step.own, x), 0.5 * step.gain), damping
+        moved = Estimate(local.estimate.own + step.own, local.estimate.shared + step.shared)
+        return _Trial(_inside(moved, bounds), 0.5 * step.gain), damping
     return None, damping
 
 

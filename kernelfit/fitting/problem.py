@@ -14,6 +14,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.engine.evaluate import Evaluation, Point, SweepData, TimeBlocks, evaluate
+from kernelfit.engine.links import is_canonical
 from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
 from kernelfit.fitting.progress import Progress, ProgressCallback, peak_memory_bytes
 from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
@@ -113,6 +114,15 @@ class Problem:
         return self.model.leak_rate is None
 
     @property
+    def concave(self) -> bool:
+        """Whether the objective has one top and the expected information is its Hessian.
+
+        It is with a canonical link, a stated leak and a kernel linear in its parameters.
+        """
+        linear = not any(p.shape for p in self.kernel.parameters(self.span))
+        return bool(is_canonical(self.model.link.code)) and linear and not self.fits_leak
+
+    @property
     def n_shared(self) -> int:
         """Shared parameters, held ones included."""
         return self.n_kernel + int(self.has_same_site) + int(self.fits_leak)
@@ -173,13 +183,19 @@ class Problem:
         )
 
     def evaluate(
-        self, estimate: Estimate, *, blocks: TimeBlocks | None = None, information_slot: IntArray | None = None
+        self,
+        estimate: Estimate,
+        *,
+        blocks: TimeBlocks | None = None,
+        block_weight: FloatArray | None = None,
+        information_slot: IntArray | None = None,
     ) -> Evaluation:
         """Sums at an estimate, derivatives by log alpha instead of alpha; penalties not included."""
         sums = evaluate(
             self.data,
             self.point(estimate),
             blocks=blocks,
+            block_weight=block_weight,
             information_slot=information_slot,
             threads=self.threads,
         )

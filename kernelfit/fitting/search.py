@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, evaluate_locally, maximise
+from kernelfit.fitting.maximise import LOOSE, TIGHT, Local, Optimum, evaluate_locally, maximise
 from kernelfit.fitting.null import Null, NullSweep
 from kernelfit.fitting.problem import Estimate, Problem
 
@@ -59,15 +59,14 @@ def start_estimates(problem: Problem, null: Null, sweep: NullSweep, n: int) -> l
     return [Estimate(null.optimum.estimate.own, np.concatenate([theta, rest])) for theta in thetas]
 
 
-def shrunk(problem: Problem, estimate: Estimate, floor: float) -> Estimate:
+def shrunk(problem: Problem, estimate: Estimate, floor: float) -> Estimate | Local:
     """Halve the coupling of a start until it is not worse than no coupling: one-step estimates overshoot in bursts."""
     linear = np.array([not p.shape for p in problem.kernel.parameters(problem.span)])
     shared = estimate.shared.copy()
     for _ in range(12):
-        trial = Estimate(estimate.own, shared)
-        objective = evaluate_locally(problem, trial).objective
-        if np.isfinite(objective) and objective >= floor:
-            return trial
+        local = evaluate_locally(problem, Estimate(estimate.own, shared))
+        if local.finite and local.objective >= floor:
+            return local
         shared = shared.copy()
         shared[: problem.n_kernel][linear] *= 0.5
     return Estimate(estimate.own, shared)
@@ -82,7 +81,7 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
     held : (Q,) shared parameters that stay at their start (a discrete one, profiled elsewhere)
     """
     problem.clock.stage = "climbing"
-    if problem.model.leak_rate is not None and not any(p.shape for p in problem.kernel.parameters(problem.span)):
+    if problem.concave:
         return _only_hill(problem, null, held)
     floor = null.optimum.local.objective
     starts: list[Estimate] = []
@@ -94,14 +93,14 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
         climbed.append(maximise(problem, begin, held=held, tolerance=LOOSE, max_iterations=LOOSE_ITERATIONS))
     records = tuple(StartRecord(problem.leak(o.estimate.shared), o.local.objective, o.n_iterations) for o in climbed)
     ranked = sorted(climbed, key=lambda o: -o.local.objective)
-    top = maximise(problem, ranked[0].estimate, held=held, tolerance=TIGHT)
+    top = maximise(problem, ranked[0].local, held=held, tolerance=TIGHT)
     second = None
     for other in ranked[1:]:
         near = other.local.objective > top.local.objective - 2.0 * CLOSE
         if near and _apart(problem, other.estimate.shared, top.estimate.shared):
-            finished = maximise(problem, other.estimate, held=held, tolerance=LOOSE)
+            finished = maximise(problem, other.local, held=held, tolerance=LOOSE)
             if finished.local.objective > top.local.objective:
-                top, finished = maximise(problem, finished.estimate, held=held, tolerance=TIGHT), top
+                top, finished = maximise(problem, finished.local, held=held, tolerance=TIGHT), top
             close = finished.local.objective > top.local.objective - CLOSE
             if close and _apart(problem, finished.estimate.shared, top.estimate.shared):
                 second = finished
@@ -110,9 +109,15 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
 
 
 def _only_hill(problem: Problem, null: Null, held: BoolArray | None) -> SearchResult:
-    """At a fixed leak, a kernel linear in its coefficients: the objective is concave, so no coupling is as good a start
-    as any, and unlike one-step estimates it never lies on a slope too steep to climb straight on."""
-    begin = Estimate(null.optimum.estimate.own, np.zeros(problem.n_shared))
+    """At a fixed leak, a kernel linear in its coefficients: the objective is concave, so any start will do.
+
+    No coupling is a start that never lies on a slope too steep to climb straight on, as one-step estimates may where
+    units burst; where the one-step estimate is better than no coupling it saves a step.
+    """
+    begin: Estimate | Local = Estimate(null.optimum.estimate.own, np.zeros(problem.n_shared))
+    first = evaluate_locally(problem, start_estimates(problem, null, null.sweeps[0], 1)[0])
+    if first.finite and first.objective >= null.optimum.local.objective:
+        begin = first
     top = maximise(problem, begin, held=held, tolerance=TIGHT)
     start = StartRecord(problem.leak(top.estimate.shared), top.local.objective, top.n_iterations)
     return SearchResult(top, None, (start,))

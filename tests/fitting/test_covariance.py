@@ -14,7 +14,8 @@ from kernelfit import kernels, terms
 from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.engine.twin import dense_counts, dense_gradients
 from kernelfit.errors import ArgumentError
-from kernelfit.fitting.covariance import block_length_s, covariances
+from kernelfit.fitting.by_block import block_length_s
+from kernelfit.fitting.covariance import covariances
 from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.null import first_estimate
 from kernelfit.fitting.problem import Estimate, make_problem

@@ -5,10 +5,12 @@ from __future__ import annotations
 import numpy as np
 import pytest
 from scipy.optimize import minimize
-from worlds import model, simulated
+from worlds import LEAK, model, simulated
 
 from kernelfit import kernels, terms
-from kernelfit.fitting.maximise import TIGHT, evaluate_locally, maximise
+from kernelfit.engine.time_blocks import time_blocks
+from kernelfit.fitting.by_block import sums_by_block
+from kernelfit.fitting.maximise import TIGHT, Weighting, evaluate_locally, maximise
 from kernelfit.fitting.null import first_estimate
 from kernelfit.fitting.problem import Estimate, make_problem
 
@@ -163,3 +165,59 @@ def test_without_shared_parameters_the_rates_are_the_counts(recording):
     optimum = maximise(problem, Estimate(own, np.empty(0)))
     rate = problem.data.counts / (problem.data.n_bins * problem.data.bin_width)
     np.testing.assert_allclose(np.exp(optimum.estimate.own[:, 0]), rate, rtol=1e-6)
+
+
+def test_a_point_evaluated_before_saves_a_sweep(recording):
+    problem = make_problem(model("gaussian"), recording, threads=1)
+    start = Estimate(first_estimate(problem).own, np.array([0.1, np.log(120.0), np.log(LEAK)]))
+    fresh = maximise(problem, start)
+    used = problem.clock.sweeps
+    again = maximise(problem, evaluate_locally(problem, start))
+    assert problem.clock.sweeps - used == used
+    np.testing.assert_array_equal(again.estimate.shared, fresh.estimate.shared)
+    outside = Estimate(start.own, np.array([0.1, 50.0, np.log(LEAK)]))
+    moved = maximise(problem, evaluate_locally(problem, outside))
+    np.testing.assert_array_equal(moved.estimate.shared, maximise(problem, outside).estimate.shared)
+
+
+def test_the_last_sweep_is_kept_by_block_of_time(recording):
+    problem = make_problem(model("gaussian"), recording, threads=1)
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.1, np.log(120.0), np.log(LEAK)])))
+    again = sums_by_block(problem, optimum.estimate)
+    np.testing.assert_array_equal(optimum.by_block.sums.score, again.sums.score)
+    np.testing.assert_array_equal(optimum.by_block.blocks.stretches, again.blocks.stretches)
+    assert maximise(problem, optimum.estimate, tolerance=1e-2).by_block is None
+
+
+@pytest.mark.parametrize("kernel", ["gaussian", kernels.Spline(n_basis=5, smoothing=3.0)])
+def test_weights_count_blocks_of_time_as_often_as_they_say(recording, kernel):
+    """Weights of 0 and 2 on two halves: the score of the second half vanishes at the optimum, penalty and ridge aside;
+    and weights of 1 change nothing."""
+    leak = None if isinstance(kernel, str) else LEAK
+    problem = make_problem(model(kernel, leak_rate=leak), recording, threads=1)
+    start = [0.1, np.log(120.0), np.log(LEAK)] if leak is None else [0.1] * 5
+    estimate = Estimate(first_estimate(problem).own, np.array(start))
+    blocks = time_blocks(problem.grid, 0.5 * problem.grid.duration_s)
+    assert blocks.n_blocks == 2
+    plain = maximise(problem, estimate)
+    ones = maximise(problem, estimate, weighting=Weighting(blocks, np.ones(2)))
+    np.testing.assert_allclose(ones.estimate.shared, plain.estimate.shared, rtol=1e-6, atol=1e-8)
+    second = maximise(problem, estimate, weighting=Weighting(blocks, np.array([0.0, 2.0])))
+    assert second.converged
+    sums = problem.evaluate(second.estimate, blocks=blocks)
+    pull = 2.0 * sums.score[1, :, 1:].sum(axis=0) - problem.penalty @ second.estimate.shared
+    size = np.sqrt(np.diag(second.local.information.shared))
+    np.testing.assert_allclose(pull / size, 0.0, atol=1e-4)
+    np.testing.assert_allclose(sums.score[1, :, 0], 0.0, atol=1e-3)
+    assert abs(second.estimate.shared[0] - plain.estimate.shared[0]) > 1e-4
+
+
+def test_a_concave_objective_is_climbed_by_newton_steps_alone(recording):
+    """Fixed leak, kernel linear in its coefficients, canonical link: five sweeps from no coupling."""
+    problem = make_problem(model(kernels.Spline(n_basis=5), leak_rate=LEAK), recording, threads=1)
+    assert problem.concave
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.zeros(5)))
+    assert optimum.converged
+    assert problem.clock.sweeps <= 7
+    assert not make_problem(model("flat"), recording, threads=1).concave
+    assert not make_problem(model("gaussian", leak_rate=LEAK), recording, threads=1).concave

@@ -8,7 +8,7 @@ from worlds import LEAK, NOTHING, model, simulated
 
 import kernelfit as kf
 from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
-from kernelfit.fitting.covariance import FEWEST_BLOCKS
+from kernelfit.fitting.by_block import FEWEST_BLOCKS
 from kernelfit.recording.recording import Recording
 
 quiet = pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
