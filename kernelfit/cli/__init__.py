@@ -17,7 +17,7 @@ import typer
 from typer.main import get_command
 
 from kernelfit.cli._console import silence, tell, warnings_as_lines
-from kernelfit.cli._usage import USAGE_ERROR, option_lines, usage_lines
+from kernelfit.cli._usage import USAGE_ERROR, PlainUsage, option_lines, usage_lines
 from kernelfit.cli.demo import demo_command
 from kernelfit.cli.fit import fit_command
 from kernelfit.cli.inspect import inspect_command
@@ -29,9 +29,9 @@ __all__ = ["app", "main"]
 DONE, OWN_FAULT, WRONG_INPUT, NOT_CONVERGED, INTERRUPTED = 0, 1, 2, 3, 130
 
 app = typer.Typer(name="kernelfit", add_completion=False, rich_markup_mode=None, pretty_exceptions_enable=False)
-app.command("inspect")(inspect_command)
-app.command("fit")(fit_command)
-app.command("demo")(demo_command)
+app.command("inspect", cls=PlainUsage, short_help="Look at a recording before any fit.")(inspect_command)
+app.command("fit", cls=PlainUsage)(fit_command)
+app.command("demo", cls=PlainUsage)(demo_command)
 
 
 def _show_version(asked: bool) -> None:
@@ -49,7 +49,8 @@ def _kernelfit(
 ) -> None:
     """How strongly, how far and for how long a spike at one site changes firing at others.
 
-    Start with `kernelfit demo`, then `kernelfit inspect` and `kernelfit fit` on your own tables.
+    Start with `kernelfit demo`, then `kernelfit inspect` and `kernelfit fit` on your own tables. Each command tells
+    more: `kernelfit fit --help`.
     """
 
 

@@ -21,27 +21,40 @@ CLOCK = "seconds on the recording's clock, such as 60"
 
 SpikesArgument: TypeAlias = Annotated[
     Path,
-    typer.Argument(metavar="SPIKES", show_default=False, help="Table of spikes: columns unit, time_s."),
+    typer.Argument(metavar="SPIKES", show_default=False, help="Table of spikes, one row each: columns unit, time_s."),
 ]
 SitesArgument: TypeAlias = Annotated[
     Path,
     typer.Argument(
         metavar="SITES",
         show_default=False,
-        help="Table of sites: columns unit, x_um, optional y_um, z_um, group.",
+        help="Table of sites, one row for each unit: columns unit, x_um, optional y_um, z_um, group, source_only.",
     ),
 ]
 WindowsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option("--windows", metavar="FILE", help="Observed stretches: columns start_s, stop_s."),
+    typer.Option(
+        "--windows",
+        metavar="FILE",
+        help="Table of observed stretches: columns start_s, stop_s, optional condition, trial. Without it: one "
+        "window over all spikes.",
+    ),
 ]
 ExclusionsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option("--exclusions", metavar="FILE", help="Stretches that are no data: columns start_s, stop_s."),
+    typer.Option(
+        "--exclusions",
+        metavar="FILE",
+        help="Table of stretches that are not data, such as artefacts: columns start_s, stop_s.",
+    ),
 ]
 ExcludePairsOption: TypeAlias = Annotated[
     Path | None,
-    typer.Option("--exclude-pairs", metavar="FILE", help="Pairs left out of the kernel: columns unit_a, unit_b."),
+    typer.Option(
+        "--exclude-pairs",
+        metavar="FILE",
+        help="Table of pairs of units to leave out of the kernel: columns unit_a, unit_b.",
+    ),
 ]
 TimeUnitOption: TypeAlias = Annotated[
     str,
@@ -58,7 +71,7 @@ SamplingRateOption: TypeAlias = Annotated[
         "--sampling-rate-hz",
         metavar="HZ",
         parser=above_zero("--sampling-rate-hz", "samples per second, such as 20000"),
-        help="Samples per second, for times in samples.",
+        help="Samples per second; needed with --time-unit samples.",
     ),
 ]
 LengthUnitOption: TypeAlias = Annotated[
@@ -76,7 +89,7 @@ DecimalOption: TypeAlias = Annotated[
         "--decimal",
         metavar="MARK",
         parser=one_of("--decimal", DECIMALS),
-        help="Decimal mark in the tables: . or ,",
+        help="Decimal mark in the tables: point (.) or comma (,).",
     ),
 ]
 DropDuplicatesOption: TypeAlias = Annotated[
@@ -89,33 +102,46 @@ MinSpikesOption: TypeAlias = Annotated[
         "--min-spikes",
         metavar="N",
         parser=whole("--min-spikes", 0),
-        help="Leave out units with fewer spikes in the windows.",
+        help="Leave out units with fewer spikes than this in the windows.",
     ),
 ]
 StartOption: TypeAlias = Annotated[
     float | None,
     typer.Option(
-        "--start-s", metavar="S", parser=number("--start-s", CLOCK), help="Use the windows from this time on."
+        "--start-s",
+        metavar="S",
+        parser=number("--start-s", CLOCK),
+        help="Use the recording from this time on, in seconds on its own clock.",
     ),
 ]
 StopOption: TypeAlias = Annotated[
     float | None,
-    typer.Option("--stop-s", metavar="S", parser=number("--stop-s", CLOCK), help="Use the windows up to this time."),
+    typer.Option(
+        "--stop-s",
+        metavar="S",
+        parser=number("--stop-s", CLOCK),
+        help="Use the recording up to this time, in seconds on its own clock.",
+    ),
 ]
 UnitsOption: TypeAlias = Annotated[
     list[str] | None,
-    typer.Option("--units", metavar="IDS", help="Keep only these: ids with commas between; may be repeated."),
+    typer.Option("--units", metavar="IDS", help="Keep only these units: ids with commas between. May be repeated."),
 ]
 SourceOnlyOption: TypeAlias = Annotated[
     list[str] | None,
-    typer.Option("--source-only", metavar="IDS", help="Units that drive others and are not explained."),
+    typer.Option(
+        "--source-only",
+        metavar="IDS",
+        help="Let these units drive others without being explained themselves: ids with commas between. May be "
+        "repeated.",
+    ),
 ]
 LeaveOutOption: TypeAlias = Annotated[
     list[str] | None,
-    typer.Option("--leave-out", metavar="IDS", help="Leave out these: ids with commas between; may be repeated."),
+    typer.Option("--leave-out", metavar="IDS", help="Leave out these units: ids with commas between. May be repeated."),
 ]
 OverwriteOption: TypeAlias = Annotated[
-    bool, typer.Option("--overwrite", help="Replace earlier results in the output folder.")
+    bool, typer.Option("--overwrite", help="Replace earlier results of kernelfit in that folder.")
 ]
 
 

@@ -7,6 +7,7 @@ from difflib import get_close_matches
 from typing import Any
 
 import typer
+from typer.core import TyperCommand
 
 # The option parser lives in a package of its own or inside typer, depending on typer's version; its root of
 # wrong calls is reached through the one class that typer has always exported.
@@ -36,6 +37,14 @@ OPTIONS = {
 }
 _WORDS_TOO = {"decimal", "kernel", "covariance"}  # arguments only where a value follows
 _NAMED = re.compile(r"(?<![-\w])(" + "|".join(OPTIONS) + r")\b(?!-)(\s?=)?")
+
+
+class PlainUsage(TyperCommand):
+    """A command whose usage line reads as it is typed: the arguments, then the options."""
+
+    def collect_usage_pieces(self, ctx: Any) -> list[str]:
+        """Arguments by their placeholders, without the braces that typer puts around them."""
+        return [*_arguments(self), self.options_metavar or "[OPTIONS]"]
 
 
 def option_lines(message: str) -> list[str]:
@@ -89,8 +98,11 @@ def _sentence(message: str) -> str:
 
 
 def _synopsis(context: Any) -> str:
-    names = [p.metavar or p.name for p in context.command.params if p.param_type_name == "argument"]
-    return " ".join([str(context.command_path), *map(str, names)])
+    return " ".join([str(context.command_path), *_arguments(context.command)])
+
+
+def _arguments(command: Any) -> list[str]:
+    return [_shown(p) for p in command.params if p.param_type_name == "argument"]
 
 
 def _options(context: Any) -> list[str]:

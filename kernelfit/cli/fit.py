@@ -72,7 +72,7 @@ def fit_command(
             "--spline-basis",
             metavar="N",
             parser=whole("--spline-basis", 4),
-            help="Number of coefficients of the spline.",
+            help=f"With --kernel spline: number of coefficients, 4 or more.  [default: {Spline().n_basis}]",
         ),
     ] = None,
     smoothing: Annotated[
@@ -81,7 +81,8 @@ def fit_command(
             "--smoothing",
             metavar="X",
             parser=from_zero("--smoothing", "the weight of the penalty, such as 10"),
-            help="Weight of the spline's penalty on differences of neighbouring coefficients.",
+            help="With --kernel spline: weight of the penalty on differences between neighbouring coefficients."
+            f"  [default: {Spline().smoothing:g}]",
         ),
     ] = None,
     bin_ms: Annotated[
@@ -90,7 +91,7 @@ def fit_command(
             "--bin-ms",
             metavar="MS",
             parser=above_zero("--bin-ms", "milliseconds, such as 1"),
-            help="Bin width; `kernelfit inspect` suggests one.",
+            help="Bin width in milliseconds; `kernelfit inspect` suggests one.",
         ),
     ] = 1.0,
     link: Annotated[
@@ -99,7 +100,7 @@ def fit_command(
             "--link",
             metavar="NAME",
             parser=one_of("--link", LINKS),
-            help=f"From drive to rate: {', '.join(LINKS)}.",
+            help=f"How the drive becomes a rate: {', '.join(LINKS)}.",
         ),
     ] = "exp",
     leak_rate: Annotated[
@@ -108,7 +109,7 @@ def fit_command(
             "--leak-rate",
             metavar="PER_S",
             parser=above_zero("--leak-rate", "1/s, such as 50 for a time constant of 20 ms"),
-            help="Fix the leak rate (1/s) instead of fitting it.",
+            help="Fix the leak rate, in 1/s, instead of fitting it; 50 is a time constant of 20 ms.",
         ),
     ] = None,
     max_distance_um: Annotated[
@@ -117,7 +118,7 @@ def fit_command(
             "--max-distance-um",
             metavar="UM",
             parser=above_zero("--max-distance-um", "micrometres, such as 800"),
-            help="Leave out pairs further apart.",
+            help="Leave out pairs further apart than this, in µm. Without it: all pairs.",
         ),
     ] = None,
     same_site: Annotated[
@@ -126,7 +127,7 @@ def fit_command(
             "--same-site",
             metavar="HOW",
             parser=one_of("--same-site", SAME_SITE),
-            help="Pairs on one site: exclude, own (a coefficient of their own) or kernel (like any pair).",
+            help="Pairs of units on one site: exclude, own (one coefficient of their own) or kernel (like any pair).",
         ),
     ] = "exclude",
     after_spike: Annotated[
@@ -144,7 +145,8 @@ def fit_command(
             "--warm-up-s",
             metavar="S",
             parser=from_zero("--warm-up-s", "seconds, such as 1"),
-            help="Time after each window's start and each exclusion that only drives and is not explained.",
+            help="Seconds after the start of each window and the end of each exclusion that drive and are not "
+            "themselves explained.",
         ),
     ] = 0.0,
     covariance: Annotated[
@@ -153,7 +155,7 @@ def fit_command(
             "--covariance",
             metavar="KIND",
             parser=one_of("--covariance", COVARIANCES),
-            help="Intervals of the report: robust (from blocks of time) or model (right if the model is).",
+            help="Intervals in the results: robust (from blocks of time) or model (right if the model is).",
         ),
     ] = "robust",
     units: UnitsOption = None,
@@ -169,18 +171,29 @@ def fit_command(
     drop_duplicates: DropDuplicatesOption = False,
     threads: Annotated[
         int | None,
-        typer.Option("--threads", metavar="N", parser=whole("--threads", 1), help="Threads; all cores unless stated."),
+        typer.Option(
+            "--threads",
+            metavar="N",
+            parser=whole("--threads", 1),
+            help="Number of threads. Without it: as many as there are cores.",
+        ),
     ] = None,
     seed: Annotated[
         int,
         typer.Option(
-            "--seed", metavar="N", parser=whole("--seed", 0), help="Of the draws in the tests of coupling and fit."
+            "--seed",
+            metavar="N",
+            parser=whole("--seed", 0),
+            help="Seed of the random draws in the tests of coupling and of the fit; same seed, same numbers.",
         ),
     ] = 0,
 ) -> int:
     """Fit coupling against distance; write a report and tables.
 
-    What is found: the coupling kernel, the leak rate, a baseline and after-spike effects for every unit.
+    Finds the coupling kernel, the leak rate, and the baseline and after-spike effects of every unit. The folder of
+    the results holds report.html, fit.json, parameters.csv, baselines.csv, kernel.csv, goodness.csv and the figures.
+
+    Example: kernelfit fit spikes.csv sites.csv --bin-ms 5 --out results
 
     Exit status 0: done. 2: the input or the call is wrong. 3: not converged; all is written, and marked.
     """

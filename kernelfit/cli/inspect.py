@@ -51,7 +51,11 @@ def inspect_command(
     exclude_pairs: ExcludePairsOption = None,
     out: Annotated[
         Path | None,
-        typer.Option("--out", metavar="DIR", help="Folder for a page with pictures and the proposals; new or empty."),
+        typer.Option(
+            "--out",
+            metavar="DIR",
+            help="Folder for the page and the proposals; new or empty. Without it: text on the screen only.",
+        ),
     ] = None,
     overwrite: OverwriteOption = False,
     raster_start_s: Annotated[
@@ -60,7 +64,7 @@ def inspect_command(
             "--raster-start-s",
             metavar="S",
             parser=number("--raster-start-s", CLOCK),
-            help="Where the raster of the page starts; a typical stretch unless stated.",
+            help="With --out: where the raster picture starts, in seconds. Without it: at a typical stretch.",
         ),
     ] = None,
     units: UnitsOption = None,
@@ -79,7 +83,7 @@ def inspect_command(
             "--seed",
             metavar="N",
             parser=whole("--seed", 0),
-            help="Of the random shifts that tell artefacts from chance.",
+            help="Seed of the random shifts that tell artefacts from chance; same seed, same numbers.",
         ),
     ] = 0,
 ) -> int:
@@ -87,6 +91,8 @@ def inspect_command(
 
     With --out the folder holds inspection.html, proposed_exclusions.csv (for --exclusions), proposed_pairs.csv (for
     --exclude-pairs), and the numbers and pictures behind the page.
+
+    Example: kernelfit inspect spikes.csv sites.csv --out look
 
     Exit status 0: done, whatever was found. 2: the input or the call is wrong.
     """

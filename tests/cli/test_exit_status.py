@@ -57,6 +57,42 @@ def test_help_is_plain_and_on_standard_output(command: list[str], capsys: pytest
     assert printed.err == ""
 
 
+@pytest.mark.parametrize(
+    ("command", "usage"),
+    [
+        (["inspect"], "Usage: kernelfit inspect SPIKES SITES [OPTIONS]"),
+        (["fit"], "Usage: kernelfit fit SPIKES SITES [OPTIONS]"),
+        (["demo"], "Usage: kernelfit demo [OPTIONS]"),
+    ],
+)
+def test_usage_reads_as_it_is_typed(command: list[str], usage: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main([*command, "--help"]) == 0
+    shown = capsys.readouterr().out
+    assert shown.splitlines()[0] == usage
+    assert not set("{}") & set(shown)
+
+
+def test_the_list_of_commands_is_not_cut_short(capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["--help"]) == 0
+    assert "..." not in capsys.readouterr().out.replace("[ARGS]...", "")
+
+
+@pytest.mark.parametrize("command", ["inspect", "fit"])
+def test_numbers_of_options_have_their_unit_and_their_default(command: str, capsys: pytest.CaptureFixture[str]) -> None:
+    """An option with a placeholder says in which unit, and what holds without it; tables and ids need neither."""
+    assert main([command, "--help"]) == 0
+    entries = capsys.readouterr().out.partition("Options:")[2].split("\n  --")[1:]
+    said = {"--" + entry.split()[0]: " ".join(entry.split()) for entry in entries}
+    units = {"--bin-ms": "milliseconds", "--warm-up-s": "Seconds", "--start-s": "seconds", "--stop-s": "seconds"}
+    units |= {"--leak-rate": "1/s", "--max-distance-um": "µm", "--raster-start-s": "seconds"}
+    for option, unit in units.items():
+        assert option not in said or unit in said[option]
+    for option in ("--kernel", "--bin-ms", "--link", "--same-site", "--after-spike", "--warm-up-s", "--covariance"):
+        assert option not in said or "[default: " in said[option]
+    for option in ("--max-distance-um", "--threads", "--windows", "--raster-start-s"):
+        assert option not in said or "Without it" in said[option]
+
+
 def test_every_option_of_fit_has_a_help_text(capsys: pytest.CaptureFixture[str]) -> None:
     main(["fit", "--help"])
     options = [line for line in capsys.readouterr().out.splitlines() if line.startswith("  --")]
