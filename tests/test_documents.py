@@ -4,11 +4,14 @@ from __future__ import annotations
 
 import importlib
 import re
+import shlex
 from pathlib import Path
 
 import numpy as np
 import pytest
 
+import kernelfit as kf
+from kernelfit.cli import main
 from kernelfit.kernels.base import DistanceRange
 
 ROOT = Path(__file__).resolve().parent.parent
@@ -32,6 +35,47 @@ def test_the_example_of_a_kernel_family_is_a_kernel_with_the_right_derivative(
         move = step * np.eye(2)[k]
         rise = family.value(theta + move, distance, span) - family.value(theta - move, distance, span)
         np.testing.assert_allclose(row, rise / (2 * step), atol=1e-8)
+
+
+@pytest.fixture(scope="module")
+def tables(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A folder with spikes.csv, sites.csv and windows.csv of nine coupled units, half a minute with a pause."""
+    folder = tmp_path_factory.mktemp("tables")
+    place = 100.0 * np.stack(np.meshgrid(np.arange(3), np.arange(3)), axis=-1).reshape(-1, 2)
+    law = kf.kernels.Gaussian().at(amplitude=0.3, length_um=120.0, reference_um=100.0)
+    recording = kf.simulate_recording(place, law, 3.0, 30.0, 30.0, 5)
+    recording.spikes.to_csv(folder / "spikes.csv", index=False)
+    recording.units[["x_um", "y_um"]].to_csv(folder / "sites.csv")
+    (folder / "windows.csv").write_text("start_s,stop_s\n0,14\n15,30\n")
+    return folder
+
+
+def blocks_of(document: str, language: str = "") -> list[str]:
+    text = (ROOT / document).read_text(encoding="utf-8")
+    return re.findall(rf"^```{language}\n(.*?)^```", text, flags=re.DOTALL | re.MULTILINE)
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
+def test_the_commands_of_the_first_page_run_as_they_stand(tables: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.chdir(tables)
+    lines = [line for block in blocks_of("README.md") for line in block.splitlines() if line.startswith("kernelfit ")]
+    assert len(lines) == 2
+    for line in lines:
+        assert main(shlex.split(line)[1:]) == 0, line
+    assert (tables / "look" / "proposed_exclusions.csv").is_file()
+    assert (tables / "results" / "report.html").is_file()
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
+def test_the_python_example_of_the_first_page_runs_as_it_stands(
+    tables: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.chdir(tables)
+    (example,) = blocks_of("README.md", "python")
+    names: dict[str, object] = {}
+    exec(compile(example, "README.md", "exec"), names)
+    assert kf.load_fit("fit.json").duration_s == pytest.approx(29.0)
+    assert "amplitude" in capsys.readouterr().out
 
 
 @pytest.mark.parametrize("document", sorted(ROOT.glob("*.md")), ids=lambda p: p.name)
