@@ -200,13 +200,19 @@ class CouplingFit:
         ----------
         distances_um : (m,) µm
         level : coverage, strictly between 0 and 1
-        simultaneous : True for a sup-t band that covers the whole curve at once
+        simultaneous : False: at each distance by itself the interval covers J with probability `level`. True: a sup-t
+            band that covers J at all the distances asked for at once. It covers these and no others: for the whole
+            curve ask for a grid that is fine beside the kernel's length, over the range of `pairs_by_distance`; the
+            band of a single distance is its pointwise interval
 
         Returns
         -------
-        DataFrame : distance_um, estimate, lower, upper. Where no coupling was found the band is widened for the search
-            over length and leak; a parameter at its bound is taken as known; between the ends of a radius' interval
-            the band holds the amplitude and zero. NaN where nothing has a standard error
+        DataFrame : distance_um, estimate, lower, upper, a row for each distance asked for. NaN below the smallest and
+            above the largest distance at which a firing unit has a partner: nothing was recorded there
+            (`fit.kernel` extrapolates). Gaps between those two are bridged by the kernel's formula. Where no coupling
+            was found the band is widened for the search over length and leak; a parameter at its bound is taken as
+            known; between the ends of a radius' interval the band holds the amplitude and zero. NaN where nothing has
+            a standard error
 
         Raises
         ------
@@ -237,8 +243,12 @@ class CouplingFit:
         curves[self.targets] = np.exp(self.own[:, 1:] @ traces)
         return curves
 
-    def after_spike_band(self, unit: str, lags_s: FloatArray, level: float = LEVEL) -> pd.DataFrame | Unavailable:
-        """One unit's after-spike curve with a pointwise band: lag_s, estimate, lower, upper (rate multipliers).
+    def after_spike_band(
+        self, unit: str, lags_s: FloatArray, level: float = LEVEL, simultaneous: bool = False
+    ) -> pd.DataFrame | Unavailable:
+        """One unit's after-spike curve with a band: lag_s, estimate, lower, upper (rate multipliers).
+
+        `simultaneous` as in `kernel_band`: True covers the lags asked for all at once.
 
         Raises
         ------
@@ -248,7 +258,7 @@ class CouplingFit:
 
         if self.own.shape[1] == 1:
             return Unavailable("the model has no after-spike term")
-        return after_spike_band(self, self._target_of(unit), np.asarray(lags_s), level)
+        return after_spike_band(self, self._target_of(unit), np.asarray(lags_s), level, simultaneous)
 
     def _target_of(self, unit: str) -> int:
         if unit not in self.unit_ids:

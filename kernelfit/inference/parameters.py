@@ -7,11 +7,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 import pandas as pd
+from scipy.spatial.distance import cdist
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.inference.bands import standard_errors, sup_t_critical
 from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
+from kernelfit.kernels.base import SAME_DISTANCE_UM
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -159,6 +161,18 @@ def baseline_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.D
 
 def kernel_band(fit: CouplingFit, d_um: FloatArray, level: float, simultaneous: bool) -> pd.DataFrame:
     """distance_um, estimate, lower, upper of the fitted kernel; see `CouplingFit.kernel_band`."""
+    estimate, lower, upper = (np.full(d_um.size, np.nan) for _ in range(3))
+    near, far = distances_with_pairs(fit)
+    inside = (d_um >= near - SAME_DISTANCE_UM) & (d_um <= far + SAME_DISTANCE_UM)
+    if inside.any():
+        estimate[inside], lower[inside], upper[inside] = _band(fit, d_um[inside], level, simultaneous)
+    return pd.DataFrame({"distance_um": d_um, "estimate": estimate, "lower": lower, "upper": upper})
+
+
+def _band(
+    fit: CouplingFit, d_um: FloatArray, level: float, simultaneous: bool
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Estimate and both ends of the band at distances where the array has pairs, each (m,)."""
     n = fit.n_kernel
     estimate = fit.kernel(d_um)
     gradient = fit.model.kernel.gradient(fit.shared[:n], d_um, fit.span)
@@ -178,14 +192,31 @@ def kernel_band(fit: CouplingFit, d_um: FloatArray, level: float, simultaneous: 
         spread = float(critical * standard_errors(slope, covariance)[0])
         between = (d_um > fit.radius_interval[0]) & (d_um < fit.radius_interval[1])
         lower[between], upper[between] = min(within - spread, 0.0), max(within + spread, 0.0)
-    return pd.DataFrame({"distance_um": d_um, "estimate": estimate, "lower": lower, "upper": upper})
+    return estimate, lower, upper
 
 
-def after_spike_band(fit: CouplingFit, target: int, lags_s: FloatArray, level: float) -> pd.DataFrame:
+def distances_with_pairs(fit: CouplingFit) -> tuple[float, float]:
+    """Smallest and largest distance (µm) of the kernel's pairs whose source fires: beyond, nothing was recorded."""
+    near, far = fit.span.smallest_um, fit.span.largest_um
+    if (fit.counts > 0).all():
+        return near, far
+    firing = np.flatnonzero(fit.counts > 0)
+    distance = cdist(fit.positions[fit.targets], fit.positions[firing])
+    in_range = (distance >= near - SAME_DISTANCE_UM) & (distance <= far + SAME_DISTANCE_UM)
+    kept = in_range & (fit.targets[:, None] != firing)
+    return float(distance[kept].min()), float(distance[kept].max())
+
+
+def after_spike_band(
+    fit: CouplingFit, target: int, lags_s: FloatArray, level: float, simultaneous: bool
+) -> pd.DataFrame:
     """lag_s, estimate, lower, upper of one unit's after-spike rate multiplier."""
     traces = np.exp(-lags_s[None, :] / fit.after_spike_constants_s[:, None])
     covariance = fit.uncertainty.own(fit.covariance_kind)[target, 1:, 1:]
+    freedom = fit.uncertainty.degrees_of_freedom(fit.covariance_kind)
     h = fit.own[target, 1:] @ traces
-    critical = critical_value(level, fit.uncertainty.degrees_of_freedom(fit.covariance_kind))
+    critical = critical_value(level, freedom)
+    if simultaneous:
+        critical = sup_t_critical(traces, covariance, level, freedom)
     half = critical * standard_errors(traces, covariance)
     return pd.DataFrame({"lag_s": lags_s, "estimate": np.exp(h), "lower": np.exp(h - half), "upper": np.exp(h + half)})

@@ -134,7 +134,7 @@ def test_the_problem_of_a_fit_is_the_one_it_was_fitted_to(fit, tmp_path):
 
 
 def test_bands_widen_when_they_are_to_cover_the_whole_curve(fit):
-    d = np.linspace(60, 280, 12)
+    d = np.linspace(fit.span.smallest_um, fit.span.largest_um, 12)
     one, all_at_once = fit.kernel_band(d), fit.kernel_band(d, simultaneous=True)
     assert list(one.columns) == ["distance_um", "estimate", "lower", "upper"]
     assert isinstance(one.index, type(fit.pairs_by_distance.index))
@@ -143,9 +143,40 @@ def test_bands_widen_when_they_are_to_cover_the_whole_curve(fit):
     assert (fit.kernel_band(d, level=0.8)["upper"] < one["upper"]).all()
     at_reference = fit.kernel_band(np.array([fit.reference_distance_um]))
     assert at_reference["lower"][0] == pytest.approx(fit.parameters.loc["amplitude", "lower"])
+    one_distance = fit.kernel_band(d[3:4], simultaneous=True)  # covers the distances asked for, and this is one
+    assert one_distance["upper"][0] == pytest.approx(one["upper"][3], rel=0.01)
     for level in (0.0, 1.0, -0.5, 95.0):
         with pytest.raises(ArgumentError, match="strictly between 0 and 1"):
             fit.kernel_band(d, level=level)
+
+
+def test_no_band_where_the_array_has_no_pairs(fit):
+    near, far = fit.span.smallest_um, fit.span.largest_um
+    inside = np.array([near, 0.5 * (near + far), far])
+    beyond = np.array([0.0, near - 0.01, far + 0.01, 5 * far])
+    for simultaneous in (False, True):
+        band = fit.kernel_band(np.concatenate([beyond, inside]), simultaneous=simultaneous)
+        assert len(band) == 7
+        np.testing.assert_array_equal(band["distance_um"][:4], beyond)
+        assert band.loc[:3, ["estimate", "lower", "upper"]].isna().all(axis=None)
+        # what lies beyond does not widen the simultaneous band either
+        pd.testing.assert_frame_equal(
+            band[4:].reset_index(drop=True), fit.kernel_band(inside, simultaneous=simultaneous)
+        )
+    assert fit.kernel_band(beyond).drop(columns="distance_um").isna().all(axis=None)
+    assert np.isfinite(fit.kernel(beyond)).all()  # the formula itself goes on
+
+
+@quiet
+def test_distances_of_a_silent_source_have_no_band():
+    """Unit 0 stands far off and is silent: its pairs are in the kernel's range, and nothing was recorded at them."""
+    positions = np.array([[900.0, 0.0], [0.0, 0.0], [100.0, 0.0], [0.0, 130.0], [110.0, 140.0]])
+    driven = kf.simulate_recording(positions[1:], NOTHING, 8.0, LEAK, 20.0, 4, bin_width=BIN_S)
+    trains = {"far": [], **{u: driven.spike_times(u) for u in driven.unit_ids}}
+    fit = model("flat").fit(Recording.from_arrays(trains, positions, driven.window_bounds), threads=2)
+    assert fit.span.largest_um > 900.0
+    band = fit.kernel_band(np.array([100.0, 178.0, 800.0, 900.0]))
+    assert list(np.isfinite(band["lower"])) == [True, True, False, False]
 
 
 @quiet
@@ -155,7 +186,7 @@ def test_the_band_of_a_disc_knows_that_its_radius_is_estimated():
     fit = model("disc").fit(simulated(3, law, duration_s=30.0), threads=2)
     low, high = fit.parameters.loc["length_um", ["lower", "upper"]]
     row = fit.parameters.loc["amplitude"]
-    d = np.array([0.5 * low, low, 0.5 * (low + high), high, 2.0 * high])
+    d = np.array([fit.span.smallest_um, low, 0.5 * (low + high), high, fit.span.largest_um])
     band = fit.kernel_band(d)
     np.testing.assert_allclose(band["lower"], [row["lower"], row["lower"], 0.0, 0.0, 0.0])
     np.testing.assert_allclose(band["upper"], [row["upper"], row["upper"], row["upper"], 0.0, 0.0])
@@ -366,7 +397,7 @@ def test_without_coupling_length_and_leak_are_not_numbers_and_the_reason_stands_
 
 
 def test_without_coupling_the_band_holds_zero(uncoupled):
-    band = uncoupled[0].kernel_band(np.array([100.0, 200.0, 300.0]))
+    band = uncoupled[0].kernel_band(np.array([100.0, 150.0, 200.0]))
     assert ((band["lower"] <= 0) & (band["upper"] >= 0)).all()
 
 

@@ -9,7 +9,7 @@ from hypothesis import strategies as st
 from scipy.integrate import quad
 from scipy.stats import chi, norm
 
-from kernelfit.inference.bands import N_DRAWS, sidak_critical, standard_errors, sup_t_critical
+from kernelfit.inference.bands import N_DRAWS, scheffe_critical, sidak_critical, standard_errors, sup_t_critical
 from kernelfit.inference.intervals import critical_value
 
 # A critical value here is the 95 % quantile of N_DRAWS draws: its standard error is sqrt(0.05 0.95 / N_DRAWS) over the
@@ -54,7 +54,28 @@ def test_sidak_table(n):
         assert sidak_critical(n, level) == pytest.approx(printed, abs=5e-7)
 
 
-@pytest.mark.parametrize("n", [1, 2, 3, 5, 10, 20, 50])
+# Bonferroni at 95 %, Phi^-1(1 - 0.025/K): the same table. Scheffe (1953), Biometrika 40, 87: sqrt of the chi-square.
+BONFERRONI = {2: 2.241403, 5: 2.575829, 10: 2.807034, 20: 3.023341, 50: 3.290527, 100: 3.480756}
+SCHEFFE = {2: 2.447747, 5: 3.327236, 10: 4.278672}
+
+
+@pytest.mark.parametrize("n", SCHEFFE)
+def test_published_order_of_bands_for_independent_points(n):
+    """pointwise <= sup-t <= Sidak <= Bonferroni <= Scheffe, at their printed values."""
+    assert scheffe_critical(n, 0.95) == pytest.approx(SCHEFFE[n], abs=5e-7)
+    got = sup_t_critical(np.eye(n), np.eye(n), 0.95, np.inf)
+    error = 4 * monte_carlo_error(SIDAK[n][1], n, 0.0)
+    assert critical_value(0.95, np.inf) <= got <= SIDAK[n][1] + error < SCHEFFE[n]
+    assert SIDAK[n][1] <= BONFERRONI[n] <= SCHEFFE[n]
+
+
+def test_scheffe_with_few_degrees_of_freedom():
+    """One parameter: the t quantile. Two, and ten degrees of freedom: sqrt(2 x 4.103), Fisher and Yates' 5 % F."""
+    assert scheffe_critical(1, 0.95, 9) == pytest.approx(critical_value(0.95, 9))
+    assert scheffe_critical(2, 0.95, 10) == pytest.approx(np.sqrt(2 * 4.103), abs=1e-3)
+
+
+@pytest.mark.parametrize("n", [1, 2, 3, 5, 10, 20, 50, 100])
 def test_independent_points_need_sidaks_value(n):
     got = sup_t_critical(np.eye(n), np.diag(np.arange(1.0, n + 1)), 0.95, np.inf)
     assert got == pytest.approx(SIDAK[n][1], abs=4 * monte_carlo_error(SIDAK[n][1], n, 0.0))
@@ -108,12 +129,15 @@ def test_few_degrees_of_freedom_widen_the_band(n, freedom):
     assert density > 0
 
 
-def test_bands_cover_simultaneously_and_pointwise_ones_do_not():
-    """Five independent points: 1.96-bands cover all of them with probability 0.77378 (0.95^5), sup-t with 0.95."""
-    z = np.abs(np.random.default_rng(1).standard_normal((40_000, 5))).max(axis=1)
-    error = 4 * np.sqrt(0.25 / z.size)
-    assert np.mean(z <= critical_value(0.95, np.inf)) == pytest.approx(0.77378, abs=error)
-    assert np.mean(z <= sup_t_critical(np.eye(5), np.eye(5), 0.95, np.inf)) == pytest.approx(0.95, abs=0.01)
+@pytest.mark.parametrize(("n", "covered"), [(5, 0.77378), (10, 0.59874), (20, 0.35849), (50, 0.07694)])
+def test_bands_cover_simultaneously_and_pointwise_ones_do_not(n, covered):
+    """Independent points: 1.96-bands cover all of them with probability 0.95^n, sup-t ones with 0.95 (exact)."""
+    z = np.abs(np.random.default_rng(1).standard_normal((40_000, n))).max(axis=1)
+    assert 0.95**n == pytest.approx(covered, abs=6e-6)
+    error = 4 * np.sqrt(covered * (1 - covered) / z.size)
+    assert np.mean(z <= critical_value(0.95, np.inf)) == pytest.approx(covered, abs=error)
+    error = 4 * np.sqrt(0.95 * 0.05 * (1 / z.size + 1 / N_DRAWS))  # of this simulation, and of the critical value's own
+    assert np.mean(z <= sup_t_critical(np.eye(n), np.eye(n), 0.95, np.inf)) == pytest.approx(0.95, abs=error)
 
 
 @settings(max_examples=40, deadline=None)
@@ -124,7 +148,7 @@ def test_bands_cover_simultaneously_and_pointwise_ones_do_not():
     level=st.sampled_from([0.8, 0.9, 0.95, 0.99]),
 )
 def test_order_of_bands(n_parameters, n_points, seed, level):
-    """pointwise <= sup-t <= Sidak <= Bonferroni, whatever the curve; sup-t within its Monte-Carlo error."""
+    """pointwise <= sup-t <= Sidak <= Bonferroni, and <= Scheffe, whatever the curve; sup-t within its own error."""
     rng = np.random.default_rng(seed)
     root = rng.normal(size=(n_parameters, n_parameters))
     gradient = rng.normal(size=(n_parameters, n_points))
@@ -135,6 +159,17 @@ def test_order_of_bands(n_parameters, n_points, seed, level):
     error = np.sqrt(level * (1 - level) / N_DRAWS) / density
     assert critical_value(level, np.inf) <= sup_t <= sidak_critical(n_points, level) + 5 * error
     assert sidak_critical(n_points, level) <= bonferroni + 1e-12
+    rank = min(n_parameters, n_points)
+    scheffe = scheffe_critical(rank, level)  # sup-t over all directions has its density at the quantile: chi's
+    assert sup_t <= scheffe + 5 * np.sqrt(level * (1 - level) / N_DRAWS) / chi.pdf(scheffe, rank)
+
+
+@pytest.mark.parametrize("freedom", [np.inf, 12.0])
+def test_a_fine_grid_needs_hardly_more_than_a_coarse_one(freedom):
+    """A smooth curve: neighbours move together, so the band of 4000 points is that of 60, within its own error."""
+    coarse, fine = np.linspace(0, 3, 60), np.linspace(0, 3, 4000)
+    bands = [sup_t_critical(np.stack([np.exp(-x), x * np.exp(-x)]), np.eye(2), 0.95, freedom) for x in (coarse, fine)]
+    assert bands[0] <= bands[1] <= 1.005 * bands[0]
 
 
 def test_the_same_seed_gives_the_same_band():
