@@ -23,6 +23,7 @@ from kernelfit.recording.recording import Origin, Recording
 
 if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness
+    from kernelfit.inference.influence import Influence
 
 LEVEL = 0.95
 SAME_LIKELIHOOD = 1e-9  # relative: sums in another order differ by less, another recording by more
@@ -401,6 +402,22 @@ class CouplingFit:
         here = (grid.event_bin >= at) & (grid.event_bin < at + n)
         counts[grid.event_bin[here] - at, grid.event_unit[here]] = grid.event_count[here]
         return FittedRates(grid.window_start_s[w] + (first + np.arange(n)) * width, rate, counts)
+
+    def influence(self, recording: Recording | None = None, *, threads: int | None = None) -> Influence:
+        """Which stretch of time, event and unit each parameter rests on: its change on leaving that out.
+
+        Parameters
+        ----------
+        recording : the one that was fitted; None where the fit was made in this process
+        threads : at most this many; None: as many as the machine has
+
+        Raises
+        ------
+        StorageError : no recording at hand, or another one
+        """
+        from kernelfit.inference.influence import influence
+
+        return influence(self, recording, threads)
 
     # --- copies, words, files -------------------------------------------------------------------------
 
