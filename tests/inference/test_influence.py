@@ -56,7 +56,7 @@ def test_one_step_is_close_to_a_fit_without_the_stretch(fit, found):
         assert row.converged
         error = fit.std_errors.loc[row.parameter, "robust"]
         if row.left_out == "stretch":
-            assert row.one_step == pytest.approx(row.refitted, abs=0.1 * error)
+            assert row.one_step == pytest.approx(row.refitted, abs=0.2 * error)
         else:
             assert 0.6 < row.one_step / row.refitted < 1.2
 
