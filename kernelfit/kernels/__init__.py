@@ -1,6 +1,6 @@
 """Distance laws: how coupling depends on distance. They know distances and parameters, and no data."""
 
-from kernelfit.kernels.base import DistanceRange, Kernel, KernelCurve, Parameter
+from kernelfit.kernels.base import DistanceRange, Kernel, KernelCurve, Parameter, SmoothingChoice
 from kernelfit.kernels.centre_surround import DifferenceOfGaussians, MexicanHat
 from kernelfit.kernels.disc import Disc
 from kernelfit.kernels.geometry import PairGeometry, pair_geometry, same_site_labels
@@ -22,6 +22,7 @@ __all__ = [
     "PairGeometry",
     "Parameter",
     "PowerLaw",
+    "SmoothingChoice",
     "Spline",
     "difference_penalty",
     "kernel_from",

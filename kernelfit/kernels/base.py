@@ -9,7 +9,7 @@ into what a reader wants.
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from dataclasses import dataclass, fields
+from dataclasses import dataclass, field, fields
 from itertools import product
 from typing import ClassVar, Literal
 
@@ -17,6 +17,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from kernelfit._typing import BoolArray, FloatArray
+from kernelfit._validation import is_number
 from kernelfit.errors import ArgumentError, NotIdentifiedError
 
 SHORTEST_IN_REFERENCES = 0.2  # lengths are bounded to [d_ref / 5, 5 x largest distance]
@@ -26,6 +27,8 @@ START_SEPARATION = np.log(2.0)  # starts closer than a factor of two would end i
 SAME_DISTANCE_UM = 1e-6  # distances closer than this are one: equal ones on a grid differ by rounding
 GRID_POINTS = {1: 24, 2: 12}  # points per shape parameter on the coarse grid; more than two parameters: 6
 EXPONENT_CEILING = 600.0  # exp of more overflows; reached only by lengths far below the bounds
+
+SmoothingChoice = Literal["likelihood", "validation"]  # who chooses a smoothing parameter where no number is given
 
 
 @dataclass(frozen=True, slots=True)
@@ -141,9 +144,24 @@ class Kernel(ABC):
 
     K is the number of parameters, m the number of distances. `theta` is always on the working scale; `span`
     says which distances the kernel is asked about and where amplitudes are stated.
+
+    Parameters
+    ----------
+    ridge : weight r of the penalty r/2 sum a^2 on the amplitudes a (every parameter that is not a shape), as if each
+        came from a normal distribution about 0 with standard deviation 1/sqrt(r) per spike; 0, the default: none
+
+    Raises
+    ------
+    ArgumentError : a ridge that is not a finite number, 0 or above
     """
 
     name: ClassVar[str]
+    ridge: float = field(default=0.0, kw_only=True)
+
+    def __post_init__(self) -> None:
+        if not (is_number(self.ridge) and self.ridge >= 0):
+            raise ArgumentError(f"ridge={self.ridge!r}: must be a finite number, 0 or above.")
+        object.__setattr__(self, "ridge", float(self.ridge))  # numpy's numbers cannot be written as JSON
 
     # --- what a family must say -----------------------------------------------------------------------
 
@@ -261,7 +279,32 @@ class Kernel(ABC):
 
     def penalty(self, span: DistanceRange) -> FloatArray | None:
         """(K, K) S of the quadratic penalty 1/2 theta' S theta taken off the log-likelihood, or None."""
+        if self.ridge == 0:
+            return None
+        return np.diag([0.0 if p.shape else self.ridge for p in self.parameters(span)])
+
+    def roughness(self, span: DistanceRange) -> FloatArray | None:
+        """(K, K) R of the part 1/2 smoothing theta' R theta of the penalty; None for a family without smoothing."""
         return None
+
+    @property
+    def smoothing_choice(self) -> SmoothingChoice | None:
+        """Who chooses the smoothing, where the data are to."""
+        return None
+
+    def with_smoothing(self, value: float) -> Kernel:
+        """The same kernel with this number for its smoothing.
+
+        Raises
+        ------
+        ArgumentError : a family without smoothing
+        """
+        raise ArgumentError(f"kernel {self.name!r} has no smoothing. Use kf.kernels.Spline.")
+
+    @property
+    def smoothest(self) -> str:
+        """What is left of the kernel under endless smoothing, in words."""
+        return "the kernel as it is"
 
     def check_identified(self, distinct_um: FloatArray, span: DistanceRange) -> tuple[str, ...]:
         """Can these distances carry the parameters? Sentences a reader must know; usually none.
@@ -295,8 +338,8 @@ class Kernel(ABC):
         return KernelCurve(self, theta, span)
 
     def describe(self) -> dict[str, float | int | str]:
-        """The options by name, ready for JSON; `kernel_from_description` reads them back."""
-        return {f.name: getattr(self, f.name) for f in fields(self)}
+        """The options by name, ready for JSON; `kernel_from_description` reads them back. A ridge of 0 goes unsaid."""
+        return {f.name: getattr(self, f.name) for f in fields(self) if f.name != "ridge" or self.ridge != 0}
 
     def _is_log(self, span: DistanceRange) -> BoolArray:
         return np.array([p.scale == "log" for p in self.parameters(span)])

@@ -108,6 +108,7 @@ class PowerLaw(Kernel):
     fit_scale: bool = False
 
     def __post_init__(self) -> None:
+        super().__post_init__()
         if not isinstance(self.fit_scale, bool):
             raise ArgumentError(f"fit_scale={self.fit_scale!r}: must be True or False.")
 

@@ -2,9 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import fields
 from difflib import get_close_matches
+from typing import cast
 
 from kernelfit.errors import ArgumentError
 from kernelfit.kernels.base import Kernel
@@ -51,13 +52,14 @@ def kernel_from_description(name: str, options: Mapping[str, float | int | str])
     ArgumentError : no family of that name, an option it does not have, or a value out of range
     """
     family = _family(name)
-    known = [f.name for f in fields(family)]
+    known = sorted((f.name for f in fields(family)), key=lambda option: option == "ridge")  # the common one last
     unknown = sorted(set(options) - set(known))
     if unknown:
         raise ArgumentError(
             f"kernel {name!r}: no option {unknown[0]!r}. Its options: {', '.join(known) or 'none'}."
         )
-    return family(**options)
+    make = cast(Callable[..., Kernel], family)  # each family has options of its own
+    return make(**options)
 
 
 def _family(name: str) -> type[Kernel]:

@@ -6,8 +6,8 @@ Eilers and Marx (1996), Statistical Science 11, 89-121.
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
-from typing import ClassVar, Literal
+from dataclasses import dataclass, replace
+from typing import ClassVar, Literal, get_args
 
 import numpy as np
 from scipy.interpolate import BSpline
@@ -15,7 +15,7 @@ from scipy.interpolate import BSpline
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit._validation import is_number, is_whole
 from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
-from kernelfit.kernels.base import DistanceRange, Kernel, KernelCurve, Parameter
+from kernelfit.kernels.base import DistanceRange, Kernel, KernelCurve, Parameter, SmoothingChoice
 
 DEGREE = 3
 LEAST_SUPPORT = 1e-6  # a coefficient that never weighs more than this in J has no pairs to speak of
@@ -31,9 +31,12 @@ class Spline(Kernel):
     Parameters
     ----------
     n_basis : number of coefficients, at least 4
-    smoothing : weight of the penalty 1/2 smoothing |D theta|^2 on differences of neighbouring coefficients
+    smoothing : weight of the penalty 1/2 smoothing |D theta|^2 on differences of neighbouring coefficients; or who is
+        to choose it in a fit: "likelihood" (the marginal likelihood, in which the penalty is a prior) or "validation"
+        (the log-likelihood of stretches of time left out)
     order : order of the differences; a kernel that is a polynomial of lower degree is not penalised
     axis : knots equally spaced in "distance" or in "log-distance" (finer near, coarser far)
+    ridge : weight of a further penalty 1/2 ridge |theta|^2, which pulls the whole kernel to 0
 
     Raises
     ------
@@ -42,17 +45,26 @@ class Spline(Kernel):
 
     name: ClassVar[str] = "spline"
     n_basis: int = 10
-    smoothing: float = 0.0
+    smoothing: float | SmoothingChoice = 0.0
     order: int = 2
     axis: Literal["distance", "log-distance"] = "distance"
 
     def __post_init__(self) -> None:
+        super().__post_init__()
         if not is_whole(self.n_basis) or self.n_basis <= DEGREE:
             raise ArgumentError(
                 f"n_basis={self.n_basis!r}: a cubic spline needs a whole number of at least 4."
             )
-        if not (is_number(self.smoothing) and self.smoothing >= 0):
-            raise ArgumentError(f"smoothing={self.smoothing!r}: must be a finite number, 0 or above.")
+        if isinstance(self.smoothing, str):
+            if self.smoothing not in get_args(SmoothingChoice):
+                raise ArgumentError(
+                    f"smoothing={self.smoothing!r}: must be a number, 0 or above, or who is to choose it: 'likelihood' "
+                    "or 'validation'."
+                )
+        elif not (is_number(self.smoothing) and self.smoothing >= 0):
+            raise ArgumentError(
+                f"smoothing={self.smoothing!r}: must be a finite number, 0 or above, or 'likelihood' or 'validation'."
+            )
         if not is_whole(self.order) or not 1 <= self.order < self.n_basis:
             raise ArgumentError(
                 f"order={self.order!r}: must be a whole number from 1 to n_basis - 1 = {self.n_basis - 1}."
@@ -62,7 +74,8 @@ class Spline(Kernel):
         put = object.__setattr__  # plain numbers: numpy's cannot be written as JSON
         put(self, "n_basis", int(self.n_basis))
         put(self, "order", int(self.order))
-        put(self, "smoothing", float(self.smoothing))
+        if not isinstance(self.smoothing, str):
+            put(self, "smoothing", float(self.smoothing))
 
     def parameters(self, span: DistanceRange) -> tuple[Parameter, ...]:
         return tuple(Parameter(f"coefficient_{k + 1}", "per spike") for k in range(self.n_basis))
@@ -86,10 +99,40 @@ class Spline(Kernel):
         return np.asarray(BSpline.design_matrix(x, knots, DEGREE).toarray(), dtype=np.float64)
 
     def penalty(self, span: DistanceRange) -> FloatArray | None:
-        """(K, K) smoothing D'D, D the differences of the given order; None without smoothing."""
+        """(K, K) smoothing D'D + ridge, D the differences of the given order; None without either.
+
+        Raises
+        ------
+        ArgumentError : the smoothing is to be chosen by the data, which only a fit can do
+        """
+        if isinstance(self.smoothing, str):
+            raise ArgumentError(
+                f"smoothing={self.smoothing!r} is a number only after a fit: fit.model.kernel.smoothing holds it."
+            )
+        ridge = super().penalty(span)
         if self.smoothing == 0:
-            return None
-        return self.smoothing * difference_penalty(self.n_basis, self.order)
+            return ridge
+        rough = self.smoothing * difference_penalty(self.n_basis, self.order)
+        return rough if ridge is None else rough + ridge
+
+    def roughness(self, span: DistanceRange) -> FloatArray:
+        """(K, K) D'D; rank K - order."""
+        return difference_penalty(self.n_basis, self.order)
+
+    @property
+    def smoothing_choice(self) -> SmoothingChoice | None:
+        """Who chooses the smoothing, where the data are to."""
+        return self.smoothing if isinstance(self.smoothing, str) else None
+
+    def with_smoothing(self, value: float) -> Spline:
+        """The same spline with this number for its smoothing. Raises ArgumentError for a number below 0."""
+        return replace(self, smoothing=value)
+
+    @property
+    def smoothest(self) -> str:
+        """What is left of the kernel under endless smoothing, in words."""
+        shape = {1: "a constant", 2: "a straight line"}.get(self.order, f"a polynomial of degree {self.order - 1}")
+        return f"{shape} in log distance" if self.axis == "log-distance" and self.order > 1 else shape
 
     def support_um(self, k: int, span: DistanceRange) -> tuple[float, float]:
         """Distances (µm) over which basis function k (from 0) is not zero, cut to those of the kernel."""
@@ -104,20 +147,20 @@ class Spline(Kernel):
         Raises
         ------
         NotIdentifiedError : without smoothing, a coefficient that has no pairs or too few distances
-            near it; with smoothing, fewer distinct distances than the penalty leaves free
+            near it; with smoothing and no ridge, fewer distinct distances than the penalty leaves free
         ModelError : all distances are one, or a distance of 0 on the log axis
         """
         basis = self.basis(distinct_um, span)
         without = np.flatnonzero(basis.max(axis=0) < LEAST_SUPPORT)
-        if self.smoothing > 0:
-            # the penalty leaves polynomials of degree < order free: the distances must determine those
-            if distinct_um.size < self.order:
+        if self.ridge > 0 or isinstance(self.smoothing, str) or self.smoothing > 0:
+            # the differences leave polynomials of degree < order free: the distances must determine those
+            if self.ridge == 0 and distinct_um.size < self.order:
                 raise NotIdentifiedError(
                     f"A penalty of order {self.order} needs pairs at {self.order} distinct distances at "
                     f"least, and there are {distinct_um.size}. Lower the order, or use kernel='flat'."
                 )
             return tuple(
-                f"{self._place(k, span)} has no pairs: its value is carried by the smoothing penalty alone"
+                f"{self._place(k, span)} has no pairs: its value is carried by the penalty alone"
                 for k in without.tolist()
             )
         if without.size:

@@ -13,6 +13,7 @@ from kernelfit._typing import FloatArray
 from kernelfit._validation import is_number
 from kernelfit.errors import ArgumentError
 
+FIRST_RIDGE = 0.01
 STEPS_PER_DECADE = 1.7  # time constants a factor of about four apart: traces overlap, and are told apart
 
 
@@ -27,8 +28,10 @@ class AfterSpike:
     ----------
     time_constants_s : seconds, ascending; None: log-spaced from one bin to `longest_s`
     longest_s : longest time constant where they are chosen for you
-    ridge : weight r of the penalty r/2 sum c^2; the default, a prior of standard deviation 10, only holds coefficients
-        of lags that a unit with few spikes never showed
+    ridge : weight r of the penalty r/2 sum c^2, the same for all units; the default, a prior of standard deviation 10,
+        only holds coefficients of lags that a unit with few spikes never showed. "likelihood" lets the marginal
+        likelihood of all units choose it: units with few spikes are then drawn to no effect as far as the spread of
+        the coefficients over units warrants
 
     Raises
     ------
@@ -37,7 +40,7 @@ class AfterSpike:
 
     time_constants_s: tuple[float, ...] | None = None
     longest_s: float = 1.0
-    ridge: float = 0.01
+    ridge: float | Literal["likelihood"] = FIRST_RIDGE
     name: ClassVar[str] = "basis"
 
     def __post_init__(self) -> None:
@@ -54,10 +57,11 @@ class AfterSpike:
             put(self, "time_constants_s", values)
         if not (is_number(self.longest_s) and self.longest_s > 0):
             raise ArgumentError(f"after_spike: longest_s={self.longest_s!r} must be a positive number of seconds.")
-        if not (is_number(self.ridge) and self.ridge >= 0):
-            raise ArgumentError(f"after_spike: ridge={self.ridge!r} must be a number, 0 or more.")
+        if self.ridge != "likelihood":
+            if not (is_number(self.ridge) and self.ridge >= 0):
+                raise ArgumentError(f"after_spike: ridge={self.ridge!r} must be a number, 0 or more, or 'likelihood'.")
+            put(self, "ridge", float(self.ridge))
         put(self, "longest_s", float(self.longest_s))
-        put(self, "ridge", float(self.ridge))
 
     def constants(self, bin_width: float) -> FloatArray:
         """(M,) time constants in seconds at this bin width."""

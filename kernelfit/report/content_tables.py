@@ -332,7 +332,8 @@ def _after_spike_setting(term: AfterSpikeTerm, bin_width: float) -> str:
     if constants.size == 0:
         return term.name
     listing = ", ".join(time_text(float(c)) for c in constants)
-    return f"{term.name}: exponential traces per unit, time constants {listing}; ridge {number_text(term.ridge)}"
+    ridge = number_text(term.ridge) if isinstance(term.ridge, float) else term.ridge
+    return f"{term.name}: exponential traces per unit, time constants {listing}; ridge {ridge}"
 
 
 def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:

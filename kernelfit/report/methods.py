@@ -152,12 +152,12 @@ def _model_sentences(fit: CouplingFit) -> list[str]:
 
 def _estimation_sentences(fit: CouplingFit) -> list[str]:
     penalties = []
-    if isinstance(fit.model.kernel, Spline) and fit.model.kernel.smoothing > 0.0:
-        penalties.append(f"a difference penalty of {number_text(fit.model.kernel.smoothing)} on the spline")
-    if fit.model.after_spike.ridge > 0.0:
-        penalties.append(
-            f"a ridge penalty of {number_text(fit.model.after_spike.ridge)} on the coefficients of own spikes"
-        )
+    smoothing = fit.model.kernel.smoothing if isinstance(fit.model.kernel, Spline) else 0.0
+    if isinstance(smoothing, float) and smoothing > 0.0:
+        penalties.append(f"a difference penalty of {number_text(smoothing)} on the spline")
+    ridge = fit.model.after_spike.ridge
+    if isinstance(ridge, float) and ridge > 0.0:
+        penalties.append(f"a ridge penalty of {number_text(ridge)} on the coefficients of own spikes")
     by = f"penalised maximum likelihood ({listed(penalties)})" if penalties else "maximum likelihood"
     sentences = [f"All parameters were estimated jointly by {by}."]
     sentences.append(
