@@ -151,6 +151,6 @@ def _over_array(figure: Figure, ax: Axes, data: InfluenceData, k: int) -> None:
     for side in ("left", "bottom"):
         ax.spines[side].set_visible(False)
     bar = figure.colorbar(marks, ax=ax, shrink=0.8, aspect=12, pad=0.04)
-    bar.outline.set_linewidth(0.3)  # type: ignore[operator]
+    bar.outline.set_linewidth(0.3)
     bar.locator = MaxNLocator(nbins=3, symmetric=True)
     bar.update_ticks()
