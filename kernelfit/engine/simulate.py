@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
+from collections.abc import Callable
 
 import numpy as np
 
@@ -32,6 +33,7 @@ def step_bins(
     coefficient: FloatArray,
     state: FloatArray,
     traces: FloatArray,
+    course: FloatArray,
     uniform: FloatArray,
     limit: float,
     event_bin: IntArray,
@@ -39,7 +41,7 @@ def step_bins(
     event_count: IntArray,
     n_events: int,
 ) -> tuple[int, int]:
-    """Run the bins of `uniform` (n_bins, n_units), one uniform number a cell.
+    """Run the bins of `uniform` (n_bins, n_units), one uniform number a cell; `course` (n_bins,) is common to all.
 
     Counts follow from the uniforms by inversion, so they do not depend on how the bins are chunked. Events are written
     from `n_events` on. Returns bins done and events so far; fewer bins than asked: the event arrays are full, or the
@@ -54,7 +56,7 @@ def step_bins(
             return t, n_events
         for i in range(n_units):
             state[i] *= gamma
-            eta[i] = baseline[i] + state[i]
+            eta[i] = baseline[i] + course[t] + state[i]
         for m in range(trace_decay.size):
             for i in range(n_units):
                 traces[m, i] *= trace_decay[m]
@@ -97,6 +99,7 @@ def simulate_counts(
     *,
     trace_decay: FloatArray | None = None,
     coefficient: FloatArray | None = None,
+    course: FloatArray | None = None,
 ) -> tuple[IntArray, IntArray, IntArray]:
     """Counts of the binned process from rest (U = 0, no history).
 
@@ -108,6 +111,7 @@ def simulate_counts(
     n_bins : bins to run
     rng : draws one uniform number a cell, bin by bin
     trace_decay, coefficient : (M,) decay per bin and (M, n) after-spike coefficients; None: none
+    course : (n_bins,) added to every unit's predictor; None: none
 
     Returns
     -------
@@ -120,6 +124,7 @@ def simulate_counts(
     n = baseline.size
     decay = np.empty(0) if trace_decay is None else np.ascontiguousarray(trace_decay)
     weights = np.empty((0, n)) if coefficient is None else np.ascontiguousarray(coefficient)
+    common = np.zeros(n_bins) if course is None else np.ascontiguousarray(course, dtype=np.float64)
     state, traces = np.zeros(n), np.zeros((decay.size, n))
     parts: list[tuple[IntArray, IntArray, IntArray]] = []
     for start in range(0, n_bins, CHUNK_BINS):
@@ -129,8 +134,8 @@ def simulate_counts(
             room = max(FIRST_ROOM, 4 * n)
             bins, units, counts = (np.empty(room, dtype=np.int64) for _ in range(3))
             done, filled = step_bins(
-                link.code, bin_width, leak, baseline, table, decay, weights, state, traces, uniform[at:], MOST_PER_BIN,
-                bins, units, counts, 0,
+                link.code, bin_width, leak, baseline, table, decay, weights, state, traces, common[start + at :],
+                uniform[at:], MOST_PER_BIN, bins, units, counts, 0,
             )  # fmt: skip
             if done < 0:
                 time_s = (start + at - done - 1) * bin_width
@@ -182,6 +187,7 @@ def simulate_recording(
     bin_width: float = 0.001,
     after_spike_constants_s: FloatArray | None = None,
     after_spike_coefficients: FloatArray | None = None,
+    rate_course: Callable[[FloatArray], FloatArray] | None = None,
     unit_ids: tuple[str, ...] | None = None,
 ) -> Recording:
     """A recording of a network with a known kernel, run in bins from rest; pairs on one site are not coupled.
@@ -197,6 +203,8 @@ def simulate_recording(
     seed : or a generator; the same seed gives the same bits
     link, bin_width : of the model, seconds
     after_spike_constants_s, after_spike_coefficients : (M,) seconds and (M,) or (M, n); None: no after-spike effect
+    rate_course : from times (s) to what is added to every unit's predictor then (a factor e^c of all rates under the
+        exponential link): a slow state common to all; None: none
     unit_ids : names; None: u01, u02, ...
 
     Returns
@@ -231,9 +239,10 @@ def simulate_recording(
     decay, coefficients = _after_spike(after_spike_constants_s, after_spike_coefficients, bin_width, n)
     rng = np.random.default_rng(seed)
     n_bins = math.floor(duration / bin_width + 1e-6)
+    course = _course(rate_course, n_bins, bin_width)
     event_bin, event_unit, event_count = simulate_counts(
         the_link, bin_width, leak_rate, the_link.predictor(rates), table, n_bins, rng,
-        trace_decay=decay, coefficient=coefficients,
+        trace_decay=decay, coefficient=coefficients, course=course,
     )  # fmt: skip
     bins, units = np.repeat(event_bin, event_count), np.repeat(event_unit, event_count)
     # strictly inside the bin, so that no rounding moves a spike over its edge
@@ -242,6 +251,18 @@ def simulate_recording(
     edges = np.searchsorted(units[order], np.arange(n + 1))
     trains = tuple(times[order[a:b]] for a, b in itertools.pairwise(edges))
     return Recording(ids, positions, trains, np.array([[0.0, duration]]))
+
+
+def _course(rate_course: Callable[[FloatArray], FloatArray] | None, n_bins: int, bin_width: float) -> FloatArray | None:
+    if rate_course is None:
+        return None
+    course = np.asarray(rate_course(bin_width * np.arange(n_bins)), dtype=np.float64)
+    if course.shape != (n_bins,) or not np.isfinite(course).all():
+        raise ArgumentError(
+            f"rate_course gave values of shape {course.shape} for {n_bins} times, or some that are not finite. "
+            "It must give one finite number for each time."
+        )
+    return course
 
 
 def _after_spike(

@@ -274,3 +274,32 @@ def test_refusals_name_the_argument(change, says):
     call = {"positions_um": LINE, "kernel": WEAK, "baseline_hz": 8.0, "leak_rate": 40.0, "duration": 1.0, "seed": 1}
     with pytest.raises(ArgumentError, match=says):
         simulate_recording(**{**call, **change})
+
+
+def test_a_slow_course_multiplies_all_rates_in_its_time():
+    """Expected spikes of an uncoupled unit over half a period of the course: 8 Hz times the integral of e^c."""
+    nothing = kernels.Flat().at(amplitude=0.0, reference_um=100.0)
+    period_s, size, duration_s = 50.0, 0.5, 2000.0
+    rec = simulate_recording(
+        LINE, nothing, 8.0, 40.0, duration_s, 3, bin_width=0.005,
+        rate_course=lambda t: size * np.sin(2 * np.pi * t / period_s),
+    )  # fmt: skip
+    phase = np.linspace(0.0, np.pi, 2001)
+    factor = np.array([np.trapezoid(np.exp(sign * size * np.sin(phase)), phase) / np.pi for sign in (1.0, -1.0)])
+    expected = 8.0 * 0.5 * duration_s * factor
+    for unit in rec.unit_ids:
+        high = (rec.spike_times(unit) % period_s) < period_s / 2
+        got = np.array([high.sum(), (~high).sum()])
+        assert (np.abs(got - expected) < 3.5 * np.sqrt(expected)).all()
+
+
+def test_no_course_and_a_course_of_nothing_are_the_same_bits():
+    a = simulate_recording(LINE, WEAK, 8.0, 40.0, 20.0, 3)
+    b = simulate_recording(LINE, WEAK, 8.0, 40.0, 20.0, 3, rate_course=np.zeros_like)
+    for unit in a.unit_ids:
+        np.testing.assert_array_equal(a.spike_times(unit), b.spike_times(unit))
+
+
+def test_a_course_must_give_a_number_for_each_time():
+    with pytest.raises(ArgumentError, match="one finite number for each time"):
+        simulate_recording(LINE, WEAK, 8.0, 40.0, 20.0, 3, rate_course=lambda t: np.array([1.0]))
