@@ -256,7 +256,8 @@ def simulate_recording(
 def _course(rate_course: Callable[[FloatArray], FloatArray] | None, n_bins: int, bin_width: float) -> FloatArray | None:
     if rate_course is None:
         return None
-    course = np.asarray(rate_course(bin_width * np.arange(n_bins)), dtype=np.float64)
+    start_s = np.asarray(bin_width * np.arange(n_bins), dtype=np.float64)
+    course = np.asarray(rate_course(start_s), dtype=np.float64)
     if course.shape != (n_bins,) or not np.isfinite(course).all():
         raise ArgumentError(
             f"rate_course gave values of shape {course.shape} for {n_bins} times, or some that are not finite. "

@@ -61,4 +61,4 @@ def time_blocks(grid: Grid, length_s: float) -> TimeBlocks:
 def _without_short_blocks(n_bins: IntArray, target: int) -> IntArray:
     """(G,) number of each block once those below `target` bins have joined the one before, the first the one after."""
     stays = n_bins >= target
-    return np.maximum(np.cumsum(stays) - 1, 0)
+    return np.asarray(np.maximum(np.cumsum(stays) - 1, 0), dtype=np.int64)
