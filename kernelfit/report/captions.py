@@ -143,7 +143,8 @@ def _raster(recording: Recording, raster: RasterData | Unavailable) -> str:
         f"Top: spikes of all {count_text(recording.n_units)} units, one row each, in the order of their "
         "positions. Bottom: mean rate over units, observed (grey) and fitted (line), averaged over "
         f"{time_text(raster.averaged_s)}. The fitted rate at each moment rests on all spikes before it, those of the "
-        "same burst included: it follows the observed rate and does not forecast it. The "
+        "same burst included: it follows the observed rate and does not forecast it. The observed rate also swings by "
+        "chance, the more so the fewer spikes a stretch holds. The "
         f"stretch from {number_text(raster.start_s)} to {number_text(raster.stop_s)} s was chosen because "
         "its spike count is nearest to the mean."
     )

@@ -41,7 +41,7 @@ from kernelfit.report.figure_data import (
     RasterData,
 )
 from kernelfit.report.methods import Methods, methods
-from kernelfit.report.numbers import count_text, duration_text, number_text, p_sentence
+from kernelfit.report.numbers import count_text, duration_text, number_text, p_sentence, powers_text
 from kernelfit.report.page import Definition, Notice, Table
 from kernelfit.report.readings import (
     LEAK,
@@ -226,7 +226,7 @@ def note_text(note: Note) -> str:
     """One note as a line: what, where, remedy."""
     place = _PLACES.get(note.where, note.where).rstrip(".")
     where = f" Where: {place}." if place else ""
-    return f"{note.what}{where}{' ' if note.remedy else ''}{note.remedy}"
+    return powers_text(f"{note.what}{where}{' ' if note.remedy else ''}{note.remedy}")
 
 
 def notices(fit: CouplingFit, *, invented: bool = False) -> tuple[Notice, ...]:
@@ -241,11 +241,12 @@ def notices(fit: CouplingFit, *, invented: bool = False) -> tuple[Notice, ...]:
             )
         )
     if not fit.converged:
+        why = powers_text(fit.solver.message).rstrip(".")
         marked.append(
             Notice(
                 "error",
-                f"The fit did not converge: {fit.solver.message.rstrip('.')}. The numbers on this page are "
-                "where it stopped. They are not estimates and their intervals do not hold.",
+                f"The fit did not converge: {why}. The numbers on this page are where it stopped. They are not "
+                "estimates and their intervals do not hold.",
             )
         )
     for severity in ("error", "warning"):

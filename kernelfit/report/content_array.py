@@ -40,6 +40,7 @@ def array_data(positions_um: FloatArray, value: FloatArray, title: str, quantity
             place[members] += RING * spacing * np.column_stack([np.cos(angle), np.sin(angle)])
     amount = np.where(value > 0.0, value, np.nan)
     known = amount[np.isfinite(amount)]
+    across = float(np.ptp(sites[:, 0])) + spacing  # the bar lies along x and must not leave a narrow array
     extent = float(np.ptp(sites, axis=0).max()) if n_sites > 1 else spacing
     return ArrayData(
         title=title,
@@ -50,7 +51,7 @@ def array_data(positions_um: FloatArray, value: FloatArray, title: str, quantity
         value=amount,
         on_log_scale=bool(known.size and known.max() > LOG_SCALE_FROM * known.min()),
         spacing_um=spacing,
-        scale_bar_um=round_length(0.3 * max(extent, spacing)),
+        scale_bar_um=round_length(min(0.3 * max(extent, spacing), across)),
         n_shared=int(shared[site_of].sum()),
         seen_along=seen_along,
     )

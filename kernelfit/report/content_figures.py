@@ -50,6 +50,7 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
 
 CURVE_POINTS = 240
+LARGEST_DRAWN_JUMP = 20.0  # a rate multiplied by e to that power has no second reading on an axis
 GAP_IN_SPACINGS = 1.5  # a stretch of distances without pairs, this many reference distances long, breaks the curve
 MAX_BARS = 70  # more distinct distances than this are collected in stretches
 COURSE_IN_TIME_CONSTANTS = 5.0
@@ -78,6 +79,8 @@ def kernel_data(fit: CouplingFit) -> KernelData | Unavailable:
     if not np.isfinite(curve[0]).any():
         return Unavailable("the kernel has no finite value at any distance")
     near = coupling_at(fit, fit.reference_distance_um)
+    if not fit.verdict.found and not max(abs(near.lower), abs(near.upper)) < LARGEST_DRAWN_JUMP:
+        return Unavailable("the recording does not bound the effect of a spike")
     return KernelData(
         title=kernel_title(fit),
         distance_um=grid,

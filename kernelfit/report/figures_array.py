@@ -29,6 +29,7 @@ from kernelfit.report.look import (
 _POINTS_PER_MM = 72.0 / 25.4
 _MAP_MM = 62.0  # of one column, left for the map beside the colour bar
 _TALLEST_MM, _LOWEST_MM = 100.0, 24.0  # of the map; a line of sites still needs room for the colour bar
+_BAR_MM = 2.8  # the colour bar's width
 _BAR_ROOM = 0.08  # of the map's longer side, below it, for the label of the scale bar
 _ROOM_FOR_LEGEND = 1.2
 _RASTERISE_FROM = 20_000  # spikes; beyond, a drawing of single strokes is too large to open
@@ -42,7 +43,8 @@ def draw_array(data: ArrayData) -> Figure:
         wide, tall = (float(v) + 2.0 * pad for v in high - low)
         tall += _BAR_ROOM * max(wide, tall)
         points_per_um = _POINTS_PER_MM * min(_MAP_MM / wide, _TALLEST_MM / tall)
-        figure = new_figure(ONE_COLUMN_MM, max(tall * points_per_um / _POINTS_PER_MM, _LOWEST_MM) + 12.0)
+        map_mm = max(tall * points_per_um / _POINTS_PER_MM, _LOWEST_MM)
+        figure = new_figure(ONE_COLUMN_MM, map_mm + 12.0)
         ax = figure.subplots()
         ax.plot(
             data.shared_um[:, 0],
@@ -69,7 +71,7 @@ def draw_array(data: ArrayData) -> Figure:
                 linewidths=outline,
                 zorder=3,
             )
-            bar = figure.colorbar(marks, ax=ax, shrink=0.75, aspect=16, pad=0.02)
+            bar = figure.colorbar(marks, ax=ax, shrink=0.75, aspect=0.75 * map_mm / _BAR_MM, pad=0.02)
             bar.set_label(data.quantity)
             bar.outline.set_linewidth(0.4)
             if data.on_log_scale:
@@ -88,8 +90,10 @@ def draw_array(data: ArrayData) -> Figure:
         ax.set_aspect("equal")
         ax.grid(False)
         ax.set_axis_off()
-        ax.set_xlim(low[0] - pad, high[0] + pad)
-        ax.set_ylim(low[1] - pad - _BAR_ROOM * max(wide, tall), high[1] + pad)
+        # Limits that fill the room: a map shrunk to its aspect would drift to the colour bar.
+        spare = np.array([_MAP_MM, map_mm]) * _POINTS_PER_MM / points_per_um - np.array([wide, tall])
+        ax.set_xlim(low[0] - pad - spare[0] / 2.0, high[0] + pad + spare[0] / 2.0)
+        ax.set_ylim(high[1] + pad - tall - spare[1] / 2.0, high[1] + pad + spare[1] / 2.0)
         _scale_bar(ax, data, float(low[0]), float(low[1]) - pad)
         title_over_all(figure, data.title)
         return figure

@@ -37,7 +37,7 @@ def draw_after_spike(data: AfterSpikeData) -> Figure:
         for k, curve in enumerate(few):
             ax.plot(lag_ms, curve, color=DATA, alpha=0.45, linewidth=0.6, label="single units" if k == 0 else None)
         low, high = (np.maximum(v, _SMALLEST_SHOWN) for v in (data.lower_quartile, data.upper_quartile))
-        ax.fill_between(lag_ms, low, high, color=RAISING, alpha=BAND_ALPHA, linewidth=0, label="half of the units")
+        ax.fill_between(lag_ms, low, high, color=RAISING, alpha=BAND_ALPHA, linewidth=0, label="middle half")
         ax.plot(lag_ms, np.maximum(data.median, _SMALLEST_SHOWN), color=RAISING, label="median")
         ax.axhline(1.0, color=NULL, linestyle="--", linewidth=0.8)
         ax.set_xscale("log")

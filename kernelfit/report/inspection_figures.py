@@ -127,7 +127,7 @@ def _interval_panel(ax: Axes, panel: IntervalPanel) -> None:
     ax.set_ylim(bottom=0.0)
     for mark in (0.001, 0.002):
         ax.axvline(mark, color=NULL, linestyle="--", linewidth=0.8)
-    low, high = float(panel.edges_s[0]), float(panel.edges_s[-1])
+    low, high = min(float(panel.edges_s[0]), 0.001), float(panel.edges_s[-1])
     ticks = [10.0**k for k in range(-5, 7) if low <= 10.0**k <= high]
     ax.xaxis.set_major_locator(FixedLocator(ticks[:: 1 + (len(ticks) - 1) // MOST_TICKS]))
     ax.xaxis.set_major_formatter(FuncFormatter(lambda v, _: time_text(v).replace("\N{NO-BREAK SPACE}", " ")))

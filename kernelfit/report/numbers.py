@@ -12,6 +12,9 @@ import re
 COULD_NOT = "could not be estimated"
 PROSE_DECIMALS = 3
 DECADES_APART = 30.0
+UNBOUNDED = 1e9  # an end of an interval this far out bounds nothing a recording could hold
+POWERS_FROM = 1e12  # lone numbers this large are written with a power of ten
+NOT_BOUNDED = "not bounded"
 MINUS = "\N{MINUS SIGN}"
 
 
@@ -45,6 +48,8 @@ def number_text(value: float, digits: int = 3, *, max_decimals: int = PROSE_DECI
         return "infinite" if value > 0 else f"{MINUS}infinite"
     if value == 0.0:
         return "0"
+    if abs(value) >= POWERS_FROM:
+        return powers_text(f"{value:.{digits - 1}e}".replace("-", MINUS, value < 0.0))
     text = fixed_text(value, min(max(decimals_for(abs(value), digits), 0), max_decimals))
     return text if keep_zeros or "." not in text else text.rstrip("0").rstrip(".")
 
@@ -75,16 +80,17 @@ def interval_text(
 
     Parameters
     ----------
-    estimate, lower, upper : same unit; an infinite end is "at least" or "at most", missing ends leave the
-        estimate alone, a missing estimate says that it could not be had
+    estimate, lower, upper : same unit; an infinite end (or one beyond 1e9) is "at least" or "at most", two are "not
+        bounded", missing ends leave the estimate alone, a missing estimate says that it could not be had
     unit : written once, after the estimate
     """
     if math.isnan(estimate):
         return COULD_NOT
     mark = spaced_unit(unit)
-    low_known, high_known = math.isfinite(lower), math.isfinite(upper)
+    low_known, high_known = abs(lower) < UNBOUNDED, abs(upper) < UNBOUNDED
     if not low_known and not high_known:
-        return f"{number_text(estimate, max_decimals=max_decimals)}{mark}"
+        missing = math.isnan(lower) or math.isnan(upper)
+        return f"{number_text(estimate, max_decimals=max_decimals)}{mark}{'' if missing else f' ({NOT_BOUNDED})'}"
     if low_known and high_known and _spans_decades(estimate, lower, upper):
         each = tuple(fixed_text(v, min(decimals_for(abs(v)), max_decimals)) for v in (estimate, lower, upper))
         return f"{each[0]}{mark} ({each[1]} to {each[2]})"
@@ -143,15 +149,19 @@ def time_text(seconds: float, lower_s: float = math.nan, upper_s: float = math.n
 
 
 _SUPERSCRIPTS = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
+_PLAIN_POWERS = range(-3, 6)
 
 
 def powers_text(text: str) -> str:
-    """Numbers such as 2.4e-07 inside a text as people write them: 2.4 × 10⁻⁷."""
+    """Numbers such as 2.4e-07 inside a text as people write them: 2.4 × 10⁻⁷; 6.9e-01 is 0.69."""
 
     def written(match: re.Match[str]) -> str:
-        return f"{match[1]} × 10{str(int(match[2])).translate(_SUPERSCRIPTS)}"
+        power = int(match[2])
+        if power in _PLAIN_POWERS:
+            return number_text(float(match[0]), 2, max_decimals=5)
+        return f"{match[1]} × 10{str(power).translate(_SUPERSCRIPTS)}"
 
-    return re.sub(r"(\d(?:\.\d+)?)e([+-]?\d+)\b", written, text)
+    return re.sub(r"(?<![\w.])(\d(?:\.\d+)?)e([+-]?\d+)\b", written, text)
 
 
 def duration_text(seconds: float) -> str:

@@ -16,7 +16,9 @@ from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
 from kernelfit.report.numbers import (
     COULD_NOT,
+    NOT_BOUNDED,
     PROSE_DECIMALS,
+    UNBOUNDED,
     count_text,
     decimals_for,
     distance_label,
@@ -32,6 +34,7 @@ MULTIPLES_FROM = 2.0  # a rate that triples is "multiplied by 3.0", not "raised 
 RATIO_WORTH_SAYING = 1.2
 MOSTLY_REJECTED = 0.5  # more than this share of the tested units rejected: the caution comes before any number
 FEWER_SPIKES = 3.0  # units that pass with this many times fewer spikes than those that fail: worth saying
+LARGEST_JUMP = 600.0  # e to that power can still be written as a number; any such rise is without bound
 NOTHING_PERCENT = 0.1  # an effect all of whose interval is smaller is "below 0.1 %"
 
 
@@ -73,7 +76,7 @@ def could_not(reason: str) -> str:
 
 def percent_of_rate(jump: FloatArray) -> FloatArray:
     """Change of the rate in per cent that a jump of the drive causes under the `exp` link."""
-    return 100.0 * np.expm1(jump)
+    return np.asarray(100.0 * np.expm1(np.minimum(jump, LARGEST_JUMP)))
 
 
 def level_text(level: float) -> str:
@@ -98,7 +101,7 @@ def effect_text(jump: Estimate, link: str, level: float) -> str:
     if link != "exp":
         return _jump_text(jump, level)
     if jump.value > math.log1p(MULTIPLES_FROM):
-        value, low, high = (math.exp(v) for v in (jump.value, jump.lower, jump.upper))
+        value, low, high = (math.exp(min(v, LARGEST_JUMP)) for v in (jump.value, jump.lower, jump.upper))
         open_text = ", so its direction is open" if jump.undecided else ""
         return f"multiplies the rate by {_with_level(value, low, high, '', level)}{open_text}"
     value, low, high = (float(v) for v in percent_of_rate(np.array([jump.value, jump.lower, jump.upper])))
@@ -125,6 +128,8 @@ def _with_level(value: float, lower: float, upper: float, unit: str, level: floa
     text = interval_text(value, lower, upper, unit)
     if " (" not in text:
         return text
+    if text.endswith(f"({NOT_BOUNDED})"):
+        return text.replace(" (", f" ({level_text(level)} interval ", 1)
     return text.replace(" (", f" ({level_text(level)} interval ", 1)[:-1] + spaced_unit(unit) + ")"
 
 
@@ -198,6 +203,9 @@ def not_ruled_out_sentence(distance_um: float, jump: Estimate, link: str, level:
     ends = np.array([jump.lower, jump.upper])
     unit, of = ("%", " of the rate") if link == "exp" else ("", " on the drive")
     low, high = (float(v) for v in (percent_of_rate(ends) if link == "exp" else ends))
+    if max(abs(low), abs(high)) >= UNBOUNDED:
+        where = distance_label(distance_um)
+        return f"At {where} no effect can be ruled out, however large: the recording does not bound it."
     decimals = min(decimals_for((high - low) / 2.0), PROSE_DECIMALS)
     return (
         f"At {distance_label(distance_um)} an effect between {fixed_text(low, decimals)} and "

@@ -12,6 +12,7 @@ from fakes import (
     AMPLITUDE,
     LENGTH,
     PITCH_UM,
+    FakeFit,
     FakeNote,
     FakeScoreTest,
     FakeSolver,
@@ -436,3 +437,21 @@ def test_the_length_of_a_disc_is_its_radius(kernel, word):
     assert found.coupling_lead.startswith(f"The {kernel} kernel has a {word} of ")
     assert any(row[1].text == f"{word} of the kernel (µm)" for row in found.tables.parameters.rows)
     assert ("The radius was profiled" in found.methods.paragraph) == (word == "radius")
+
+
+def test_a_scale_bar_stays_within_a_narrow_array():
+    shank = np.array([[x, y] for x in (0.0, 32.0) for y in 25.0 * np.arange(16.0)])
+    # the array is 32 µm wide and its sites 25 µm apart: 50 µm is the longest round length within 57 µm
+    assert array_data(shank, np.ones(32), "t", "q").scale_bar_um == 50.0
+
+
+def test_a_kernel_nobody_bounds_is_not_drawn():
+    class Loose(FakeFit):
+        def kernel_band(self, distances_um, level=0.95, simultaneous=False):
+            return super().kernel_band(distances_um).assign(lower=-6e19, upper=6e19)
+
+    loose = Loose(recording=fake_recording(), verdict=FakeVerdict(False, 0.7, "No coupling to describe."))
+    found = build_content(loose, loose.recording, loose.goodness())
+    assert isinstance(found.figures.kernel, Unavailable)
+    assert "does not bound" in found.figures.kernel.reason
+    assert "no effect can be ruled out" in found.verdict[1]

@@ -136,3 +136,11 @@ def test_ranges_keep_both_ends_to_their_own_digits():
 def test_powers_of_ten_are_written_as_people_do():
     assert powers_text("the last step was 2.4e-07 long") == "the last step was 2.4 × 10⁻⁷ long"
     assert powers_text("unit e15, 1e+12 bins") == "unit e15, 1 × 10¹² bins"
+    assert powers_text("6.9e-01 standard errors") == "0.69 standard errors"
+    assert number_text(-1.42e17) == f"{MINUS}1.42 × 10¹⁷"
+
+
+def test_ends_beyond_anything_bound_nothing():
+    assert interval_text(0.0, -6e19, 6e19) == "0 (not bounded)"
+    assert interval_text(2.0, 1.0, 6e19) == "2 (at least 1)"
+    assert interval_text(2.0, NAN, NAN) == "2"

@@ -126,6 +126,11 @@ def test_gain_over_constant_rates():
     )
 
 
+def test_an_effect_the_recording_does_not_bound():
+    text = words.not_ruled_out_sentence(80.0, Estimate(0.0, -6e19, 6e19), "exp", 0.95)
+    assert text == "At 80 µm no effect can be ruled out, however large: the recording does not bound it."
+
+
 def test_two_units_are_both_or_neither():
     assert "both units tested" in words.goodness_sentence(2, 0, 0.4, 0.05)
     assert "either of the two units tested" in words.goodness_sentence(2, 2, 0.4, 0.05)
