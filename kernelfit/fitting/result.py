@@ -225,6 +225,29 @@ class CouplingFit:
             raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
         return kernel_band(self, np.atleast_1d(np.asarray(distances_um, dtype=np.float64)), level, simultaneous)
 
+    def derived(
+        self,
+        level: float = LEVEL,
+        distances_um: FloatArray | None = None,
+        bootstrap: Bootstrap | None = None,
+        recording: Recording | None = None,
+    ) -> pd.DataFrame:
+        """Figures that follow from the fit, by name: estimate, std_error, lower, upper, unit, note.
+
+        Parameters
+        ----------
+        level, distances_um : coverage, in (0, 1); µm where the change of the rate is told, None: at the usual ones
+        bootstrap : replicates of this fit, for percentile intervals; None: delta method, by `covariance_kind`
+        recording : for a loaded fit of a recording with excluded pairs, which a fit does not hold
+
+        Raises
+        ------
+        ArgumentError, StorageError : a level or distance out of range, a bootstrap or a recording of another fit
+        """
+        from kernelfit.inference.derived import derived_table
+
+        return derived_table(self, level, distances_um, bootstrap, recording)
+
     @property
     def after_spike_constants_s(self) -> FloatArray:
         """(M,) time constants of the after-spike traces, seconds."""

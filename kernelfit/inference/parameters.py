@@ -108,10 +108,10 @@ def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> s
         if used[0] < len(family) and family[used[0]].discrete:
             return ""
         return "not identified: the recording says nothing about it (see notes)"
-    return _too_few_blocks(fit, kind)
+    return too_few_blocks(fit, kind)
 
 
-def _too_few_blocks(fit: CouplingFit, kind: CovarianceKind) -> str:
+def too_few_blocks(fit: CouplingFit, kind: CovarianceKind) -> str:
     """Why there is no standard error from blocks of time, where there is none."""
     if kind == "model" or fit.n_blocks >= REFUSED_BELOW:
         return ""
@@ -141,7 +141,7 @@ def baseline_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.D
     explained = np.zeros(n, dtype=bool)
     explained[fit.targets] = True
     notes = np.array([""] * n, dtype=object)
-    notes[fit.targets] = _too_few_blocks(fit, kind)
+    notes[fit.targets] = too_few_blocks(fit, kind)
     silent = ~explained & (fit.counts == 0)
     rate[silent] = 0.0
     notes[silent] = "silent in the bins that count: baseline minus infinity, rate 0; still drives others"
