@@ -17,6 +17,7 @@ from kernelfit.fitting.added_term import after_spike_test
 from kernelfit.fitting.arrow import SingularOwnBlock
 from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.detection import detect_coupling
+from kernelfit.fitting.effective import term_sizes
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.notes import bound_reasons, fit_notes
 from kernelfit.fitting.null import Null, fit_null
@@ -26,6 +27,7 @@ from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.fitting.radius import LEVEL, RadiusProfile, discrete_parameter, search_radius, variance_inflation
 from kernelfit.fitting.result import CouplingFit, covariance_kind
 from kernelfit.fitting.search import SearchResult, search
+from kernelfit.fitting.smoothing import choose, first_ridge, first_smoothing
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.recording import Recording
 from kernelfit.version import __version__
@@ -46,11 +48,15 @@ def fit_model(
     started = time.monotonic()
     problem = make_problem(model, recording, threads=threads, progress=progress)
     try:
+        problem = first_ridge(problem, model)
         null = fit_null(problem)
         verdict = detect_coupling(null, seed)
+        problem = first_smoothing(problem, null, model)
         found, profile = _best(problem, null)
-        optimum = found.best
+        chosen = choose(problem, found, model)
+        problem, found, optimum = chosen.problem, chosen.found, chosen.found.best
         spread = covariances(problem, optimum)
+        sizes = term_sizes(problem, optimum)
     except SingularOwnBlock as error:
         raise NotIdentifiedError(_undetermined_unit(problem, recording, error.place)) from error
     added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None
@@ -61,7 +67,7 @@ def fit_model(
     likelihoods = _reference_likelihoods(problem)
     by_distance = problem.geometry.pairs_by_distance
     return CouplingFit(
-        model=model,
+        model=problem.model,
         unit_ids=recording.unit_ids,
         positions=recording.positions,
         origin=recording.origin,
@@ -90,6 +96,8 @@ def fit_model(
         solver=_solver_report(found),
         second_optimum=_second_sentence(problem, found),
         after_spike_test=added,
+        term_sizes=sizes,
+        smoothing=chosen.smoothing,
         seed=seed,
         seconds=time.monotonic() - started,
         version=__version__,

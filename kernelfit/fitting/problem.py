@@ -19,6 +19,7 @@ from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
 from kernelfit.fitting.progress import Progress, ProgressCallback, peak_memory_bytes
 from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
 from kernelfit.model.coupling import CouplingModel
+from kernelfit.model.terms import FIRST_RIDGE
 from kernelfit.recording.grid import Grid, make_grid
 from kernelfit.recording.recording import Recording
 
@@ -26,6 +27,7 @@ FASTEST_LEAK_BINS = 3.0  # alpha D above this leaves 5 % of a jump after one bin
 SLOWEST_LEAK_SHARE = 20.0  # a time constant above a twentieth of the recording looks like a drifting rate
 GONE_AFTER_BINS = 20.0  # time constants that pass in one bin: exp(-20) of an effect is left, nothing to estimate from
 EXPECTED_SWEEPS = 60
+FIRST_SMOOTHING = 1.0
 
 
 @dataclass(frozen=True, eq=False)
@@ -152,6 +154,13 @@ class Problem:
             s[: self.n_kernel, : self.n_kernel] = own
         return s
 
+    @property
+    def own_penalty(self) -> FloatArray:
+        """(P,) weights of the quadratic penalty on the own parameters of every unit."""
+        ridge = np.full(1 + self.trace_decay.size, self.model.after_spike.ridge, dtype=np.float64)
+        ridge[0] = 0.0
+        return ridge
+
     def leak(self, shared: FloatArray) -> float:
         """alpha, 1/s."""
         return float(np.exp(shared[-1])) if self.fits_leak else float(self.model.leak_rate or 0.0)
@@ -245,12 +254,14 @@ def geometry_of(model: CouplingModel, recording: Recording, targets: IntArray) -
 def make_problem(
     model: CouplingModel, recording: Recording, *, threads: int | None = None, progress: ProgressCallback | None = None
 ) -> Problem:
-    """Check that there is something to estimate and set the problem up.
+    """Check that there is something to estimate and set the problem up. Weights of penalties that are left to the data
+    are first guesses in it.
 
     Raises
     ------
     ArgumentError, ModelError, GridError, NotIdentifiedError : see `CouplingModel.fit`
     """
+    model = _with_first_guesses(model)
     _check_time_scales(model)
     grid = make_grid(recording, model.bin_width, warm_up_s=model.warm_up_s)
     spikes = recording.origin.name("spikes")
@@ -288,6 +299,12 @@ def make_problem(
         )
     _check_identified(problem)
     return problem
+
+
+def _with_first_guesses(model: CouplingModel) -> CouplingModel:
+    """Numbers in place of what the data are to choose: a fit begins with them."""
+    ridge = FIRST_RIDGE if model.after_spike.ridge == "likelihood" else None
+    return model.settled(smoothing=None if model.kernel.smoothing_choice is None else FIRST_SMOOTHING, ridge=ridge)
 
 
 def _check_time_scales(model: CouplingModel) -> None:

@@ -17,10 +17,12 @@ from typing import Any, cast
 
 from kernelfit.errors import KernelfitError, OutputError, StorageError
 from kernelfit.fitting.detection import CouplingVerdict
+from kernelfit.fitting.effective import TermSize
 from kernelfit.fitting.outcome import Note, ScoreTest, SolverReport
 from kernelfit.fitting.plain_values import floats, plain, whole_numbers
 from kernelfit.fitting.result import CouplingFit, covariance_kind
 from kernelfit.fitting.search import StartRecord
+from kernelfit.fitting.smoothing_storage import describe_smoothing, restore_smoothing
 from kernelfit.fitting.uncertainty_storage import describe_uncertainty, restore_uncertainty
 from kernelfit.kernels import KERNELS, DistanceRange, kernel_from_description
 from kernelfit.model.coupling import CouplingModel
@@ -164,6 +166,8 @@ def describe_fit(fit: CouplingFit) -> dict[str, Any]:
         "solver": _finite({**asdict(fit.solver), "starts": [_finite(asdict(start)) for start in fit.solver.starts]}),
         "second_optimum": fit.second_optimum,
         "after_spike_test": None if fit.after_spike_test is None else asdict(fit.after_spike_test),
+        "terms": [asdict(size) for size in fit.term_sizes],
+        "smoothing": None if fit.smoothing is None else describe_smoothing(fit.smoothing),
     }
 
 
@@ -212,6 +216,8 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
         ),
         second_optimum=c["second_optimum"],
         after_spike_test=None if c["after_spike_test"] is None else ScoreTest(**c["after_spike_test"]),
+        term_sizes=tuple(TermSize(t["term"], int(t["coefficients"]), float(t["effective"])) for t in c["terms"]),
+        smoothing=None if c["smoothing"] is None else restore_smoothing(c["smoothing"]),
         seed=int(c["seed"]),
         seconds=float(c["seconds"]),
         version=str(c["version"]),

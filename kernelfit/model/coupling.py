@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal, cast
 
 from kernelfit._validation import is_number
@@ -86,6 +86,21 @@ class CouplingModel:
         if not (is_number(warm_up_s) and warm_up_s >= 0):
             raise ArgumentError(f"warm_up_s={warm_up_s!r} must be a number of seconds, 0 or more.")
         put(self, "warm_up_s", float(warm_up_s))
+
+    def settled(self, *, smoothing: float | None = None, ridge: float | None = None) -> CouplingModel:
+        """The same model with these numbers for the smoothing of the kernel and the ridge of the after-spike term.
+
+        Parameters
+        ----------
+        smoothing, ridge : weights of the penalties; None leaves what is there
+
+        Raises
+        ------
+        ArgumentError : a number below 0, or a term that has no such penalty
+        """
+        kernel = self.kernel if smoothing is None else self.kernel.with_smoothing(smoothing)
+        after_spike = self.after_spike if ridge is None else self.after_spike.with_ridge(ridge)
+        return replace(self, kernel=kernel, after_spike=after_spike)
 
     def fit(
         self,

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import ClassVar, Literal
 
 import numpy as np
@@ -71,6 +71,10 @@ class AfterSpike:
         n = 1 + math.ceil(STEPS_PER_DECADE * math.log10(longest / bin_width) - 1e-9)
         return np.geomspace(bin_width, longest, n)
 
+    def with_ridge(self, value: float) -> AfterSpike:
+        """The same term with this number for its ridge. Raises ArgumentError for a number below 0."""
+        return replace(self, ridge=value)
+
 
 @dataclass(frozen=True)
 class NoAfterSpike:
@@ -82,6 +86,10 @@ class NoAfterSpike:
     def constants(self, bin_width: float) -> FloatArray:
         """No time constants."""
         return np.empty(0)
+
+    def with_ridge(self, value: float) -> NoAfterSpike:
+        """The same: there is nothing to weigh."""
+        return self
 
 
 @dataclass(frozen=True)

@@ -88,8 +88,9 @@ def test_numbers_that_belong_together(fit, recording):
     assert fit.duration_s == pytest.approx(40.0)
     m = fit.after_spike_constants_s.size
     assert fit.n_parameters == 9 * (1 + m) + 3
-    assert fit.aic == pytest.approx(-2 * fit.log_likelihood + 2 * fit.n_parameters)
-    assert fit.bic == pytest.approx(-2 * fit.log_likelihood + fit.n_parameters * np.log(fit.n_spikes))
+    assert fit.n_parameters - 2 < fit.effective_parameters < fit.n_parameters  # the ridge on after-spike coefficients
+    assert fit.aic == pytest.approx(-2 * fit.log_likelihood + 2 * fit.effective_parameters)
+    assert fit.bic == pytest.approx(-2 * fit.log_likelihood + fit.effective_parameters * np.log(fit.n_spikes))
     assert fit.pairs_by_distance["n_pairs"].sum() == 36
     np.testing.assert_allclose(fit.baselines["rate_hz"], np.exp(fit.baselines["estimate"]))
     np.testing.assert_array_equal(fit.positions, recording.positions)

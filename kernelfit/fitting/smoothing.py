@@ -1,0 +1,365 @@
+"""Weights of penalties chosen by the data: smoothing of a kernel, ridge of after-spike coefficients.
+
+A penalty is a prior on how rough a curve is. Its weight is chosen where the marginal likelihood, the parameters
+integrated out by Laplace's approximation, is highest: by the generalised Fellner-Schall update on the parabola of the
+log-likelihood at the current estimate, which costs no sweep, in turn with a few scoring steps from there.
+
+References
+----------
+Wood (2011), Journal of the Royal Statistical Society B 73, 3-36; Wood and Fasiolo (2017), Biometrics 73, 1071-1081.
+Spread of the estimates through the chosen weight: Wood, Pya and Saefken (2016), Journal of the American Statistical
+Association 111, 1548-1563.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit.fitting.arrow import Arrow, SingularOwnBlock
+from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
+from kernelfit.fitting.null import Null, first_estimate, without_coupling
+from kernelfit.fitting.parabola import Parabola, PenalisedTerm, Penalty, reweighted
+from kernelfit.fitting.penalties import after_spike_penalty, asked_for, weights_of, with_weights
+from kernelfit.fitting.problem import Problem
+from kernelfit.fitting.search import CLOSE, SearchResult, promising
+from kernelfit.fitting.validation import HeldOut, best_held_out, held_out
+from kernelfit.kernels import SmoothingChoice
+from kernelfit.model.coupling import CouplingModel
+
+MAX_ROUNDS = 15
+STEPS_A_ROUND = 2
+SETTLED = 1e-3  # log marginal likelihood that another round would gain
+FARTHEST = np.log(1000.0)  # a log weight moves in a round: the parabola may be a poor one at first
+UPDATES = 300
+FLAT = 1e-5  # slope of the log marginal likelihood by a log weight
+LONGEST_STRETCH = 16.0
+GRID_POINTS = 25
+FIRST_FREE = 0.1  # of the directions are left to the data at least by the first guess, and taken at least
+BETWEEN = 1e-4  # tolerance of the climbs between two updates
+LOG_STEP = 0.05  # of a log weight, for derivatives
+VALIDATED_POINTS = 9
+VALIDATED_INSIDE = 10.0  # the grid of validation keeps this far from the bounds, beyond which nothing changes
+DIGITS = 4  # a weight is rounded to so many: no more is known of it, and it can be typed again
+
+
+@dataclass(frozen=True)
+class ChosenWeight:
+    """The weight of one penalty, chosen by the data.
+
+    Parameters
+    ----------
+    term : "kernel" (its smoothing) or "after-spike" (its ridge)
+    chosen_by : "likelihood" or "validation"
+    value : the weight
+    lower, upper : bounds: outside of them nothing changes any more
+    at_bound : -1 at the lower one (no smoothing), 1 at the upper one (nothing left but what is not penalised), else 0
+    log_std_error : standard error of the log weight, from the curvature of the marginal likelihood; NaN at a bound, or
+        where validation chose
+    """
+
+    term: PenalisedTerm
+    chosen_by: SmoothingChoice
+    value: float
+    lower: float
+    upper: float
+    at_bound: int
+    log_std_error: float
+
+
+@dataclass(frozen=True)
+class Smoothing:
+    """How the weights of a fit were chosen.
+
+    Parameters
+    ----------
+    weights : those chosen
+    settled : whether they stopped changing
+    n_rounds, n_sweeps : rounds of updating and climbing, and sweeps all of it took
+    log_marginal_likelihood : at the weights chosen, nats, up to a constant that does not depend on them
+    held_out : log-likelihood of stretches of time left out against the smoothing, where validation chose it
+    """
+
+    weights: tuple[ChosenWeight, ...]
+    settled: bool
+    n_rounds: int
+    n_sweeps: int
+    log_marginal_likelihood: float
+    held_out: HeldOut | None = None
+
+    def of(self, term: PenalisedTerm) -> ChosenWeight | None:
+        """The weight chosen for a term, or None where it was stated."""
+        return next((w for w in self.weights if w.term == term), None)
+
+
+# --- the marginal likelihood on a parabola ----------------------------------------------------------------------------
+
+
+def best_weights(
+    parabola: Parabola, penalties: tuple[Penalty, ...], start: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Weights of highest marginal likelihood on a parabola, and their bounds (n_penalties, 2).
+
+    Generalised Fellner-Schall: w <- w (rank - w tr(V R)) / (w x'Rx), which never lowers the marginal likelihood of a
+    parabola; steps that keep their direction are stretched, and taken back where they lower it. A single penalty starts
+    from the best of a grid, as its marginal likelihood may have two tops.
+    """
+    bounds = np.array([parabola.limits(k, penalties, start) for k in range(len(penalties))])
+    low, high = np.log(bounds).T
+    x = np.clip(np.log(start), low, high)
+    if len(penalties) == 1:
+        grid = np.linspace(low[0], high[0], GRID_POINTS)
+        heights = [parabola.peak(penalties, np.exp([g])).log_marginal for g in grid]
+        x = grid[[int(np.argmax(heights))]]
+    peak, stretch = parabola.peak(penalties, np.exp(x)), 1.0
+    for _ in range(UPDATES):
+        inside = ~(((x <= low) & (peak.slope < 0)) | ((x >= high) & (peak.slope > 0)))
+        if not np.any(np.abs(peak.slope[inside]) > FLAT):
+            break
+        tiny = np.finfo(float).tiny
+        step = np.log(np.maximum(peak.free_directions, tiny)) - np.log(np.maximum(peak.costs, tiny))
+        there = np.clip(x + stretch * step, low, high)
+        candidate = parabola.peak(penalties, np.exp(there))
+        if candidate.log_marginal < peak.log_marginal and stretch > 1.0:
+            stretch = 1.0
+            continue
+        x, peak, stretch = there, candidate, min(2.0 * stretch, LONGEST_STRETCH)
+    return np.exp(x), bounds
+
+
+def log_weight_covariance(
+    parabola: Parabola, penalties: tuple[Penalty, ...], weights: FloatArray, inside: BoolArray
+) -> FloatArray:
+    """Inverse curvature of the log marginal likelihood in the log weights; zero rows where one sits at its bound."""
+    n = weights.size
+    curvature = np.zeros((n, n))
+    for k in range(n):
+        up, down = weights.copy(), weights.copy()
+        up[k] *= np.exp(LOG_STEP)
+        down[k] *= np.exp(-LOG_STEP)
+        slope = parabola.peak(penalties, up).slope - parabola.peak(penalties, down).slope
+        curvature[:, k] = -slope / (2.0 * LOG_STEP)
+    curvature = 0.5 * (curvature + curvature.T)[np.ix_(inside, inside)]
+    covariance = np.zeros((n, n))
+    if inside.any():
+        value, vector = np.linalg.eigh(curvature)
+        flat = 1.0 / FARTHEST**2  # where the marginal likelihood is as good as flat a weight is known to a factor
+        covariance[np.ix_(inside, inside)] = (vector / np.maximum(value, flat)) @ vector.T
+    return covariance
+
+
+# --- first guesses ----------------------------------------------------------------------------------------------------
+
+
+def first_ridge(problem: Problem, asked: CouplingModel) -> Problem:
+    """The ridge of the after-spike coefficients chosen without coupling, where it is left to the data."""
+    wanted = tuple(p for p, _ in asked_for(problem, asked) if p.term == "after-spike")
+    if not wanted:
+        return problem
+    bare = without_coupling(problem)
+    penalties = (after_spike_penalty(bare),)
+    weights = weights_of(problem, penalties)
+    optimum = maximise(bare, first_estimate(bare), tolerance=LOOSE)
+    climb = _climb(bare, optimum, penalties, weights, np.zeros(0, dtype=bool))
+    return with_weights(problem, wanted, climb.weights)
+
+
+def first_smoothing(problem: Problem, null: Null, asked: CouplingModel) -> Problem:
+    """A first guess at the smoothing, where it is left to the data: from the one-step estimate of J in bands."""
+    wanted = tuple(p for p, _ in asked_for(problem, asked) if p.term == "kernel")
+    if not wanted:
+        return problem
+    sweep = promising(null.sweeps)[0]
+    n = problem.n_kernel
+    basis = problem.kernel.gradient(np.zeros(n), null.distance_um, problem.span)  # (K, bands)
+    rough = wanted[0]
+    penalty = Penalty("kernel", np.zeros(1), rough.shared[:n, :n], rough.scales, rough.floor)
+    parabola = Parabola(
+        own=np.zeros((0, 1)),
+        shared=np.zeros(n),
+        free=np.ones(n, dtype=bool),
+        value=0.0,
+        score_own=np.zeros((0, 1)),
+        score_shared=basis @ sweep.information @ sweep.coupling,
+        information=Arrow(np.zeros((0, 1, 1)), np.zeros((0, 1, n)), basis @ sweep.information @ basis.T),
+    )
+    start = np.ones(1)
+    try:
+        low, high = parabola.limits(0, (penalty,), start)
+        weights, _ = best_weights(parabola, (penalty,), start)
+    except np.linalg.LinAlgError:  # bands that say nothing: begin in the middle, the climb will tell
+        return problem
+    room = 1.0 / FIRST_FREE
+    return with_weights(problem, wanted, np.clip(weights, low * room, max(high / room, low * room)))
+
+
+# --- updating and climbing in turn ------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, eq=False)
+class _Climb:
+    """A problem with its weights, an estimate near its top, and the parabola there."""
+
+    problem: Problem
+    optimum: Optimum
+    weights: FloatArray
+    bounds: FloatArray
+    parabola: Parabola
+    settled: bool
+    n_rounds: int
+
+
+def parabola_at(
+    problem: Problem, optimum: Optimum, penalties: tuple[Penalty, ...], weights: FloatArray
+) -> Parabola:
+    """The parabola at an optimum; the leak is taken as known where the data say nothing about it.
+
+    Raises numpy's LinAlgError where there is none even so.
+    """
+    parabola = Parabola.at(optimum.local, optimum.free, penalties, weights)
+    try:
+        parabola.peak(penalties, weights)
+    except SingularOwnBlock:
+        raise
+    except np.linalg.LinAlgError:
+        if not (problem.fits_leak and optimum.free[-1]):
+            raise
+        free = optimum.free.copy()
+        free[-1] = False
+        parabola = Parabola.at(optimum.local, free, penalties, weights)
+        parabola.peak(penalties, weights)
+    return parabola
+
+
+def _climb(
+    problem: Problem, optimum: Optimum, penalties: tuple[Penalty, ...], weights: FloatArray, held: BoolArray
+) -> _Climb:
+    """Update weights on the parabola, climb a few steps, and again until the weights no longer change."""
+    settled, n_rounds = False, 0
+    while True:
+        n_rounds += 1
+        parabola = parabola_at(problem, optimum, penalties, weights)
+        wanted, bounds = best_weights(parabola, penalties, weights)
+        change = np.clip(np.log(wanted / weights), -FARTHEST, FARTHEST)
+        new = _rounded(weights * np.exp(change))
+        gain = parabola.peak(penalties, new).log_marginal - parabola.peak(penalties, weights).log_marginal
+        settled = bool(gain < SETTLED) and bool((np.abs(change) < FARTHEST).all())
+        problem = with_weights(problem, penalties, new)
+        optimum = replace(optimum, local=reweighted(optimum.local, penalties, new - weights))
+        weights = new
+        if settled or n_rounds == MAX_ROUNDS:
+            return _Climb(problem, optimum, weights, bounds, parabola, settled, n_rounds)
+        optimum = maximise(problem, optimum.local, held=held, tolerance=BETWEEN, max_iterations=STEPS_A_ROUND)
+
+
+def _rounded(weights: FloatArray) -> FloatArray:
+    return np.array([float(f"{w:.{DIGITS - 1}e}") for w in weights])
+
+
+# --- the whole of it --------------------------------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, eq=False)
+class Chosen:
+    """A search with the weights that the data chose: the problem with them, its optima, how they were chosen.
+
+    `through_weights` is the covariance (Q, Q) of the shared parameters that comes from not knowing the weights.
+    """
+
+    problem: Problem
+    found: SearchResult
+    smoothing: Smoothing | None
+    through_weights: FloatArray
+
+
+def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chosen:
+    """Choose the weights that a model leaves to the data, and climb to the top that belongs to them.
+
+    Parameters
+    ----------
+    problem, found : with first guesses for the weights, and the optimum there
+    asked : the model as the user stated it
+    """
+    wanted = asked_for(problem, asked)
+    nothing = np.zeros((problem.n_shared, problem.n_shared))
+    if not wanted:
+        return Chosen(problem, found, None, nothing)
+    problem.clock.stage = "choosing the smoothing"
+    before = problem.clock.sweeps
+    penalties = tuple(p for p, _ in wanted)
+    held = ~found.best.free & (found.best.at_bound == 0)
+    climb = _climb(problem, found.best, penalties, weights_of(problem, penalties), held)
+    by_validation = [k for k, (_, choice) in enumerate(wanted) if choice == "validation"]
+    weights, at_bound, table = climb.weights, _at_bound(climb.weights, climb.bounds), None
+    for k in by_validation:
+        table = held_out(climb.problem, climb.optimum, penalties[k], _grid(climb, penalties, k))
+        weights = weights.copy()
+        weights[k], at_bound[k] = best_held_out(table)
+        weights = _rounded(weights)
+    problem = with_weights(climb.problem, penalties, weights)
+    start = reweighted(climb.optimum.local, penalties, weights - climb.weights)
+    top = maximise(problem, start, held=held, tolerance=TIGHT)
+    found = _with_second(problem, found, top, held)
+    parabola = parabola_at(problem, found.best, penalties, weights)
+    inside = at_bound == 0
+    inside[by_validation] = False
+    spread = log_weight_covariance(parabola, penalties, weights, inside)
+    chosen = tuple(
+        ChosenWeight(
+            term=penalty.term,
+            chosen_by=choice,
+            value=float(weights[k]),
+            lower=float(climb.bounds[k, 0]),
+            upper=float(climb.bounds[k, 1]),
+            at_bound=int(at_bound[k]),
+            log_std_error=float(np.sqrt(spread[k, k])) if inside[k] else np.nan,
+        )
+        for k, (penalty, choice) in enumerate(wanted)
+    )
+    peak = parabola.peak(penalties, weights)
+    smoothing = Smoothing(
+        weights=chosen,
+        settled=climb.settled,
+        n_rounds=climb.n_rounds,
+        n_sweeps=problem.clock.sweeps - before,
+        log_marginal_likelihood=peak.log_marginal,
+        held_out=table,
+    )
+    slope = _slope_by_log_weights(parabola, penalties, weights)
+    return Chosen(problem, found, smoothing, slope.T @ spread @ slope)
+
+
+def _at_bound(weights: FloatArray, bounds: FloatArray) -> IntArray:
+    near = 1.0 + 10.0**-DIGITS * 10.0  # a rounded weight is still at its bound
+    return np.where(weights >= bounds[:, 1] / near, 1, np.where(weights <= bounds[:, 0] * near, -1, 0))
+
+
+def _grid(climb: _Climb, penalties: tuple[Penalty, ...], k: int) -> FloatArray:
+    """Smoothings to validate, from hardly any to as good as endless."""
+    low, high = climb.bounds[k] * [VALIDATED_INSIDE, 1.0 / VALIDATED_INSIDE]
+    return _rounded(np.geomspace(low, max(high, low * VALIDATED_INSIDE), VALIDATED_POINTS))
+
+
+def _with_second(problem: Problem, found: SearchResult, top: Optimum, held: BoolArray) -> SearchResult:
+    """The search with its best optimum under the weights chosen, and its second one if it still comes close."""
+    best = replace(top, n_iterations=top.n_iterations + found.best.n_iterations)
+    if found.second is None:
+        return replace(found, best=best)
+    second = maximise(problem, found.second.estimate, held=held, tolerance=LOOSE)
+    if second.local.objective > best.local.objective:
+        best, second = maximise(problem, second.local, held=held, tolerance=TIGHT), best
+    close = second.local.objective > best.local.objective - CLOSE
+    return replace(found, best=best, second=second if close else None)
+
+
+def _slope_by_log_weights(parabola: Parabola, penalties: tuple[Penalty, ...], weights: FloatArray) -> FloatArray:
+    """(n_penalties, Q) how the shared estimates move with each log weight."""
+    rows = []
+    for k in range(len(penalties)):
+        up, down = weights.copy(), weights.copy()
+        up[k] *= np.exp(LOG_STEP)
+        down[k] *= np.exp(-LOG_STEP)
+        rows.append(parabola.peak(penalties, up).shared - parabola.peak(penalties, down).shared)
+    return np.array(rows) / (2.0 * LOG_STEP)

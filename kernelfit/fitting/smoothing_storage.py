@@ -1,0 +1,65 @@
+"""How the smoothing of a fit was chosen, as plain JSON values and back."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import asdict
+from typing import Any
+
+import numpy as np
+
+from kernelfit.fitting.plain_values import floats, plain
+from kernelfit.fitting.smoothing import ChosenWeight, Smoothing
+from kernelfit.fitting.validation import HeldOut
+
+
+def describe_smoothing(smoothing: Smoothing) -> dict[str, Any]:
+    """As plain values; NaN becomes null."""
+    weights = [{**asdict(w), "log_std_error": plain(np.array([w.log_std_error]))[0]} for w in smoothing.weights]
+    table = smoothing.held_out
+    return {
+        "weights": weights,
+        "settled": smoothing.settled,
+        "n_rounds": smoothing.n_rounds,
+        "n_sweeps": smoothing.n_sweeps,
+        "log_marginal_likelihood": smoothing.log_marginal_likelihood,
+        "held_out": None
+        if table is None
+        else {
+            "smoothing": plain(table.smoothing),
+            "log_likelihood": plain(table.log_likelihood),
+            "gap_s": table.gap_s,
+        },
+    }
+
+
+def restore_smoothing(values: Mapping[str, Any]) -> Smoothing:
+    """From what `describe_smoothing` made."""
+    table = values["held_out"]
+    return Smoothing(
+        weights=tuple(_weight(w) for w in values["weights"]),
+        settled=bool(values["settled"]),
+        n_rounds=int(values["n_rounds"]),
+        n_sweeps=int(values["n_sweeps"]),
+        log_marginal_likelihood=float(values["log_marginal_likelihood"]),
+        held_out=None
+        if table is None
+        else HeldOut(
+            floats(table["smoothing"], -1),
+            floats(table["log_likelihood"], -1, len(table["smoothing"])),
+            float(table["gap_s"]),
+        ),
+    )
+
+
+def _weight(values: Mapping[str, Any]) -> ChosenWeight:
+    error = values["log_std_error"]
+    return ChosenWeight(
+        term=values["term"],
+        chosen_by=values["chosen_by"],
+        value=float(values["value"]),
+        lower=float(values["lower"]),
+        upper=float(values["upper"]),
+        at_bound=int(values["at_bound"]),
+        log_std_error=np.nan if error is None else float(error),
+    )
