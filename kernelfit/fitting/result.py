@@ -14,15 +14,21 @@ from kernelfit.engine.evaluate import Point, SweepData, compensate, evaluate, ex
 from kernelfit.errors import ArgumentError, StorageError, Unavailable
 from kernelfit.fitting.covariance import Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
+from kernelfit.fitting.effective import TermSize
 from kernelfit.fitting.outcome import FittedRates, Note, ScoreTest, SolverReport
 from kernelfit.fitting.problem import Estimate, Problem, geometry_of, make_problem
+from kernelfit.fitting.smoothing import Smoothing
 from kernelfit.kernels import DistanceRange, KernelCurve
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.grid import Grid, make_grid
 from kernelfit.recording.recording import Origin, Recording
 
 if TYPE_CHECKING:
+    from collections.abc import Sequence
+
     from kernelfit.diagnostics.goodness import Goodness
+    from kernelfit.fitting.smoothing_path import SmoothingPath
+    from kernelfit.inference.bootstrap import Bootstrap, BootstrapKind, BootstrapProgressCallback
     from kernelfit.inference.influence import Influence
 
 LEVEL = 0.95
@@ -54,6 +60,8 @@ class CouplingFit:
         same model without coupling
     spectral_radius : of the matrix E[f'] J / alpha; 1 and more cannot be stationary
     verdict, notes, solver, second_optimum, after_spike_test : records
+    term_sizes : coefficients and effective parameters of every term
+    smoothing : how weights of penalties that were left to the data were chosen (`model` holds the numbers), or None
     seed, seconds, version, created : provenance
     recording : the recording, where the fit was made in this process
     """
@@ -87,6 +95,8 @@ class CouplingFit:
     solver: SolverReport
     second_optimum: str | None
     after_spike_test: ScoreTest | None
+    term_sizes: tuple[TermSize, ...]
+    smoothing: Smoothing | None
     seed: int
     seconds: float
     version: str
@@ -131,14 +141,26 @@ class CouplingFit:
         return int(self.own.size + self.shared.size)
 
     @property
+    def effective_parameters(self) -> float:
+        """tr((I + S)^-1 I), I the information and S the penalties; without penalties `n_parameters`."""
+        return float(sum(size.effective for size in self.term_sizes))
+
+    @property
+    def effective_by_term(self) -> pd.DataFrame:
+        """By term of the model: coefficients and effective, how many of them the penalties leave to the data."""
+        index = pd.Index([size.term for size in self.term_sizes], name="term", dtype=object)
+        rows = [(size.coefficients, size.effective) for size in self.term_sizes]
+        return pd.DataFrame(rows, index=index, columns=["coefficients", "effective"])
+
+    @property
     def aic(self) -> float:
-        """-2 log L + 2 k."""
-        return -2.0 * self.log_likelihood + 2.0 * self.n_parameters
+        """-2 log L + 2 k, k the effective number of parameters."""
+        return -2.0 * self.log_likelihood + 2.0 * self.effective_parameters
 
     @property
     def bic(self) -> float:
-        """-2 log L + k log n, n the number of spikes in the likelihood."""
-        return -2.0 * self.log_likelihood + self.n_parameters * float(np.log(max(self.n_spikes, 1)))
+        """-2 log L + k log n, k the effective number of parameters, n the number of spikes in the likelihood."""
+        return -2.0 * self.log_likelihood + self.effective_parameters * float(np.log(max(self.n_spikes, 1)))
 
     @property
     def block_length_s(self) -> float:
@@ -396,6 +418,31 @@ class CouplingFit:
             n_spikes=self.n_spikes,
             seed=seed,
         )
+
+    def smoothing_path(
+        self,
+        smoothing: Sequence[float] | FloatArray | None = None,
+        *,
+        validate: bool = False,
+        recording: Recording | None = None,
+        threads: int | None = None,
+    ) -> SmoothingPath:
+        """The kernel refitted at each smoothing of a grid, with what the criteria say of it.
+
+        Parameters
+        ----------
+        smoothing : above 0; None: thirteen from hardly any to as good as endless. The fit's own joins them
+        validate : True to fit each smoothing to the recording without stretches of time too, and judge it there
+        recording, threads : as for `problem`
+
+        Raises
+        ------
+        ArgumentError : a kernel without smoothing, or values that are none
+        StorageError : no recording at hand, or another one
+        """
+        from kernelfit.fitting.smoothing_path import smoothing_path  # it builds on this module
+
+        return smoothing_path(self, smoothing, validate=validate, recording=recording, threads=threads)
 
     def fitted_rates(self, start_s: float, stop_s: float, recording: Recording | None = None) -> FittedRates:
         """Fitted rates and observed counts in the bins between two times of one window.
