@@ -15,11 +15,12 @@ from kernelfit._validation import is_whole
 from kernelfit.errors import ArgumentError, FitWarning, NotIdentifiedError
 from kernelfit.fitting.added_term import after_spike_test
 from kernelfit.fitting.arrow import SingularOwnBlock
+from kernelfit.fitting.bounds import bound_reasons, in_words, run_off_parameters
 from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.detection import detect_coupling
 from kernelfit.fitting.effective import term_sizes
 from kernelfit.fitting.maximise import Optimum
-from kernelfit.fitting.notes import bound_reasons, fit_notes
+from kernelfit.fitting.notes import fit_notes
 from kernelfit.fitting.null import Null, fit_null
 from kernelfit.fitting.outcome import SolverReport
 from kernelfit.fitting.problem import Problem, make_problem
@@ -78,7 +79,7 @@ def fit_model(
         own=optimum.estimate.own,
         shared=optimum.estimate.shared,
         at_bound=optimum.at_bound,
-        bound_reasons=bound_reasons(problem, optimum.at_bound),
+        bound_reasons=bound_reasons(problem, optimum),
         span=problem.span,
         distinct_um=by_distance["distance_um"].to_numpy(),
         n_pairs=by_distance["n_pairs"].to_numpy(),
@@ -176,13 +177,13 @@ def _solver_report(found: SearchResult) -> SolverReport:
 
 
 def _second_sentence(problem: Problem, found: SearchResult) -> str | None:
-    if found.second is None:
-        return None
+    if found.second is None or any(run_off_parameters(problem, o).any() for o in (found.best, found.second)):
+        return None  # two points on a likelihood that no longer changes are no two optima
 
     def words(shared: FloatArray) -> str:
         family = problem.kernel.parameters(problem.span)
         natural = problem.kernel.natural(shared[: problem.n_kernel], problem.span)
-        parts = [f"{p.name} {v:.3g}" for p, v in zip(family, natural, strict=True)]
+        parts = [f"{in_words([p.name])} {v:.3g} {p.unit}".strip() for p, v in zip(family, natural, strict=True)]
         return ", ".join([*parts, f"time constant {1000 / problem.leak(shared):.3g} ms"])
 
     gap = found.best.local.objective - found.second.local.objective

@@ -18,6 +18,7 @@ import scipy.linalg
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.engine.evaluate import Evaluation, TimeBlocks
+from kernelfit.fitting.amplitudes import FAR, suppressing, tied
 from kernelfit.fitting.arrow import Arrow, eliminate
 from kernelfit.fitting.by_block import BlockSums, sums_by_block
 from kernelfit.fitting.problem import Estimate, Problem
@@ -72,8 +73,9 @@ class Weighting:
 class Optimum:
     """Where the optimiser stopped.
 
-    `free` marks the shared parameters that were estimated; the others were held or sit at `at_bound` (-1 lower, 1
-    upper).
+    `free` marks the shared parameters that were estimated; the others were held, or sit at `at_bound` (-1 lower, 1
+    upper). An amplitude without a bound is marked so where nothing holds it on that side, and what is tied to such a
+    one is not free either.
     `decrement` is the squared length of the next step in standard errors. `by_block` holds the sums of the last sweep
     by blocks of time, where it was made so.
     """
@@ -161,18 +163,21 @@ def maximise(
         nowhere = np.zeros(problem.n_shared)
         return Optimum(local, ~held, nowhere, False, 0, np.inf, "the likelihood at the start is not finite")
     correction = np.zeros((problem.n_shared, problem.n_shared))
+    driven_um = problem.driven_um if problem.n_kernel else np.empty(0)
+    run_off = np.zeros(problem.n_shared, dtype=bool)
     damping, decrement, stale = FIRST_DAMPING, np.inf, 0
     gains: list[float] = []
     by_block: BlockSums | None = None
     message, converged, iteration = "", False, 0
     while iteration < max_iterations:
         iteration += 1
-        free = ~held & ~_pushed_out(local, bounds)
+        run_off = _run_off(problem, local, run_off, driven_um)
+        free = ~held & ~_pushed_out(local, bounds) & ~run_off
         try:
             step = _solve(local, free, 0.0, correction)
             decrement = step.gain
             if decrement < tolerance:
-                converged, message = True, f"the last step was {np.sqrt(max(decrement, 0.0)):.1e} standard errors long"
+                converged, message = True, _at_the_top(tolerance)
                 if tolerance <= TIGHT:
                     local, by_block = _last_step(problem, local, step, bounds, weighting)
                 break
@@ -180,7 +185,7 @@ def maximise(
             decrement = np.inf
         trial, damping = _bounded_step(local, free, damping, bounds, correction)
         if trial is None:
-            message = "no step short enough to trust leads on: the information is singular here"
+            message = "no further step can be worked out: here the recording cannot tell the parameters apart"
             break
         candidate = evaluate_locally(problem, trial.estimate, weighting)
         slack = ROUNDING * abs(local.objective)
@@ -196,7 +201,10 @@ def maximise(
                 break
             gains.append(gained)
             if len(gains) > RIDGE_STEPS and sum(gains[-RIDGE_STEPS:]) < RIDGE_GAIN:
-                converged, message = True, f"a ridge: {RIDGE_STEPS} steps gained less than {RIDGE_GAIN:g} in all"
+                converged, message = True, (
+                    f"the likelihood is flat here: {RIDGE_STEPS} steps raised its logarithm by less than "
+                    f"{RIDGE_GAIN:g} in all"
+                )
                 break
         else:
             damping = max(damping * 10.0, FIRST_DAMPING)
@@ -204,12 +212,32 @@ def maximise(
                 message = "no step raises the likelihood any more"
                 break
     else:
-        message = (
-            f"stopped after {max_iterations} steps, {np.sqrt(max(decrement, 0.0)):.1e} standard errors from the top"
-        )
+        message = f"stopped after {max_iterations} steps, before the top of the likelihood"
+        if np.isfinite(decrement):
+            length = np.sqrt(max(decrement, 0.0))
+            message += f": one more would move the estimates by up to {length:.2g} standard errors"
     pushed = _pushed_out(local, bounds)
     at_bound = np.where(pushed, np.where(local.estimate.shared <= bounds[:, 0], -1.0, 1.0), 0.0)
-    return Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message, by_block)
+    run_off = _run_off(problem, local, run_off, driven_um) & ~held
+    optimum = Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message, by_block)
+    return with_run_off(problem, optimum, run_off) if run_off.any() else optimum
+
+
+def _at_the_top(tolerance: float) -> str:
+    """What a next step shorter than the root of `tolerance`, in standard errors, means to a reader."""
+    return (
+        "the top of the likelihood is reached: one more step would move no estimate by as much as "
+        f"1/{1.0 / np.sqrt(tolerance):,.0f} of its standard error"
+    )
+
+
+def with_run_off(problem: Problem, optimum: Optimum, run_off: BoolArray) -> Optimum:
+    """The optimum with amplitudes that nothing holds marked, and what is tied to them no longer free."""
+    free = optimum.free & ~run_off
+    free &= ~tied(problem, optimum.local.information, run_off, free)
+    return replace(
+        optimum, free=free, at_bound=np.where(run_off, np.sign(optimum.estimate.shared), optimum.at_bound)
+    )
 
 
 @dataclass(frozen=True, eq=False)
@@ -231,6 +259,20 @@ def _pushed_out(local: Local, bounds: FloatArray) -> BoolArray:
     if x.size == 0:
         return np.zeros(0, dtype=bool)
     return np.asarray(((x <= bounds[:, 0]) & (g < 0)) | ((x >= bounds[:, 1]) & (g > 0)), dtype=bool)
+
+
+def _run_off(problem: Problem, local: Local, before: BoolArray, driven_um: FloatArray) -> BoolArray:
+    """(Q,) True for amplitudes so far off that the likelihood no longer changes with them, and not on their way back.
+
+    One that got there (`before`) stays there while the others settle, unless they bring it back by a half.
+    """
+    x, g = local.estimate.shared, local.score_shared
+    if x.size == 0:
+        return before
+    far = suppressing(problem, x, driven_um, FAR)
+    if before.any():
+        far |= before & suppressing(problem, x, driven_um, 0.5 * FAR)
+    return np.asarray(far & (g * x > -RIDGE_GAIN), dtype=bool)
 
 
 def _inside(estimate: Estimate, bounds: FloatArray) -> Estimate:

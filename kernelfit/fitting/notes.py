@@ -4,41 +4,18 @@ from __future__ import annotations
 
 import numpy as np
 
-from kernelfit._typing import FloatArray
+from kernelfit.fitting.bounds import bound_reasons, in_words, run_off_parameters, shared_names
 from kernelfit.fitting.covariance import REFUSED_BELOW, Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.maximise import Optimum
-from kernelfit.fitting.outcome import Note
-from kernelfit.fitting.problem import FASTEST_LEAK_BINS, SLOWEST_LEAK_SHARE, Problem
+from kernelfit.fitting.outcome import Note, Severity
+from kernelfit.fitting.problem import SLOWEST_LEAK_SHARE, Problem
 from kernelfit.recording.activity import gaps, longest_break, paused
 from kernelfit.recording.merged import merge_trains
 from kernelfit.recording.recording import Recording
 
 WIDE_BINS = 0.5  # alpha D above this: the bins are too wide for the leak found (docs/model.md section 3)
 FEW_BLOCKS = 30
-
-
-def shared_names(problem: Problem) -> tuple[str, ...]:
-    """Names of the shared parameters, in order."""
-    names = [p.name for p in problem.kernel.parameters(problem.span)]
-    return (*names, *["same_site"] * problem.has_same_site, *["leak_rate"] * problem.fits_leak)
-
-
-def bound_reasons(problem: Problem, at_bound: FloatArray) -> tuple[str, ...]:
-    """For each shared parameter, why it cannot go past the bound it sits at, or an empty text."""
-    reasons = [""] * problem.n_shared
-    for q in np.flatnonzero(at_bound):
-        upper = at_bound[q] > 0
-        if q < problem.n_kernel:
-            reasons[q] = problem.kernel.bound_reason(int(q), bool(upper), problem.span)
-        elif upper:
-            fastest = 1000.0 * problem.data.bin_width / FASTEST_LEAK_BINS
-            reasons[q] = f"a time constant below {fastest:.3g} ms is faster than a bin: use narrower bins"
-        else:
-            reasons[q] = (
-                f"a time constant above 1/{SLOWEST_LEAK_SHARE:g} of the recording cannot be told from a drifting rate"
-            )
-    return tuple(reasons)
 
 
 def fit_notes(
@@ -64,26 +41,29 @@ def fit_notes(
     if spread.weak_direction is not None:
         parts = np.abs(spread.weak_direction)
         named = [names[q] for q in np.flatnonzero(parts > 0.3 * np.nanmax(parts))]
+        said = in_words(named, article=True)
         notes.append(
             Note(
                 "warning",
-                f"The recording cannot tell {' and '.join(named)} apart: some combination of them changes nothing."
+                f"The recording cannot tell {said} apart: some combination of them changes nothing."
                 if len(named) > 1
-                else f"The recording says nothing about {named[0]}.",
-                ", ".join(named),
+                else f"The recording says nothing about {said}.",
+                in_words(named),
                 "Use a kernel with fewer parameters, or fix the leak rate (leak_rate=..., --leak-rate).",
             )
         )
-    for q, reason in enumerate(bound_reasons(problem, optimum.at_bound)):
-        if reason and verdict.found:
-            notes.append(
-                Note(
-                    "warning",
-                    f"{names[q]} ran into its bound: {reason}.",
-                    names[q],
-                    "It has no interval; do not quote it.",
-                )
-            )
+    reasons = bound_reasons(problem, optimum)
+    run_off = run_off_parameters(problem, optimum)
+    for q in np.flatnonzero(optimum.at_bound):
+        word = in_words([names[q]])
+        start = in_words([names[q]], article=True).capitalize()
+        if run_off[q]:
+            remedy = "Record longer, or use a kernel with fewer parameters."
+            severity: Severity = "warning" if verdict.found else "info"
+            notes.append(Note(severity, f"{start} has no estimate: {reasons[q]}.", word, remedy))
+        elif verdict.found:
+            remedy = "It has no interval; do not quote it."
+            notes.append(Note("warning", f"{start} ran into its bound: {reasons[q]}.", word, remedy))
     leak = problem.leak(optimum.estimate.shared)
     if verdict.found and leak * problem.data.bin_width > WIDE_BINS:
         notes.append(
@@ -91,7 +71,7 @@ def fit_notes(
                 "warning",
                 f"The bins of {1000 * problem.data.bin_width:g} ms are too wide for the time constant "
                 f"found, {1000 / leak:.3g} ms.",
-                "bin_width",
+                "bin width",
                 f"Refit with bins of at most {1000 * WIDE_BINS / leak:.2g} ms.",
             )
         )
@@ -101,7 +81,7 @@ def fit_notes(
                 "warning",
                 f"The time constant stated, {1 / leak:.3g} s, is above 1/{SLOWEST_LEAK_SHARE:g} of the "
                 f"{problem.grid.duration_s:.4g} s that count: coupling so slow cannot be told from a drifting rate.",
-                "leak_rate",
+                "leak rate",
                 "State a faster leak rate, or record longer.",
             )
         )
@@ -112,7 +92,7 @@ def fit_notes(
                 "warning",
                 f"The {problem.grid.duration_s:.3g} s that count are {many} of time ({REFUSED_BELOW} are needed): "
                 "there are no robust standard errors.",
-                "covariance",
+                "standard errors",
                 "Record longer, or read the model-based ones: fit.with_covariance('model') (--covariance model).",
             )
         )
@@ -122,7 +102,7 @@ def fit_notes(
                 "warning",
                 f"Robust standard errors rest on {spread.n_blocks} blocks of time of {spread.block_length_s:.3g} s; "
                 f"fewer than {FEW_BLOCKS} tend to come out too small.",
-                "covariance",
+                "standard errors",
                 "Record longer, or read those of the jackknife, made for few blocks: fit.with_covariance('jackknife') "
                 "(--covariance jackknife).",
             )
@@ -133,7 +113,7 @@ def fit_notes(
                 "warning",
                 f"Neighbouring blocks of time of {spread.block_length_s:.3g} s still go together, and there are too "
                 "few to join more of them: slow states outlast a block, and robust standard errors are too small.",
-                "covariance",
+                "standard errors",
                 "Record longer; read the intervals as lower limits of the uncertainty.",
             )
         )
@@ -181,7 +161,7 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
             Note(
                 "info",
                 f"{n_same} pair{'s' * (n_same != 1)} of units on one site left out of the kernel.",
-                "same_site",
+                "pairs on one site",
                 "Detection hides coincident spikes there; same_site='own' (--same-site own) gives them a coefficient "
                 "of their own.",
             )
@@ -191,7 +171,7 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
             Note(
                 "info",
                 "No two units on one site, the source firing, are left: there is no same-site coefficient.",
-                "same_site",
+                "pairs on one site",
                 "Nothing to do.",
             )
         )

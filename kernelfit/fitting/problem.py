@@ -132,8 +132,7 @@ class Problem:
     @property
     def leak_limits(self) -> tuple[float, float]:
         """Slowest and fastest leak rate that can be told, 1/s."""
-        fastest = FASTEST_LEAK_BINS / self.data.bin_width
-        return min(SLOWEST_LEAK_SHARE / (self.data.n_bins * self.data.bin_width), fastest / 10.0), fastest
+        return leak_limits(self.data.n_bins, self.data.bin_width)
 
     @property
     def bounds(self) -> FloatArray:
@@ -222,6 +221,20 @@ class Problem:
     def with_kernel(self, kernel: Kernel) -> Problem:
         """The same data with another distance law."""
         return replace(self, kernel=kernel)
+
+
+def leak_limits(n_bins: int, bin_width: float) -> tuple[float, float]:
+    """Slowest and fastest leak rate, 1/s, that so many bins of a width (s) can tell."""
+    fastest = FASTEST_LEAK_BINS / bin_width
+    return min(SLOWEST_LEAK_SHARE / (n_bins * bin_width), fastest / 10.0), fastest
+
+
+def leak_reason(bin_width: float, *, upper: bool) -> str:
+    """Why a leak rate beyond the fastest (`upper`) or slowest cannot be told."""
+    if upper:
+        fastest_ms = 1000.0 * bin_width / FASTEST_LEAK_BINS
+        return f"a time constant below {fastest_ms:.3g} ms is faster than a bin: use narrower bins"
+    return f"a time constant above 1/{SLOWEST_LEAK_SHARE:g} of the recording cannot be told from a drifting rate"
 
 
 def excluded_pair_mask(recording: Recording) -> BoolArray:

@@ -12,7 +12,7 @@ from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, NullSweep, null_blocks, null_sweep
 from kernelfit.fitting.problem import Estimate, Problem
-from kernelfit.fitting.search import SearchResult, StartRecord, promising
+from kernelfit.fitting.search import SearchResult, StartRecord, held_by_nothing, promising
 from kernelfit.kernels.bands import Bands
 
 MOST_RADII = 40
@@ -98,7 +98,8 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
         inflation = variance_inflation(covariances(problem, profiled.optima[best]))
         problem.clock.stage = "climbing"
         profiled.widen(coarse, 0.5 * inflation * edge_critical(LEVEL))
-    top = profiled.climb(best, profiled.optima[best].estimate, TIGHT)
+    held = np.arange(problem.n_shared) == place
+    top = held_by_nothing(problem, profiled.climb(best, profiled.optima[best].estimate, TIGHT), held)
     tried = sorted(profiled.optima)
     objective = np.array([profiled.optima[k].local.objective for k in tried])
     return SearchResult(top, None, starts), RadiusProfile(candidates[tried], objective)

@@ -7,7 +7,17 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.fitting.maximise import LOOSE, TIGHT, Local, Optimum, evaluate_locally, maximise
+from kernelfit.fitting.amplitudes import FAR, STRONG, strongest_suppression, suppressing
+from kernelfit.fitting.maximise import (
+    LOOSE,
+    RIDGE_GAIN,
+    TIGHT,
+    Local,
+    Optimum,
+    evaluate_locally,
+    maximise,
+    with_run_off,
+)
 from kernelfit.fitting.null import Null, NullSweep
 from kernelfit.fitting.problem import Estimate, Problem
 
@@ -105,7 +115,40 @@ def search(problem: Problem, null: Null, *, held: BoolArray | None = None) -> Se
             if close and _apart(problem, finished.estimate.shared, top.estimate.shared):
                 second = finished
                 break
-    return SearchResult(replace(top, n_iterations=top.n_iterations + ranked[0].n_iterations), second, records)
+    steps = top.n_iterations + ranked[0].n_iterations
+    return SearchResult(replace(held_by_nothing(problem, top, held), n_iterations=steps), second, records)
+
+
+def held_by_nothing(problem: Problem, top: Optimum, held: BoolArray | None = None) -> Optimum:
+    """An optimum with strong suppression, moved to where the rate is gone if the likelihood is as high there.
+
+    Parameters
+    ----------
+    problem, top : where the climb ended
+    held : (Q,) shared parameters that stay where they are
+
+    Returns
+    -------
+    Optimum : `top` itself where something holds its amplitudes; else they stand at a suppression of `FAR` and are
+        marked in `at_bound`, and the rest is at its maximum given them
+    """
+    driven_um = problem.driven_um
+    strong = suppressing(problem, top.estimate.shared, driven_um, STRONG)
+    strong = strong if held is None else strong & ~held
+    if not strong.any() or not np.isfinite(top.local.objective):
+        return top
+    shared = top.estimate.shared.copy()
+    n = problem.n_kernel
+    if strong[:n].any():
+        worst, _ = strongest_suppression(problem, shared, driven_um)
+        shared[:n][strong[:n]] *= FAR / -worst
+    if strong[n:].any():
+        shared[n] = -FAR
+    fixed = strong if held is None else held | strong
+    there = maximise(problem, Estimate(top.estimate.own, shared), held=fixed, tolerance=TIGHT)
+    if not there.converged or there.local.objective < top.local.objective - RIDGE_GAIN:
+        return top
+    return with_run_off(problem, there, strong)
 
 
 def _only_hill(problem: Problem, null: Null, held: BoolArray | None) -> SearchResult:
@@ -118,7 +161,7 @@ def _only_hill(problem: Problem, null: Null, held: BoolArray | None) -> SearchRe
     first = evaluate_locally(problem, start_estimates(problem, null, null.sweeps[0], 1)[0])
     if first.finite and first.objective >= null.optimum.local.objective:
         begin = first
-    top = maximise(problem, begin, held=held, tolerance=TIGHT)
+    top = held_by_nothing(problem, maximise(problem, begin, held=held, tolerance=TIGHT), held)
     start = StartRecord(problem.leak(top.estimate.shared), top.local.objective, top.n_iterations)
     return SearchResult(top, None, (start,))
 

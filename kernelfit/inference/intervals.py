@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from scipy.stats import norm, t
@@ -18,6 +18,12 @@ class WaldIntervals:
     std_error: FloatArray
     lower: FloatArray
     upper: FloatArray
+
+    def within(self, limits: FloatArray) -> WaldIntervals:
+        """The same with ends moved to `limits` (K, 2), past which a parameter cannot be told; estimates stay inside."""
+        lower = np.minimum(np.maximum(self.lower, limits[:, 0]), self.estimate)
+        upper = np.maximum(np.minimum(self.upper, limits[:, 1]), self.estimate)
+        return replace(self, lower=lower, upper=upper)
 
 
 def critical_value(level: float, degrees_of_freedom: float) -> float:

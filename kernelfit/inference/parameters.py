@@ -12,6 +12,7 @@ from scipy.spatial.distance import cdist
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.inference.bands import standard_errors, sup_t_critical
+from kernelfit.inference.edges import cut_notes, loose, natural_limits, radius_notes, run_off
 from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
 from kernelfit.kernels.base import SAME_DISTANCE_UM
 
@@ -20,6 +21,7 @@ if TYPE_CHECKING:
     from kernelfit.model.coupling import CovarianceKind
 
 FIXED = "fixed"
+NOT_IDENTIFIED = "not identified"
 
 
 def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], BoolArray]:
@@ -59,12 +61,15 @@ def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldInte
 def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.DataFrame:
     """Shared parameters by name: estimate, std_error, lower, upper, unit, note.
 
-    Where no coupling was found, lengths, exponents and the leak are NaN with the reason, and amplitudes keep an
-    interval
-    widened for the search over length and leak. A fixed leak has NaN and the note "fixed".
+    Intervals of lengths, exponents and the leak end at the bounds beyond which they cannot be told. Where no coupling
+    was found these are NaN with the reason, and amplitudes keep an interval widened for the search over length and
+    leak, which holds 0, as the test of any coupling does not exclude it. An amplitude that nothing holds on one side is
+    NaN with an infinite end. A fixed leak has NaN and the note "fixed".
     """
     _, jacobian, names, units, _ = _natural(fit)
-    wald = _intervals(fit, kind, level)
+    whole = _intervals(fit, kind, level)
+    wald = whole.within(natural_limits(fit))
+    notes = [_note(fit, kind, row) or cut for row, cut in zip(jacobian, cut_notes(fit, whole, wald), strict=True)]
     table = pd.DataFrame(
         {
             "estimate": wald.estimate.copy(),
@@ -72,34 +77,51 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
             "lower": wald.lower.copy(),
             "upper": wald.upper.copy(),
             "unit": units,
-            "note": [_note(fit, kind, row) for row in jacobian],
+            "note": notes,
         },
         index=pd.Index(names, name="parameter", dtype=object),
     )
     numbers = ["estimate", "std_error", "lower", "upper"]
     family = fit.model.kernel.parameters(fit.span)
-    discrete = next((p.name for p in family if p.discrete), None)
-    if discrete is not None and fit.radius_interval is not None:
-        table.loc[discrete, ["std_error", "lower", "upper"]] = [np.nan, *fit.radius_interval]
-        table.loc[discrete, "note"] = "profiled over the distances of the array; the interval is a likelihood interval"
+    for k, parameter in enumerate(family):
+        if parameter.discrete and fit.radius_interval is not None:
+            table.loc[parameter.name, ["std_error", "lower", "upper"]] = [np.nan, *fit.radius_interval]
+            profiled = "profiled over the distances of the array; the interval is a likelihood interval"
+            table.loc[parameter.name, "note"] = "; ".join([profiled, *radius_notes(fit, k, fit.radius_interval)])
+    table.loc[(jacobian[:, loose(fit)] != 0).any(axis=1), numbers] = np.nan
+    open_end = run_off(fit) & (np.count_nonzero(jacobian, axis=1) == 1)
+    table.loc[open_end & (fit.at_bound < 0), "lower"] = -np.inf
+    table.loc[open_end & (fit.at_bound > 0), "upper"] = np.inf
     if not fit.verdict.found:
-        fits_leak = fit.model.leak_rate is None
-        shape = np.array([*(p.shape for p in family), *[False] * fit.has_same_site, *[True] * fits_leak])
-        widened = ~shape & np.isfinite(wald.std_error)
-        table.loc[table.index[shape], numbers] = np.nan
-        table.loc[table.index[shape], "note"] = "not identified: no coupling to describe"
-        table.loc[table.index[widened], "note"] = (
-            "no coupling found; interval widened for the search over length and leak"
-        )
+        _without_coupling(fit, table)
     if fit.model.leak_rate is not None:
         table.loc["leak_rate", "estimate"] = fit.model.leak_rate
         table.loc["leak_rate", ["unit", "note"]] = ["1/s", FIXED]
     return table
 
 
+def _without_coupling(fit: CouplingFit, table: pd.DataFrame) -> None:
+    """State what a table of estimates can say where no coupling was found."""
+    family = fit.model.kernel.parameters(fit.span)
+    fits_leak = fit.model.leak_rate is None
+    shape = np.array([*(p.shape for p in family), *[False] * fit.has_same_site, *[True] * fits_leak])
+    table.loc[shape, ["estimate", "std_error", "lower", "upper"]] = np.nan
+    table.loc[shape, "note"] = f"{NOT_IDENTIFIED}: no coupling to describe"
+    widened = ~shape & np.isfinite(table["std_error"].to_numpy(dtype=np.float64))
+    table.loc[widened, "note"] = "no coupling found; interval widened for the search over length and leak"
+    tested = widened & (table.index != "same_site")  # that test leaves pairs on one site out
+    outside = tested & ((table["lower"] > 0) | (table["upper"] < 0)).to_numpy()
+    table.loc[outside, "note"] += " and out to 0, which the test of any coupling does not exclude"
+    table.loc[tested, "lower"] = table.loc[tested, "lower"].clip(upper=0.0)
+    table.loc[tested, "upper"] = table.loc[tested, "upper"].clip(lower=0.0)
+
+
 def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> str:
     """Why a parameter has no standard error, where it has none."""
     used = np.flatnonzero(jacobian_row)
+    without = [q for q in used if run_off(fit)[q]] or [q for q in used if loose(fit)[q]]
+    if without:
+        return f"{NOT_IDENTIFIED}: {fit.bound_reasons[without[0]]}"
     reasons = [fit.bound_reasons[q] for q in used if fit.at_bound[q] != 0]
     if reasons:
         return "at its bound: " + "; ".join(reasons)
@@ -107,7 +129,7 @@ def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> s
         family = fit.model.kernel.parameters(fit.span)
         if used[0] < len(family) and family[used[0]].discrete:
             return ""
-        return "not identified: the recording says nothing about it (see notes)"
+        return f"{NOT_IDENTIFIED}: the recording says nothing about it (see notes)"
     return too_few_blocks(fit, kind)
 
 
@@ -192,6 +214,10 @@ def _band(
         spread = float(critical * standard_errors(slope, covariance)[0])
         between = (d_um > fit.radius_interval[0]) & (d_um < fit.radius_interval[1])
         lower[between], upper[between] = min(within - spread, 0.0), max(within + spread, 0.0)
+    if not fit.verdict.found:  # the test of any coupling does not exclude that there is none
+        lower, upper = np.minimum(lower, 0.0), np.maximum(upper, 0.0)
+    unknown = (gradient[loose(fit)[:n]] != 0).any(axis=0)
+    estimate[unknown] = lower[unknown] = upper[unknown] = np.nan
     return estimate, lower, upper
 
 

@@ -8,6 +8,8 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
+from kernelfit.inference.parameters import NOT_IDENTIFIED
+
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
 
@@ -16,10 +18,15 @@ CAUTION = (
     "clinical decisions."
 )
 
+CONDITIONAL = (
+    "What follows takes for granted that there is coupling of this form: intervals of amplitudes say how strong it "
+    "could be, not that it is there."
+)
+
 
 def _row(name: str, row: pd.Series) -> str:
     if not np.isfinite(row["estimate"]):
-        return f"  {name:<20} could not be estimated: {row['note']}"
+        return f"  {name:<20} could not be estimated: {row['note'].removeprefix(f'{NOT_IDENTIFIED}: ')}"
     interval = f"{row['lower']:.4g} to {row['upper']:.4g}" if np.isfinite(row["lower"]) else row["note"]
     return f"  {name:<20} {row['estimate']:.4g} {row['unit']} ({interval})"
 
@@ -29,10 +36,13 @@ def summary_text(fit: CouplingFit) -> str:
     kind = f"{fit.covariance_kind} standard errors, 95 % intervals"
     stated = fit.verdict.found or fit.model.leak_rate is not None
     time_constant = f"time constant {1000 * fit.time_constant:.4g} ms; " if stated else ""
+    table = fit.parameters
+    conditional = not fit.verdict.found and bool(table["std_error"].notna().any())
     lines = [
         f"{fit.model.kernel.name} kernel, {fit.model.link.name} link, {1000 * fit.model.bin_width:g} ms bins",
         fit.verdict.sentence,
-        *[_row(str(name), row) for name, row in fit.parameters.iterrows()],
+        *([CONDITIONAL] if conditional else []),
+        *[_row(str(name), row) for name, row in table.iterrows()],
         f"  {time_constant}amplitudes at {fit.reference_distance_um:.4g} µm; {kind}",
         f"{len(fit.targets)} of {len(fit.unit_ids)} units explained, {fit.n_spikes} spikes, {fit.duration_s:g} s in "
         f"{fit.n_blocks} blocks of {fit.block_length_s:.3g} s",

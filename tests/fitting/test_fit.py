@@ -483,7 +483,7 @@ def test_one_coefficient_for_pairs_on_one_site():
 
 def test_a_length_at_its_bound_is_named_with_the_reason():
     recording = simulated(2, lambda d: np.where(d > 180, 0.2, 0.1))
-    with pytest.warns(kf.FitWarning, match="length_um ran into its bound: longer than"):
+    with pytest.warns(kf.FitWarning, match="The length ran into its bound: longer than"):
         fit = model("exponential", leak_rate=LEAK).fit(recording, threads=2)
     row = fit.parameters.loc["length_um"]
     assert row["note"].startswith("at its bound: longer than")
@@ -498,7 +498,7 @@ def test_a_kernel_too_short_for_the_array_is_named():
     """Units on a line 100 and 110 µm apart by turns; coupling at 100 and none at 110: the fall is too steep to see."""
     x = np.cumsum([0.0, 100.0, 110.0, 100.0, 110.0, 100.0, 110.0, 100.0])[:, None]
     recording = kf.simulate_recording(x, lambda d: np.where(d < 101, 0.5, 0.0), 6.0, LEAK, 80.0, 3, bin_width=BIN_S)
-    with pytest.warns(kf.FitWarning, match="length_um ran into its bound: shorter than 20 µm"):
+    with pytest.warns(kf.FitWarning, match="The length ran into its bound: shorter than 20 µm"):
         fit = model("exponential", leak_rate=LEAK).fit(recording, threads=2)
     assert "no pairs close enough to see the kernel fall" in fit.parameters.loc["length_um", "note"]
 
@@ -514,7 +514,7 @@ def echoing(lag_bins):
 
 
 def test_a_leak_faster_than_a_bin_is_named():
-    with pytest.warns(kf.FitWarning, match="leak_rate ran into its bound"):
+    with pytest.warns(kf.FitWarning, match="The leak rate ran into its bound"):
         fit = model("flat").fit(echoing(1.0), threads=2)
     assert fit.leak_rate == pytest.approx(3.0 / BIN_S)
     assert "is faster than a bin: use narrower bins" in fit.parameters.loc["leak_rate", "note"]
@@ -524,12 +524,12 @@ def test_bins_too_wide_for_the_leak_are_named():
     """alpha D above 0.5 (docs/model.md section 3), with the width that would do."""
     with pytest.warns(kf.FitWarning, match=r"bins of 5 ms are too wide for the time constant found"):
         fit = model("flat").fit(echoing(1.2), threads=2)
-    note = next(n for n in fit.notes if n.where == "bin_width")
+    note = next(n for n in fit.notes if n.where == "bin width")
     assert f"at most {500 / fit.leak_rate:.2g} ms" in note.remedy
 
 
 def test_wide_bins_are_fine_where_the_leak_is_slow(fit):
-    assert not any(n.where == "bin_width" for n in fit.notes)
+    assert not any(n.where == "bin width" for n in fit.notes)
 
 
 @quiet

@@ -236,7 +236,7 @@ def test_a_second_optimum_is_put_in_words(gaussian):
     second = dataclasses.replace(best, local=local)
     sentence = _second_sentence(problem, SearchResult(best, second, ()))
     assert "only 1.2 log-likelihood units below" in sentence
-    assert f"length_um {np.exp(shared[1]):.3g}" in sentence
+    assert f"length {np.exp(shared[1]):.3g} µm" in sentence
     assert f"time constant {1000 * np.exp(-best.estimate.shared[2]):.3g} ms" in sentence
     assert _second_sentence(problem, SearchResult(best, None, ())) is None
 

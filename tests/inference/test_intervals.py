@@ -7,7 +7,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from kernelfit.inference.intervals import critical_value, wald_intervals
+from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
 
 NAN = np.nan
 
@@ -75,3 +75,11 @@ def test_lengths_and_leaks_are_never_negative(estimate, log_error, critical):
 def test_amplitudes_of_any_sign_keep_a_symmetric_interval(amplitude):
     got = wald_intervals(np.array([amplitude]), np.eye(1), np.array([[0.01]]), np.array([False]), 1.96)
     assert got.upper[0] - amplitude == pytest.approx(amplitude - got.lower[0]) == pytest.approx(0.196)
+
+
+def test_ends_move_to_limits_and_never_past_the_estimate():
+    got = WaldIntervals(
+        np.array([2.0, 2.0, 9.0, 2.0]), np.ones(4), np.array([0.1, 1.0, 5.0, NAN]), np.array([50.0, 3.0, 12.0, NAN])
+    ).within(np.array([[0.5, 8.0], [0.5, 8.0], [0.5, 8.0], [0.5, 8.0]]))
+    np.testing.assert_array_equal(got.lower, [0.5, 1.0, 5.0, NAN])
+    np.testing.assert_array_equal(got.upper, [8.0, 3.0, 9.0, NAN])  # an estimate past its limit stays in its interval
