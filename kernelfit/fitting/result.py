@@ -474,6 +474,20 @@ class CouplingFit:
         counts[grid.event_bin[here] - at, grid.event_unit[here]] = grid.event_count[here]
         return FittedRates(grid.window_start_s[w] + (first + np.arange(n)) * width, rate, counts)
 
+    @property
+    def worth(self) -> pd.DataFrame:
+        """What the recording is worth for each shared parameter, by name.
+
+        ratio : robust over model-based standard error, on the working scale
+        spikes, seconds : of an ideal recording, one in which every bin is independent given the model, that would leave
+            the estimate as uncertain: those counted, over the square of the ratio, never more than were counted
+        stretches : independent blocks of time that carry the estimate, 3 (sum d^2)^2 / sum d^4 of the blocks'
+            influences d: all blocks where these are normal, few where a few blocks pull much harder than the others
+        """
+        from kernelfit.inference.worth import worth_table
+
+        return worth_table(self)
+
     def influence(self, recording: Recording | None = None, *, threads: int | None = None) -> Influence:
         """Which stretch of time, event and unit each parameter rests on: its change on leaving that out.
 
@@ -489,6 +503,48 @@ class CouplingFit:
         from kernelfit.inference.influence import influence
 
         return influence(self, recording, threads)
+
+    def bootstrap(
+        self,
+        kind: str | BootstrapKind = "one-step",
+        *,
+        n_replicates: int = 2000,
+        seed: int = 0,
+        recording: Recording | None = None,
+        jobs: int | None = None,
+        folder: str | Path | None = None,
+        progress: BootstrapProgressCallback | None = None,
+    ) -> Bootstrap:
+        """Replicates of the fit, for intervals and bands that no normal law has to be assumed for.
+
+        Parameters
+        ----------
+        kind : "one-step", random weights on the scores of the blocks of time, thousands at once, no recording needed;
+            "block-weights", refits with such weights; "parametric", refits of recordings simulated from the fit; or an
+            object of ``kf.bootstrap`` with other options
+        n_replicates, seed : how many, and what they are drawn from; more of the same seed begin with the same ones
+        recording : needed by the refitting kinds for a loaded fit; must be the one that was fitted
+        jobs : processes at once for the refitting kinds; None: as many as the machine has. Nothing depends on it
+        folder : keeps every replicate as it is finished; the same call goes on from what is there
+        progress : called with a `BootstrapProgress` after every replicate
+
+        Raises
+        ------
+        ArgumentError, NotConvergedError, ModelError : a call that cannot be, no optimum, too few blocks of time
+        StorageError, OutputError : no recording or another one; a folder of other replicates, or not to be written
+        """
+        from kernelfit.inference.bootstrap.run import bootstrap
+
+        return bootstrap(
+            self,
+            kind,
+            n_replicates=n_replicates,
+            seed=seed,
+            recording=recording,
+            jobs=jobs,
+            folder=folder,
+            progress=progress,
+        )
 
     # --- copies, words, files -------------------------------------------------------------------------
 
