@@ -78,7 +78,8 @@ def _tail(law: Law) -> float | Lost:
 
     def density(x: float) -> float:
         d = far * np.exp(min(x, 500.0 / m))  # beyond, d^m would overflow and J has long been nothing
-        return law.one(d) * float(d) ** m
+        value = law.one(d) * float(d) ** m
+        return value if np.isfinite(value) else 0.0  # a polynomial times exp(-d^2) is inf times 0 far out
 
     if largest == 0.0:
         return 0.0
