@@ -105,6 +105,33 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
     return SearchResult(top, None, starts), RadiusProfile(candidates[tried], objective)
 
 
+def profile_around(
+    problem: Problem, place: int, start: Estimate, enough: float
+) -> tuple[RadiusProfile, tuple[Estimate, ...]]:
+    """The profile of the radius around an optimum that is known, and where everything else stands at each radius.
+
+    Parameters
+    ----------
+    problem, place : the model on its recording, and the radius among the kernel's parameters
+    start : the optimum
+    enough : the profile goes out on both sides until the log-likelihood has dropped by more than this
+    """
+    candidates = problem.kernel.radius_candidates(problem.geometry.distinct_um)
+    if candidates is None:
+        raise ValueError(f"kernel {problem.kernel.name!r} names no radii to profile")
+    coarse = np.unique(np.linspace(0, candidates.size - 1, min(MOST_RADII, candidates.size)).astype(int))
+    profiled = _Profile(problem, place, candidates)
+    profiled.climb(int(np.argmin(np.abs(np.log(candidates) - start.shared[place]))), start)
+    step, best = int(np.max(np.diff(coarse), initial=1)), -1
+    while profiled.best != best:
+        profiled.refine(step)
+        best = profiled.best
+        profiled.widen(coarse, enough)
+    tried = sorted(profiled.optima)
+    objective = np.array([profiled.optima[k].local.objective for k in tried])
+    return RadiusProfile(candidates[tried], objective), tuple(profiled.optima[k].estimate for k in tried)
+
+
 @dataclass(eq=False)
 class _Profile:
     """Optima at the radii tried so far, by place among the candidates; grows while the radius is searched."""

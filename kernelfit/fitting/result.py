@@ -17,6 +17,7 @@ from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.effective import TermSize
 from kernelfit.fitting.outcome import FittedRates, Note, ScoreTest, SolverReport
 from kernelfit.fitting.problem import Estimate, Problem, geometry_of, make_problem
+from kernelfit.fitting.profiles import Profiled
 from kernelfit.fitting.smoothing import Smoothing
 from kernelfit.kernels import DistanceRange, KernelCurve
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
@@ -38,7 +39,7 @@ LEAK_NAME = "leak_rate"
 
 
 @dataclass(frozen=True, eq=False)
-class CouplingFit:
+class CouplingFit(Profiled):
     """A fitted coupling model. Everything an analysis or a report needs; a change is a copy.
 
     Parameters
