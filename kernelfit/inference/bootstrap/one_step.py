@@ -1,0 +1,97 @@
+"""One step from the fit: the scores of its blocks of time weighted at random. Needs no recording and no refit.
+
+Reference
+---------
+Kline and Santos (2012), Journal of Econometric Methods 1, 23-41.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, ClassVar
+
+import numpy as np
+
+from kernelfit._typing import BoolArray, FloatArray
+from kernelfit.errors import NotIdentifiedError
+from kernelfit.inference.bootstrap.blocks import require_blocks
+from kernelfit.inference.bootstrap.kind import BootstrapKind, Replicate
+from kernelfit.inference.bootstrap.weight_laws import WeightLaw, weight_law_from
+
+if TYPE_CHECKING:
+    from kernelfit.fitting.result import CouplingFit
+    from kernelfit.recording.recording import Recording
+
+
+@dataclass(frozen=True, init=False)
+class OneStep(BootstrapKind):
+    """theta* = theta + sum_g W_g psi_g, psi_g what block g moves the estimates by, W_g of mean 0 and variance 1.
+
+    Weights of a law have mean 1: W is the weight less 1, over its standard deviation. The covariance of the replicates
+    is that of the robust covariance, G/(G - 1) included where the weights sum to G (exponential, multinomial), without
+    it where they are independent (rademacher, mammen). Parameters at a bound stay there.
+
+    Studentised intervals are best with multinomial and Mammen weights, whose third moment is 1 as that of resampling;
+    exponential ones carry twice the skewness of the scores, random signs none.
+
+    Parameters
+    ----------
+    law : "exponential" (the default), "multinomial", "rademacher", "mammen" or a `WeightLaw`
+
+    Raises
+    ------
+    ArgumentError : no such law
+    """
+
+    law: WeightLaw
+    name: ClassVar[str] = "one-step"
+    by_blocks: ClassVar[bool] = True
+
+    def __init__(self, law: str | WeightLaw = "exponential") -> None:
+        object.__setattr__(self, "law", weight_law_from(law, refits=False))
+
+    def describe(self) -> dict[str, str]:
+        return {"kind": self.name, "law": self.law.name}
+
+    def words(self, fit: CouplingFit) -> str:
+        return f"one step with {self.law.name} weights on {fit.n_blocks} blocks of time of {fit.block_length_s:.3g} s"
+
+    def replicator(self, fit: CouplingFit, recording: Recording | None) -> OneStepReplicator:
+        require_blocks(fit)
+        influence = fit.uncertainty.block_influence
+        moves = np.asarray(np.isfinite(influence).all(axis=0))
+        if not moves.any():
+            raise NotIdentifiedError(
+                "kind='one-step': the fit has no scores by block of time, because the recording does not tell its "
+                "parameters apart (see fit.notes). Use kind='block-weights' or 'parametric'."
+            )
+        return OneStepReplicator(fit.shared, np.ascontiguousarray(influence[:, moves]), moves, fit.at_bound, self.law)
+
+
+@dataclass(frozen=True, eq=False)
+class OneStepReplicator:
+    """Replicates of (Q,) `shared` from the influence (G, R) of the parameters that can move, marked in `moves` (Q,)."""
+
+    shared: FloatArray
+    influence: FloatArray
+    moves: BoolArray
+    at_bound: FloatArray
+    law: WeightLaw
+
+    @property
+    def refits(self) -> bool:
+        """One step is over before a process has started."""
+        return False
+
+    def replicate(self, rng: np.random.Generator) -> Replicate:
+        """One step with fresh weights."""
+        return self.with_weights(self.law.draw(len(self.influence), rng))
+
+    def with_weights(self, weight: FloatArray) -> Replicate:
+        """One step with these weights (G,)."""
+        spread = self.law.spread(len(weight))
+        shared = self.shared.copy()
+        shared[self.moves] += (weight - 1.0) / spread @ self.influence
+        covariance = np.full((shared.size, shared.size), np.nan)
+        covariance[np.ix_(self.moves, self.moves)] = self.law.covariance(weight, self.influence) / spread**2
+        return Replicate(shared, self.at_bound, covariance, True, "")
