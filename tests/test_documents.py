@@ -94,6 +94,23 @@ def test_links_lead_somewhere(document: Path) -> None:
         assert "://" in link or (document.parent / link).exists(), f"{document.name} links to {link}"
 
 
-@pytest.mark.parametrize("name", ["scripts/demo", "scripts/test", ".ci/run", "scripts/make_demo_recording"])
+@pytest.mark.parametrize(
+    "name",
+    [
+        "scripts/demo",
+        "scripts/test",
+        ".ci/run",
+        "scripts/make_demo_recording",
+        "scripts/benchmark",
+        "scripts/calibrate",
+    ],
+)
 def test_scripts_can_be_run(name: str) -> None:
     assert (ROOT / name).stat().st_mode & 0o111, f"{name} is not executable"
+
+
+@pytest.mark.parametrize("name", ["benchmark", "calibrate", "make_demo_recording"])
+def test_scripts_start_by_themselves_in_a_fresh_checkout(name: str) -> None:
+    """The guide says so: what they import comes after the making of the environment."""
+    text = (ROOT / "scripts" / name).read_text(encoding="utf-8")
+    assert 0 < text.find("ensure_environment") < text.index("import numpy")
