@@ -105,16 +105,16 @@ def search_radius(problem: Problem, null: Null, place: int) -> tuple[SearchResul
     return SearchResult(top, None, starts), RadiusProfile(candidates[tried], objective)
 
 
-def profile_around(
-    problem: Problem, place: int, start: Estimate, enough: float
-) -> tuple[RadiusProfile, tuple[Estimate, ...]]:
-    """The profile of the radius around an optimum that is known, and where everything else stands at each radius.
+def profile_around(problem: Problem, place: int, start: Estimate) -> tuple[RadiusProfile, tuple[Estimate, ...]]:
+    """The profile of the radius from an optimum that is known, and where everything else stands at each radius.
+
+    All of at most MOST_RADII radii over the array are climbed, as the profile is ragged and may have several tops, and
+    more of them around the best.
 
     Parameters
     ----------
     problem, place : the model on its recording, and the radius among the kernel's parameters
     start : the optimum
-    enough : the profile goes out on both sides until the log-likelihood has dropped by more than this
     """
     candidates = problem.kernel.radius_candidates(problem.geometry.distinct_um)
     if candidates is None:
@@ -126,7 +126,7 @@ def profile_around(
     while profiled.best != best:
         profiled.refine(step)
         best = profiled.best
-        profiled.widen(coarse, enough)
+        profiled.widen(coarse, np.inf)
     tried = sorted(profiled.optima)
     objective = np.array([profiled.optima[k].local.objective for k in tried])
     return RadiusProfile(candidates[tried], objective), tuple(profiled.optima[k].estimate for k in tried)
@@ -166,7 +166,10 @@ class _Profile:
                 step //= 2
 
     def widen(self, coarse: IntArray, enough: float) -> None:
-        """Climb outwards over the coarse radii until the log-likelihood has dropped by more than `enough`."""
+        """Climb outwards over the coarse radii until the log-likelihood has dropped by more than `enough` for good.
+
+        For good: by more than that at every radius farther out that was tried too, as the profile is ragged.
+        """
         best = self.best
         for side in (-1, 1):
             near = best
@@ -174,7 +177,8 @@ class _Profile:
                 if int(k) not in self.optima:
                     self.climb(int(k), self.optima[near].estimate)
                 near = int(k)
-                if self.optima[best].local.objective - self.optima[near].local.objective > enough:
+                from_here = [o.local.objective for j, o in self.optima.items() if side * (j - near) >= 0]
+                if self.optima[best].local.objective - max(from_here) > enough:
                     break
 
 

@@ -115,10 +115,11 @@ def hold(problem: Problem, shared: FloatArray, name: str, taken: tuple[int, ...]
     taken : working parameters that are held already and cannot give their place
     """
     k = shared_names(problem).index(name)
+    kernel, span, theta = problem.kernel, problem.span, shared[: problem.n_kernel]
+    beside = tuple(q for q, p in enumerate(kernel.parameters(span)) if p.discrete and q != k)  # cannot be climbed
     if k >= problem.n_kernel:
         leak = problem.fits_leak and k == problem.n_shared - 1
-        return Held(name, "1/s" if leak else "per spike", leak, k, problem)
-    kernel, span, theta = problem.kernel, problem.span, shared[: problem.n_kernel]
+        return Held(name, "1/s" if leak else "per spike", leak, k, problem, beside)
     parameter = kernel.parameters(span)[k]
     on_log = parameter.scale == "log"
     used = np.flatnonzero(kernel.natural_jacobian(theta, span)[k])
@@ -127,13 +128,13 @@ def hold(problem: Problem, shared: FloatArray, name: str, taken: tuple[int, ...]
     if used.size == 1 and used[0] == k:
         if k in taken:
             return Unavailable(f"{name} and the other parameter share a coordinate, and cannot be held together")
-        return Held(name, parameter.unit, on_log, k, problem)
+        return Held(name, parameter.unit, on_log, k, problem, beside)
     if kernel.penalty(span) is not None:
         return Unavailable(f"{name} mixes several parameters of a kernel with a penalty, which profiles do not handle")
     for place in used:
         other = Reparametrised(kernel, k, int(place))
         if int(place) not in taken and other.is_straight(theta, span):
-            return Held(name, parameter.unit, on_log, int(place), problem.with_kernel(other))
+            return Held(name, parameter.unit, on_log, int(place), problem.with_kernel(other), beside)
     return Unavailable(f"{name} mixes several parameters of the kernel and is linear in none that could give its place")
 
 

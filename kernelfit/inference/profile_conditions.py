@@ -116,6 +116,16 @@ def profile_notes(fit: CouplingFit, problem: Problem, name: str, walked: Walked 
                 "Read the curve there as a lower limit of the likelihood.",
             )
         )
+    if walked is not None and walked.rises_again:
+        notes.append(
+            Note(
+                "warning",
+                "The curve is not a single hill: having fallen, the likelihood rises again farther out. The ends are "
+                "where it first falls far enough.",
+                name,
+                "Look at the curve; parameters that trade places need a simpler kernel.",
+            )
+        )
     if problem.penalty.any():
         notes.append(
             Note(

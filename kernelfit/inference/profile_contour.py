@@ -222,7 +222,8 @@ def _hold_both(problem: Problem, shared: FloatArray, names: tuple[str, str]) -> 
         return Unavailable(f"{names[0]} and {names[1]} both mix several parameters, and cannot be held together")
     base = int(second.problem is not problem)
     places = (first.place, second.place)
-    both = replace((first, second)[base], beside=(places[1 - base],))
+    one = (first, second)[base]
+    both = replace(one, beside=(*one.beside, places[1 - base]))
     return _Pair((first, second), both, base, places)
 
 

@@ -18,7 +18,7 @@ from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.inference.held import Held
 
 POINT_TOLERANCE = 1e-4  # squared length of the last step in standard errors, which is taken and counted
-POINT_ITERATIONS = 60
+POINT_ITERATIONS = 40
 LARGEST_WEIGHTS = 25.0  # sum of the weights of an extrapolation: beyond it fewer points are safer
 
 

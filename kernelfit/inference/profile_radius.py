@@ -32,7 +32,7 @@ def profile_of_radius(fit: CouplingFit, problem: Problem, name: str, level: floa
     place = names.index(name)
     refused = too_few_blocks(fit.uncertainty)
     ratio = variance_inflation(fit.uncertainty) if refused is None else 1.0
-    profile, estimates = profile_around(problem, place, fit.estimate, 0.5 * ratio * edge_critical(level))
+    profile, estimates = profile_around(problem, place, fit.estimate)
     drop = profile.objective.max() - profile.objective
     best = float(profile.radius_um[np.argmin(drop)])
     natural = natural_values(fit, np.array([e.shared for e in estimates]))

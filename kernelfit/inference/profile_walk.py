@@ -29,6 +29,7 @@ MOST_HALVINGS = 40
 TOO_NEAR = 0.3  # of the first target: a target this near to the last point is passed over
 OVERSHOOT = 1.06  # the walk ends a little beyond the last cut
 BETTER = 1e-2  # log-likelihood units above the fit: another optimum, and no rounding
+RISE = 0.05  # log-likelihood units: less is no second hill
 MOST_RESTARTS = 3  # from better optima met on the way
 
 
@@ -211,6 +212,12 @@ class Walked:
     walk: Walk
     crossings: dict[tuple[int, float], Crossing]
     gained: float  # log-likelihood units above the fit; 0 where the fit was the best
+
+    @property
+    def rises_again(self) -> bool:
+        """Whether the likelihood, having fallen, rises again farther out."""
+        drops = [np.array([self.walk.drop(p) for p in self.walk.side(sign)]) for sign in (-1, 1)]
+        return any(bool((np.maximum.accumulate(d) - d > RISE).any()) for d in drops)
 
     def interval(self, kind: str, cut: float, ratio: float = 1.0, *, with_zero: bool = False) -> ProfileInterval:
         """The interval at a cut of the walk; `ratio` is by how much twice the drop was scaled down for it.
