@@ -19,6 +19,7 @@ from kernelfit.fitting.bounds import bound_reasons, in_words, run_off_parameters
 from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.detection import detect_coupling
 from kernelfit.fitting.effective import term_sizes
+from kernelfit.fitting.marginal import widened
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.notes import fit_notes
 from kernelfit.fitting.null import Null, fit_null
@@ -29,6 +30,7 @@ from kernelfit.fitting.radius import LEVEL, RadiusProfile, discrete_parameter, s
 from kernelfit.fitting.result import CouplingFit, covariance_kind
 from kernelfit.fitting.search import SearchResult, search
 from kernelfit.fitting.smoothing import choose, first_ridge, first_smoothing
+from kernelfit.fitting.smoothing_notes import smoothing_notes
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.recording import Recording
 from kernelfit.version import __version__
@@ -56,12 +58,14 @@ def fit_model(
         found, profile = _best(problem, null)
         chosen = choose(problem, found, model)
         problem, found, optimum = chosen.problem, chosen.found, chosen.found.best
-        spread = covariances(problem, optimum)
+        spread = widened(covariances(problem, optimum), chosen.added_spread)
         sizes = term_sizes(problem, optimum)
     except SingularOwnBlock as error:
         raise NotIdentifiedError(_undetermined_unit(problem, recording, error.place)) from error
     added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None
-    notes = fit_notes(problem, recording, optimum, spread, verdict)
+    notes = fit_notes(problem, recording, optimum, spread, verdict) + smoothing_notes(
+        chosen.smoothing, sizes, problem.kernel
+    )
     for note in notes:
         if note.severity != "info":
             warnings.warn(f"{note.what} {note.remedy}", FitWarning, stacklevel=3)

@@ -7,8 +7,6 @@ log-likelihood at the current estimate, which costs no sweep, in turn with a few
 References
 ----------
 Wood (2011), Journal of the Royal Statistical Society B 73, 3-36; Wood and Fasiolo (2017), Biometrics 73, 1071-1081.
-Spread of the estimates through the chosen weight: Wood, Pya and Saefken (2016), Journal of the American Statistical
-Association 111, 1548-1563.
 """
 
 from __future__ import annotations
@@ -19,6 +17,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.fitting.arrow import Arrow, SingularOwnBlock
+from kernelfit.fitting.marginal import added_spread, best_weights, likely_weights
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, first_estimate, without_coupling
 from kernelfit.fitting.parabola import Parabola, PenalisedTerm, Penalty, reweighted
@@ -33,13 +32,8 @@ MAX_ROUNDS = 15
 STEPS_A_ROUND = 2
 SETTLED = 1e-3  # log marginal likelihood that another round would gain
 FARTHEST = np.log(1000.0)  # a log weight moves in a round: the parabola may be a poor one at first
-UPDATES = 300
-FLAT = 1e-5  # slope of the log marginal likelihood by a log weight
-LONGEST_STRETCH = 16.0
-GRID_POINTS = 25
 FIRST_FREE = 0.1  # of the directions are left to the data at least by the first guess, and taken at least
 BETWEEN = 1e-4  # tolerance of the climbs between two updates
-LOG_STEP = 0.05  # of a log weight, for derivatives
 VALIDATED_POINTS = 9
 VALIDATED_INSIDE = 10.0  # the grid of validation keeps this far from the bounds, beyond which nothing changes
 DIGITS = 4  # a weight is rounded to so many: no more is known of it, and it can be typed again
@@ -56,8 +50,7 @@ class ChosenWeight:
     value : the weight
     lower, upper : bounds: outside of them nothing changes any more
     at_bound : -1 at the lower one (no smoothing), 1 at the upper one (nothing left but what is not penalised), else 0
-    log_std_error : standard error of the log weight, from the curvature of the marginal likelihood; NaN at a bound, or
-        where validation chose
+    likely_from, likely_to : weights that hold 95 % of what the marginal likelihood makes likely
     """
 
     term: PenalisedTerm
@@ -66,7 +59,8 @@ class ChosenWeight:
     lower: float
     upper: float
     at_bound: int
-    log_std_error: float
+    likely_from: float
+    likely_to: float
 
 
 @dataclass(frozen=True)
@@ -92,62 +86,6 @@ class Smoothing:
     def of(self, term: PenalisedTerm) -> ChosenWeight | None:
         """The weight chosen for a term, or None where it was stated."""
         return next((w for w in self.weights if w.term == term), None)
-
-
-# --- the marginal likelihood on a parabola ----------------------------------------------------------------------------
-
-
-def best_weights(
-    parabola: Parabola, penalties: tuple[Penalty, ...], start: FloatArray
-) -> tuple[FloatArray, FloatArray]:
-    """Weights of highest marginal likelihood on a parabola, and their bounds (n_penalties, 2).
-
-    Generalised Fellner-Schall: w <- w (rank - w tr(V R)) / (w x'Rx), which never lowers the marginal likelihood of a
-    parabola; steps that keep their direction are stretched, and taken back where they lower it. A single penalty starts
-    from the best of a grid, as its marginal likelihood may have two tops.
-    """
-    bounds = np.array([parabola.limits(k, penalties, start) for k in range(len(penalties))])
-    low, high = np.log(bounds).T
-    x = np.clip(np.log(start), low, high)
-    if len(penalties) == 1:
-        grid = np.linspace(low[0], high[0], GRID_POINTS)
-        heights = [parabola.peak(penalties, np.exp([g])).log_marginal for g in grid]
-        x = grid[[int(np.argmax(heights))]]
-    peak, stretch = parabola.peak(penalties, np.exp(x)), 1.0
-    for _ in range(UPDATES):
-        inside = ~(((x <= low) & (peak.slope < 0)) | ((x >= high) & (peak.slope > 0)))
-        if not np.any(np.abs(peak.slope[inside]) > FLAT):
-            break
-        tiny = np.finfo(float).tiny
-        step = np.log(np.maximum(peak.free_directions, tiny)) - np.log(np.maximum(peak.costs, tiny))
-        there = np.clip(x + stretch * step, low, high)
-        candidate = parabola.peak(penalties, np.exp(there))
-        if candidate.log_marginal < peak.log_marginal and stretch > 1.0:
-            stretch = 1.0
-            continue
-        x, peak, stretch = there, candidate, min(2.0 * stretch, LONGEST_STRETCH)
-    return np.exp(x), bounds
-
-
-def log_weight_covariance(
-    parabola: Parabola, penalties: tuple[Penalty, ...], weights: FloatArray, inside: BoolArray
-) -> FloatArray:
-    """Inverse curvature of the log marginal likelihood in the log weights; zero rows where one sits at its bound."""
-    n = weights.size
-    curvature = np.zeros((n, n))
-    for k in range(n):
-        up, down = weights.copy(), weights.copy()
-        up[k] *= np.exp(LOG_STEP)
-        down[k] *= np.exp(-LOG_STEP)
-        slope = parabola.peak(penalties, up).slope - parabola.peak(penalties, down).slope
-        curvature[:, k] = -slope / (2.0 * LOG_STEP)
-    curvature = 0.5 * (curvature + curvature.T)[np.ix_(inside, inside)]
-    covariance = np.zeros((n, n))
-    if inside.any():
-        value, vector = np.linalg.eigh(curvature)
-        flat = 1.0 / FARTHEST**2  # where the marginal likelihood is as good as flat a weight is known to a factor
-        covariance[np.ix_(inside, inside)] = (vector / np.maximum(value, flat)) @ vector.T
-    return covariance
 
 
 # --- first guesses ----------------------------------------------------------------------------------------------------
@@ -211,9 +149,7 @@ class _Climb:
     n_rounds: int
 
 
-def parabola_at(
-    problem: Problem, optimum: Optimum, penalties: tuple[Penalty, ...], weights: FloatArray
-) -> Parabola:
+def parabola_at(problem: Problem, optimum: Optimum, penalties: tuple[Penalty, ...], weights: FloatArray) -> Parabola:
     """The parabola at an optimum; the leak is taken as known where the data say nothing about it.
 
     Raises numpy's LinAlgError where there is none even so.
@@ -265,13 +201,13 @@ def _rounded(weights: FloatArray) -> FloatArray:
 class Chosen:
     """A search with the weights that the data chose: the problem with them, its optima, how they were chosen.
 
-    `through_weights` is the covariance (Q, Q) of the shared parameters that comes from not knowing the weights.
+    `added_spread` (Q, Q) is what not knowing the smoothing adds to the covariance of the shared parameters.
     """
 
     problem: Problem
     found: SearchResult
     smoothing: Smoothing | None
-    through_weights: FloatArray
+    added_spread: FloatArray
 
 
 def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chosen:
@@ -303,9 +239,7 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
     top = maximise(problem, start, held=held, tolerance=TIGHT)
     found = _with_second(problem, found, top, held)
     parabola = parabola_at(problem, found.best, penalties, weights)
-    inside = at_bound == 0
-    inside[by_validation] = False
-    spread = log_weight_covariance(parabola, penalties, weights, inside)
+    likely = [likely_weights(parabola, penalties, weights, k) for k in range(len(penalties))]
     chosen = tuple(
         ChosenWeight(
             term=penalty.term,
@@ -314,7 +248,8 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
             lower=float(climb.bounds[k, 0]),
             upper=float(climb.bounds[k, 1]),
             at_bound=int(at_bound[k]),
-            log_std_error=float(np.sqrt(spread[k, k])) if inside[k] else np.nan,
+            likely_from=likely[k].quantile(0.025),
+            likely_to=likely[k].quantile(0.975),
         )
         for k, (penalty, choice) in enumerate(wanted)
     )
@@ -327,8 +262,12 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
         log_marginal_likelihood=peak.log_marginal,
         held_out=table,
     )
-    slope = _slope_by_log_weights(parabola, penalties, weights)
-    return Chosen(problem, found, smoothing, slope.T @ spread @ slope)
+    added = [
+        added_spread(parabola, penalties, weights, each)
+        for each, penalty in zip(likely, penalties, strict=True)
+        if penalty.term == "kernel"  # a ridge over all units is known well enough
+    ]
+    return Chosen(problem, found, smoothing, added[0] if added else nothing)
 
 
 def _at_bound(weights: FloatArray, bounds: FloatArray) -> IntArray:
@@ -352,14 +291,3 @@ def _with_second(problem: Problem, found: SearchResult, top: Optimum, held: Bool
         best, second = maximise(problem, second.local, held=held, tolerance=TIGHT), best
     close = second.local.objective > best.local.objective - CLOSE
     return replace(found, best=best, second=second if close else None)
-
-
-def _slope_by_log_weights(parabola: Parabola, penalties: tuple[Penalty, ...], weights: FloatArray) -> FloatArray:
-    """(n_penalties, Q) how the shared estimates move with each log weight."""
-    rows = []
-    for k in range(len(penalties)):
-        up, down = weights.copy(), weights.copy()
-        up[k] *= np.exp(LOG_STEP)
-        down[k] *= np.exp(-LOG_STEP)
-        rows.append(parabola.peak(penalties, up).shared - parabola.peak(penalties, down).shared)
-    return np.array(rows) / (2.0 * LOG_STEP)

@@ -6,19 +6,16 @@ from collections.abc import Mapping
 from dataclasses import asdict
 from typing import Any
 
-import numpy as np
-
 from kernelfit.fitting.plain_values import floats, plain
 from kernelfit.fitting.smoothing import ChosenWeight, Smoothing
 from kernelfit.fitting.validation import HeldOut
 
 
 def describe_smoothing(smoothing: Smoothing) -> dict[str, Any]:
-    """As plain values; NaN becomes null."""
-    weights = [{**asdict(w), "log_std_error": plain(np.array([w.log_std_error]))[0]} for w in smoothing.weights]
+    """As plain values."""
     table = smoothing.held_out
     return {
-        "weights": weights,
+        "weights": [asdict(w) for w in smoothing.weights],
         "settled": smoothing.settled,
         "n_rounds": smoothing.n_rounds,
         "n_sweeps": smoothing.n_sweeps,
@@ -53,7 +50,6 @@ def restore_smoothing(values: Mapping[str, Any]) -> Smoothing:
 
 
 def _weight(values: Mapping[str, Any]) -> ChosenWeight:
-    error = values["log_std_error"]
     return ChosenWeight(
         term=values["term"],
         chosen_by=values["chosen_by"],
@@ -61,5 +57,6 @@ def _weight(values: Mapping[str, Any]) -> ChosenWeight:
         lower=float(values["lower"]),
         upper=float(values["upper"]),
         at_bound=int(values["at_bound"]),
-        log_std_error=np.nan if error is None else float(error),
+        likely_from=float(values["likely_from"]),
+        likely_to=float(values["likely_to"]),
     )
