@@ -77,7 +77,7 @@ class Profiled:
         self,
         lengths_um: FloatArray | None = None,
         level: float = 0.95,
-        leak: Literal["re-estimated", "held"] = "re-estimated",
+        leak: float | Literal["re-estimated", "held"] | None = None,
         recording: Recording | None = None,
         *,
         threads: int | None = None,
@@ -89,7 +89,9 @@ class Profiled:
         ----------
         lengths_um : to hold, µm; None: nine, from half the reference distance to twice the largest one
         level : coverage at each length
-        leak : "re-estimated" for every length and amplitude, or "held" at the fit's; a leak fixed by the model stays
+        leak : "re-estimated" for every length and amplitude, "held" at the fit's, or a rate (1/s) to hold it at; None:
+            re-estimated where coupling was found, else held, as without coupling any leak will do and the amplitude
+            is only limited by the fastest. The sentence says which. A leak fixed by the model stays
         recording, threads, progress : as for `profile`
 
         Returns
@@ -104,6 +106,4 @@ class Profiled:
         """
         from kernelfit.inference.profile_amplitudes import compatible_amplitudes
 
-        return compatible_amplitudes(
-            cast("CouplingFit", self), lengths_um, level, leak, recording, threads, progress
-        )
+        return compatible_amplitudes(cast("CouplingFit", self), lengths_um, level, leak, recording, threads, progress)

@@ -16,6 +16,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray
+from kernelfit._validation import is_number
 from kernelfit.errors import ArgumentError, Unavailable
 from kernelfit.fitting.covariance import covariances
 from kernelfit.fitting.maximise import maximise
@@ -32,7 +33,7 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
     from kernelfit.recording.recording import Recording
 
-LeakTreatment = Literal["re-estimated", "held"]
+LeakTreatment = float | Literal["re-estimated", "held"] | None
 
 N_LENGTHS = 9
 WALK_POINTS = 2
@@ -47,8 +48,8 @@ class CompatibleAmplitudes:
     Parameters
     ----------
     level : coverage at each length
-    leak : "re-estimated" at every length and amplitude, "held" at the fit's, or "fixed" by the model
-    leak_rate : of the fit, 1/s
+    leak : "re-estimated" at every length and amplitude, "held", or "fixed" by the model
+    leak_rate : held, fixed or, where it is re-estimated, of the fit, 1/s
     stated_at : where the amplitude is J, in words
     largest : largest |amplitude| kept at any length, by the robust kind where it can be had; infinite where an end is
         open
@@ -86,8 +87,6 @@ def compatible_amplitudes(
     """The set of amplitudes at each length; see `CouplingFit.compatible_amplitudes`."""
     check_level(level)
     check_converged(fit)
-    if leak not in ("re-estimated", "held"):
-        raise ArgumentError(f"leak={leak!r} is not known. Say 're-estimated' or 'held'.")
     refused = _one_of_each(fit)
     if refused is not None:
         return refused
@@ -96,21 +95,22 @@ def compatible_amplitudes(
     lengths = _lengths(fit, problem, lengths_um)
     problem.clock.callback, problem.clock.stage = progress, "amplitudes at each length"
     problem.clock.expected_sweeps = SWEEPS_A_LENGTH * lengths.size
-    held_leak = problem.fits_leak and leak == "held"
+    held_leak = _held_leak(fit, problem, leak)
     rows = _walk_lengths(fit, problem, lengths, level, held_leak)
     best = np.nanmax([row.objective for row in rows])
     table = pd.DataFrame([row.as_dict(best) for row in rows])
-    treatment = "fixed" if not problem.fits_leak else leak
+    treatment = "fixed" if not problem.fits_leak else "re-estimated" if held_leak is None else "held"
+    leak_rate = fit.leak_rate if held_leak is None else held_leak
     largest = max(row.largest for row in rows)
     hat = fit.model.kernel.name == "mexican-hat"
     stated_at = "at distance 0" if hat else f"at {fit.reference_distance_um:.4g} µm"
     return CompatibleAmplitudes(
         level=level,
         leak=treatment,
-        leak_rate=fit.leak_rate,
+        leak_rate=leak_rate,
         stated_at=stated_at,
         largest=largest,
-        sentence=_sentence(fit, rows, level, treatment, stated_at, largest),
+        sentence=_sentence(fit, rows, level, treatment, leak_rate, stated_at, largest),
         n_sweeps=problem.clock.sweeps,
         seconds=time.monotonic() - started,
         rows=table,
@@ -131,7 +131,7 @@ def _one_of_each(fit: CouplingFit) -> Unavailable | None:
 
 
 def _lengths(fit: CouplingFit, problem: Problem, lengths_um: FloatArray | None) -> FloatArray:
-    """(L,) rising lengths to hold, µm: those asked for, or those the search for a fit starts from, in even log steps."""
+    """(L,) rising lengths to hold, µm: those asked for, or even log steps over those a fit starts its search from."""
     candidates = fit.model.kernel.radius_candidates(problem.geometry.distinct_um)
     low, high = np.exp(problem.bounds[1])
     if lengths_um is None:
@@ -189,11 +189,30 @@ class _Row:
         }
 
 
+def _held_leak(fit: CouplingFit, problem: Problem, leak: LeakTreatment) -> float | None:
+    """The leak rate to hold, 1/s; None where it is climbed or fixed by the model. Raises ArgumentError."""
+    if leak is None:
+        leak = "re-estimated" if fit.verdict.found else "held"
+    if isinstance(leak, str):
+        if leak not in ("re-estimated", "held"):
+            raise ArgumentError(f"leak={leak!r} is not known. Say 're-estimated', 'held' or a leak rate in 1/s.")
+        return fit.leak_rate if problem.fits_leak and leak == "held" else None
+    if not problem.fits_leak:
+        raise ArgumentError(f"leak={leak!r}: the model fixes the leak rate at {fit.leak_rate:g} 1/s. Leave it out.")
+    slowest, fastest = problem.leak_limits
+    if not (is_number(leak) and slowest <= leak <= fastest):
+        raise ArgumentError(f"leak={leak!r} must be a rate from {slowest:.3g} to {fastest:.3g} 1/s.")
+    return float(leak)
+
+
 def _walk_lengths(
-    fit: CouplingFit, problem: Problem, lengths: FloatArray, level: float, held_leak: bool
+    fit: CouplingFit, problem: Problem, lengths: FloatArray, level: float, held_leak: float | None
 ) -> list[_Row]:
     """A row for each length, outwards from the fit's, each started from its neighbour."""
-    beside = (1, problem.n_shared - 1) if held_leak else (1,)
+    beside = (1,) if held_leak is None else (1, problem.n_shared - 1)
+    shared = fit.shared.copy()
+    if held_leak is not None:
+        shared[-1] = np.log(held_leak)
     held = hold(problem, fit.shared, AMPLITUDE_NAME)
     if isinstance(held, Unavailable):
         raise TypeError(held.reason)  # the families let in here have an amplitude that is a working parameter
@@ -201,15 +220,13 @@ def _walk_lengths(
     middle = int(np.argmin(np.abs(np.log(lengths) - fit.shared[1])))
     rows: dict[int, _Row] = {}
     for order in (range(middle, lengths.size), range(middle - 1, -1, -1)):
-        start = fit.estimate
+        start = Estimate(fit.own, shared)
         for k in order:
             rows[k], start = _at_length(fit, held, float(lengths[k]), level, start)
     return [rows[k] for k in sorted(rows)]
 
 
-def _at_length(
-    fit: CouplingFit, held: Held, length_um: float, level: float, start: Estimate
-) -> tuple[_Row, Estimate]:
+def _at_length(fit: CouplingFit, held: Held, length_um: float, level: float, start: Estimate) -> tuple[_Row, Estimate]:
     problem = held.problem
     shared = start.shared.copy()
     shared[1] = np.log(length_um)
@@ -245,7 +262,7 @@ def _at_length(
 
 
 def _sentence(
-    fit: CouplingFit, rows: list[_Row], level: float, leak: str, stated_at: str, largest: float
+    fit: CouplingFit, rows: list[_Row], level: float, leak: str, leak_rate: float, stated_at: str, largest: float
 ) -> str:
     span = f"Whatever the length from {rows[0].length_um:.3g} to {rows[-1].length_um:.3g} µm"
     if not np.isfinite(largest):
@@ -256,8 +273,8 @@ def _sentence(
         )
     kind = "robust" if all(isinstance(row.scaled, ProfileInterval) for row in rows) else "model-based"
     how = {
-        "held": f"the leak held at {fit.leak_rate:.3g} 1/s",
-        "fixed": f"the leak fixed at {fit.leak_rate:.3g} 1/s",
+        "held": f"the leak held at {leak_rate:.3g} 1/s",
+        "fixed": f"the leak fixed at {leak_rate:.3g} 1/s",
         "re-estimated": "the leak re-estimated at each",
     }[leak]
     widened = "" if fit.verdict.found else ", widened for the search over length and leak"

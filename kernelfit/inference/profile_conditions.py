@@ -22,7 +22,6 @@ FEWEST_POINTS = 2
 SAME_SITE_NAME = "same_site"
 
 
-
 def check_call(fit: CouplingFit, names: tuple[str, ...], level: float, n_points: int) -> None:
     """Refuse what cannot be profiled. Raises ArgumentError, NotConvergedError."""
     known = (*shared_names(fit), *["leak_rate"] * (fit.model.leak_rate is not None))

@@ -25,10 +25,10 @@ from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.held import Held, hold
 from kernelfit.inference.profile_conditions import check_call, discrete_names, fixed_leak, profile_notes
 from kernelfit.inference.profile_point import (
-    LARGEST_WEIGHTS,
     POINT_ITERATIONS,
     POINT_TOLERANCE,
     PathPoint,
+    foreseen_in_plane,
     settled,
 )
 from kernelfit.inference.profile_walk import BETTER, Walked, walk
@@ -246,7 +246,8 @@ def _surface(
     for i, j in _snake(n_points):
         x, y = float(sides[0][i]), float(sides[1][j])
         near = sorted(known, key=lambda p: np.hypot((p.x - x) / size[0], (p.y - y) / size[1]))[:NEIGHBOURS]
-        point = pair.point(x, y, _foreseen(near, x, y, size))
+        steps = np.array([[(p.x - x) / size[0], (p.y - y) / size[1]] for p in near])
+        point = pair.point(x, y, foreseen_in_plane(steps, [p.estimate for p in near]))
         if not point.converged:
             again = pair.point(x, y, near[0].estimate)
             point = max(point, again, key=lambda p: (p.converged, p.objective))
@@ -267,20 +268,6 @@ def _snake(n: int) -> list[tuple[int, int]]:
         along = range(n) if k % 2 == 0 else range(n - 1, -1, -1)
         path += [(i, j) for j in along]
     return path
-
-
-def _foreseen(near: list[_Point], x: float, y: float, size: FloatArray) -> Estimate:
-    """Where the others are likely to stand: a quadratic through the nearest points, or as much as they determine."""
-    u = np.array([[(p.x - x) / size[0], (p.y - y) / size[1]] for p in near])
-    quadratic = np.column_stack([np.ones(len(u)), u, u[:, 0] ** 2, u[:, 0] * u[:, 1], u[:, 1] ** 2])
-    for basis in (quadratic, quadratic[:, :3]):
-        weight = np.linalg.pinv(basis, rcond=1e-8)[0]
-        reproduces = np.allclose(weight @ basis, np.eye(basis.shape[1])[0], atol=1e-6)
-        if reproduces and np.sum(np.abs(weight)) <= LARGEST_WEIGHTS:
-            own = sum(w * p.estimate.own for w, p in zip(weight, near, strict=True))
-            shared = sum(w * p.estimate.shared for w, p in zip(weight, near, strict=True))
-            return Estimate(np.asarray(own), np.asarray(shared))
-    return near[0].estimate
 
 
 def _notes(fit: CouplingFit, problem: Problem, names: tuple[str, str], surface: _Surface) -> tuple[Note, ...]:

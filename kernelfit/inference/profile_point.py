@@ -111,8 +111,27 @@ def foreseen(known: list[PathPoint], x: float) -> Estimate:
         weight = _weights(np.array([p.x for p in known[:n]]), x)
         if np.sum(np.abs(weight)) <= LARGEST_WEIGHTS:
             break
-    own = sum(w * p.estimate.own for w, p in zip(weight, known[:n], strict=True))
-    shared = sum(w * p.estimate.shared for w, p in zip(weight, known[:n], strict=True))
+    return _weighted(weight, [p.estimate for p in known[:n]])
+
+
+def foreseen_in_plane(steps: FloatArray, estimates: list[Estimate]) -> Estimate:
+    """Where the others are likely to stand at the origin of `steps` (m, 2), from estimates there, nearest first.
+
+    A quadratic through them, or a plane, or the nearest itself, as much as they determine.
+    """
+    u, v = steps.T
+    quadratic = np.column_stack([np.ones(len(u)), u, v, u**2, u * v, v**2])
+    for basis in (quadratic, quadratic[:, :3]):
+        weight = np.linalg.pinv(basis, rcond=1e-8)[0]
+        reproduces = np.allclose(weight @ basis, np.eye(basis.shape[1])[0], atol=1e-6)
+        if reproduces and np.sum(np.abs(weight)) <= LARGEST_WEIGHTS:
+            return _weighted(weight, estimates)
+    return estimates[0]
+
+
+def _weighted(weight: FloatArray, estimates: list[Estimate]) -> Estimate:
+    own = sum(w * e.own for w, e in zip(weight, estimates, strict=True))
+    shared = sum(w * e.shared for w, e in zip(weight, estimates, strict=True))
     return Estimate(np.asarray(own), np.asarray(shared))
 
 

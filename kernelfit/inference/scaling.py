@@ -93,9 +93,7 @@ def scaling_by(
     """The scaling of a parameter by covariances; `gradient` (Q,) is its derivative by the working parameters."""
     used = gradient != 0
     kind = scaled_kind(fit, spread)
-    model, robust = (
-        float(gradient[used] @ spread.shared(k)[np.ix_(used, used)] @ gradient[used]) for k in _both(kind)
-    )
+    model, robust = (float(gradient[used] @ spread.shared(k)[np.ix_(used, used)] @ gradient[used]) for k in _both(kind))
     if not (model > 0.0 and np.isfinite(robust) and robust > 0.0):
         return Unavailable(f"{name} has no robust variance to scale the likelihood by")
     return Scaling(robust / model, critical_value(level, spread.degrees_of_freedom(kind)))
