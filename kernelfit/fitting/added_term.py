@@ -8,12 +8,14 @@ time.
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 
 import numpy as np
 from scipy.stats import chi2
 
 from kernelfit.engine.time_blocks import time_blocks
+from kernelfit.errors import Unavailable
 from kernelfit.fitting.arrow import Arrow, eliminate, solve_leniently
 from kernelfit.fitting.by_block import block_length_s
 from kernelfit.fitting.maximise import Optimum
@@ -22,16 +24,32 @@ from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.model.terms import AfterSpike
 
 EVERY = 2  # every second time constant of the term: a coarser basis tells as well whether anything is there, for less
+LEVEL = 0.05
 
 
-def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
-    """Score test of a lag basis common to all units at a fit without after-spike effects."""
+def fewest_blocks(n_terms: int) -> int:
+    """Blocks of time that a score test of so many coefficients needs.
+
+    A sum of scores over the spread of its own G parts cannot exceed G, whatever the recording holds: with fewer blocks
+    than the critical value of the test it could only ever say that nothing is there.
+    """
+    return math.floor(float(chi2.isf(LEVEL, n_terms))) + 1
+
+
+def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest | Unavailable:
+    """Score test of a lag basis common to all units at a fit without after-spike effects; with few blocks, why not."""
     constants = AfterSpike().constants(problem.data.bin_width)[::EVERY]
     n_traces = constants.size
     here = replace(problem, trace_decay=np.exp(-problem.data.bin_width / constants))
     own = np.column_stack([optimum.estimate.own, np.zeros((problem.data.n_targets, n_traces))])
     length_s = block_length_s(problem.grid.duration_s, problem.leak(optimum.estimate.shared))
     blocks = time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
+    needed = fewest_blocks(n_traces)
+    if blocks.n_blocks < needed:
+        counted = f"{blocks.n_blocks} block{'s' * (blocks.n_blocks != 1)} of time"
+        return Unavailable(
+            f"the recording is too short to tell what an after-spike term would add ({counted}, {needed} are needed)"
+        )
     problem.clock.stage = "what an after-spike term would add"
     sums = here.evaluate(Estimate(own, optimum.estimate.shared), blocks=blocks)
 
@@ -65,7 +83,7 @@ def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest:
     advice = (
         f"A unit's own past matters here: an after-spike term would add about {bits:.2g} bits per spike ({shown}). "
         "Without it the kernel absorbs part of it; fit with after_spike='basis' (--after-spike basis)."
-        if p_value <= 0.05
+        if p_value <= LEVEL
         else f"An after-spike term would add little: about {bits:.2g} bits per spike ({shown})."
     )
     return ScoreTest(statistic, n_traces, p_value, bits, advice)

@@ -96,7 +96,7 @@ class CouplingFit(Profiled):
     notes: tuple[Note, ...]
     solver: SolverReport
     second_optimum: str | None
-    after_spike_test: ScoreTest | None
+    after_spike_test: ScoreTest | Unavailable | None
     term_sizes: tuple[TermSize, ...]
     smoothing: Smoothing | None
     seed: int

@@ -15,7 +15,7 @@ from dataclasses import asdict
 from pathlib import Path
 from typing import Any, cast
 
-from kernelfit.errors import KernelfitError, OutputError, StorageError
+from kernelfit.errors import KernelfitError, OutputError, StorageError, Unavailable
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.effective import TermSize
 from kernelfit.fitting.outcome import Note, ScoreTest, SolverReport
@@ -215,7 +215,7 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
             starts=tuple(_start(start) for start in s["starts"]),
         ),
         second_optimum=c["second_optimum"],
-        after_spike_test=None if c["after_spike_test"] is None else ScoreTest(**c["after_spike_test"]),
+        after_spike_test=_score_test(c["after_spike_test"]),
         term_sizes=tuple(TermSize(t["term"], int(t["coefficients"]), float(t["effective"])) for t in c["terms"]),
         smoothing=None if c["smoothing"] is None else restore_smoothing(c["smoothing"]),
         seed=int(c["seed"]),
@@ -228,6 +228,12 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
 def _start(values: Mapping[str, Any]) -> StartRecord:
     objective = values["objective"]  # null: the likelihood there was not finite
     return StartRecord(values["leak"], -math.inf if objective is None else objective, values["n_iterations"])
+
+
+def _score_test(values: Mapping[str, Any] | None) -> ScoreTest | Unavailable | None:
+    if values is None:
+        return None
+    return Unavailable(values["reason"]) if "reason" in values else ScoreTest(**values)
 
 
 def _pair(values: Any) -> tuple[float, float]:

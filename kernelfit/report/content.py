@@ -63,15 +63,13 @@ if TYPE_CHECKING:
     from kernelfit.fitting.outcome import Note
     from kernelfit.fitting.result import CouplingFit
 
-# Where a note belongs, in words; "" where the note itself says it.
+# Where a note says itself where it belongs; any other place is printed as it is.
 _PLACES = {
-    "bin_width": "bin width",
     "coupling": "",
-    "covariance": "",
     "exclusions": "",
-    "leak_rate": "leak rate",
     "optimiser": "",
-    "same_site": "",
+    "pairs on one site": "",
+    "standard errors": "",
     "units": "",
     "windows": "",
 }
@@ -355,6 +353,8 @@ def after_spike_sentence(fit: CouplingFit) -> str:
             "What a unit's own earlier spikes do to its rate (refractoriness, bursts) is part of the model. Left out, "
             "it would be taken for coupling and bend the kernel's length and the time constant."
         )
+    if isinstance(test, Unavailable):
+        return f"The model leaves out what a unit's own spikes do to it. What it would add {test}."
     return (
         f"The model leaves out what a unit's own spikes do to it. {test.sentence.rstrip('.')}. Score test: chi-squared "
         f"{number_text(test.statistic)} with {test.df} degrees of freedom, {p_sentence(test.p_value)}."

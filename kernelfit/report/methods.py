@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from kernelfit.errors import Unavailable
 from kernelfit.kernels.spline import Spline
 from kernelfit.recording.recording import Recording
 from kernelfit.report.numbers import (
@@ -80,10 +81,14 @@ def methods(fit: CouplingFit, recording: Recording, goodness: Goodness) -> Metho
         references += [WHITE, LIANG]
     if length_word(fit) == "radius":
         references.append(HANSEN_EDGE)
-    if fit.after_spike_test is not None:
+    if _score_tested(fit):
         references.append(RAO)
     references += [BROWN, HASLINGER, LILLIEFORS, BENJAMINI, GERHARD, MASSART]
     return Methods(" ".join(sentences), tuple(references))
+
+
+def _score_tested(fit: CouplingFit) -> bool:
+    return fit.after_spike_test is not None and not isinstance(fit.after_spike_test, Unavailable)
 
 
 def _data_sentence(fit: CouplingFit, recording: Recording) -> str:
@@ -186,9 +191,9 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
     if not fit.verdict.found:
         sentences.append(
             "As no coupling was found, intervals of amplitudes use the critical value of that test, which allows for "
-            "the search over lengths and leak rates; lengths and the leak rate are not stated."
+            "the search over lengths and leak rates, and hold 0; lengths and the leak rate are not stated."
         )
-    if fit.after_spike_test is not None:
+    if _score_tested(fit):
         sentences.append("What effects of own earlier spikes would add was asked by a score test (Rao 1948).")
     return sentences
 

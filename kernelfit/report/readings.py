@@ -60,15 +60,28 @@ def parameter_of(fit: CouplingFit, name: str) -> Estimate | None:
         return None
     value, lower, upper = table.loc[[name], ["estimate", "lower", "upper"]].to_numpy(dtype=np.float64)[0]
     note = table["note"].to_dict()[name]
-    return Estimate(float(value), float(lower), float(upper), str(note or ""))
+    return Estimate(float(value), float(lower), float(upper), plain_reason(str(note or "")))
 
 
 def coupling_at(fit: CouplingFit, distance_um: float) -> Estimate:
     """J at one distance with its pointwise interval."""
     row = fit.kernel_band(np.array([distance_um]), level=LEVEL).iloc[0]
     value = float(row["estimate"])
-    reason = "" if math.isfinite(value) else f"the kernel has no value at {number_text(distance_um)} µm"
+    reason = "" if math.isfinite(value) else _why_no_coupling(fit, distance_um)
     return Estimate(value, float(row["lower"]), float(row["upper"]), reason)
+
+
+def _why_no_coupling(fit: CouplingFit, distance_um: float) -> str:
+    """Why the kernel has no value at a distance: an amplitude that could not be estimated, or no pair so far apart."""
+    table = fit.parameters
+    unknown = table[(table["unit"] == "per spike") & table["estimate"].isna() & (table.index != "same_site")]
+    reasons = [plain_reason(note) for note in unknown["note"]]
+    return next((r for r in reasons if r), f"the kernel has no value at {number_text(distance_um)} µm")
+
+
+def plain_reason(note: str) -> str:
+    """The note of a parameter without a value, as it goes on after "could not be estimated"."""
+    return note.removeprefix("not identified: ")
 
 
 def time_constant_of(fit: CouplingFit) -> Estimate:

@@ -149,7 +149,7 @@ def test_a_fit_that_did_not_converge_is_marked_everywhere():
 
 def test_warnings_stand_at_the_top_and_all_notes_in_the_text():
     notes = (
-        FakeNote("warning", "The bins are too wide for the leak found.", "leak_rate", "Use bins of 1 ms."),
+        FakeNote("warning", "The bins are too wide for the leak found.", "leak rate", "Use bins of 1 ms."),
         FakeNote("info", "Two starts ended in the same optimum.", "", ""),
     )
     found = content_of(notes=notes)
@@ -164,6 +164,15 @@ def test_without_after_spike_terms_the_score_test_speaks():
     assert "Score test: chi-squared 812 with 300 degrees of freedom, p < 0.001" in found.after_spike
     assert isinstance(found.figures.after_spike, Unavailable)
     assert "Rao" in " ".join(found.methods.references)
+
+
+def test_a_score_test_that_cannot_be_made_gives_its_reason():
+    model = CouplingModel(bin_width=0.005, after_spike="none")
+    found = content_of(model=model, after_spike_test=Unavailable("the recording is too short (3 blocks of time)"))
+    reason = "could not be estimated: the recording is too short (3 blocks of time)."
+    assert found.after_spike.endswith(f"What it would add {reason}")
+    assert "Rao" not in " ".join(found.methods.references)
+    assert "score test" not in found.methods.paragraph
 
 
 def test_a_fixed_leak_is_said_and_has_no_band():
@@ -455,3 +464,21 @@ def test_a_kernel_nobody_bounds_is_not_drawn():
     assert isinstance(found.figures.kernel, Unavailable)
     assert "does not bound" in found.figures.kernel.reason
     assert "no effect can be ruled out" in found.verdict[1]
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
+def test_an_amplitude_that_nothing_holds_is_told_by_its_reason():
+    """Two units that take turns, 0.3 s and more apart: no strength of suppression is too much, and none is the best."""
+    rng = np.random.default_rng(0)
+    times = np.cumsum(0.3 + rng.exponential(0.1, 140))
+    first = rng.random(times.size) < 0.5
+    recording = Recording.from_arrays(
+        {"a": times[first], "b": times[~first]}, np.array([[0.0], [100.0]]), [(0.0, 60.0)]
+    )
+    fit = CouplingModel("flat", bin_width=0.005, after_spike="none").fit(recording, threads=1)
+    assert fit.verdict.found
+    content = build_content(fit, recording, fit.goodness())
+    told = " ".join(content.verdict)
+    assert "could not be estimated: nothing holds it from below: after a spike no unit 100 µm away fired" in told
+    assert "its time constant could not be estimated: goes with the amplitude, which nothing holds" in told
+    assert "-4" not in told  # no number from where the climb was stopped
