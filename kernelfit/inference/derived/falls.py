@@ -9,9 +9,7 @@ import numpy as np
 from scipy.optimize import brentq
 
 from kernelfit.inference.derived.figure import DerivedFigure, Lost
-from kernelfit.inference.derived.setting import Law, Setting
-
-ROOT_UM = 1e-10
+from kernelfit.inference.derived.setting import ROOT_UM, Law, Setting
 
 
 @dataclass(frozen=True, kw_only=True)

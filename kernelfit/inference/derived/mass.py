@@ -13,7 +13,6 @@ from scipy.special import roots_legendre
 
 from kernelfit.inference.derived.figure import DerivedFigure, Lost
 from kernelfit.inference.derived.setting import Law, Setting
-from kernelfit.inference.derived.signs import sign_changes
 
 SPHERE = {1: 2.0, 2: 2.0 * np.pi, 3: 4.0 * np.pi}
 SPACE = {1: "the line", 2: "the plane", 3: "space"}
@@ -29,7 +28,7 @@ def integral(law: Law, low_um: float, high_um: float, part: float = 0.0) -> floa
     Gauss-Legendre within panels that break where J changes sign or jumps, so that it is smooth in the parameters.
     """
     m = law.setting.span.n_coordinates
-    breaks = [*np.linspace(low_um, high_um, PANELS + 1), *sign_changes(law)]
+    breaks = [*np.linspace(low_um, high_um, PANELS + 1), *law.turns_um]
     if law.edge_um is not None:
         breaks.append(law.edge_um)
     ends = np.unique(np.clip(breaks, low_um, high_um))
@@ -63,7 +62,7 @@ class ExtrapolatedMass(DerivedFigure):
 
     def lost(self, law: Law) -> Lost | None:
         far = law.setting.far_um * FAR_OUT * np.array([1.0, 2.0])
-        size = np.abs(law(far))
+        size = np.abs(law.exact(far))
         m = law.setting.span.n_coordinates
         if size[1] == 0.0 or np.log2(size[1] / size[0]) < -m:
             return None

@@ -11,6 +11,7 @@ from functools import cached_property
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.optimize import brentq
 
 from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
@@ -23,6 +24,7 @@ if TYPE_CHECKING:
     from kernelfit.recording.recording import Recording
 
 EVEN_POINTS, NEAR_POINTS = 400, 120  # of the grid on which falls and changes of sign are looked for
+ROOT_UM = 1e-10  # to which distances are found
 FINEST_SHARE = 1e-3  # of the largest distance: where the finer part of the grid begins at the latest
 
 
@@ -104,6 +106,19 @@ class Law:
         """(m,) J on the setting's grid."""
         return self(self.setting.grid_um)
 
+    @cached_property
+    def turns_um(self) -> tuple[float, ...]:
+        """Distances (µm) within those with pairs at which J changes sign, rising."""
+        signed = self.on_grid != 0.0
+        grid, sign = self.setting.grid_um[signed], np.sign(self.on_grid[signed])
+        at = np.flatnonzero(sign[:-1] * sign[1:] < 0)
+        return tuple(float(brentq(self.one, grid[k], grid[k + 1], xtol=ROOT_UM)) for k in at)
+
+    @property
+    def exact(self) -> Law:
+        """The law that its parameters have."""
+        return self
+
     @property
     def leak(self) -> float:
         """alpha, 1/s."""
@@ -121,6 +136,42 @@ class Law:
         shared = self.shared.copy()
         shared[self.setting.edge_place] = np.log(edge_um)
         return Law(self.setting, shared)
+
+
+@dataclass(frozen=True, eq=False)
+class DrawnLaw(Law):
+    """A plausible other law: J moved along its derivative at the estimate, as bands take it to move.
+
+    Where parameters compensate each other far off (two Gaussians of nearly the same length), the parameters of a draw
+    by themselves would make a J that nothing in the recording allows.
+
+    Parameters
+    ----------
+    setting, shared : as drawn
+    estimate : the law it was drawn around
+    move : (Q,) by which the parameters moved
+    moved_on_grid : (m,) J on the grid, less that of the estimate
+    """
+
+    estimate: Law
+    move: FloatArray
+    moved_on_grid: FloatArray
+
+    def __call__(self, d_um: FloatArray | float) -> FloatArray:
+        d = np.atleast_1d(np.asarray(d_um, dtype=np.float64))
+        n = self.setting.n_kernel
+        slope = self.setting.kernel.gradient(self.estimate.shared[:n], d, self.setting.span)
+        return np.asarray(self.estimate(d) + self.move[:n] @ slope)
+
+    @cached_property
+    def on_grid(self) -> FloatArray:
+        """(m,) J on the setting's grid."""
+        return self.estimate.on_grid + self.moved_on_grid
+
+    @property
+    def exact(self) -> Law:
+        """The law that its parameters have, without following the derivative."""
+        return Law(self.setting, self.shared)
 
 
 def setting_of(fit: CouplingFit, recording: Recording | None = None) -> Setting:

@@ -12,18 +12,9 @@ import numpy as np
 from scipy.optimize import brentq
 
 from kernelfit.inference.derived.figure import DerivedFigure, Lost, Side
-from kernelfit.inference.derived.setting import Law, Setting
+from kernelfit.inference.derived.setting import ROOT_UM, Law, Setting
 
-ROOT_UM = 1e-10
 SLOPE_STEP = 1e-4  # of the range of distances: over so much J is taken to be smooth
-
-
-def sign_changes(law: Law) -> list[float]:
-    """Distances (µm) within those with pairs at which J changes sign, rising."""
-    signed = law.on_grid != 0.0
-    grid, sign = law.setting.grid_um[signed], np.sign(law.on_grid[signed])
-    at = np.flatnonzero(sign[:-1] * sign[1:] < 0)
-    return [float(brentq(law.one, grid[k], grid[k + 1], xtol=ROOT_UM)) for k in at]
 
 
 @dataclass(frozen=True, kw_only=True)
@@ -32,7 +23,7 @@ class SignChange(DerivedFigure):
 
     def value(self, law: Law) -> float | Lost:
         found = self.lost(law)
-        return sign_changes(law)[0] if found is None else found
+        return law.turns_um[0] if found is None else found
 
     def lost(self, law: Law) -> Lost | None:
         if law.on_grid.min() < 0.0 < law.on_grid.max():

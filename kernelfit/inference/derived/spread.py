@@ -2,7 +2,8 @@
 
 The delta method takes a figure for linear in the parameters. That says nothing about a figure that some of the
 plausible parameters do not have (a change of sign, a fall within the array), so these are counted in draws from the
-normal (or t) law of the estimates: where more than a tail of the interval has lost it on one side, that end is open.
+normal (or t) law of J(d), the law that bands show: where more than a tail of the interval has lost it on one side,
+that end is open.
 """
 
 from __future__ import annotations
@@ -16,7 +17,7 @@ import numpy as np
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.inference.derived.figure import DerivedFigure, Lost
 from kernelfit.inference.derived.row import Losses, Row, opened
-from kernelfit.inference.derived.setting import Law
+from kernelfit.inference.derived.setting import DrawnLaw, Law
 from kernelfit.inference.intervals import critical_value
 from kernelfit.inference.parameters import too_few_blocks
 
@@ -25,7 +26,7 @@ if TYPE_CHECKING:
 
 N_DRAWS = 1000
 SEED = 0  # of the draws: the same fit has the same table
-STEP_IN_STD_ERRORS = 0.01  # of the differences: small beside the curvature, large beside rounding
+STEP_IN_STD_ERRORS = 1e-3  # of the differences: small beside the curvature, large beside rounding
 SMALLEST_STEP = 1e-6  # relative to the parameter
 JUST_INSIDE = 1.0 + 1e-9  # a radius that takes in the pairs at its lower end
 
@@ -64,7 +65,7 @@ class DeltaSpread:
             row,
             lost,
             0.5 * (1.0 - self.level),
-            "draws from the law of the estimates",
+            "draws from the law of J(d)",
             at_edge=self.fit.radius_interval is not None,
         )
 
@@ -168,20 +169,21 @@ def _difference(figure: DerivedFigure, law: Law, q: int, std_error: float) -> fl
 # --- draws ------------------------------------------------------------------------------------------------
 
 
-def draws_of(fit: CouplingFit, law: Law, covariance: FloatArray, freedom: float) -> list[Law]:
-    """Laws at parameters drawn around the estimate, within the kernel's bounds; none without a covariance."""
+def draws_of(fit: CouplingFit, law: Law, covariance: FloatArray, freedom: float) -> list[DrawnLaw]:
+    """Laws drawn around the estimate, their parameters within the kernel's bounds; none without a covariance."""
     free = np.isfinite(np.diag(covariance))
     if not free.any():
         return []
+    n, setting = fit.n_kernel, law.setting
     rng = np.random.default_rng(SEED)
     value, vector = np.linalg.eigh(covariance[np.ix_(free, free)])
     root = vector * np.sqrt(np.maximum(value, 0.0))  # rounding can leave an eigenvalue of 0 below it
-    move = rng.standard_normal((N_DRAWS, value.size)) @ root.T
+    move = np.zeros((N_DRAWS, free.size))
+    move[:, free] = rng.standard_normal((N_DRAWS, value.size)) @ root.T
     if np.isfinite(freedom):
         move *= np.sqrt(freedom / rng.chisquare(freedom, N_DRAWS))[:, None]
-    shared = np.tile(law.shared, (N_DRAWS, 1))
-    shared[:, free] += move
-    n = fit.n_kernel
+    shared = law.shared + move
     low, high = fit.model.kernel.bounds(fit.span).T
     shared[:, :n] = np.where(free[:n], np.clip(shared[:, :n], low, high), shared[:, :n])
-    return [law.setting.at(row) for row in shared]
+    on_grid = move[:, :n] @ setting.kernel.gradient(law.shared[:n], setting.grid_um, setting.span)
+    return [DrawnLaw(setting, row, law, step, moved) for row, step, moved in zip(shared, move, on_grid, strict=True)]

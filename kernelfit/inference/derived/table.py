@@ -25,6 +25,7 @@ if TYPE_CHECKING:
     from kernelfit.inference.bootstrap import Bootstrap
     from kernelfit.recording.recording import Recording
 
+AT_LIMIT = 1e-6  # relative
 NOT_FOUND = "not identified: no coupling to describe"
 WIDENED = "no coupling found; interval widened for the search over length and leak"
 
@@ -110,9 +111,21 @@ def why_not(figure: DerivedFigure, law: Law, fit: CouplingFit) -> str:
     reasons = []
     for q in np.flatnonzero(fit.at_bound).tolist():
         is_leak = leak_free and q == fit.shared.size - 1
-        if figure.of_time if is_leak else figure.of_shape and depends_on(figure, law, q):
+        if figure.of_time if is_leak else figure.of_shape and _ends_the_range(fit, q) and depends_on(figure, law, q):
             reasons.append(fit.bound_reasons[q])
     return f"a parameter is at its bound: {'; '.join(reasons)}" if reasons else ""
+
+
+def _ends_the_range(fit: CouplingFit, q: int) -> bool:
+    """Whether a kernel parameter at its bound is as long or as steep as the array could show.
+
+    The wide length of a difference of Gaussians also has a bound next to the narrow one, where J is as well determined
+    as anywhere, and only the amplitudes of the two are not.
+    """
+    parameter = fit.model.kernel.parameters(fit.span)[q]
+    value = fit.model.kernel.natural(fit.shared[: fit.n_kernel], fit.span)[q]
+    low, high = parameter.limits(fit.span)
+    return bool(value <= low * (1.0 + AT_LIMIT) or value >= high * (1.0 - AT_LIMIT))
 
 
 def _taken_as_known(figure: DerivedFigure, law: Law, fit: CouplingFit) -> str:
