@@ -158,5 +158,6 @@ def weight_law_from(law: str | WeightLaw, *, refits: bool) -> WeightLaw:
     made = law if isinstance(law, WeightLaw) else WEIGHT_LAWS[law]() if law in WEIGHT_LAWS else None
     if made is None or (refits and not made.refits):
         why = "is not known" if made is None else "has negative weights, which a refit cannot use"
-        raise ArgumentError(f"law={law!r} {why}. Say {', '.join(repr(name) for name in fitting)}.")
+        given = made.name if made is not None else law
+        raise ArgumentError(f"law={given!r} {why}. Say {', '.join(repr(name) for name in fitting)}.")
     return made
