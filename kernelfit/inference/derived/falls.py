@@ -38,12 +38,11 @@ class Fall(DerivedFigure):
         reference = setting.span.reference_um
         if not setting.reference_seen:
             return Lost(f"the array has no pairs at the reference distance ({reference:,.4g} µm)")
-        there = abs(law.one(reference))
+        k = int(np.searchsorted(setting.grid_um, reference))
+        distance, size = setting.grid_um[k:], np.abs(law.on_grid[k:])
+        there = float(size[0])
         if not (there > 0.0 and math.isfinite(there)):
             return Lost("J is zero at the reference distance, so there is nothing to fall from")
-        beyond = setting.grid_um > reference
-        distance = np.append(reference, setting.grid_um[beyond])
-        size = np.append(there, np.abs(law.on_grid[beyond]))
         fallen = np.flatnonzero(size < self.share * there)
         if fallen.size == 0:
             return Lost(

@@ -59,9 +59,11 @@ class DerivedFigure(ABC):
         """The figure at one point of the shared parameters."""
 
     def lost(self, law: Law) -> Lost | None:
-        """Why there is none at this point, or None. Cheaper than the value where that takes a search."""
-        value = self.value(law)
-        return value if isinstance(value, Lost) else None
+        """Why there is none at this point, or None: what `value` would say, without the search for it.
+
+        Only figures that some parameters have and others do not say anything here.
+        """
+        return None
 
     def gradient(self, law: Law) -> FloatArray | None:
         """(Q,) derivative by the shared parameters, or None: by differences of the value."""

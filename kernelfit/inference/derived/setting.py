@@ -55,12 +55,13 @@ class Setting:
 
     @cached_property
     def grid_um(self) -> FloatArray:
-        """(m,) rising distances from the smallest to the largest with pairs, finer where they are small."""
+        """(m,) rising distances from the smallest to the largest with pairs, finer where they are small, and the
+        reference distance where it is among them."""
         even = np.linspace(self.near_um, self.far_um, EVEN_POINTS)
         finest = max(self.near_um, FINEST_SHARE * self.far_um)
         finer = np.geomspace(finest, self.far_um, NEAR_POINTS)
         inside = (finer > self.near_um) & (finer < self.far_um)
-        return np.unique(np.concatenate([even, finer[inside]]))
+        return np.unique(np.concatenate([even, finer[inside], [self.span.reference_um] * self.reference_seen]))
 
     @property
     def reference_seen(self) -> bool:
