@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 from kernelfit.cli._console import ProgressLine, say, tell
+from kernelfit.inference.sureness import how_sure
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.recording.recording import Recording
 from kernelfit.report.content import note_text
@@ -24,7 +25,8 @@ class Job:
     ----------
     out : the results folder
     overwrite : replace earlier results there
-    covariance : "robust" or "model", of the headline intervals
+    covariance : "robust", "jackknife" or "model", of the headline intervals
+    profiles : profile the likelihood of every shared parameter too
     threads : None: as many as there are cores
     seed : of the sign flips of the coupling test and the randomised goodness-of-fit test
     truth : what a simulated recording was made from
@@ -33,6 +35,7 @@ class Job:
     out: Path
     overwrite: bool = False
     covariance: CovarianceKind = "robust"
+    profiles: bool = False
     threads: int | None = None
     seed: int = 0
     truth: Truth | None = None
@@ -42,9 +45,21 @@ def fit_and_write(recording: Recording, model: CouplingModel, job: Job) -> int:
     """Fit, write the results folder, print the result, and return the exit status."""
     with ProgressLine() as progress:
         fit = model.fit(recording, covariance=job.covariance, threads=job.threads, seed=job.seed, progress=progress)
+        progress.stage("how sure the numbers are")
+        sureness = how_sure(
+            fit, recording, profiles=job.profiles, threads=job.threads, seed=job.seed, progress=progress
+        )
         progress.stage("testing the fit, writing the report")
         goodness = fit.goodness(seed=job.seed)
-        report = write_results(job.out, fit, recording, goodness=goodness, truth=job.truth, overwrite=job.overwrite)
+        report = write_results(
+            job.out,
+            fit,
+            recording,
+            goodness=goodness,
+            sureness=sureness,
+            truth=job.truth,
+            overwrite=job.overwrite,
+        )
     if not fit.converged:
         tell(f"error: the fit did not converge: {fit.solver.message}")
     for note in fit.notes:

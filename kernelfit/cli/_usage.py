@@ -33,7 +33,7 @@ OPTIONS = {
     "same_site": "--same-site",
     "after_spike": "--after-spike",
     "warm_up_s": "--warm-up-s",
-    "covariance": "--covariance",
+    "covariance": "--intervals",
 }
 _WORDS_TOO = {"decimal", "kernel", "covariance"}  # arguments only where a value follows
 _NAMED = re.compile(r"(?<![-\w])(" + "|".join(OPTIONS) + r")\b(?!-)(\s?=)?")
@@ -48,8 +48,12 @@ class PlainUsage(TyperCommand):
 
 
 def option_lines(message: str) -> list[str]:
-    """How the arguments that a message names are typed: one line, or none."""
-    named = [name for name, given in _NAMED.findall(message) if given or name not in _WORDS_TOO]
+    """How the arguments that a message names are typed, where it does not say so itself: one line, or none."""
+    named = [
+        name
+        for name, given in _NAMED.findall(message)
+        if (given or name not in _WORDS_TOO) and OPTIONS[name].split()[0] not in message
+    ]
     if not named:
         return []
     return [f"On the command line: {', '.join(f'{name} is {OPTIONS[name]}' for name in dict.fromkeys(named))}."]

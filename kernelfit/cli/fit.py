@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, get_args
 
 import typer
 
+from kernelfit.cli._console import tell
 from kernelfit.cli._fitting import Job, fit_and_write
 from kernelfit.cli._inputs import (
     DecimalOption,
@@ -31,19 +32,22 @@ from kernelfit.cli._inputs import (
     read_inputs,
 )
 from kernelfit.cli._parsing import above_zero, from_zero, one_of, whole
-from kernelfit.errors import ArgumentError
+from kernelfit.errors import ArgumentError, RecordingError
 from kernelfit.fitting.result import covariance_kind
 from kernelfit.kernels.base import Kernel
 from kernelfit.kernels.registry import KERNELS
 from kernelfit.kernels.spline import Spline
-from kernelfit.model.coupling import CouplingModel
+from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.model.links import LINKS
+from kernelfit.recording.checks_input import doubt_about_times
+from kernelfit.recording.recording import Recording
 from kernelfit.report.folder import check_folder
 
 DEFAULT_OUT = Path("kernelfit-results")
 SAME_SITE = ("exclude", "own", "kernel")
 AFTER_SPIKE = ("basis", "none")
-COVARIANCES = ("robust", "model")
+PROFILE = "profile"
+INTERVALS = (*get_args(CovarianceKind), PROFILE)
 MS_PER_S = 1000.0
 
 
@@ -149,13 +153,15 @@ def fit_command(
             "themselves explained.",
         ),
     ] = 0.0,
-    covariance: Annotated[
+    intervals: Annotated[
         str,
         typer.Option(
-            "--covariance",
+            "--intervals",
             metavar="KIND",
-            parser=one_of("--covariance", COVARIANCES),
-            help="Intervals in the results: robust (from blocks of time) or model (right if the model is).",
+            parser=one_of("--intervals", INTERVALS),
+            help="Intervals in the results: robust (from blocks of time), jackknife (each block left out in turn), "
+            "model (right if the model is) or profile (robust, and the profile likelihood beside it: takes as long "
+            "again).",
         ),
     ] = "robust",
     units: UnitsOption = None,
@@ -207,7 +213,14 @@ def fit_command(
         after_spike=after_spike,
         warm_up_s=warm_up_s,
     )
-    job = Job(out=out, overwrite=overwrite, covariance=covariance_kind(covariance), threads=threads, seed=seed)
+    job = Job(
+        out=out,
+        overwrite=overwrite,
+        covariance=covariance_kind("robust" if intervals == PROFILE else intervals),
+        profiles=intervals == PROFILE,
+        threads=threads,
+        seed=seed,
+    )
     check_folder(out, overwrite=overwrite)  # now, not after the long part
     recording = read_inputs(
         spikes,
@@ -231,7 +244,17 @@ def fit_command(
             source_only=source_only or (),
         ),
     )
+    _refuse_other_times(recording)
     return fit_and_write(recording, model, job)
+
+
+def _refuse_other_times(recording: Recording) -> None:
+    """Microseconds read as seconds are a recording of months, and a fit of days: say so before, not after."""
+    doubt = doubt_about_times(recording)
+    if doubt is not None and doubt.severity == "error":
+        raise RecordingError(f"{doubt.where}: {doubt.what} {doubt.remedy}")
+    if doubt is not None:
+        tell(f"{doubt.severity}: {doubt.where}: {doubt.what} {doubt.remedy}")
 
 
 def _kernel(name: str, spline_basis: int | None, smoothing: float | None) -> Kernel:

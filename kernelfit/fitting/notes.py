@@ -93,7 +93,7 @@ def fit_notes(
                 f"The {problem.grid.duration_s:.3g} s that count are {many} of time ({REFUSED_BELOW} are needed): "
                 "there are no robust standard errors.",
                 "standard errors",
-                "Record longer, or read the model-based ones: fit.with_covariance('model') (--covariance model).",
+                "Record longer, or read the model-based ones: fit.with_covariance('model') (--intervals model).",
             )
         )
     elif spread.n_blocks < FEW_BLOCKS:
@@ -104,7 +104,7 @@ def fit_notes(
                 f"fewer than {FEW_BLOCKS} tend to come out too small.",
                 "standard errors",
                 "Record longer, or read those of the jackknife, made for few blocks: fit.with_covariance('jackknife') "
-                "(--covariance jackknife).",
+                "(--intervals jackknife).",
             )
         )
     if spread.n_blocks >= REFUSED_BELOW and not spread.block_curve.settled:

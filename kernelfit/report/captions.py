@@ -11,7 +11,7 @@ from kernelfit.errors import Unavailable
 from kernelfit.recording.recording import Recording
 from kernelfit.report.figure_data import ArrayData, KernelData, KsData, RasterData
 from kernelfit.report.numbers import count_text, distance_label, number_text, time_text
-from kernelfit.report.readings import LEVEL, kernel_name
+from kernelfit.report.readings import LEVEL, kernel_name, kind_word
 from kernelfit.report.words import level_text, mostly_rejected
 
 if TYPE_CHECKING:
@@ -46,7 +46,7 @@ def captions(
     """The captions of a fit's figures. `goodness` warns under the kernel where most units are rejected."""
     units = f"{count_text(recording.n_units)} units"
     based_on = f"{units}, {count_text(fit.n_spikes)} spikes, {count_text(fit.duration_s)} s."
-    kind = "robust" if fit.covariance_kind == "robust" else "model-based"
+    kind = kind_word(fit.covariance_kind)
     level = level_text(LEVEL)
     return Captions(
         kernel=_kernel(fit, kernel, kind, level, f"{_rejected(goodness)}{based_on}"),

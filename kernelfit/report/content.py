@@ -12,6 +12,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from kernelfit.errors import Unavailable
+from kernelfit.inference.sureness import Sureness
 from kernelfit.recording.recording import Recording
 from kernelfit.report import captions, words
 from kernelfit.report.content_figures import (
@@ -22,6 +23,7 @@ from kernelfit.report.content_figures import (
     ks_data,
     raster_data,
 )
+from kernelfit.report.content_sureness import SureContent, sure_content
 from kernelfit.report.content_tables import (
     fit_facts,
     goodness_table,
@@ -115,6 +117,7 @@ class FitContent:
         the recording. The last comes before any number where most units are rejected
     coupling_lead, coupling : the kernel in words, the first sentence apart
     sure_lead, sure : how sure the numbers are
+    sureness : other kinds of interval, what carries the result, derived figures; None where they were not asked for
     goodness_lead, goodness : whether the model describes the recording
     recording_lead : what was recorded
     after_spike : what own spikes do, or what a score test says they would
@@ -131,6 +134,7 @@ class FitContent:
     coupling: tuple[str, ...]
     sure_lead: str
     sure: tuple[str, ...]
+    sureness: SureContent | None
     goodness_lead: str
     goodness: tuple[str, ...]
     recording_lead: str
@@ -144,7 +148,12 @@ class FitContent:
 
 
 def build_content(
-    fit: CouplingFit, recording: Recording, goodness: Goodness, *, truth: Truth | None = None
+    fit: CouplingFit,
+    recording: Recording,
+    goodness: Goodness,
+    *,
+    sureness: Sureness | None = None,
+    truth: Truth | None = None,
 ) -> FitContent:
     """Everything the report of a fit says.
 
@@ -153,6 +162,7 @@ def build_content(
     fit : the fit, converged or not
     recording : the recording it was fitted to
     goodness : its goodness of fit
+    sureness : what else was asked on how sure the numbers are
     truth : what an invented recording was made from
     """
     figures = FitFigures(
@@ -182,6 +192,7 @@ def build_content(
         coupling=coupling_sentences(fit),
         sure_lead=sure_lead(fit),
         sure=sure_sentences(fit),
+        sureness=None if sureness is None else sure_content(fit, sureness),
         goodness_lead=described_sentence(goodness),
         goodness=goodness_sentences(fit, goodness),
         recording_lead=recording_lead(fit, recording),
@@ -255,7 +266,7 @@ def notices(fit: CouplingFit, *, invented: bool = False) -> tuple[Notice, ...]:
             *marked[:NOTICES_SHOWN],
             Notice(
                 "info",
-                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How sure\N{RIGHT DOUBLE QUOTATION MARK}.",
+                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How sure are these numbers\N{RIGHT DOUBLE QUOTATION MARK}.",
             ),
         ]
     return tuple(marked)

@@ -27,7 +27,16 @@ from kernelfit.report.numbers import (
     time_text,
 )
 from kernelfit.report.page import Cell, Column, Definition, Table, without_empty_notes
-from kernelfit.report.readings import LEAK, LEVEL, TEST_LEVEL, length_word, link_name, parameter_of, time_constant_of
+from kernelfit.report.readings import (
+    LEAK,
+    LEVEL,
+    TEST_LEVEL,
+    kind_word,
+    length_word,
+    link_name,
+    parameter_of,
+    time_constant_of,
+)
 from kernelfit.report.truth import Truth
 from kernelfit.report.words import Estimate, level_text
 
@@ -108,7 +117,7 @@ def _unit_shown(unit: str) -> str:
 
 
 def _kind(fit: CouplingFit) -> str:
-    return "robust" if fit.covariance_kind == "robust" else "model-based"
+    return kind_word(fit.covariance_kind)
 
 
 def std_error_table(fit: CouplingFit) -> Table:
@@ -359,7 +368,7 @@ def settings_facts(fit: CouplingFit, goodness: Goodness) -> Definition:
         ("reference distance", distance_label(fit.reference_distance_um)),
         (
             "intervals",
-            f"{level_text(LEVEL)}, {_kind(fit)}" + (f", {blocks}" if _kind(fit) == "robust" else ""),
+            f"{level_text(LEVEL)}, {_kind(fit)}" + (f", {blocks}" if fit.covariance_kind != "model" else ""),
         ),
         ("seed of the coupling test", str(fit.seed)),
         ("seed of the goodness test", str(goodness.seed)),

@@ -11,12 +11,14 @@ import pandas as pd
 from matplotlib.figure import Figure
 
 from kernelfit.errors import Unavailable
+from kernelfit.inference.sureness import Sureness
 from kernelfit.recording.recording import Recording
-from kernelfit.report import words
+from kernelfit.report import sure_captions, words
 from kernelfit.report.content import FitContent, build_content
 from kernelfit.report.figures_array import draw_array, draw_raster
 from kernelfit.report.figures_fit import draw_after_spike, draw_ks
 from kernelfit.report.figures_kernel import draw_kernel, draw_time_course
+from kernelfit.report.figures_sureness import draw_blocks, draw_influence, draw_kinds
 from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder, files_list
 from kernelfit.report.look import save_figure
 from kernelfit.report.page import (
@@ -47,6 +49,7 @@ def write_results(
     recording: Recording,
     *,
     goodness: Goodness | None = None,
+    sureness: Sureness | None = None,
     truth: Truth | None = None,
     overwrite: bool = False,
 ) -> Path:
@@ -58,6 +61,7 @@ def write_results(
     fit : the fit; one that did not converge is written, too, and marked
     recording : the recording it was fitted to
     goodness : its goodness of fit, computed here with seed 0 if not given
+    sureness : bootstrap, influence, derived figures (`kernelfit.inference.sureness.how_sure`); None: not on the page
     truth : what an invented recording was made from, shown beside the estimates
     overwrite : replace earlier results in that folder
 
@@ -72,11 +76,13 @@ def write_results(
     check_folder(folder, overwrite=overwrite)
     if goodness is None:
         goodness = fit.goodness(recording)
-    content = build_content(fit, recording, goodness, truth=truth)
+    content = build_content(fit, recording, goodness, sureness=sureness, truth=truth)
     with ResultsFolder(folder, overwrite=overwrite) as results:
         results.file(REPORT, "this page: verdict, figures, tables, methods")
         fit.save(results.file("fit.json", "the whole fit, for kernelfit.load_fit"))
         _write_tables(results, fit, goodness, content)
+        if sureness is not None:
+            _write_sureness(results, fit, sureness, content)
         pictures = _write_figures(results, content)
         page = fit_page(content, pictures, results.entries)
         results.write_text(REPORT, render_page(page), "this page: verdict, figures, tables, methods")
@@ -101,6 +107,21 @@ def _write_tables(results: ResultsFolder, fit: CouplingFit, goodness: Goodness, 
     tests = pd.concat([goodness.units, goodness.pooled])
     tests.index.name = "unit"
     write("goodness.csv", tests, "KS test of every unit; last row: all units taken together")
+
+
+def _write_sureness(results: ResultsFolder, fit: CouplingFit, sureness: Sureness, content: FitContent) -> None:
+    def write(name: str, table: pd.DataFrame, what: str, *, index: bool = False) -> None:
+        table.to_csv(results.file(name, what), index=index, encoding="utf-8", lineterminator="\n")
+
+    write("derived.csv", sureness.derived, "what follows from the fit: reach, mass, changes of the rate", index=True)
+    write("worth.csv", fit.worth, "what the recording is worth for each parameter", index=True)
+    if content.sureness is None:
+        return
+    kinds = content.sureness.figures.kinds
+    if not isinstance(kinds, Unavailable):
+        write("intervals.csv", kinds.numbers(), "intervals of every kind")
+    if not isinstance(sureness.influence, Unavailable):
+        write("influence.csv", sureness.influence.refits, "estimates without the stretch and unit that move them most")
 
 
 # --- figures ----------------------------------------------------------------------------------------------
@@ -200,6 +221,41 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
         if isinstance(raster, Unavailable)
         else numbers_of("figures/raster.csv", raster.numbers(), "observed and fitted rate of the raster"),
     )
+    if content.sureness is not None:
+        sure = content.sureness.figures
+        add(
+            "intervals",
+            sure.kinds,
+            draw_kinds,
+            "intervals of every kind, side by side",
+            sure_captions.kinds(content.sureness),
+            alt=f"{_title(sure.kinds)}. For each parameter a row of intervals, one of each kind.",
+            wide=True,
+            numbers="" if isinstance(sure.kinds, Unavailable) else "intervals.csv",
+        )
+        add(
+            "blocks",
+            sure.blocks,
+            draw_blocks,
+            "standard errors against the length of blocks of time",
+            sure_captions.blocks(content.sureness),
+            alt=f"{_title(sure.blocks)}. Curves of standard errors against the length of a block.",
+            numbers=""
+            if isinstance(sure.blocks, Unavailable)
+            else numbers_of("figures/blocks.csv", sure.blocks.numbers(), "numbers of the block lengths"),
+        )
+        add(
+            "influence",
+            sure.influence,
+            draw_influence,
+            "what leaving out each stretch and each unit does",
+            sure_captions.influence(content.sureness),
+            alt=f"{_title(sure.influence)}. Bars over time and a map of the array for each parameter.",
+            wide=True,
+            numbers=""
+            if isinstance(sure.influence, Unavailable)
+            else numbers_of("figures/influence.csv", sure.influence.numbers(), "moves by stretch and unit"),
+        )
     return drawn
 
 
@@ -215,7 +271,7 @@ def fit_page(content: FitContent, pictures: dict[str, Picture], files: tuple[Fil
     sections = (
         _verdict(content),
         _kernel(content, pictures),
-        _sure(content),
+        _sure(content, pictures),
         _goodness(content, pictures),
         _recording(content, pictures),
         _settings(content),
@@ -265,15 +321,33 @@ def _kernel(content: FitContent, pictures: dict[str, Picture]) -> Section:
         content.coupling_lead,
         blocks,
         beside=_shown(pictures, "kernel"),
-        below=_shown(pictures, "time-course", "after-spike"),
+        below=(
+            *_shown(pictures, "time-course", "after-spike"),
+            *(() if content.sureness is None else (content.sureness.derived,)),
+        ),
     )
 
 
-def _sure(content: FitContent) -> Section:
+def _sure(content: FitContent, pictures: dict[str, Picture]) -> Section:
     blocks: list[Block] = [Text(s) for s in content.sure]
+    below: list[Block] = [*_shown(pictures, "intervals"), content.tables.std_errors]
+    if content.sureness is not None:
+        more = content.sureness
+        blocks += [Text(s) for s in more.sentences]
+        blocks += _missing(more.figures.kinds, "The intervals of every kind")
+        blocks += _missing(more.figures.influence, "What carries the result")
+        below += [t for t in (more.worth,) if t is not None]
+        below += [*_shown(pictures, "influence"), *([more.refits] if more.refits is not None else [])]
     if content.notes:
         blocks.append(Listing(content.notes, "The fit noted:"))
-    return Section("sure", "How sure", content.sure_lead, tuple(blocks), below=(content.tables.std_errors,))
+    return Section(
+        "sure",
+        "How sure are these numbers",
+        content.sure_lead,
+        tuple(blocks),
+        beside=_shown(pictures, "blocks"),
+        below=tuple(below),
+    )
 
 
 def _goodness(content: FitContent, pictures: dict[str, Picture]) -> Section:

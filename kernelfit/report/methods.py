@@ -27,6 +27,7 @@ HAWKES = "Hawkes AG (1971) Biometrika 58: 83-90."
 TRUCCOLO = "Truccolo W, Eden UT, Fellows MR, Donoghue JP, Brown EN (2005) J Neurophysiol 93: 1074-1089."
 WHITE = "White H (1982) Econometrica 50: 1-25."
 LIANG = "Liang KY, Zeger SL (1986) Biometrika 73: 13-22."
+BELL = "Bell RM, McCaffrey DF (2002) Survey Methodology 28: 169-181."
 HANSEN = "Hansen BE (1996) Econometrica 64: 413-430."
 HANSEN_EDGE = "Hansen BE (2000) Econometrica 68: 575-603."
 RAO = "Rao CR (1948) Math Proc Camb Philos Soc 44: 50-57."
@@ -79,6 +80,8 @@ def methods(fit: CouplingFit, recording: Recording, goodness: Goodness) -> Metho
     references.append(HANSEN)
     if fit.covariance_kind == "robust":
         references += [WHITE, LIANG]
+    if fit.covariance_kind == "jackknife":
+        references.append(BELL)
     if length_word(fit) == "radius":
         references.append(HANSEN_EDGE)
     if _score_tested(fit):
@@ -171,11 +174,17 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
     )
     if not fit.converged:
         sentences.append("The estimation did not converge.")
+    blocks = f"{count_text(fit.n_blocks)} blocks of {time_text(fit.block_length_s)} of recording"
     if fit.covariance_kind == "robust":
         sentences.append(
             f"Intervals are {level_text(LEVEL)} Wald intervals with a sandwich covariance (White 1982; "
-            f"Liang & Zeger 1986) from scores summed over {count_text(fit.n_blocks)} blocks of "
-            f"{time_text(fit.block_length_s)} of recording; lengths and rates were treated on the log scale."
+            f"Liang & Zeger 1986) from scores summed over {blocks}, joined until neighbouring ones no longer went "
+            "together; lengths and rates were treated on the log scale."
+        )
+    elif fit.covariance_kind == "jackknife":
+        sentences.append(
+            f"Intervals are {level_text(LEVEL)} Wald intervals with a jackknife covariance (Bell & McCaffrey 2002), "
+            f"one step from the fit without each of {blocks}; lengths and rates were treated on the log scale."
         )
     else:
         sentences.append(

@@ -26,11 +26,17 @@ from kernelfit.report.words import (
 if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness
     from kernelfit.fitting.result import CouplingFit
+    from kernelfit.model.coupling import CovarianceKind
 
 LEVEL = 0.95  # of every interval in a report
 TEST_LEVEL = 0.05  # of every test in a report
 LEAK = "leak_rate"
 FARTHER = 1.5  # reference distances: what counts as farther away in a sentence
+
+
+def kind_word(kind: CovarianceKind) -> str:
+    """A kind of interval as a page names it."""
+    return {"model": "model-based", "robust": "robust", "jackknife": "jackknife"}[kind]
 
 
 def is_exp(fit: CouplingFit) -> bool:
@@ -187,7 +193,7 @@ def sure_lead(fit: CouplingFit) -> str:
         fit.n_blocks,
         fit.block_length_s,
         ratios,
-        headline="robust" if fit.covariance_kind == "robust" else "model-based",
+        headline=kind_word(fit.covariance_kind),
     )
 
 

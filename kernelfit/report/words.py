@@ -31,7 +31,7 @@ from kernelfit.report.numbers import (
 )
 
 MULTIPLES_FROM = 2.0  # a rate that triples is "multiplied by 3.0", not "raised by 200 %"
-RATIO_WORTH_SAYING = 1.2
+RATIO_WORTH_SAYING = 1.5
 MOSTLY_REJECTED = 0.5  # more than this share of the tested units rejected: the caution comes before any number
 FEWER_SPIKES = 3.0  # units that pass with this many times fewer spikes than those that fail: worth saying
 LARGEST_JUMP = 600.0  # e to that power can still be written as a number; any such rise is without bound

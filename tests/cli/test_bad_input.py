@@ -161,7 +161,7 @@ CALL_CASES = {
     "largest distance below the pitch": option("--max-distance-um 5", "5", "distance", "--max-distance-um"),
     "same site unknown": option("--same-site drop", "--same-site", "'drop'", "exclude, own, kernel"),
     "after-spike unknown": option("--after-spike off", "--after-spike", "'off'", "basis, none"),
-    "covariance unknown": option("--covariance hac", "--covariance", "'hac'", "robust, model"),
+    "covariance unknown": option("--intervals hac", "--intervals", "'hac'", "robust, jackknife, model, profile"),
     "warm-up negative": option("--warm-up-s -1", "--warm-up-s", "0 or more"),
     "warm-up beyond the window": option("--warm-up-s 100", "spikes.csv", "warm-up", "shorter"),
     "threads none": option("--threads 0", "--threads", "1 or more"),

@@ -87,7 +87,7 @@ def test_numbers_of_options_have_their_unit_and_their_default(command: str, caps
     units |= {"--leak-rate": "1/s", "--max-distance-um": "µm", "--raster-start-s": "seconds"}
     for option, unit in units.items():
         assert option not in said or unit in said[option]
-    for option in ("--kernel", "--bin-ms", "--link", "--same-site", "--after-spike", "--warm-up-s", "--covariance"):
+    for option in ("--kernel", "--bin-ms", "--link", "--same-site", "--after-spike", "--warm-up-s", "--intervals"):
         assert option not in said or "[default: " in said[option]
     for option in ("--max-distance-um", "--threads", "--windows", "--raster-start-s"):
         assert option not in said or "Without it" in said[option]

@@ -69,7 +69,7 @@ def test_results_folder_is_whole_and_the_result_is_five_lines(here: Path, capsys
 def test_options_reach_the_model(here: Path) -> None:
     options = ["--kernel", "spline", "--spline-basis", "4", "--smoothing", "2", "--leak-rate", "25"]
     options += ["--same-site", "own", "--after-spike", "none", "--max-distance-um", "250", "--warm-up-s", "0.5"]
-    options += ["--covariance", "model", "--seed", "3", "--units", "u01,u02,u03"]
+    options += ["--intervals", "model", "--seed", "3", "--units", "u01,u02,u03"]
     options += ["--units", "u04,u05,u06,u07,u08", "--leave-out", "u08"]
     options += ["--source-only", "u07", "--start-s", "5", "--stop-s", "50", "--threads", "1"]
     assert main(["fit", "spikes.csv", "sites.csv", *BIN, *options, "--out", "o"]) == 0

@@ -165,7 +165,7 @@ def test_sections_come_in_the_order_of_the_house_and_open_with_a_sentence(writte
     assert [t for t, _ in titles] == [
         "Verdict",
         "The kernel",
-        "How sure",
+        "How sure are these numbers",
         "Does the model describe the recording",
         "The recording",
         "Settings",
