@@ -9,12 +9,14 @@ import numpy as np
 
 from kernelfit.recording.evidence import Evidence
 from kernelfit.recording.findings import LEAVE_OUT, Finding, counted, names, number, percent, seconds
+from kernelfit.recording.recording import Recording
 
 MAX_RATE_HZ = 500.0
 MIN_EXTENT_UM, MAX_EXTENT_UM = 10.0, 50_000.0
 WEEK_S = 7 * 86_400.0
 DAY_S = 86_400.0
 SLOW_RATE_HZ = 0.1  # fastest unit of a recording of more than a day that was perhaps in ms
+LONG_S, DOUBTFUL_RATE_HZ, NO_RATE_HZ = 3600.0, 0.02, 0.001  # fastest unit of a recording of more than an hour
 NO_DEAD_TIME_S = 1.0  # no cell leaves out intervals this long; read as ms it is a dead time of 1 ms
 COARSE_S, VERY_COARSE_S = 0.0005, 0.005
 
@@ -77,6 +79,8 @@ def _times(e: Evidence) -> Iterator[Finding]:
             spikes,
             "State the unit of time when reading (time_unit, --time-unit).",
         )
+    elif e.step_s != 1.0 and (doubt := doubt_about_times(e.recording)) is not None:
+        yield doubt
     elif e.step_s != 1.0 and _looks_like_ms(e):
         yield Finding(
             "times_look_like_ms",
@@ -87,6 +91,24 @@ def _times(e: Evidence) -> Iterator[Finding]:
             spikes,
             "If they are, read them with time_unit='ms' (--time-unit ms).",
         )
+
+
+def doubt_about_times(recording: Recording) -> Finding | None:
+    """What counts and length alone say against times in seconds; it costs nothing, so a long fit may ask first."""
+    duration = recording.duration
+    fastest_hz = float(recording.counts.max()) / duration
+    if duration < LONG_S or fastest_hz >= DOUBTFUL_RATE_HZ:
+        return None
+    none_fires = fastest_hz < NO_RATE_HZ
+    in_what = "milliseconds, microseconds or samples" if none_fires else "milliseconds"
+    return Finding(
+        "times_look_like_ms",
+        "error" if none_fires else "warning",
+        f"The fastest unit fires {counted(int(recording.counts.max()), 'time')} in {seconds(duration)}: times look "
+        f"like {in_what} read as seconds.",
+        recording.origin.name("spikes"),
+        "State their unit when reading (time_unit, --time-unit).",
+    )
 
 
 def _looks_like_ms(e: Evidence) -> bool:

@@ -135,6 +135,9 @@ FILE_CASES = {
     "pairs of unknown unit": pairs("unit_a,unit_b\na1,q7\n", "row 2", "unit_b", "'q7'"),
     "pairs without column": pairs("unit_a\na1\n", "unit_b", "column"),
     "pair of a unit with itself": pairs("unit_a,unit_b\na1,a1\n", "row 2", "a1"),
+    "microseconds as seconds": spikes(
+        "unit,time_s\n" + "".join(f"{u},{k}12345\n" for u in UNITS for k in range(20)), "look like", "--time-unit"
+    ),
     "no spike inside the windows": windows("start_s,stop_s\n1000,1010\n", "spike"),
 }
 
@@ -246,6 +249,7 @@ def test_bad_input_is_refused_with_place_and_remedy(
         ),
         ("The kernel needs decimal places. Add --time-unit.", []),
         ("u.csv: no unit 'kernel'.", []),
+        ("State their unit when reading (time_unit, --time-unit).", []),
     ],
 )
 def test_arguments_that_a_message_names_are_also_given_as_typed(message: str, line: list[str]) -> None:

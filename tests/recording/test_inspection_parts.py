@@ -12,6 +12,7 @@ from scipy import stats
 from kernelfit.recording.activity import blocks, burstiness, even_share, gaps, intervals
 from kernelfit.recording.artefacts import MARGIN_S, units_at_once, whole_array_events
 from kernelfit.recording.bin_width import advise, excess_fall
+from kernelfit.recording.checks_input import doubt_about_times
 from kernelfit.recording.coincidence import pair_excess, pairs_to_leave_out
 from kernelfit.recording.correlogram import (
     SLOW_STEPS,
@@ -41,6 +42,29 @@ def bursty(seed: int, n_units: int = 6, n_spikes: int = 60, duration_s: float = 
     centres = rng.uniform(0.0, duration_s, 8)
     times = [rng.choice(centres, n_spikes) + rng.normal(0.0, 0.02, n_spikes) for _ in range(n_units)]
     return {f"u{k}": np.unique(np.round(t[(t > 0) & (t < duration_s)], 4)) for k, t in enumerate(times)}
+
+
+# --- what counts and length alone say about the unit of time ------------------------------------------
+
+
+@pytest.mark.parametrize(
+    ("times", "severity"),
+    [(1.0, None), (1e3, "warning"), (1e6, "error"), (2e4, "error")],
+    ids=["seconds", "milliseconds", "microseconds", "samples"],
+)
+def test_other_units_of_time_are_noticed_from_counts_alone(times: float, severity: str | None) -> None:
+    """Four units at 3 Hz for 20 s: 60 spikes in 20,000 s are one in 333 s, in 4.6 days one in 6,700 s."""
+    trains = steady_trains(np.random.default_rng(3), n_units=4, rate_hz=3.0, duration_s=20.0)
+    doubt = doubt_about_times(recording_of({u: times * t for u, t in trains.items()}, windows=((0.0, 20.0 * times),)))
+    assert (None if doubt is None else doubt.severity) == severity
+    if doubt is not None:
+        assert "--time-unit" in doubt.remedy
+
+
+def test_a_long_recording_of_slow_cells_is_not_doubted() -> None:
+    """The slowest recordings of young tissue: 0.05 Hz for two hours."""
+    trains = steady_trains(np.random.default_rng(3), n_units=4, rate_hz=0.05, duration_s=7200.0)
+    assert doubt_about_times(recording_of(trains, windows=((0.0, 7200.0),))) is None
 
 
 # --- stretches and the merged train ------------------------------------------------------------------
