@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import itertools
 import json
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import pytest
@@ -168,6 +168,34 @@ def test_starts_without_a_usable_point_are_still_starts(case):
 def test_description_round_trip(case):
     options = json.loads(json.dumps(case.kernel.describe()))
     assert kernels.kernel_from_description(case.kernel.name, options) == case.kernel
+
+
+@KERNELS
+def test_a_ridge_weighs_every_amplitude_and_no_shape(case):
+    ridged = replace(case.kernel, ridge=2.5)
+    before = case.kernel.penalty(SPAN)
+    added = ridged.penalty(SPAN) - (0.0 if before is None else before)
+    shape = [p.shape for p in ridged.parameters(SPAN)]
+    np.testing.assert_allclose(added, np.diag(np.where(shape, 0.0, 2.5)), atol=1e-12)
+    options = json.loads(json.dumps(ridged.describe()))
+    assert options["ridge"] == 2.5
+    assert kernels.kernel_from_description(case.kernel.name, options) == ridged
+    assert "ridge" not in case.kernel.describe()
+
+
+@KERNELS
+@pytest.mark.parametrize("ridge", [-1.0, np.nan, np.inf, True, "much"])
+def test_a_ridge_is_a_number_from_zero_on(case, ridge):
+    with pytest.raises(ArgumentError, match="ridge="):
+        replace(case.kernel, ridge=ridge)
+
+
+@KERNELS
+def test_a_strong_ridge_starts_without_amplitude(case):
+    ridged, jump = replace(case.kernel, ridge=1e9), np.full(DISTANCES.size, 0.1)
+    (start, *_) = ridged.starts(DISTANCES, jump, np.ones(DISTANCES.size), SPAN)
+    linear = [not p.shape for p in case.kernel.parameters(SPAN)]
+    assert np.abs(start[linear]).max() < 1e-6
 
 
 @KERNELS
@@ -336,6 +364,9 @@ def test_a_family_of_ones_own_gets_the_rest_by_default():
     assert "above 1" in own.bound_reason(1, True, SPAN)
     assert own.describe() == {}
     assert own.penalty(SPAN) is None
+    assert Hyperbola(ridge=3.0).penalty(SPAN).tolist() == [[3.0, 0.0], [0.0, 0.0]]
+    assert own.roughness(SPAN) is None
+    assert own.smoothing_choice is None
     assert own == Hyperbola()
 
 

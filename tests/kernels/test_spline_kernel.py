@@ -52,6 +52,47 @@ def test_no_smoothing_no_penalty():
     assert kernels.Spline().penalty(SPAN) is None
 
 
+def test_smoothing_left_to_the_data_has_a_penalty_once_it_is_a_number():
+    spline = kernels.Spline(n_basis=6, smoothing="likelihood", order=1)
+    assert spline.smoothing_choice == "likelihood"
+    with pytest.raises(ArgumentError, match="number only after a fit"):
+        spline.penalty(SPAN)
+    settled = spline.with_smoothing(3.0)
+    assert settled.smoothing_choice is None
+    np.testing.assert_array_equal(settled.penalty(SPAN), 3.0 * settled.roughness(SPAN))
+    assert settled.describe() == {"n_basis": 6, "smoothing": 3.0, "order": 1, "axis": "distance"}
+    assert spline.describe()["smoothing"] == "likelihood"
+    assert len(spline.check_identified(np.linspace(200.0, 300.0, 5), SPAN)) > 0  # the penalty carries what is not seen
+
+
+@pytest.mark.parametrize(
+    ("order", "axis", "words"),
+    [
+        (1, "distance", "a constant"),
+        (1, "log-distance", "a constant"),
+        (2, "distance", "a straight line"),
+        (2, "log-distance", "a straight line in log distance"),
+        (4, "distance", "a polynomial of degree 3"),
+    ],
+)
+def test_what_endless_smoothing_leaves(order, axis, words):
+    assert kernels.Spline(order=order, axis=axis).smoothest == words
+
+
+def test_a_ridge_joins_the_smoothing():
+    spline = kernels.Spline(n_basis=5, smoothing=2.0, ridge=0.5)
+    expected = 2.0 * kernels.difference_penalty(5, 2) + 0.5 * np.eye(5)
+    np.testing.assert_allclose(spline.penalty(SPAN), expected)
+    np.testing.assert_allclose(kernels.Spline(n_basis=5, ridge=0.5).penalty(SPAN), 0.5 * np.eye(5))
+
+
+def test_a_ridge_carries_coefficients_without_pairs_too():
+    distances = np.linspace(200, 300, 3)
+    notes = kernels.Spline(n_basis=8, ridge=1.0).check_identified(distances, SPAN)
+    assert len(notes) == 4
+    assert "carried by the penalty alone" in notes[0]
+
+
 def test_a_coefficient_without_pairs_is_refused_by_name_and_place():
     distances = np.concatenate([np.linspace(200, 300, 20), np.linspace(1500, 1720, 20)])
     with pytest.raises(NotIdentifiedError) as error:
@@ -97,6 +138,8 @@ def test_many_distances_are_checked_without_a_square_of_them():
         (lambda: kernels.Spline(n_basis=7.5), ArgumentError, "whole number"),
         (lambda: kernels.Spline(smoothing=-1.0), ArgumentError, "smoothing=-1.0"),
         (lambda: kernels.Spline(smoothing=np.nan), ArgumentError, "smoothing=nan"),
+        (lambda: kernels.Spline(smoothing="much"), ArgumentError, "'likelihood' or 'validation'"),
+        (lambda: kernels.Spline(ridge=-1.0), ArgumentError, "ridge=-1.0"),
         (lambda: kernels.Spline(order=0), ArgumentError, "order=0"),
         (lambda: kernels.Spline(n_basis=5, order=5), ArgumentError, "n_basis - 1 = 4"),
         (lambda: kernels.Spline(axis="log"), ArgumentError, "log-distance"),
