@@ -67,8 +67,8 @@ def draw_kernel(data: KernelData) -> Figure:
             top.errorbar([data.reference_um], [value], yerr=ends, color=colour, fmt="o", capsize=2.5)
         zero_line(top)
         low = colour == LOWERING
-        _room(top, low=low)
-        _reference_mark(
+        room(top, low=low)
+        reference_mark(
             top,
             data.reference_um,
             on_left=data.reference_um > 0.6 * data.reach_um,
@@ -77,11 +77,9 @@ def draw_kernel(data: KernelData) -> Figure:
         )
         top.set_ylabel("J, effect of one spike on the drive")
         if data.in_percent:
-            percent = top.secondary_yaxis("right", functions=(_to_percent, _from_percent))
-            percent.set_ylabel("effect of one spike (% of rate)")
-            percent.spines["right"].set_visible(True)
+            percent_axis(top)
         title(top, data.title)
-        _pair_bars(under, data.pairs)
+        pair_bars(under, data.pairs)
         under.axvline(data.reference_um, color=NULL, linestyle="--", linewidth=0.8, zorder=0)
         under.set_xlim(0.0, data.reach_um)
         thousands(under.xaxis, under.yaxis)
@@ -89,7 +87,7 @@ def draw_kernel(data: KernelData) -> Figure:
         return figure
 
 
-def _room(ax: Axes, *, low: bool) -> None:
+def room(ax: Axes, *, low: bool) -> None:
     """Room for the label of the reference distance, and for the zero line off the frame."""
     bottom, top = ax.get_ylim()
     span = top - bottom
@@ -97,7 +95,15 @@ def _room(ax: Axes, *, low: bool) -> None:
     ax.set_ylim(bottom - _LABEL_ROOM * span * low, top + _LABEL_ROOM * span * (not low))
 
 
-def _reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool, gap: float) -> None:
+def percent_axis(ax: Axes) -> None:
+    """The second reading of J, on the right: change of the rate in per cent."""
+    percent = ax.secondary_yaxis("right", functions=(_to_percent, _from_percent))
+    percent.set_ylabel("effect of one spike (% of rate)")
+    percent.spines["right"].set_visible(True)
+
+
+def reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool, gap: float) -> None:
+    """The reference distance, dashed and named; `low`: at the bottom, where the curve lies below zero."""
     ax.axvline(reference_um, color=NULL, linestyle="--", linewidth=0.8, zorder=0)
     ax.annotate(
         f"reference {distance_label(reference_um)}",
@@ -112,7 +118,8 @@ def _reference_mark(ax: Axes, reference_um: float, *, on_left: bool, low: bool, 
     )
 
 
-def _pair_bars(ax: Axes, pairs: PairCounts) -> None:
+def pair_bars(ax: Axes, pairs: PairCounts) -> None:
+    """Number of pairs against distance."""
     ax.bar(pairs.distance_um, pairs.n_pairs, width=pairs.width_um, color=DATA)
     ax.set_ylabel("pairs")
     ax.yaxis.set_major_locator(MaxNLocator(nbins=3, integer=True))
