@@ -7,6 +7,7 @@ from kernelfit.errors import FitWarning, KernelfitError, KernelfitWarning, Unava
 from kernelfit.fitting.progress import Progress
 from kernelfit.fitting.result import CouplingFit
 from kernelfit.fitting.storage import load_fit
+from kernelfit.inference import bootstrap
 from kernelfit.model import terms
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.recording.recording import Recording
@@ -24,6 +25,7 @@ __all__ = [
     "Recording",
     "Unavailable",
     "__version__",
+    "bootstrap",
     "kernels",
     "load_demo",
     "load_fit",
