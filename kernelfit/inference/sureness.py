@@ -10,6 +10,8 @@ import pandas as pd
 from kernelfit.errors import KernelfitError, Unavailable
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.bootstrap.result import Bootstrap
+from kernelfit.inference.derived.registry import derived_figures
+from kernelfit.inference.derived.setting import setting_of
 from kernelfit.inference.influence import Influence
 from kernelfit.inference.profile import Profile
 from kernelfit.inference.scales import shared_names
@@ -31,12 +33,14 @@ class Sureness:
     influence : what carries the result, or why that cannot be said
     profiles : by parameter, where they were asked for
     derived : derived figures with intervals; see `CouplingFit.derived`
+    reads : what each derived figure is, in words
     """
 
     bootstrap: Bootstrap | Unavailable
     influence: Influence | Unavailable
     profiles: dict[str, Profile | Unavailable]
     derived: pd.DataFrame
+    reads: dict[str, str]
 
 
 def how_sure(
@@ -56,6 +60,7 @@ def how_sure(
     profiles : profile every shared parameter too, which takes about as long as the fit
     threads, seed, progress : as for `CouplingModel.fit`; the seed is that of the bootstrap
     """
+    figures = derived_figures(setting_of(fit, recording).at(fit.shared))
     return Sureness(
         bootstrap=_bootstrap(fit, seed),
         influence=_influence(fit, recording, threads),
@@ -64,6 +69,7 @@ def how_sure(
             for name in (shared_names(fit) if profiles and fit.converged else ())
         },
         derived=fit.derived(),
+        reads={figure.name: figure.reads for figure in figures},
     )
 
 

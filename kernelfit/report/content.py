@@ -266,7 +266,8 @@ def notices(fit: CouplingFit, *, invented: bool = False) -> tuple[Notice, ...]:
             *marked[:NOTICES_SHOWN],
             Notice(
                 "info",
-                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How sure are these numbers\N{RIGHT DOUBLE QUOTATION MARK}.",
+                f"{more} more stand under \N{LEFT DOUBLE QUOTATION MARK}How sure are these "
+                "numbers\N{RIGHT DOUBLE QUOTATION MARK}.",
             ),
         ]
     return tuple(marked)

@@ -14,6 +14,7 @@ from kernelfit.inference.scales import shared_names
 from kernelfit.inference.sureness import Sureness
 from kernelfit.model.coupling import CovarianceKind
 from kernelfit.report.content_tables import TABLE_DECIMALS, value_cell
+from kernelfit.report.derived_data import MarkedKernel, marked_kernel
 from kernelfit.report.numbers import count_text, duration_text, interval_text, number_text, range_text
 from kernelfit.report.page import Cell, Column, Table
 from kernelfit.report.readings import LEVEL, kind_word, parameter_of
@@ -37,6 +38,7 @@ class SureFigures:
     kinds: KindsData | Unavailable
     blocks: BlocksData | Unavailable
     influence: InfluenceData | Unavailable
+    marked: MarkedKernel | Unavailable
 
 
 @dataclass(frozen=True, eq=False)
@@ -52,7 +54,12 @@ class SureContent:
 
 def sure_content(fit: CouplingFit, sureness: Sureness) -> SureContent:
     """Everything that the page says on how sure the numbers are, beyond standard errors."""
-    figures = SureFigures(kinds_data(fit, sureness), blocks_data(fit), influence_data(fit, sureness))
+    figures = SureFigures(
+        kinds=kinds_data(fit, sureness),
+        blocks=blocks_data(fit),
+        influence=influence_data(fit, sureness),
+        marked=marked_kernel(fit, sureness.derived),
+    )
     return SureContent(
         sentences=tuple(
             s
@@ -367,16 +374,17 @@ def refit_table(fit: CouplingFit, sureness: Sureness) -> Table | None:
 
 
 def derived_table(fit: CouplingFit, sureness: Sureness) -> Table:
-    """What follows from the fit, with intervals."""
+    """What follows from the fit, with intervals; what there is none of comes without a number, with the reason."""
     rows = []
     for name, row in sureness.derived.iterrows():
         estimate, lower, upper = (float(row[c]) for c in ("estimate", "lower", "upper"))
+        unit = str(row["unit"])
         shown = interval_text(estimate, lower, upper, max_decimals=TABLE_DECIMALS)
         rows.append(
             (
                 Cell(str(name)),
-                Cell(str(row["unit"])),
-                Cell(shown, estimate if math.isfinite(estimate) else None),
+                Cell(f"{sureness.reads[str(name)]}{f' ({unit})' if unit else ''}"),
+                Cell(shown, estimate) if math.isfinite(estimate) else Cell("none"),
                 Cell(str(row["note"])),
             )
         )
@@ -384,7 +392,7 @@ def derived_table(fit: CouplingFit, sureness: Sureness) -> Table:
         caption=f"What follows from the fit, with {level_text(LEVEL)} intervals ({kind_word(fit.covariance_kind)})",
         columns=(
             Column("name", numeric=False),
-            Column("unit", numeric=False),
+            Column("what it is", numeric=False, wraps=True),
             Column("estimate (interval)"),
             Column("note", numeric=False, wraps=True),
         ),

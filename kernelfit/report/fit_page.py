@@ -16,6 +16,7 @@ from kernelfit.recording.recording import Recording
 from kernelfit.report import sure_captions, words
 from kernelfit.report.content import FitContent, build_content
 from kernelfit.report.figures_array import draw_array, draw_raster
+from kernelfit.report.figures_derived import draw_marked_kernel
 from kernelfit.report.figures_fit import draw_after_spike, draw_ks
 from kernelfit.report.figures_kernel import draw_kernel, draw_time_course
 from kernelfit.report.figures_sureness import draw_blocks, draw_influence, draw_kinds
@@ -224,6 +225,17 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
     if content.sureness is not None:
         sure = content.sureness.figures
         add(
+            "distances",
+            sure.marked,
+            draw_marked_kernel,
+            "the kernel with the distances read off it",
+            sure_captions.marked(content.sureness),
+            alt=f"{_title(sure.marked)}. The kernel with distances marked, each with its interval.",
+            numbers=""
+            if isinstance(sure.marked, Unavailable)
+            else numbers_of("figures/distances.csv", sure.marked.numbers(), "distances read off the kernel"),
+        )
+        add(
             "intervals",
             sure.kinds,
             draw_kinds,
@@ -322,7 +334,7 @@ def _kernel(content: FitContent, pictures: dict[str, Picture]) -> Section:
         blocks,
         beside=_shown(pictures, "kernel"),
         below=(
-            *_shown(pictures, "time-course", "after-spike"),
+            *_shown(pictures, "distances", "time-course", "after-spike"),
             *(() if content.sureness is None else (content.sureness.derived,)),
         ),
     )

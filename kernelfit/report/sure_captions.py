@@ -46,3 +46,15 @@ def influence(content: SureContent) -> str:
         "working scale; teal up, rust down. Right: the same for no longer explaining each unit, at its site; its "
         "spikes still drive the others. One step from the fit; the largest are refitted in the table."
     )
+
+
+def marked(content: SureContent) -> str:
+    """Under the kernel with the distances read off it."""
+    data = content.figures.marked
+    if isinstance(data, Unavailable):
+        return ""
+    return (
+        "The kernel with its pointwise band, and the distances that follow from it: a mark at each, its "
+        f"{level_text(data.kernel.level)} interval below the curve; an arrow: an end that is open. Below: pairs of "
+        "units at each distance."
+    )
