@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Literal, cast
 
 from kernelfit._typing import FloatArray
@@ -75,7 +76,7 @@ class Profiled:
 
     def compatible_amplitudes(
         self,
-        lengths_um: FloatArray | None = None,
+        lengths_um: Sequence[float] | FloatArray | None = None,
         level: float = 0.95,
         leak: float | Literal["re-estimated", "held"] | None = None,
         recording: Recording | None = None,

@@ -226,13 +226,14 @@ class Reparametrised(Kernel):
         return [int(i) for i in used if i != self.place and bounded[i]]
 
     def _limits(self, span: DistanceRange) -> tuple[float, float]:
-        """Range of the natural parameter over the inner bounds, infinite where the place given has none."""
-        bounds = self.inner.bounds(span)
+        """Range of the natural parameter: its own limits, and what the inner bounds leave of them."""
+        parameter, bounds = self.inner.parameters(span)[self.natural_place], self.inner.bounds(span)
+        low, high = (float(v) for v in parameter.to_working(np.array(parameter.limits(span))))
         if not np.isfinite(bounds[self.place]).all():
-            return -np.inf, np.inf
+            return low, high
         theta = np.where(np.isfinite(bounds), bounds, 0.0)
         ends = [self._natural(theta[:, side], span) for side in (0, 1)]
-        return min(ends), max(ends)
+        return max(low, min(ends)), min(high, max(ends))
 
     def _kept_inside(self, i: int, limits: FloatArray, own: FloatArray, span: DistanceRange) -> FloatArray:
         """Limits of parameter i between which the one that gave its place stays within its own."""

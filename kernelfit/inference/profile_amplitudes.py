@@ -9,6 +9,7 @@ recording is compatible with at each, and the largest of them is what can be sai
 from __future__ import annotations
 
 import time
+from collections.abc import Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Literal
 
@@ -77,7 +78,7 @@ class CompatibleAmplitudes:
 
 def compatible_amplitudes(
     fit: CouplingFit,
-    lengths_um: FloatArray | None,
+    lengths_um: Sequence[float] | FloatArray | None,
     level: float,
     leak: LeakTreatment,
     recording: Recording | None,
@@ -130,7 +131,7 @@ def _one_of_each(fit: CouplingFit) -> Unavailable | None:
     )
 
 
-def _lengths(fit: CouplingFit, problem: Problem, lengths_um: FloatArray | None) -> FloatArray:
+def _lengths(fit: CouplingFit, problem: Problem, lengths_um: Sequence[float] | FloatArray | None) -> FloatArray:
     """(L,) rising lengths to hold, µm: those asked for, or even log steps over those a fit starts its search from."""
     candidates = fit.model.kernel.radius_candidates(problem.geometry.distinct_um)
     low, high = np.exp(problem.bounds[1])

@@ -97,10 +97,18 @@ class Walk:
         """Log-likelihood units below the top."""
         return self.top.objective - point.objective
 
+    def limit(self, sign: int) -> float:
+        """How far x may go on one side; no nearer than the top, which a fit may have put beyond."""
+        low, high = self.held.limits()
+        return max(high, self.top.x) if sign > 0 else min(low, self.top.x)
+
     def try_at(self, x: float) -> PathPoint:
         """One more point, from where the known ones say the others stand. Raises BetterOptimumError."""
         near = sorted(self.points, key=lambda p: abs(p.x - x))
-        point = path_point(self.held, x, foreseen(near[:4], x))
+        start = foreseen(near[:4], x)
+        beside = list(self.held.beside)
+        start.shared[beside] = self.top.estimate.shared[beside]  # not left to the rounding of a weighted sum
+        point = path_point(self.held, x, start)
         astray = not point.converged or self.drop(point) > 4.0 * max(self._expected_drop(near[0], x), 1.0)
         if astray:  # foreseen too boldly: from the neighbour itself
             again = path_point(self.held, x, near[0].estimate)
@@ -124,7 +132,7 @@ class Walk:
         sign : -1 lower, 1 upper
         targets : rising roots of twice the drop to aim at; the walk ends beyond the last one, or where x may not go on
         """
-        limit = self.held.limits()[int(sign > 0)]
+        limit = self.limit(sign)
         here = self.top
         first = None
         while len(self.side(sign)) <= MOST_POINTS and here.x != limit:
@@ -154,8 +162,7 @@ class Walk:
             side = self.side(sign)
             beyond = next((k for k, p in enumerate(side) if self.drop(p) >= goal), None)
             if beyond is None:
-                limit = self.held.limits()[int(sign > 0)]
-                return Crossing(None, self.drop(side[-1]), side[-1].x, side[-1].x == limit)
+                return Crossing(None, self.drop(side[-1]), side[-1].x, side[-1].x == self.limit(sign))
             a, b = side[beyond - 1], side[beyond]
             x = self._root_between(a, b, goal)
             if min(self._root_distance(p, cut) for p in (a, b)) <= NEAR_ENOUGH:
@@ -252,6 +259,8 @@ def walk(
     for _ in range(MOST_RESTARTS):
         if not top.curvature > 0.0:
             return Unavailable(f"the recording says nothing about {held.name}: the likelihood does not change with it")
+        if _rises(held, top):
+            top = _climbed(held, top)
         here = Walk(held, top)
         try:
             for sign in (1, -1):
@@ -270,6 +279,13 @@ def _targets(cuts: FloatArray, n_points: int) -> FloatArray:
     for cut in np.unique(cuts):
         targets[np.argmin(np.abs(targets - cut))] = cut
     return np.unique(np.append(targets[:-1], OVERSHOOT * last))
+
+
+def _rises(held: Held, top: PathPoint) -> bool:
+    """Whether the likelihood rises from a point that should be its top, and may do so."""
+    low, high = held.limits()
+    at_limit = top.x >= high if top.slope > 0.0 else top.x <= low
+    return bool(not at_limit and top.slope**2 > 2.0 * BETTER * top.curvature)
 
 
 def _climbed(held: Held, point: PathPoint) -> PathPoint:
