@@ -22,6 +22,7 @@ FLAT = 1e-5  # slope of the log marginal likelihood by a log weight
 LONGEST_STRETCH = 16.0
 GRID_POINTS = 25
 LIKELY_POINTS = 41
+LOG_STEP = 0.05  # of a log weight, for its curvature
 
 
 def best_weights(
@@ -30,13 +31,14 @@ def best_weights(
     """Weights of highest marginal likelihood on a parabola, and their bounds (n_penalties, 2).
 
     Generalised Fellner-Schall: w <- w (rank - w tr(V R)) / (w x'Rx), which never lowers the marginal likelihood of a
-    parabola; steps that keep their direction are stretched, and taken back where they lower it. A single penalty starts
-    from the best of a grid, as its marginal likelihood may have two tops.
+    parabola; steps that keep their direction are stretched, and taken back where they lower it. The smoothing of a
+    kernel alone starts from the best of a grid, as its marginal likelihood may have two tops. The ridge does not: far
+    from here the parabola says little of coefficients that a unit with few spikes would let run off.
     """
     bounds = np.array([parabola.limits(k, penalties, start) for k in range(len(penalties))])
     low, high = np.log(bounds).T
     x = np.clip(np.log(start), low, high)
-    if len(penalties) == 1:
+    if len(penalties) == 1 and penalties[0].term == "kernel":
         grid = np.linspace(low[0], high[0], GRID_POINTS)
         heights = [parabola.peak(penalties, np.exp([g])).log_marginal for g in grid]
         x = grid[[int(np.argmax(heights))]]
@@ -92,6 +94,23 @@ def likely_weights(parabola: Parabola, penalties: tuple[Penalty, ...], weights: 
     if high > low:
         share *= np.abs(np.gradient(free, x))
     return Likely(np.exp(x), share / share.sum(), tuple(peaks))
+
+
+def likely_range(
+    parabola: Parabola, penalties: tuple[Penalty, ...], weights: FloatArray, k: int, limits: FloatArray
+) -> tuple[float, float]:
+    """Weights of penalty k within 1.96 standard errors of the log weight, by the curvature here; or its limits."""
+    slopes = []
+    for step in (-LOG_STEP, LOG_STEP):
+        here = weights.copy()
+        here[k] *= np.exp(step)
+        slopes.append(parabola.peak(penalties, here).slope[k])
+    curvature = (slopes[0] - slopes[1]) / (2.0 * LOG_STEP)
+    low, high = limits
+    if curvature <= 0.0:
+        return float(low), float(high)
+    far = np.exp(1.96 / np.sqrt(curvature))
+    return float(max(weights[k] / far, low)), float(min(weights[k] * far, high))
 
 
 def added_spread(parabola: Parabola, penalties: tuple[Penalty, ...], weights: FloatArray, likely: Likely) -> FloatArray:

@@ -17,7 +17,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.fitting.arrow import Arrow, SingularOwnBlock
-from kernelfit.fitting.marginal import added_spread, best_weights, likely_weights
+from kernelfit.fitting.marginal import added_spread, best_weights, likely_range, likely_weights
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, first_estimate, without_coupling
 from kernelfit.fitting.parabola import Parabola, PenalisedTerm, Penalty, reweighted
@@ -219,9 +219,8 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
     asked : the model as the user stated it
     """
     wanted = asked_for(problem, asked)
-    nothing = np.zeros((problem.n_shared, problem.n_shared))
     if not wanted:
-        return Chosen(problem, found, None, nothing)
+        return Chosen(problem, found, None, np.zeros((problem.n_shared, problem.n_shared)))
     problem.clock.stage = "choosing the smoothing"
     before = problem.clock.sweeps
     penalties = tuple(p for p, _ in wanted)
@@ -239,35 +238,26 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
     top = maximise(problem, start, held=held, tolerance=TIGHT)
     found = _with_second(problem, found, top, held)
     parabola = parabola_at(problem, found.best, penalties, weights)
-    likely = [likely_weights(parabola, penalties, weights, k) for k in range(len(penalties))]
-    chosen = tuple(
-        ChosenWeight(
-            term=penalty.term,
-            chosen_by=choice,
-            value=float(weights[k]),
-            lower=float(climb.bounds[k, 0]),
-            upper=float(climb.bounds[k, 1]),
-            at_bound=int(at_bound[k]),
-            likely_from=likely[k].quantile(0.025),
-            likely_to=likely[k].quantile(0.975),
-        )
-        for k, (penalty, choice) in enumerate(wanted)
-    )
+    added, chosen = np.zeros((problem.n_shared, problem.n_shared)), []
+    for k, (penalty, choice) in enumerate(wanted):
+        if penalty.term == "kernel":
+            likely = likely_weights(parabola, penalties, weights, k)
+            added = added_spread(parabola, penalties, weights, likely)
+            ends = likely.quantile(0.025), likely.quantile(0.975)
+        else:  # chosen from all units, so known well enough
+            ends = likely_range(parabola, penalties, weights, k, climb.bounds[k])
+        low, high = climb.bounds[k].tolist()
+        chosen.append(ChosenWeight(penalty.term, choice, float(weights[k]), low, high, int(at_bound[k]), *ends))
     peak = parabola.peak(penalties, weights)
     smoothing = Smoothing(
-        weights=chosen,
+        weights=tuple(chosen),
         settled=climb.settled,
         n_rounds=climb.n_rounds,
         n_sweeps=problem.clock.sweeps - before,
         log_marginal_likelihood=peak.log_marginal,
         held_out=table,
     )
-    added = [
-        added_spread(parabola, penalties, weights, each)
-        for each, penalty in zip(likely, penalties, strict=True)
-        if penalty.term == "kernel"  # a ridge over all units is known well enough
-    ]
-    return Chosen(problem, found, smoothing, added[0] if added else nothing)
+    return Chosen(problem, found, smoothing, added)
 
 
 def _at_bound(weights: FloatArray, bounds: FloatArray) -> IntArray:
