@@ -8,6 +8,7 @@ import numpy as np
 from matplotlib.axes import Axes
 from matplotlib.figure import Figure
 from matplotlib.ticker import MaxNLocator
+from numpy.typing import ArrayLike
 
 from kernelfit._typing import FloatArray
 from kernelfit.report.figure_data import CourseData, KernelData, PairCounts
@@ -126,13 +127,13 @@ def pair_bars(ax: Axes, pairs: PairCounts) -> None:
     ax.set_ylim(bottom=0.0)
 
 
-def _to_percent(jump: FloatArray) -> FloatArray:
+def _to_percent(jump: ArrayLike) -> ArrayLike:
     # The axis must invert over whatever limits it is given; far beyond any kernel its reading is moot.
-    return 100.0 * np.expm1(np.clip(jump, -50.0, 50.0))
+    return 100.0 * np.expm1(np.clip(np.asarray(jump), -50.0, 50.0))
 
 
-def _from_percent(percent: FloatArray) -> FloatArray:
-    return np.log1p(np.maximum(percent, -100.0 + 1e-9) / 100.0)
+def _from_percent(percent: ArrayLike) -> ArrayLike:
+    return np.log1p(np.maximum(np.asarray(percent), -100.0 + 1e-9) / 100.0)
 
 
 def draw_time_course(data: CourseData) -> Figure:
