@@ -129,11 +129,11 @@ def pair_bars(ax: Axes, pairs: PairCounts) -> None:
 
 def _to_percent(jump: ArrayLike) -> ArrayLike:
     # The axis must invert over whatever limits it is given; far beyond any kernel its reading is moot.
-    return 100.0 * np.expm1(np.clip(np.asarray(jump), -50.0, 50.0))
+    return np.asarray(100.0 * np.expm1(np.clip(np.asarray(jump, dtype=np.float64), -50.0, 50.0)))
 
 
 def _from_percent(percent: ArrayLike) -> ArrayLike:
-    return np.log1p(np.maximum(np.asarray(percent), -100.0 + 1e-9) / 100.0)
+    return np.asarray(np.log1p(np.maximum(np.asarray(percent, dtype=np.float64), -100.0 + 1e-9) / 100.0))
 
 
 def draw_time_course(data: CourseData) -> Figure:
