@@ -6,10 +6,14 @@ converge). A message says where the fault lies, what was found there and what to
 
 from __future__ import annotations
 
+import re
+from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass
 
 MAX_FAULTS_SHOWN = 20  # a table of a million bad rows should not print a million lines
+MAX_FAULTS_ALIKE = 3  # of one kind in one column: the fourth teaches nothing that the third did not
+MAX_VALUE_SHOWN = 60  # characters of a cell; a cell may hold a whole file
 
 
 class KernelfitError(Exception):
@@ -46,19 +50,53 @@ class Fault:
             place.append(f"row {self.row}")
         if self.column is not None:
             place.append(f"column {self.column}")
-        value = "" if self.value is None else f"{self.value!r}: "
+        value = "" if self.value is None else f"{shortened(self.value)!r}: "
         return f"{', '.join(place)}: {value}{self.problem} {self.remedy}"
+
+    @property
+    def kind(self) -> tuple[str, str | None, str]:
+        """What faults alike have in common: table, column, first sentence of the problem without numbers and names."""
+        sentence = self.problem.partition(". ")[0].rstrip(".")
+        return self.table, self.column, re.sub(r"'[^']*'|[0-9]+(?:\.[0-9]+)?", "", sentence)
+
+
+def shortened(text: str) -> str:
+    """The text, cut where it is too long for a message."""
+    return text if len(text) <= MAX_VALUE_SHOWN else text[: MAX_VALUE_SHOWN - 3] + "..."
 
 
 class TableError(KernelfitError):
-    """A table cannot be used. `faults` holds everything found wrong in it, in order of rows."""
+    """A table cannot be used. `faults` holds everything found wrong in it, in order of rows.
+
+    The message shows the first few of each kind and says how many more there are.
+    """
 
     def __init__(self, faults: Sequence[Fault]) -> None:
         self.faults: tuple[Fault, ...] = tuple(faults)
-        lines = [str(fault) for fault in self.faults[:MAX_FAULTS_SHOWN]]
-        if len(self.faults) > MAX_FAULTS_SHOWN:
-            lines.append(f"... and {len(self.faults) - MAX_FAULTS_SHOWN} more faults like these.")
-        super().__init__("\n".join(lines))
+        super().__init__("\n".join(_fault_lines(self.faults)))
+
+
+def _fault_lines(faults: tuple[Fault, ...]) -> list[str]:
+    alike = Counter(fault.kind for fault in faults)
+    first: dict[tuple[str, str | None, str], Fault] = {}
+    shown: Counter[tuple[str, str | None, str]] = Counter()
+    lines: list[str] = []
+    for fault in faults:
+        wanted = MAX_FAULTS_ALIKE if alike[fault.kind] > MAX_FAULTS_ALIKE + 1 else MAX_FAULTS_ALIKE + 1
+        if shown[fault.kind] < wanted and len(lines) < MAX_FAULTS_SHOWN:
+            lines.append(str(fault))
+            shown[fault.kind] += 1
+            first.setdefault(fault.kind, fault)
+    for kind, example in first.items():
+        n = alike[kind] - shown[kind]
+        if n:
+            column = "" if example.column is None else f", column {example.column}"
+            like = "" if example.row is None else f" like row {example.row}"
+            lines.append(f"{example.table}{column}: {n:,} more{like}.")
+    unseen = sum(n for kind, n in alike.items() if kind not in first)
+    if unseen:
+        lines.append(f"... and {unseen:,} more faults of other kinds or in other places.")
+    return lines
 
 
 class RecordingError(KernelfitError):

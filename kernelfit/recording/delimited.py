@@ -23,6 +23,7 @@ DELIMITERS = {",": "commas", ";": "semicolons", "\t": "tabs", "|": "vertical bar
 COMMENT = "#"
 _HEADER_WITHIN = 20  # lines: where a header is looked for below a title
 
+_LOOKED_AT = 1000  # bytes
 _GZIP_MAGIC = b"\x1f\x8b"
 # What people hand over in place of a text table, by its first bytes.
 _FOREIGN = (
@@ -36,6 +37,12 @@ _FOREIGN = (
     (b"MATLAB 5", "a MATLAB file", "Export its spike times and positions as CSV tables."),
     (b"\x93NUMPY", "a NumPy file", "Load it with numpy and use Recording.from_arrays."),
     (b"PAR1", "a Parquet file", "Give its name the ending .parquet."),
+    (b"%PDF", "a PDF document", "Export the table behind it as CSV."),
+    (b"\x89PNG", "a picture", "Name the table instead."),
+    (b"\xff\xd8\xff", "a picture", "Name the table instead."),
+    (b"<", "a web page or an XML file", "Download or export the table itself, as CSV."),
+    (b"{", "a JSON file", "Export its spike times and positions as CSV tables."),
+    (b"[", "a JSON file", "Export its spike times and positions as CSV tables."),
     (b"BZh", "a bzip2 archive", "Unpack it, or pack it with gzip."),
     (b"\xfd7zXZ", "an xz archive", "Unpack it, or pack it with gzip."),
     (b"(\xb5/\xfd", "a zstandard archive", "Unpack it, or pack it with gzip."),
@@ -63,8 +70,9 @@ def _unpacked(data: bytes, source: SourceFile, gzip_expected: bool) -> bytes:
 
 
 def _decoded(data: bytes, source: SourceFile) -> str:
+    beginning = data[:_LOOKED_AT].removeprefix(b"\xef\xbb\xbf").lstrip()
     for magic, kind, remedy in _FOREIGN:
-        if data.startswith(magic):
+        if beginning.startswith(magic):
             raise _refused(source, f"This is {kind}, not a text table.", remedy)
     encoding = "UTF-8-SIG"  # with or without a byte-order mark
     if data.startswith((b"\xff\xfe\x00\x00", b"\x00\x00\xfe\xff")):

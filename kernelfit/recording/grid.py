@@ -21,7 +21,7 @@ from kernelfit.recording.recording import Recording, clock_text
 EDGE_TOLERANCE = 1e-6  # of a bin; times that lie on bin edges fall the same way on every machine
 STEPS_ALLOWED = 2  # a time and the start it is taken from are each half a step of doubles off, at most
 MAX_TOLERANCE = 0.1  # of a bin; beyond it the clock is too coarse to tell bins apart
-MAX_BINS = 2**40
+FINEST_BIN_S = 1e-6  # no acquisition times spikes better
 
 
 @dataclass(frozen=True, eq=False)
@@ -85,7 +85,8 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
 
     Raises
     ------
-    GridError : the width is not a positive number, is wider than a window, or leaves no bin to sum over
+    GridError : the width is not a positive number, is finer than any clock, is wider than a window, or leaves no bin
+        to sum over
     """
     _check_width(recording, bin_width, warm_up_s)
     bounds = recording.window_bounds
@@ -96,11 +97,7 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
 
     stretches, window_of = _stretches(recording, ruler, warm_up_s, first_bin, n_bins)
     if len(stretches) == 0:
-        table = recording.origin.name("exclusions" if len(recording.exclusion_bounds) else "windows")
-        raise GridError(
-            f"{table}: with bins of {bin_width:g} s, exclusions and a warm-up of {warm_up_s:g} s leave no bin of any "
-            "window. Use fewer exclusions, a shorter warm-up or narrower bins."
-        )
+        raise GridError(_nothing_left(recording, bin_width, warm_up_s))
     event_bin, event_unit, event_count, n_outside, n_excluded = _events(recording, ruler, first_bin, n_bins)
     grid = Grid(
         bin_width=float(bin_width),
@@ -158,11 +155,28 @@ def _check_width(recording: Recording, bin_width: float, warm_up_s: float) -> No
         raise GridError(f"bin_width={bin_width} is not a width. Give a positive number of seconds, such as 0.001.")
     if not (math.isfinite(warm_up_s) and warm_up_s >= 0):
         raise GridError(f"warm_up_s={warm_up_s} is not a time. Give seconds, 0 or more.")
-    if recording.duration / bin_width > MAX_BINS:
+    if bin_width < FINEST_BIN_S * (1 - EDGE_TOLERANCE):
         raise GridError(
-            f"bin_width={bin_width:g} s cuts {recording.duration:g} s into more than {MAX_BINS} bins. "
+            f"bin_width={bin_width:g} s is finer than spikes are timed. Use bins of at least {FINEST_BIN_S:g} s. "
             "Is the width in seconds? 1 ms is 0.001."
         )
+
+
+def _nothing_left(recording: Recording, bin_width: float, warm_up_s: float) -> str:
+    """Words for windows of which exclusions and warm-up leave nothing."""
+    causes, remedies = [], []
+    if len(recording.exclusion_bounds):
+        causes.append("the exclusions")
+        remedies.append("fewer or shorter exclusions")
+    if warm_up_s > 0:
+        causes.append(f"a warm-up of {warm_up_s:g} s")
+        remedies.append("a shorter warm-up")
+    table = recording.origin.name("exclusions" if len(recording.exclusion_bounds) else "windows")
+    leave = "leave" if len(causes) > 1 or len(recording.exclusion_bounds) else "leaves"
+    return (
+        f"{table}: {' and '.join(causes)} {leave} no bin of {bin_width:g} s in any window. "
+        f"Use {' or '.join(remedies)}, or narrower bins."
+    )
 
 
 def _check_windows(recording: Recording, bin_width: float, n_bins: IntArray) -> None:
@@ -172,8 +186,8 @@ def _check_windows(recording: Recording, bin_width: float, n_bins: IntArray) -> 
     start, stop = recording.window_bounds[k]
     raise GridError(
         f"{recording.origin.name('windows')}: bin_width={bin_width:g} s is wider than window {k + 1} "
-        f"({clock_text(start)} to {clock_text(stop)} s). Use bins of at most {stop - start:g} s. "
-        "Is the width in seconds? 10 ms is 0.01."
+        f"({clock_text(start)} to {clock_text(stop)} s). Use bins of at most {stop - start:g} s, or take the "
+        "window out. Is the width in seconds? 10 ms is 0.01."
     )
 
 

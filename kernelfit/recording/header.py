@@ -128,9 +128,11 @@ class Header:
         """A remedy where this is plainly a table of another role, or ""."""
         have = set(self.table.names)
         roles = [r for r, alternatives in _ESSENTIAL.items() if any(columns <= have for columns in alternatives)]
-        if not roles or self.table.source.role in roles:
+        role = self.table.source.role
+        if not roles or role in roles:
             return ""
-        return f"These are the columns of a {roles[0]} table. Check which file was given as which: spikes, then sites."
+        order = " The spikes come first, then the sites." if {role, roles[0]} == {"spikes", "sites"} else ""
+        return f"These are the columns of a {roles[0]} table: give a {role} table here.{order}"
 
     def _remedy(self) -> str:
         sentences = []

@@ -12,6 +12,7 @@ from dataclasses import dataclass, field
 import numpy as np
 import pandas as pd
 
+from kernelfit.errors import RecordingError
 from kernelfit.recording.activity import Burstiness
 from kernelfit.recording.bin_width import BinWidthAdvice
 from kernelfit.recording.checks_input import check_input
@@ -21,6 +22,7 @@ from kernelfit.recording.checks_units import FEW_SPIKES, SHORT_SHARE, check_unit
 from kernelfit.recording.coincidence import pairs_to_leave_out
 from kernelfit.recording.evidence import Evidence, gather
 from kernelfit.recording.findings import SEVERITIES, Finding, by_severity, counted, number, percent, seconds
+from kernelfit.recording.merged import merge_trains
 from kernelfit.recording.recording import Recording
 
 EXCLUSION_COLUMNS = ("start_s", "stop_s", "units_at_once")
@@ -158,7 +160,16 @@ def inspect_recording(recording: Recording, *, seed: int = 0) -> Inspection:
     -------
     Inspection : findings, tables and proposals. A recording without spikes or with a single site gets an
         error finding, not an exception.
+
+    Raises
+    ------
+    RecordingError : the exclusions leave nothing to look at
     """
+    if not len(merge_trains(recording).observed):
+        raise RecordingError(
+            f"{recording.origin.name('exclusions')}: the exclusions leave nothing of any window to look at. "
+            "Use fewer or shorter exclusions."
+        )
     evidence = gather(recording, seed=seed)
     findings = [
         *check_input(evidence),

@@ -12,12 +12,13 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import IntArray
-from kernelfit.errors import ArgumentError, Fault, TableError
+from kernelfit.errors import ArgumentError, Fault, TableError, shortened
 from kernelfit.recording.cells import Cells, is_missing
 from kernelfit.recording.recording import SourceFile
 
 TIME_UNITS = ("s", "ms", "us", "samples")
 LENGTH_UNITS = ("um", "mm")
+_PARQUET_MARK, _SMALLEST_PARQUET = b"PAR1", 12
 ROWS_FROM_0 = " (rows counted from 0)"  # after the name of a table that has no lines to count
 
 # Every column name that means something, by the role of the table.
@@ -212,12 +213,17 @@ def _parse_parquet(data: bytes, source: SourceFile) -> RawTable:
     except ImportError:
         remedy = "Install it with: pip install 'kernelfit[parquet]', or save the table as CSV."
         raise TableError([Fault(source.name, "Reading Parquet needs the library pyarrow.", remedy)]) from None
+    if not data:
+        raise TableError([Fault(source.name, "The file is empty.", f"It needs the columns of a {source.role} table.")])
+    if len(data) < _SMALLEST_PARQUET or not (data.startswith(_PARQUET_MARK) and data.endswith(_PARQUET_MARK)):
+        problem = "This is not a Parquet file, or it was cut short: the mark at its two ends is missing."
+        raise TableError([Fault(source.name, problem, "Write the file again, or save it as CSV.")])
     try:
         table = parquet.read_table(pa.BufferReader(data))
         table.validate(full=True)  # damage inside the values would show only later
         frame = table.to_pandas()
     except (pa.ArrowException, OSError, ValueError, TypeError, KeyError, OverflowError) as error:
-        reason = (str(error).splitlines() or ["no reason given"])[0].rstrip(".")
-        problem = f"Not a readable Parquet file ({reason})."
+        reason = (str(error).splitlines() or ["no reason given"])[0].rpartition("'<Buffer>': ")[2].rstrip(".")
+        problem = f"The Parquet file is damaged ({shortened(reason)})."
         raise TableError([Fault(source.name, problem, "Write the file again, or save it as CSV.")]) from None
     return table_from_frame(frame, source.role, name=source.name, sha256=source.sha256)

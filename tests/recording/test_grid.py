@@ -261,9 +261,25 @@ FILES = (SourceFile("windows", "w.csv", ""), SourceFile("exclusions", "artefacts
         (np.inf, 0.0, ["bin_width=inf"]),
         (0.1, -1.0, ["warm_up_s=-1.0", "0 or more"]),
         (0.1, np.nan, ["warm_up_s=nan"]),
-        (1e-13, 0.0, ["bins", "Is the width in seconds? 1 ms is 0.001"]),
-        (5.0, 0.0, ["w.csv", "wider than window 2 (10 to 11 s)", "at most 1 s", "10 ms is 0.01"]),
-        (0.1, 20.0, ["w.csv", "warm-up of 20 s", "leave no bin"]),
+        (
+            1e-8,
+            0.0,
+            [
+                "bin_width=1e-08 s is finer than spikes are timed",
+                "at least 1e-06 s",
+                "Is the width in seconds? 1 ms is 0.001",
+            ],
+        ),
+        (
+            5.0,
+            0.0,
+            ["w.csv", "wider than window 2 (10 to 11 s)", "1 s, or take the window out", "10 ms is 0.01"],
+        ),
+        (
+            0.1,
+            20.0,
+            ["w.csv: a warm-up of 20 s leaves no bin of 0.1 s in any window.", "Use a shorter warm-up"],
+        ),
     ],
 )
 def test_refusals_name_the_place_and_the_remedy(bin_s, warm_up_s, parts):
@@ -276,5 +292,7 @@ def test_refusals_name_the_place_and_the_remedy(bin_s, warm_up_s, parts):
 
 def test_exclusions_that_cover_everything_are_refused_by_their_files_name():
     rec = recording([0.5], windows=((0.0, 1.0),), exclusions=((-1.0, 2.0),), files=FILES)
-    with pytest.raises(GridError, match=r"artefacts\.csv: .* leave no bin"):
+    with pytest.raises(GridError, match=r"artefacts\.csv: the exclusions leave no bin of 0\.1 s in any window\."):
         make_grid(rec, 0.1)
+    with pytest.raises(GridError, match=r"artefacts\.csv: the exclusions and a warm-up of 0\.5 s leave no bin"):
+        make_grid(rec, 0.1, warm_up_s=0.5)

@@ -21,6 +21,7 @@ from planted import (
     with_artefacts,
 )
 
+from kernelfit.errors import RecordingError
 from kernelfit.recording.inspection import Inspection, inspect_recording
 from kernelfit.recording.recording import Origin, Recording
 
@@ -219,6 +220,13 @@ def test_a_planted_fault_is_found(fault: Callable[..., Recording], clean: dict[s
     assert where in found.where
     assert found.what.endswith(".")
     assert found.remedy.endswith(".")
+
+
+def test_exclusions_that_leave_nothing_are_refused(clean: dict[str, np.ndarray]) -> None:
+    with pytest.raises(
+        RecordingError, match=r"exclusions table: the exclusions leave nothing of any window.*Use fewer"
+    ):
+        inspect_recording(recording_of(clean, exclusions=((-1.0, 700.0),)))
 
 
 def test_every_planted_fault_is_absent_from_the_clean_recording(clean: dict[str, np.ndarray]) -> None:

@@ -8,7 +8,7 @@ import gzip
 import pytest
 
 import kernelfit as kf
-from kernelfit.errors import ArgumentError, RecordingError, TableError
+from kernelfit.errors import ArgumentError, Fault, RecordingError, TableError
 
 SPIKES = "unit,time_s\nu1,0.5\nu2,0.25\nu1,2.125\n"
 SITES = "unit,x_um,y_um\nu1,0,10\nu2,100,20\n"
@@ -107,8 +107,8 @@ BAD_SPIKES = {
     ),
     "sites in the place of spikes": (
         SITES,
-        "There is no column 'time_s'; found: unit, x_um, y_um. These are the columns of a sites table.",
-        "spikes, then sites",
+        "There is no column 'time_s'; found: unit, x_um, y_um. These are the columns of a sites table: give a spikes "
+        "table here. The spikes come first, then the sites.",
     ),
     "thousands of columns": (
         ",".join(f"neuron {k}" for k in range(3000)) + "\n",
@@ -142,6 +142,11 @@ BAD_SPIKES = {
     "gzip damaged": (gzip.compress(SPIKES.encode() * 50)[:20] + b"\xff" * 40, "The gzip file is damaged"),
     "workbook": (b"PK\x03\x04 and so on", "This is an Excel workbook or another zip archive", "Save the sheet as CSV"),
     "HDF5": (b"\x89HDF\r\n\x1a\n", "This is an HDF5 file", "Export"),
+    "web page": ("<!DOCTYPE html>\n<html></html>\n", "This is a web page or an XML file", "as CSV"),
+    "JSON": ('{"unit": ["u1", "u2"], "time_s": [1, 2]}', "This is a JSON file, not a text table.", "Export"),
+    "list of JSON": ('\n [{"unit": "u1"}]', "This is a JSON file, not a text table."),
+    "PDF": (b"%PDF-1.4\n1 0 obj\n", "This is a PDF document, not a text table.", "as CSV"),
+    "picture": (b"\x89PNG\r\n\x1a\n\x00\x00", "This is a picture, not a text table."),
     "Parquet under another name": (b"PAR1....", "This is a Parquet file", "ending .parquet"),
     "a huge cell": ('unit,time_s\n"' + "u" * 140_000 + '",0.5\n', "row 2: A cell is longer than 131072 characters."),
     "row number after comments": ("# a\n\nunit,time_s\n# b\nu1,0.5\n\nu2,x\n", "row 7, column time_s: 'x'"),
@@ -352,9 +357,30 @@ def test_all_faults_of_all_files_come_together_in_order(tmp_path):
 
 
 def test_a_flood_of_faults_is_cut_short(tmp_path):
-    message = message_of(tmp_path, spikes="unit,time_s\n" + "u1,?\n" * 500)
-    assert message.count("\n") == 20
-    assert message.endswith("... and 480 more faults like these.")
+    lines = message_of(tmp_path, spikes="unit,time_s\n" + "u1,?\n" * 500).splitlines()
+    assert [line.partition(":")[0] for line in lines[:3]] == [f"spikes.csv, row {k}, column time_s" for k in (2, 3, 4)]
+    assert lines[3:] == ["spikes.csv, column time_s: 497 more like row 2."]
+
+
+def test_a_flood_of_one_kind_leaves_room_for_the_others(tmp_path):
+    rows = [f"u{k},0.5" for k in range(10, 40)] + ["u1,", "u1,", "u1,soon", "u1,1e99", "u2,0.5", "u2,0.5"]
+    lines = message_of(tmp_path, spikes="unit,time_s\n" + "\n".join(rows)).splitlines()
+    assert len(lines) == 9
+    for piece in ("'u10'", "'u12'", "'soon'", "'1e99'", "row 32", "row 33", "a spike at this time already in row 36"):
+        assert any(piece in line for line in lines), piece
+    assert lines[-1] == "spikes.csv, column unit: 27 more like row 2."
+
+
+def test_faults_of_very_many_kinds_are_cut_short():
+    error = TableError([Fault(f"t{k}.csv", "Wrong.", "Mend it.", row=k) for k in range(50)])
+    assert str(error).count("\n") == 20
+    assert str(error).endswith("... and 30 more faults of other kinds or in other places.")
+    assert len(error.faults) == 50
+
+
+def test_a_value_without_end_is_cut_short(tmp_path):
+    message = message_of(tmp_path, spikes="unit,time_s\nu1," + "9x" * 5000 + "\n" + "z" * 5000 + ",1\n")
+    assert max(map(len, message.splitlines())) < 250
 
 
 def test_a_broken_sites_table_does_not_blame_the_spikes(tmp_path):
@@ -406,8 +432,14 @@ def test_gz_in_the_name_only(tmp_path):
 
 def test_a_damaged_parquet_file(tmp_path):
     path = tmp_path / "spikes.parquet"
-    path.write_bytes(b"PAR1 nonsense PAR1")
-    with pytest.raises(TableError, match=r"spikes\.parquet: Not a readable Parquet file"):
+    path.write_bytes(b"nonsense" * 10)
+    with pytest.raises(TableError, match=r"spikes\.parquet: This is not a Parquet file, or it was cut short"):
+        kf.read_recording(path, write(tmp_path)["sites"])
+    path.write_bytes(b"PAR1" + bytes(range(100)) + b"PAR1")
+    with pytest.raises(TableError, match=r"spikes\.parquet: The Parquet file is damaged \((?!Could not open|.*Buffer)"):
+        kf.read_recording(path, write(tmp_path)["sites"])
+    path.write_bytes(b"")
+    with pytest.raises(TableError, match=r"spikes\.parquet: The file is empty"):
         kf.read_recording(path, write(tmp_path)["sites"])
 
 
