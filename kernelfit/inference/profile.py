@@ -31,7 +31,8 @@ from kernelfit.inference.profile_conditions import (
     model_cut,
     profile_notes,
 )
-from kernelfit.inference.profile_walk import ProfileInterval, Walk, walk
+from kernelfit.inference.profile_ends import ProfileInterval
+from kernelfit.inference.profile_walk import Walk, walk
 from kernelfit.inference.scales import natural_values, shared_names
 from kernelfit.inference.scaling import Scaling, variance_scaling
 

@@ -25,8 +25,9 @@ from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.held import Held, hold
 from kernelfit.inference.profile_conditions import check_converged, check_level, model_cut
+from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.profile_point import point_of
-from kernelfit.inference.profile_walk import ProfileInterval, walk
+from kernelfit.inference.profile_walk import walk
 from kernelfit.inference.scales import shared_names
 from kernelfit.inference.scaling import Scaling, scaling_by, too_few_blocks
 

@@ -14,7 +14,7 @@ from kernelfit.fitting.problem import Problem
 from kernelfit.fitting.radius import RadiusProfile, edge_critical, profile_around, variance_inflation
 from kernelfit.inference.profile import Profile
 from kernelfit.inference.profile_conditions import is_penalised, profile_notes
-from kernelfit.inference.profile_walk import ProfileInterval
+from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.scales import natural_values, shared_names, shared_units
 from kernelfit.inference.scaling import too_few_blocks
 

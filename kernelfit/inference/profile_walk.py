@@ -18,6 +18,7 @@ from kernelfit.errors import Unavailable
 from kernelfit.fitting.maximise import LONGEST_SHARED_STEP, maximise
 from kernelfit.fitting.problem import Estimate
 from kernelfit.inference.held import Held
+from kernelfit.inference.profile_ends import Crossing, ProfileInterval, interval_between
 from kernelfit.inference.profile_point import PathPoint, foreseen, path_point, point_of
 
 NEAR_ENOUGH = 2e-3  # of the cut, in roots of the drop: the cubic takes the end from there to a few millionths
@@ -33,46 +34,12 @@ RISE = 0.05  # log-likelihood units: less is no second hill
 MOST_RESTARTS = 3  # from better optima met on the way
 
 
-@dataclass(frozen=True)
-class ProfileInterval:
-    """A profile-likelihood interval.
-
-    Parameters
-    ----------
-    kind : "model" or "robust"
-    lower, upper : in the parameter's own unit; an open end is infinite, or 0 below for a parameter that is never
-        negative
-    lower_open, upper_open : whether the likelihood never falls far enough on that side
-    lower_reason, upper_reason : why, in words; empty where the end was found
-    critical : how far the (scaled) log-likelihood must fall
-    """
-
-    kind: str
-    lower: float
-    upper: float
-    lower_open: bool
-    upper_open: bool
-    lower_reason: str
-    upper_reason: str
-    critical: float
-
-
 class BetterOptimumError(Exception):
     """The walk came upon a point above the top it started from."""
 
     def __init__(self, point: PathPoint) -> None:
         super().__init__("a better optimum")
         self.point = point
-
-
-@dataclass(frozen=True)
-class Crossing:
-    """Where the drop reaches a cut: x, or None with the drop reached at the last place tried and the reason."""
-
-    x: float | None
-    reached: float
-    last: float
-    at_limit: bool
 
 
 @dataclass(eq=False)
@@ -231,13 +198,8 @@ class Walked:
 
         `with_zero` takes it out to 0, where a test of no coupling does not exclude that there is none.
         """
-        ends = [_end(self.walk.held, self.crossings[sign, cut], sign, 0.5 * cut**2) for sign in (-1, 1)]
-        (lower, low_reason), (upper, high_reason) = ends
-        if with_zero:
-            lower, upper = min(lower, 0.0), max(upper, 0.0)
-        return ProfileInterval(
-            kind, lower, upper, bool(low_reason), bool(high_reason), low_reason, high_reason, 0.5 * cut**2 / ratio
-        )
+        lower, upper = (self.crossings[sign, cut] for sign in (-1, 1))
+        return interval_between(kind, self.walk.held, lower, upper, cut, ratio, with_zero=with_zero)
 
 
 def walk(
@@ -292,17 +254,3 @@ def _climbed(held: Held, point: PathPoint) -> PathPoint:
     """The top of the hill a point lies on, nothing held."""
     beside = held.mask & (np.arange(held.problem.n_shared) != held.place)
     return point_of(held, maximise(held.problem, point.estimate, held=beside))
-
-
-def _end(held: Held, crossing: Crossing, sign: int, needed: float) -> tuple[float, str]:
-    if crossing.x is not None:
-        return held.value(crossing.x), ""
-    fallen = f"the log-likelihood never falls far enough (by {max(crossing.reached, 0.0):.2g} of {needed:.3g} needed)"
-    value = held.value(crossing.last)
-    where = f"{value:.4g} {held.unit}".strip()
-    if crossing.at_limit:
-        why = f"{fallen} up to the {'largest' if sign > 0 else 'smallest'} value that can be told, {where}"
-        reason = f"{why} ({held.limit_reason(sign > 0)})"
-    else:
-        reason = f"{fallen} up to {where}, where the search ended"
-    return (np.inf if sign > 0 else 0.0 if held.on_log else -np.inf), reason

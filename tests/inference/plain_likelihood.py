@@ -48,7 +48,7 @@ class PlainLikelihood:
 
 
 def profile_ends(log_likelihood, value, others, cut_drop, *, scale):
-    """Ends of a profile interval by brute force: a grid of refits on either side, then a root between two of its points.
+    """Ends of a profile interval by brute force: a grid of refits on either side, a root between two of its points.
 
     Parameters
     ----------

@@ -56,7 +56,7 @@ def test_bounds_of_the_others_keep_every_parameter_within_its_own(wide_um):
     inner = kernels.DifferenceOfGaussians()
     held = Reparametrised(inner, 3, 1, held=float(np.log(wide_um)))
     own, bounds = inner.bounds(SPAN), held.bounds(SPAN)
-    assert (bounds[3, 0] >= own[3, 0]) and (bounds[3, 1] <= own[3, 1]) and (bounds[3, 0] < bounds[3, 1])
+    assert own[3, 0] <= bounds[3, 0] < bounds[3, 1] <= own[3, 1]
     for excess in bounds[3]:
         theta = held.theta(np.array([0.3, np.log(wide_um), 0.2, excess]), SPAN)
         assert own[1, 0] - 1e-9 <= theta[1] <= own[1, 1] + 1e-9
