@@ -12,6 +12,7 @@ import pandas as pd
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.engine.evaluate import Point, SweepData, compensate, evaluate, expected_counts
 from kernelfit.errors import ArgumentError, StorageError, Unavailable
+from kernelfit.fitting.analyses import LEVEL, Analysed
 from kernelfit.fitting.covariance import Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.effective import TermSize
@@ -25,21 +26,16 @@ from kernelfit.recording.grid import Grid, make_grid
 from kernelfit.recording.recording import Origin, Recording
 
 if TYPE_CHECKING:
-    from collections.abc import Sequence
 
     from kernelfit.diagnostics.goodness import Goodness
-    from kernelfit.fitting.smoothing_path import SmoothingPath
-    from kernelfit.inference.bootstrap import Bootstrap, BootstrapKind, BootstrapProgressCallback
-    from kernelfit.inference.influence import Influence
 
-LEVEL = 0.95
 SAME_LIKELIHOOD = 1e-9  # relative: sums in another order differ by less, another recording by more
 SAME_SITE_NAME = "same_site"
 LEAK_NAME = "leak_rate"
 
 
 @dataclass(frozen=True, eq=False)
-class CouplingFit(Profiled):
+class CouplingFit(Profiled, Analysed):
     """A fitted coupling model. Everything an analysis or a report needs; a change is a copy.
 
     Parameters
@@ -249,29 +245,6 @@ class CouplingFit(Profiled):
             raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
         return kernel_band(self, np.atleast_1d(np.asarray(distances_um, dtype=np.float64)), level, simultaneous)
 
-    def derived(
-        self,
-        level: float = LEVEL,
-        distances_um: FloatArray | None = None,
-        bootstrap: Bootstrap | None = None,
-        recording: Recording | None = None,
-    ) -> pd.DataFrame:
-        """Figures that follow from the fit, by name: estimate, std_error, lower, upper, unit, note.
-
-        Parameters
-        ----------
-        level, distances_um : coverage, in (0, 1); µm where the change of the rate is told, None: at the usual ones
-        bootstrap : replicates of this fit, for percentile intervals; None: delta method, by `covariance_kind`
-        recording : for a loaded fit of a recording with excluded pairs, which a fit does not hold
-
-        Raises
-        ------
-        ArgumentError, StorageError : a level or distance out of range, a bootstrap or a recording of another fit
-        """
-        from kernelfit.inference.derived import derived_table
-
-        return derived_table(self, level, distances_um, bootstrap, recording)
-
     @property
     def after_spike_constants_s(self) -> FloatArray:
         """(M,) time constants of the after-spike traces, seconds."""
@@ -421,31 +394,6 @@ class CouplingFit(Profiled):
             seed=seed,
         )
 
-    def smoothing_path(
-        self,
-        smoothing: Sequence[float] | FloatArray | None = None,
-        *,
-        validate: bool = False,
-        recording: Recording | None = None,
-        threads: int | None = None,
-    ) -> SmoothingPath:
-        """The kernel refitted at each smoothing of a grid, with what the criteria say of it.
-
-        Parameters
-        ----------
-        smoothing : above 0; None: thirteen from hardly any to as good as endless. The fit's own joins them
-        validate : True to fit each smoothing to the recording without stretches of time too, and judge it there
-        recording, threads : as for `problem`
-
-        Raises
-        ------
-        ArgumentError : a kernel without smoothing, or values that are none
-        StorageError : no recording at hand, or another one
-        """
-        from kernelfit.fitting.smoothing_path import smoothing_path  # it builds on this module
-
-        return smoothing_path(self, smoothing, validate=validate, recording=recording, threads=threads)
-
     def fitted_rates(self, start_s: float, stop_s: float, recording: Recording | None = None) -> FittedRates:
         """Fitted rates and observed counts in the bins between two times of one window.
 
@@ -474,78 +422,6 @@ class CouplingFit(Profiled):
         here = (grid.event_bin >= at) & (grid.event_bin < at + n)
         counts[grid.event_bin[here] - at, grid.event_unit[here]] = grid.event_count[here]
         return FittedRates(grid.window_start_s[w] + (first + np.arange(n)) * width, rate, counts)
-
-    @property
-    def worth(self) -> pd.DataFrame:
-        """What the recording is worth for each shared parameter, by name.
-
-        ratio : robust over model-based standard error, on the working scale
-        spikes, seconds : of an ideal recording, one in which every bin is independent given the model, that would leave
-            the estimate as uncertain: those counted, over the square of the ratio, never more than were counted
-        stretches : independent blocks of time that carry the estimate, 3 (sum d^2)^2 / sum d^4 of the blocks'
-            influences d: all blocks where these are normal, few where a few blocks pull much harder than the others
-        """
-        from kernelfit.inference.worth import worth_table
-
-        return worth_table(self)
-
-    def influence(self, recording: Recording | None = None, *, threads: int | None = None) -> Influence:
-        """Which stretch of time, event and unit each parameter rests on: its change on leaving that out.
-
-        Parameters
-        ----------
-        recording : the one that was fitted; None where the fit was made in this process
-        threads : at most this many; None: as many as the machine has
-
-        Raises
-        ------
-        StorageError : no recording at hand, or another one
-        """
-        from kernelfit.inference.influence import influence
-
-        return influence(self, recording, threads)
-
-    def bootstrap(
-        self,
-        kind: str | BootstrapKind = "one-step",
-        *,
-        n_replicates: int = 2000,
-        seed: int = 0,
-        recording: Recording | None = None,
-        jobs: int | None = None,
-        folder: str | Path | None = None,
-        progress: BootstrapProgressCallback | None = None,
-    ) -> Bootstrap:
-        """Replicates of the fit, for intervals and bands that no normal law has to be assumed for.
-
-        Parameters
-        ----------
-        kind : "one-step", random weights on the scores of the blocks of time, thousands at once, no recording needed;
-            "block-weights", refits with such weights; "parametric", refits of recordings simulated from the fit; or an
-            object of ``kf.bootstrap`` with other options
-        n_replicates, seed : how many, and what they are drawn from; more of the same seed begin with the same ones
-        recording : needed by the refitting kinds for a loaded fit; must be the one that was fitted
-        jobs : processes at once for the refitting kinds; None: as many as the machine has. Nothing depends on it
-        folder : keeps every replicate as it is finished; the same call goes on from what is there
-        progress : called with a `BootstrapProgress` after every replicate
-
-        Raises
-        ------
-        ArgumentError, NotConvergedError, ModelError : a call that cannot be, no optimum, too few blocks of time
-        StorageError, OutputError : no recording or another one; a folder of other replicates, or not to be written
-        """
-        from kernelfit.inference.bootstrap.run import bootstrap
-
-        return bootstrap(
-            self,
-            kind,
-            n_replicates=n_replicates,
-            seed=seed,
-            recording=recording,
-            jobs=jobs,
-            folder=folder,
-            progress=progress,
-        )
 
     # --- copies, words, files -------------------------------------------------------------------------
 
