@@ -233,7 +233,9 @@ class CouplingFit(Profiled, Analysed):
             (`fit.kernel` extrapolates). Gaps between those two are bridged by the kernel's formula. Where no coupling
             was found the band is widened for the search over length and leak, and holds zero; a parameter at its bound
             is taken as known; between the ends of a radius' interval the band holds the amplitude and zero. NaN where
-            nothing has a standard error, or where nothing holds an amplitude
+            nothing has a standard error, or where nothing holds an amplitude. Under a penalty the model-based band is
+            the Bayesian one, which covers the curve on average over its distances; where the data chose the smoothing
+            every kind of band allows for not knowing it
 
         Raises
         ------
