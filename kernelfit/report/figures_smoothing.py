@@ -105,7 +105,9 @@ def _caption(path: SmoothingPath) -> str:
         "pale: smooth)",
         "" if path.chosen is None else f"; thick: the smoothing of the fit, chosen by {_BY[path.chosen_by]}",
         ". Below: by how much the log marginal likelihood of each smoothing stays under its highest (line)",
-        "" if path.held_out is None else ", and the log-likelihood of stretches of time left out (dashed; bars: one "
+        ""
+        if path.held_out is None
+        else ", and the log-likelihood of stretches of time left out (dashed; bars: one "
         "standard error of the difference from its highest)",
         ". Differences of less than 2 hardly tell two smoothings apart.",
     ]
