@@ -7,8 +7,11 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable, Iterable
+from difflib import get_close_matches
 
 from kernelfit.errors import ArgumentError
+
+ALIKE = 0.65  # of the letters, for one word to be taken for another misspelt
 
 
 def number(option: str, what: str) -> Callable[[str], float]:
@@ -69,7 +72,10 @@ def one_of(option: str, choices: Iterable[str]) -> Callable[[str], str]:
 
     def parse(typed: str) -> str:
         if typed not in listed:
-            raise ArgumentError(f"{option}: {str(typed)!r} is not known. Give one of {', '.join(listed)}.")
+            close = get_close_matches(str(typed).casefold().replace("_", "-"), listed, n=1, cutoff=ALIKE)
+            meant = f"Did you mean {close[0]}? " if close else ""
+            give = "Give one of " if len(listed) > 1 else "There is only "
+            raise ArgumentError(f"{option}: {str(typed)!r} is not known. {meant}{give}{', '.join(listed)}.")
         return typed
 
     return parse
@@ -79,4 +85,15 @@ def _number(option: str, typed: str, what: str) -> float:
     try:
         return float(str(typed))
     except ValueError:
-        raise ArgumentError(f"{option}: {str(typed)!r} is not a number. Give {what}.") from None
+        text = str(typed)
+        other = text.replace(",", ".")
+        remedy = f"Write {other}" if "," in text and _is_number(other) else f"Give {what}"
+        raise ArgumentError(f"{option}: {text!r} is not a number. {remedy}.") from None
+
+
+def _is_number(text: str) -> bool:
+    try:
+        float(text)
+    except ValueError:
+        return False
+    return True

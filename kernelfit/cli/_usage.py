@@ -9,11 +9,11 @@ from typing import Any
 import typer
 from typer.core import TyperCommand
 
+from kernelfit.cli._parsing import ALIKE
+
 # The option parser lives in a package of its own or inside typer, depending on typer's version; its root of
 # wrong calls is reached through the one class that typer has always exported.
 USAGE_ERROR: type[Exception] = typer.BadParameter.__mro__[1]
-
-ALIKE = 0.65  # of the letters of an option, for another to be taken for a slip of the finger
 
 # Messages of the package name arguments as Python has them; these are the options of the same meaning.
 OPTIONS = {
@@ -81,7 +81,9 @@ def _problem(error: Any, context: Any) -> list[str]:
     commands = _commands(context)
     if message.startswith("No such command") and commands:
         typed = message.removeprefix("No such command").split("'")[1]
-        return [f"there is no command {typed!r}. The commands are {', '.join(commands)}."]
+        close = get_close_matches(typed, commands, n=1, cutoff=ALIKE)
+        meant = f" Did you mean {close[0]}?" if close else ""
+        return [f"there is no command {typed!r}.{meant} The commands are {', '.join(commands)}."]
     if commands:
         return [f"a command is missing. The commands are {', '.join(commands)}; to begin: kernelfit demo"]
     if "unexpected extra argument" in message:

@@ -39,7 +39,7 @@ from kernelfit.kernels.registry import KERNELS
 from kernelfit.kernels.spline import Spline
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
 from kernelfit.model.links import LINKS
-from kernelfit.recording.checks_input import doubt_about_times
+from kernelfit.recording.checks_input import doubt_about_positions, doubt_about_times
 from kernelfit.recording.recording import Recording
 from kernelfit.report.folder import check_folder
 
@@ -244,17 +244,18 @@ def fit_command(
             source_only=source_only or (),
         ),
     )
-    _refuse_other_times(recording)
+    _question_units_of_measure(recording)
     return fit_and_write(recording, model, job)
 
 
-def _refuse_other_times(recording: Recording) -> None:
-    """Microseconds read as seconds are a recording of months, and a fit of days: say so before, not after."""
+def _question_units_of_measure(recording: Recording) -> None:
+    """Say before a long fit what looks wrong; microseconds read as seconds, a fit of days, are refused."""
     doubt = doubt_about_times(recording)
     if doubt is not None and doubt.severity == "error":
         raise RecordingError(f"{doubt.where}: {doubt.what} {doubt.remedy}")
-    if doubt is not None:
-        tell(f"{doubt.severity}: {doubt.where}: {doubt.what} {doubt.remedy}")
+    for found in (doubt, doubt_about_positions(recording)):
+        if found is not None:
+            tell(f"warning: {found.where}: {found.what} {found.remedy}")
 
 
 def _kernel(name: str, spline_basis: int | None, smoothing: float | None) -> Kernel:

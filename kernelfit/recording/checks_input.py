@@ -155,16 +155,8 @@ def _windows(e: Evidence) -> Iterator[Finding]:
 
 def _positions(e: Evidence) -> Iterator[Finding]:
     sites = e.recording.origin.name("sites")
-    extent = e.layout.extent_um
-    if 0.0 < extent < MIN_EXTENT_UM:
-        yield Finding(
-            "array_too_small",
-            "error",
-            f"The whole array measures {number(extent)} µm: positions look like millimetres or electrode numbers.",
-            sites,
-            "State the unit of length when reading (length_unit='mm', --length-unit mm), or give positions in µm.",
-        )
-    elif e.layout.reference_um is None:
+    doubt = doubt_about_positions(e.recording)
+    if doubt is None and e.layout.reference_um is None:
         what = "There is one unit only" if e.recording.n_units == 1 else "All units lie on one site"
         yield Finding(
             "no_distances",
@@ -173,14 +165,31 @@ def _positions(e: Evidence) -> Iterator[Finding]:
             sites,
             "A kernel needs units on at least two sites; check the coordinates and their unit of length.",
         )
+    if doubt is not None:
+        yield doubt
+
+
+def doubt_about_positions(recording: Recording) -> Finding | None:
+    """What the size of the array alone says against positions in micrometres."""
+    sites = recording.origin.name("sites")
+    extent = float(np.linalg.norm(np.ptp(recording.positions, axis=0)))
+    if 0.0 < extent < MIN_EXTENT_UM:
+        return Finding(
+            "array_too_small",
+            "error",
+            f"The whole array measures {number(extent)} µm: positions look like millimetres or electrode numbers.",
+            sites,
+            "State the unit of length when reading (length_unit='mm', --length-unit mm), or give positions in µm.",
+        )
     if extent > MAX_EXTENT_UM:
-        yield Finding(
+        return Finding(
             "array_too_large",
             "error",
             f"The array measures {number(extent / 1000)} mm: positions are probably not in micrometres.",
             sites,
             "State the unit of length when reading (length_unit, --length-unit), or give positions in µm.",
         )
+    return None
 
 
 def _copies(e: Evidence) -> Iterator[Finding]:

@@ -158,7 +158,7 @@ def _check_width(recording: Recording, bin_width: float, warm_up_s: float) -> No
     if bin_width < FINEST_BIN_S * (1 - EDGE_TOLERANCE):
         raise GridError(
             f"bin_width={bin_width:g} s is finer than spikes are timed. Use bins of at least {FINEST_BIN_S:g} s. "
-            "Is the width in seconds? 1 ms is 0.001."
+            "Is the width in the right unit? 1 ms is bin_width=0.001, or --bin-ms 1."
         )
 
 
@@ -187,7 +187,7 @@ def _check_windows(recording: Recording, bin_width: float, n_bins: IntArray) -> 
     raise GridError(
         f"{recording.origin.name('windows')}: bin_width={bin_width:g} s is wider than window {k + 1} "
         f"({clock_text(start)} to {clock_text(stop)} s). Use bins of at most {stop - start:g} s, or take the "
-        "window out. Is the width in seconds? 10 ms is 0.01."
+        "window out. Is the width in the right unit? 10 ms is bin_width=0.01, or --bin-ms 10."
     )
 
 

@@ -149,6 +149,8 @@ class Header:
             they_hold = "it holds" if len(close) == 1 else "they hold"
             sentences.append(f"Rename {renames}{load}, if that is what {they_hold}; names must match exactly.")
         unknown = [m.wanted for m in self._missing if m.closest is None]
+        if unknown and len(unknown) == len(self._missing) > 1 and self.table.source.role == "spikes":
+            sentences.append("Give one row for each spike, with its unit and its time.")
         if unknown:
             holding = "column that holds it" if len(unknown) == 1 else "columns that hold them"
             sentences.append(f"Call the {holding} {' and '.join(map(repr, unknown))}; names must match exactly.")

@@ -53,13 +53,21 @@ def check_folder(path: str | os.PathLike[str], *, overwrite: bool = False) -> No
 
     Raises
     ------
-    OutputError : `path` is a file, or a folder that is not empty and may not be replaced
+    OutputError : `path` is a file, a folder that is not empty and may not be replaced, or a place where nothing can
+        be written
     """
     target = Path(path).resolve()
+    try:
+        nearest = next((p for p in target.parents if p.exists()), None)
+        if nearest is not None and not nearest.is_dir():
+            raise OutputError(f"{path}: {nearest} is a file. Give another folder for the results.")
+        if nearest is not None and (target.is_dir() or not target.exists()):
+            probe = nearest / _sibling(target, "part").name
+            probe.mkdir()
+            probe.rmdir()
+    except OSError as error:
+        raise OutputError(f"{path}: cannot write there: {error.strerror}. Give another folder.") from error
     if not target.exists():
-        blocking = next((p for p in target.parents if p.exists()), None)
-        if blocking is not None and not blocking.is_dir():
-            raise OutputError(f"{path}: {blocking} is a file. Give another folder for the results.")
         return
     if not target.is_dir():
         raise OutputError(f"{path}: this is a file. Give another name to the folder for the results.")
@@ -79,6 +87,11 @@ def check_folder(path: str | os.PathLike[str], *, overwrite: bool = False) -> No
             f"{path}: overwriting would delete what is not part of earlier results ({shown}). "
             "Move it elsewhere or give another folder."
         )
+
+
+def _sibling(folder: Path, kind: str) -> Path:
+    """A hidden name beside the folder that nobody has."""
+    return folder.with_name(f".{folder.name}.{kind}-{secrets.token_hex(4)}")
 
 
 def _files_in(folder: Path) -> set[str]:
@@ -126,7 +139,7 @@ class ResultsFolder:
         self._asked = os.fspath(path)
         self._overwrite = overwrite
         self._entries: dict[str, FileEntry] = {}
-        self._work = self.path.with_name(f".{self.path.name}.part-{secrets.token_hex(4)}")
+        self._work = _sibling(self.path, "part")
         self._made_parents: list[Path] = []
 
     def __enter__(self) -> ResultsFolder:
@@ -196,7 +209,7 @@ class ResultsFolder:
             os.replace(self._work, self.path)
             return
         # A folder that exists cannot be replaced in one step: the old one steps aside first.
-        aside = self.path.with_name(f".{self.path.name}.old-{secrets.token_hex(4)}")
+        aside = _sibling(self.path, "old")
         os.replace(self.path, aside)
         try:
             os.replace(self._work, self.path)

@@ -88,6 +88,16 @@ FILE_CASES = {
     "exclusions file absent": Case(f"{FIT} --exclusions nowhere.csv", ("nowhere.csv", "Check")),
     "spikes is a folder": Case("fit folder sites.csv", ("folder", "Name the file"), {"folder/inside.txt": ""}),
     "spikes empty": spikes("", "empty"),
+    "spikes and sites swapped": Case("fit sites.csv spikes.csv", ("sites.csv", "spikes.csv", "The spikes come first")),
+    "windows are the sites": Case(f"{FIT} --windows sites.csv", ("sites.csv", "'start_s'", "give a windows table")),
+    "spikes as a matrix": spikes("n1,n2,n3\n0.1,0.2,0.3\n", "'unit'", "one row for each spike"),
+    "spikes with other names": spikes(
+        "neuron,t\na1,1\n", "Rename column 'neuron' to 'unit' and column 't' to 'time_s'"
+    ),
+    "spikes are JSON": spikes('{"a1": [1, 2]}', "JSON"),
+    "spikes are a page": spikes("<html></html>", "web page"),
+    "windows all before the spikes": windows("start_s,stop_s\n-10,-5\n", "-10 to -5 s", "clock"),
+    "a window shorter than a bin": windows("start_s,stop_s\n0,0.0001\n1,9\n", "window 1", "take the window out"),
     "spikes header only": spikes("unit,time_s\n", "no"),
     "spikes blank lines only": spikes("\n\n\n", "empty"),
     "spikes without times": spikes("unit,when\na1,1\n", "time_s", "column"),
@@ -143,7 +153,7 @@ FILE_CASES = {
 
 CALL_CASES = {
     "no command": Case("", ("command is missing", "kernelfit demo", "--help")),
-    "unknown command": Case("fti spikes.csv sites.csv", ("'fti'", "fit", "--help")),
+    "unknown command": Case("fti spikes.csv sites.csv", ("'fti'", "Did you mean fit?", "--help")),
     "nothing to fit": Case("fit", ("SPIKES is missing", "kernelfit fit SPIKES SITES")),
     "no sites": Case("fit spikes.csv", ("SITES is missing", "kernelfit fit SPIKES SITES")),
     "one argument too many": Case(f"{FIT} more.csv", ("more.csv", "kernelfit fit SPIKES SITES")),
@@ -156,6 +166,10 @@ CALL_CASES = {
     "bin width not a number": option("--bin-ms nan", "--bin-ms", "above 0"),
     "bin width infinite": option("--bin-ms inf", "--bin-ms", "above 0"),
     "bin width beyond the recording": option("--bin-ms 60000", "spikes.csv", "wider than window", "--bin-ms"),
+    "bin width with a comma": option("--bin-ms 1,5", "--bin-ms", "'1,5'", "Write 1.5."),
+    "bin width finer than any clock": option("--bin-ms 1e-5", "finer than spikes are timed", "--bin-ms 1."),
+    "kernel misspelt": option("--kernel gausian", "--kernel", "Did you mean gaussian?"),
+    "kernel with an underscore": option("--kernel Power_Law", "--kernel", "Did you mean power-law?"),
     "kernel unknown": option("--kernel ricker", "--kernel", "'ricker'", "mexican-hat"),
     "link unknown": option("--link probit", "--link", "'probit'", "exp"),
     "leak rate zero": option("--leak-rate 0", "--leak-rate", "above 0", "time constant"),
@@ -192,6 +206,7 @@ CALL_CASES = {
     "spline too small": option("--kernel spline --spline-basis 2", "--spline-basis", "4"),
     "smoothing negative": option("--kernel spline --smoothing -1", "--smoothing", "0 or more"),
     "spline beyond the distances": option("--kernel spline --spline-basis 12", "distances", "--smoothing"),
+    "results name too long": option("--out " + "x" * 300, "cannot write there", "another folder"),
     "results place is a file": option("--out sites.csv", "sites.csv", "folder"),
     "results place under a file": option("--out sites.csv/results", "sites.csv", "folder"),
     "results folder not empty": Case(
@@ -202,6 +217,14 @@ CALL_CASES = {
     ),
     "demo folder not empty": Case("demo --out full", ("full", "not empty", "--overwrite"), {"full/notes.txt": "mine"}),
     "inspect without sites": Case("inspect spikes.csv", ("SITES is missing", "kernelfit inspect SPIKES SITES")),
+    "inspect all excluded": Case(
+        "inspect spikes.csv sites.csv --exclusions cut.csv",
+        ("cut.csv", "leave nothing", "Use fewer"),
+        {"cut.csv": "start_s,stop_s\n-1,100\n"},
+    ),
+    "inspect raster outside": Case(
+        "inspect spikes.csv sites.csv --out look --raster-start-s 500", ("500 s", "0 s to 20 s")
+    ),
     "inspect absent file": Case("inspect spikes.csv nowhere.csv", ("nowhere.csv", "Check")),
     "inspect folder not empty": Case(
         "inspect spikes.csv sites.csv --out full", ("full", "not empty"), {"full/notes.txt": "mine"}
@@ -235,8 +258,26 @@ def test_bad_input_is_refused_with_place_and_remedy(
         assert part in printed.err
     assert "Traceback" not in printed.err
     assert not set("│╭╰\x1b") & set(printed.err), "plain lines, no boxes, no colours"
+    lines = printed.err.splitlines()
+    assert len(lines) == len(set(lines)), "nothing is said twice"
+    assert len(lines) <= 22, "no endless lists"
+    assert max(map(len, lines)) < 500
     assert printed.out == ""
     assert everything_under(tmp_path) == before, "nothing is written on failure"
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
+def test_positions_in_another_unit_are_questioned_before_the_fit(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    """Millimetres read as micrometres: a fit is possible, and its lengths would be wrong by a thousand."""
+    monkeypatch.chdir(tmp_path)
+    (tmp_path / "spikes.csv").write_text(GOOD_SPIKES)
+    rows = "".join(f"{u},{10 * x},{10 * y}\n" for u, (x, y) in PLACES.items())
+    (tmp_path / "sites.csv").write_text("unit,x_um,y_um\n" + rows)
+    call = f"{FIT} --length-unit mm --bin-ms 10 --kernel flat --leak-rate 20 --after-spike none"
+    assert main(call.split()) == 0
+    assert "warning: sites.csv: The array measures" in capsys.readouterr().err
 
 
 @pytest.mark.parametrize(

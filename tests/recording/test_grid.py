@@ -267,13 +267,13 @@ FILES = (SourceFile("windows", "w.csv", ""), SourceFile("exclusions", "artefacts
             [
                 "bin_width=1e-08 s is finer than spikes are timed",
                 "at least 1e-06 s",
-                "Is the width in seconds? 1 ms is 0.001",
+                "1 ms is bin_width=0.001, or --bin-ms 1.",
             ],
         ),
         (
             5.0,
             0.0,
-            ["w.csv", "wider than window 2 (10 to 11 s)", "1 s, or take the window out", "10 ms is 0.01"],
+            ["w.csv", "wider than window 2 (10 to 11 s)", "1 s, or take the window out", "10 ms is bin_width=0.01"],
         ),
         (
             0.1,

@@ -167,6 +167,20 @@ def test_a_place_without_permission_is_an_output_error(tmp_path):
         write(tmp_path / "locked" / "out")
 
 
+@pytest.mark.parametrize("name", ["x" * 245, "x" * 300])
+def test_a_name_that_is_too_long_is_refused_before_a_long_computation(tmp_path, name):
+    """A folder name may have 255 bytes; the hidden one beside it is 15 longer."""
+    with pytest.raises(OutputError, match="cannot write there: File name too long"):
+        check_folder(tmp_path / name)
+    assert list(tmp_path.iterdir()) == []
+
+
+@pytest.mark.skipif(not os.path.isdir("/proc"), reason="a place where nobody may write")
+def test_a_place_where_nobody_may_write_is_refused_before_a_long_computation():
+    with pytest.raises(OutputError, match="/proc/results: cannot write there: "):
+        check_folder("/proc/results")
+
+
 def test_results_get_the_usual_permissions(tmp_path):
     (tmp_path / "plain").mkdir()
     write(tmp_path / "out")
