@@ -41,6 +41,7 @@ AGAINST_THE_FLOW: dict[tuple[str, str], str] = {
     ("kernelfit.model.coupling", "fitting"): "model.fit(recording) is what users type; fitting builds on the model",
     ("kernelfit.fitting.result", "inference"): "fit.parameters, fit.kernel_band and fit.summary() are the contract",
     ("kernelfit.fitting.profiles", "inference"): "fit.profile() and the like are methods of the fit",
+    ("kernelfit.fitting.analyses", "inference"): "fit.bootstrap() and the like are methods of the fit",
     ("kernelfit.fitting.result", "diagnostics"): "fit.goodness() is the contract",
 }
 

@@ -8,7 +8,7 @@ import numpy as np
 
 from kernelfit.engine.evaluate import Evaluation, TimeBlocks
 from kernelfit.engine.time_blocks import time_blocks
-from kernelfit.fitting.block_length import FINER
+from kernelfit.fitting.block_length import FINER, BlockCurve
 from kernelfit.fitting.problem import Estimate, Problem
 
 N_BLOCKS = 100
@@ -64,12 +64,26 @@ def usual_blocks(problem: Problem, leak: float) -> TimeBlocks:
     return time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
 
 
+def chosen_blocks(problem: Problem, leak: float, curve: BlockCurve) -> TimeBlocks:
+    """The blocks that a curve of standard errors chose: the usual ones, or longer ones, cut anew."""
+    usual = usual_blocks(problem, leak)
+    longer = curve.factor(fine_parts(usual))
+    if longer <= 1:
+        return usual
+    return time_blocks(problem.grid, longer * problem.grid.duration_s / usual.n_blocks)
+
+
+def fine_parts(blocks: TimeBlocks) -> int:
+    """Fine blocks in one of these."""
+    return FINER if blocks.n_bins.min() >= FINER else 1
+
+
 def sums_by_block(problem: Problem, estimate: Estimate, blocks: TimeBlocks | None = None) -> BlockSums:
     """One sweep. Blocks of the usual length, cut finer for the scores, or those that are given."""
     finer = 1
     if blocks is None:
         blocks = usual_blocks(problem, problem.leak(estimate.shared))
-        finer = FINER if blocks.n_bins.min() >= FINER else 1
+        finer = fine_parts(blocks)
     fine = blocks.split(finer)
     slot = np.arange(fine.n_blocks) // finer
     n_own = 1 + problem.trace_decay.size

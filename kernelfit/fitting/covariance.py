@@ -1,4 +1,7 @@
-"""Both covariances of a fit: inverse expected information, and the sandwich of scores clustered by blocks of time.
+"""Covariances of a fit: inverse expected information, and the sandwich of scores clustered by blocks of time.
+
+The sandwich holds the Hessian of the objective, as its authors have it: in lengths, exponents and the leak rate it
+differs from the expected information wherever the model is wrong (kernelfit.fitting.curvature).
 
 Where few blocks carry most of the information the sandwich is too narrow, because the estimates follow the blocks they
 are judged by. The one-step jackknife sees that: what the estimates would be without each block, from the information
@@ -18,12 +21,12 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.engine.evaluate import Evaluation
-from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.errors import ArgumentError
 from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_symmetric
 from kernelfit.fitting.block_length import BlockCurve, block_curve, joined
-from kernelfit.fitting.by_block import BlockSums, sums_by_block
-from kernelfit.fitting.maximise import Optimum, penalised
+from kernelfit.fitting.by_block import BlockSums, chosen_blocks, sums_by_block
+from kernelfit.fitting.curvature import excess_curvature
+from kernelfit.fitting.maximise import Local, Optimum, penalised
 from kernelfit.fitting.problem import Problem
 from kernelfit.model.coupling import CovarianceKind
 
@@ -86,32 +89,38 @@ class Uncertainty:
 
 
 def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
-    """All covariances at an optimum: one sweep with scores by block of time, one more where blocks are joined."""
+    """All covariances at an optimum.
+
+    One sweep with scores by block of time, where the optimiser did not leave it; one more where blocks are joined; two
+    for each parameter in which the predictor is not linear.
+    """
     free = optimum.free
     problem.clock.stage = "standard errors"
     usual = optimum.by_block if optimum.by_block is not None else sums_by_block(problem, optimum.estimate)
-    information = penalised(problem, optimum.estimate, usual.together).information.only(free)
-    elimination = eliminate(information)
+    local = penalised(problem, optimum.estimate, usual.together)
+    elimination = eliminate(local.information.only(free))
     weak = _weak_direction(elimination.schur)
-    influence = _influence(usual.sums, elimination, free, weak is None)
+    inverse = (
+        solve_symmetric(elimination.schur, np.eye(int(free.sum())))
+        if weak is None
+        else np.full((int(free.sum()), int(free.sum())), np.nan)
+    )
+    variance = np.diag(_spread(inverse, free))
+    information = observed_information(problem, local, variance, free)
+    observed = eliminate(information)
+    influence = _influence(usual.sums, observed, free, weak is None)
     curve = block_curve(influence.shared, usual.finer, problem.grid.duration_s)
-    longer = curve.factor(usual.finer)
     used = usual
-    if longer > 1:
-        length_s = longer * problem.grid.duration_s / usual.blocks.n_blocks
-        used = sums_by_block(problem, optimum.estimate, time_blocks(problem.grid, length_s))
-        influence = _influence(used.sums, elimination, free, weak is None)
+    if curve.factor(usual.finer) > 1:
+        blocks = chosen_blocks(problem, problem.leak(optimum.estimate.shared), curve)
+        used = sums_by_block(problem, optimum.estimate, blocks)
+        influence = _influence(used.sums, observed, free, weak is None)
     influence = influence.joined(used.finer)
     n_blocks = used.blocks.n_blocks
     correction = n_blocks / (n_blocks - 1.0) if n_blocks >= REFUSED_BELOW else np.nan
     left_out = None
     if weak is None and n_blocks >= REFUSED_BELOW and used.has_information:
         left_out = _left_out(used, information, free)
-    inverse = (
-        solve_symmetric(elimination.schur, np.eye(int(free.sum())))
-        if weak is None
-        else np.full((int(free.sum()), int(free.sum())), np.nan)
-    )
     through_shared = elimination.reduced @ np.nan_to_num(inverse)
     return Uncertainty(
         shared_model=_spread(inverse, free),
@@ -150,6 +159,25 @@ class _Influence:
     def squared_own(self) -> FloatArray:
         """(n, P, P) sum of products over blocks."""
         return np.asarray(np.einsum("gnp,gnq->npq", self.own, self.own))
+
+
+def observed_information(problem: Problem, local: Local, variance: FloatArray, free: BoolArray) -> Arrow:
+    """The observed information of the free parameters: minus the Hessian of the penalised objective.
+
+    Where it is not positive definite, as beside a top that was not reached, the expected one takes its place.
+
+    Parameters
+    ----------
+    problem, local : the model on the recording, and its derivatives at the optimum
+    variance : (Q,) model-based, working scale; NaN where there is none
+    free : (Q,) parameters that were estimated
+    """
+    expected = local.information.only(free)
+    excess = excess_curvature(problem, local, np.sqrt(variance))
+    if not excess.any():
+        return expected
+    observed = Arrow(expected.own, expected.cross, expected.shared + excess[np.ix_(free, free)])
+    return observed if _weak_direction(eliminate(observed).schur) is None else expected
 
 
 def _influence(sums: Evaluation, elimination: Elimination, free: BoolArray, determined: bool) -> _Influence:

@@ -1,4 +1,4 @@
-"""What the observed information has over the expected one, and what that does to scores by blocks of time.
+"""What the observed information has over the expected one.
 
 The sandwich of Huber (1967) and White (1982) has the Hessian of the objective inside, not the information expected
 under the model. Where the predictor is linear in the parameters the two are one under the exponential link; they differ
@@ -58,27 +58,3 @@ def excess_curvature(problem: Problem, local: Local, std_errors: FloatArray) -> 
     excess[both] = corner
     known = np.isfinite(std_errors)
     return np.asarray(np.where(known[:, None] & known, excess, 0.0))
-
-
-def with_observed_information(influence: FloatArray, model: FloatArray, excess: FloatArray) -> FloatArray | None:
-    """Influence of blocks of time by the observed information.
-
-    Parameters
-    ----------
-    influence : (G, Q) by the expected information; NaN columns of parameters that were not estimated
-    model : (Q, Q) inverse expected information, own parameters eliminated; NaN rows of the same
-    excess : (Q, Q) of `excess_curvature`
-
-    Returns
-    -------
-    (G, Q), or None where the observed information is not positive definite: no top to speak of
-    """
-    free = np.isfinite(np.diag(model))
-    part = np.ix_(free, free)
-    expected = np.linalg.inv(model[part])
-    observed = expected + excess[part]
-    if np.linalg.eigvalsh(observed / np.sqrt(np.outer(np.diag(expected), np.diag(expected))))[0] <= 0.0:
-        return None
-    changed = influence.copy()
-    changed[:, free] = np.linalg.solve(observed, expected @ influence[:, free].T).T
-    return changed

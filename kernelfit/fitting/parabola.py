@@ -21,7 +21,8 @@ from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_leniently, solve_symmetric
 from kernelfit.fitting.maximise import Local
 
-NO_INFORMATION = 1e-12  # of the largest information on any direction that a penalty weighs
+NO_INFORMATION = 1e-7  # of the information on what a penalty weighs were all else known: less is none, and rounding
+NULL_SPACE = 1e-10  # of the largest eigenvalue of a penalty
 LEAST_FREE = 1e-3  # of the directions that a penalty weighs: less than this left free, or taken, is none
 
 PenalisedTerm = Literal["kernel", "after-spike"]
@@ -174,8 +175,7 @@ class Parabola:
 
         Below the lowest as good as all directions are left to the data, above the highest as good as none is.
         """
-        information = self._informed(k, penalties, weights)
-        informed = information[information > NO_INFORMATION * information.max(initial=0.0)]
+        informed = self._informed(k, penalties, weights)
         if informed.size == 0:
             return 1.0, 1.0  # the data say nothing at all: any weight will do
         least = LEAST_FREE * penalties[k].scales.size
@@ -190,7 +190,7 @@ class Parabola:
         return float(np.exp(lowest)), float(np.exp(highest))
 
     def _informed(self, k: int, penalties: tuple[Penalty, ...], weights: FloatArray) -> FloatArray:
-        """Information on each direction that penalty k weighs, in units of its R; all else estimated too."""
+        """Information on the directions that penalty k weighs and the data speak of, in units of R."""
         penalty, others = penalties[k], weights.copy()
         others[k] = 0.0
         if np.any(penalty.own):  # unit by unit, the shared parameters taken as known
@@ -201,15 +201,21 @@ class Parabola:
             rest = own[:, ~weighed][:, :, ~weighed]
             across = own[:, ~weighed][:, :, weighed]
             left = own[:, weighed][:, :, weighed] - np.swapaxes(across, 1, 2) @ np.linalg.solve(rest, across)
-            return np.asarray(np.maximum(np.linalg.eigvalsh(left).ravel(), 0.0))
+            return _above_rounding(np.asarray(np.linalg.eigvalsh(left).ravel()), own[:, weighed][:, :, weighed])
         schur = self._under(penalties, others).schur
         value, vector = np.linalg.eigh(penalty.shared[np.ix_(self.free, self.free)])
-        weighed = value > NO_INFORMATION * value.max()
+        weighed = value > NULL_SPACE * value.max(initial=0.0)
         turn = vector / np.sqrt(np.where(weighed, value, 1.0))
         turned = turn.T @ schur @ turn
         across = turned[np.ix_(~weighed, weighed)]
         left = turned[np.ix_(weighed, weighed)] - across.T @ solve_leniently(turned[np.ix_(~weighed, ~weighed)], across)
-        return np.asarray(np.maximum(np.linalg.eigvalsh(0.5 * (left + left.T)), 0.0))
+        return _above_rounding(np.asarray(np.linalg.eigvalsh(0.5 * (left + left.T))), turned[np.ix_(weighed, weighed)])
+
+
+def _above_rounding(information: FloatArray, alone: FloatArray) -> FloatArray:
+    """Those that are more than what rounding leaves of the information when all else is taken as known."""
+    largest = float(np.max(np.abs(alone), initial=0.0))
+    return information[information > NO_INFORMATION * largest]
 
 
 def reweighted(local: Local, penalties: tuple[Penalty, ...], change: FloatArray) -> Local:

@@ -72,7 +72,8 @@ class Smoothing:
     weights : those chosen
     settled : whether they stopped changing
     n_rounds, n_sweeps : rounds of updating and climbing, and sweeps all of it took
-    log_marginal_likelihood : at the weights chosen, nats, up to a constant that does not depend on them
+    log_marginal_likelihood : at the weights chosen, nats, up to a constant that does not depend on them; NaN where the
+        recording says nothing about some parameter
     held_out : log-likelihood of stretches of time left out against the smoothing, where validation chose it
     """
 
@@ -213,6 +214,9 @@ class Chosen:
 def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chosen:
     """Choose the weights that a model leaves to the data, and climb to the top that belongs to them.
 
+    Where the recording says nothing about some parameters, so that there is nothing to integrate over, the first
+    guesses stay, and the choice has not settled.
+
     Parameters
     ----------
     problem, found : with first guesses for the weights, and the optimum there
@@ -222,21 +226,28 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
     if not wanted:
         return Chosen(problem, found, None, np.zeros((problem.n_shared, problem.n_shared)))
     problem.clock.stage = "choosing the smoothing"
+    try:
+        return _choose(problem, found, wanted)
+    except SingularOwnBlock:
+        raise
+    except np.linalg.LinAlgError:
+        return _as_guessed(problem, found, wanted)
+
+
+def _choose(problem: Problem, found: SearchResult, wanted: tuple[tuple[Penalty, SmoothingChoice], ...]) -> Chosen:
     before = problem.clock.sweeps
     penalties = tuple(p for p, _ in wanted)
     held = ~found.best.free & (found.best.at_bound == 0)
     climb = _climb(problem, found.best, penalties, weights_of(problem, penalties), held)
-    by_validation = [k for k, (_, choice) in enumerate(wanted) if choice == "validation"]
-    weights, at_bound, table = climb.weights, _at_bound(climb.weights, climb.bounds), None
-    for k in by_validation:
-        table = held_out(climb.problem, climb.optimum, penalties[k], _grid(climb, penalties, k))
-        weights = weights.copy()
-        weights[k], at_bound[k] = best_held_out(table)
-        weights = _rounded(weights)
+    weights, at_bound, table = climb.weights.copy(), _at_bound(climb.weights, climb.bounds), None
+    for k, (penalty, choice) in enumerate(wanted):
+        if choice == "validation":
+            table = held_out(climb.problem, climb.optimum, penalty, _grid(climb.bounds[k]))
+            weights[k], at_bound[k] = best_held_out(table)
+    weights = _rounded(weights)
     problem = with_weights(climb.problem, penalties, weights)
     start = reweighted(climb.optimum.local, penalties, weights - climb.weights)
-    top = maximise(problem, start, held=held, tolerance=TIGHT)
-    found = _with_second(problem, found, top, held)
+    found = _with_second(problem, found, maximise(problem, start, held=held, tolerance=TIGHT), held)
     parabola = parabola_at(problem, found.best, penalties, weights)
     added, chosen = np.zeros((problem.n_shared, problem.n_shared)), []
     for k, (penalty, choice) in enumerate(wanted):
@@ -248,16 +259,26 @@ def choose(problem: Problem, found: SearchResult, asked: CouplingModel) -> Chose
             ends = likely_range(parabola, penalties, weights, k, climb.bounds[k])
         low, high = climb.bounds[k].tolist()
         chosen.append(ChosenWeight(penalty.term, choice, float(weights[k]), low, high, int(at_bound[k]), *ends))
-    peak = parabola.peak(penalties, weights)
     smoothing = Smoothing(
         weights=tuple(chosen),
         settled=climb.settled,
         n_rounds=climb.n_rounds,
         n_sweeps=problem.clock.sweeps - before,
-        log_marginal_likelihood=peak.log_marginal,
+        log_marginal_likelihood=parabola.peak(penalties, weights).log_marginal,
         held_out=table,
     )
     return Chosen(problem, found, smoothing, added)
+
+
+def _as_guessed(problem: Problem, found: SearchResult, wanted: tuple[tuple[Penalty, SmoothingChoice], ...]) -> Chosen:
+    """No choice: the weights are the first guesses, and nothing is known about others."""
+    guesses = weights_of(problem, tuple(p for p, _ in wanted)).tolist()
+    weights = [
+        ChosenWeight(penalty.term, choice, guess, guess, guess, 0, guess, guess)
+        for (penalty, choice), guess in zip(wanted, guesses, strict=True)
+    ]
+    smoothing = Smoothing(tuple(weights), False, 0, 0, np.nan)
+    return Chosen(problem, found, smoothing, np.zeros((problem.n_shared, problem.n_shared)))
 
 
 def _at_bound(weights: FloatArray, bounds: FloatArray) -> IntArray:
@@ -265,9 +286,9 @@ def _at_bound(weights: FloatArray, bounds: FloatArray) -> IntArray:
     return np.where(weights >= bounds[:, 1] / near, 1, np.where(weights <= bounds[:, 0] * near, -1, 0))
 
 
-def _grid(climb: _Climb, penalties: tuple[Penalty, ...], k: int) -> FloatArray:
+def _grid(bounds: FloatArray) -> FloatArray:
     """Smoothings to validate, from hardly any to as good as endless."""
-    low, high = climb.bounds[k] * [VALIDATED_INSIDE, 1.0 / VALIDATED_INSIDE]
+    low, high = bounds * [VALIDATED_INSIDE, 1.0 / VALIDATED_INSIDE]
     return _rounded(np.geomspace(low, max(high, low * VALIDATED_INSIDE), VALIDATED_POINTS))
 
 

@@ -6,20 +6,22 @@ from collections.abc import Mapping
 from dataclasses import asdict
 from typing import Any
 
+import numpy as np
+
 from kernelfit.fitting.plain_values import floats, plain
 from kernelfit.fitting.smoothing import ChosenWeight, Smoothing
 from kernelfit.fitting.validation import HeldOut
 
 
 def describe_smoothing(smoothing: Smoothing) -> dict[str, Any]:
-    """As plain values."""
+    """As plain values; NaN becomes null."""
     table = smoothing.held_out
     return {
         "weights": [asdict(w) for w in smoothing.weights],
         "settled": smoothing.settled,
         "n_rounds": smoothing.n_rounds,
         "n_sweeps": smoothing.n_sweeps,
-        "log_marginal_likelihood": smoothing.log_marginal_likelihood,
+        "log_marginal_likelihood": plain(np.array([smoothing.log_marginal_likelihood]))[0],
         "held_out": None
         if table is None
         else {
@@ -38,7 +40,7 @@ def restore_smoothing(values: Mapping[str, Any]) -> Smoothing:
         settled=bool(values["settled"]),
         n_rounds=int(values["n_rounds"]),
         n_sweeps=int(values["n_sweeps"]),
-        log_marginal_likelihood=float(values["log_marginal_likelihood"]),
+        log_marginal_likelihood=float(floats([values["log_marginal_likelihood"]], 1)[0]),
         held_out=None
         if table is None
         else HeldOut(

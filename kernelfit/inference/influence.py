@@ -14,9 +14,9 @@ import pandas as pd
 
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit.engine.evaluate import SweepData, TimeBlocks
-from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
-from kernelfit.fitting.by_block import BlockSums, sums_by_block
+from kernelfit.fitting.by_block import BlockSums, chosen_blocks, sums_by_block
+from kernelfit.fitting.covariance import observed_information
 from kernelfit.fitting.maximise import Optimum, Weighting, maximise, penalised
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.inference.scales import natural_values, shared_names
@@ -56,11 +56,13 @@ class Influence:
 def influence(fit: CouplingFit, recording: Recording | None, threads: int | None) -> Influence:
     """See `CouplingFit.influence`."""
     problem = fit.problem(recording, threads=threads)
-    blocks = time_blocks(problem.grid, min(fit.block_length_s, problem.grid.duration_s))
+    blocks = chosen_blocks(problem, problem.leak(fit.shared), fit.uncertainty.block_curve)
     by_block = sums_by_block(problem, fit.estimate, blocks)
     parts = EVENTS_PER_BLOCK if blocks.n_bins.min() >= EVENTS_PER_BLOCK * SHORTEST_EVENT_BINS else 1
     short = sums_by_block(problem, fit.estimate, blocks.split(parts))
-    work = _Work(fit, problem)
+    local = penalised(problem, fit.estimate, by_block.together)
+    variance = np.diag(fit.uncertainty.shared_model)
+    work = _Work(fit, problem, observed_information(problem, local, variance, fit.free))
     stretches = _by_time(work, blocks, _without_blocks(work, by_block))
     events = _by_time(work, short.blocks, _first_order(work, short))
     units = _by_unit(work, by_block)
@@ -77,6 +79,7 @@ def influence(fit: CouplingFit, recording: Recording | None, threads: int | None
 class _Work:
     fit: CouplingFit
     problem: Problem
+    information: Arrow  # observed
 
     @property
     def names(self) -> list[str]:
@@ -102,13 +105,9 @@ class _Work:
         return table
 
 
-def _information(work: _Work, by_block: BlockSums) -> Arrow:
-    return penalised(work.problem, work.fit.estimate, by_block.together).information.only(work.fit.free)
-
-
 def _first_order(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, the information taken as it is with it."""
-    elimination = eliminate(_information(work, by_block))
+    elimination = eliminate(work.information)
     score = by_block.sums.score
     n_own = elimination.own_inverse.shape[1]
     efficient = elimination.efficient_score(score[..., :n_own], score[..., n_own:].sum(axis=1)[:, work.fit.free])
@@ -119,7 +118,7 @@ def _without_blocks(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, from the information that is left where it is known by block."""
     if not by_block.has_information:
         return _first_order(work, by_block)
-    whole, sums, free = _information(work, by_block), by_block.sums, work.fit.free
+    whole, sums, free = work.information, by_block.sums, work.fit.free
     n_own = sums.own_own.shape[-1]
     moves = np.full((by_block.blocks.n_blocks, int(free.sum())), np.nan)
     for g in range(len(moves)):
@@ -135,7 +134,7 @@ def _without_blocks(work: _Work, by_block: BlockSums) -> FloatArray:
 
 def _by_unit(work: _Work, by_block: BlockSums) -> pd.DataFrame:
     fit, free = work.fit, work.fit.free
-    elimination = eliminate(_information(work, by_block))
+    elimination = eliminate(work.information)
     score = by_block.sums.score.sum(axis=0)  # (n, P + Q)
     n_own = elimination.own_inverse.shape[1]
     own, shared = score[:, :n_own], score[:, n_own:][:, free]

@@ -24,6 +24,7 @@ from kernelfit.fitting.outcome import Note
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.held import Held, hold
 from kernelfit.inference.profile_conditions import (
+    Cut,
     check_call,
     discrete_names,
     fixed_leak,
@@ -32,9 +33,9 @@ from kernelfit.inference.profile_conditions import (
     profile_notes,
 )
 from kernelfit.inference.profile_ends import ProfileInterval
-from kernelfit.inference.profile_walk import Walk, walk
+from kernelfit.inference.profile_walk import Walk, Walked, farther, walk
 from kernelfit.inference.scales import natural_values, shared_names
-from kernelfit.inference.scaling import Scaling, variance_scaling
+from kernelfit.inference.scaling import Scaling, scaling_at, variance_scaling
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -112,10 +113,12 @@ def profile_parameter(
     held = hold(problem, fit.shared, name)
     if isinstance(held, Unavailable):
         return held
-    scaling = variance_scaling(fit, problem, held, level)
-    scaled_cut = scaling.root_cut(cut.widened) if isinstance(scaling, Scaling) else np.nan
-    cuts = np.array([cut.root, scaled_cut])
-    walked = walk(held, held.into(fit.estimate), cuts[np.isfinite(cuts)], n_points)
+    scaling = variance_scaling(fit, held, level)
+    if fit.at_bound[held.gradient(fit.shared) != 0].any():
+        walked, scaling = _from_a_bound(fit, held, cut, level, n_points)
+    else:
+        cuts = [cut.root, *([scaling.root_cut(cut.widened)] if isinstance(scaling, Scaling) else [])]
+        walked = walk(held, held.into(fit.estimate), np.array(cuts), n_points)
     if isinstance(walked, Unavailable):
         return walked
     model = walked.interval("model", cut.root, with_zero=cut.with_zero)
@@ -123,7 +126,8 @@ def profile_parameter(
     if isinstance(scaling, Unavailable):
         scaled = scaling
     else:
-        scaled = walked.interval("robust", scaled_cut, scaling.ratio, with_zero=cut.with_zero)
+        root = scaling.root_cut(cut.widened)
+        scaled = walked.interval("robust", root, scaling.ratio, with_zero=cut.with_zero)
     return Profile(
         name=name,
         unit=held.unit,
@@ -139,6 +143,24 @@ def profile_parameter(
         seconds=time.monotonic() - started,
         table=_table(fit, held, walked.walk),
     )
+
+
+def _from_a_bound(
+    fit: CouplingFit, held: Held, cut: Cut, level: float, n_points: int
+) -> tuple[Walked | Unavailable, Scaling | Unavailable]:
+    """The walk of a parameter whose estimate sits at its bound, its variances taken where the likelihood falls."""
+    walked = walk(held, held.into(fit.estimate), np.array([cut.root]), n_points)
+    if isinstance(walked, Unavailable):
+        return walked, walked
+    ends = [c.x for c in walked.crossings.values() if c.x is not None]
+    if not ends:
+        return walked, Unavailable(f"{held.name} has no end at which its variance could be had")
+    point = min(walked.walk.points, key=lambda p: abs(p.x - ends[0]))
+    scaling = scaling_at(fit, held, point, level)
+    if isinstance(scaling, Unavailable):
+        return walked, scaling
+    more = farther(walked, scaling.root_cut(cut.widened))
+    return (walked, more) if isinstance(more, Unavailable) else (more, scaling)
 
 
 def _table(fit: CouplingFit, held: Held, here: Walk) -> pd.DataFrame:

@@ -266,11 +266,11 @@ def _at_length(fit: CouplingFit, held: Held, length_um: float, level: float, sta
 def _sentence(
     fit: CouplingFit, rows: list[_Row], level: float, leak: str, leak_rate: float, stated_at: str, largest: float
 ) -> str:
-    span = f"Whatever the length from {rows[0].length_um:.3g} to {rows[-1].length_um:.3g} µm"
+    span = f"Whatever the length from {_whole(rows[0].length_um)} to {_whole(rows[-1].length_um)} µm"
     if not np.isfinite(largest):
         where = [row.length_um for row in rows if not np.isfinite(row.largest)]
         return (
-            f"{span}, no limit to the amplitude can be stated: at {where[0]:.3g} µm the likelihood never falls far "
+            f"{span}, no limit to the amplitude can be stated: at {_whole(where[0])} µm the likelihood never falls far "
             "enough."
         )
     kind = "robust" if all(isinstance(row.scaled, ProfileInterval) for row in rows) else "model-based"
@@ -286,3 +286,7 @@ def _sentence(
         f"{span}, |J| {stated_at} is below {largest:.3g} per spike "
         f"({100 * level:g} % {kind} profile intervals{widened}; {how}{also})."
     )
+
+
+def _whole(length_um: float) -> str:
+    return f"{length_um:.0f}" if length_um >= 10.0 else f"{length_um:.2g}"

@@ -32,7 +32,7 @@ from kernelfit.inference.profile_point import (
     settled,
 )
 from kernelfit.inference.profile_walk import BETTER, Walked, walk
-from kernelfit.inference.scaling import PlaneScaling, freed, plane_scaling
+from kernelfit.inference.scaling import PlaneScaling, plane_scaling
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -118,8 +118,7 @@ def profile_contour(
     if isinstance(pair, Unavailable):
         return pair
     gradients = np.array([h.gradient(fit.shared) for h in pair.single])
-    spread = freed(fit, problem, (gradients != 0).any(axis=0))
-    scaling = plane_scaling(fit, spread, gradients, bool(problem.penalty.any()))
+    scaling = plane_scaling(fit, gradients, bool(problem.penalty.any()))
     surface = _surface(fit, pair, scaling, n_points)
     if isinstance(surface, Unavailable):
         return surface

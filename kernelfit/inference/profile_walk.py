@@ -100,7 +100,7 @@ class Walk:
         targets : rising roots of twice the drop to aim at; the walk ends beyond the last one, or where x may not go on
         """
         limit = self.limit(sign)
-        here = self.top
+        here = self.side(sign)[-1]
         first = None
         while len(self.side(sign)) <= MOST_POINTS and here.x != limit:
             reached = float(np.sqrt(2.0 * max(self.drop(here), 0.0)))
@@ -232,6 +232,18 @@ def walk(
         except BetterOptimumError as found:
             top = _climbed(held, found.point)
     return Unavailable(f"the likelihood has so many tops that no profile of {held.name} could be walked")
+
+
+def farther(walked: Walked, cut: float) -> Walked | Unavailable:
+    """The same walk with one more cut, farther out or not."""
+    here = walked.walk
+    try:
+        for sign in (1, -1):
+            here.out(sign, np.array([OVERSHOOT * cut]))
+        crossings = {(sign, cut): here.crossing(sign, cut) for sign in (1, -1)}
+    except BetterOptimumError:
+        return Unavailable(f"farther out there is a better optimum than the one {here.held.name} was profiled from")
+    return Walked(here, {**walked.crossings, **crossings}, walked.gained)
 
 
 def _targets(cuts: FloatArray, n_points: int) -> FloatArray:

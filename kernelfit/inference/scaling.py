@@ -14,13 +14,13 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy.stats import f as f_distribution
 
-from kernelfit._typing import BoolArray, FloatArray
+from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
 from kernelfit.fitting.covariance import REFUSED_BELOW, Uncertainty, covariances
 from kernelfit.fitting.maximise import maximise
-from kernelfit.fitting.problem import Problem
 from kernelfit.inference.held import Held
 from kernelfit.inference.intervals import critical_value
+from kernelfit.inference.profile_point import PathPoint
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -73,16 +73,33 @@ def scaled_kind(fit: CouplingFit, spread: Uncertainty) -> CovarianceKind:
     return "jackknife" if made else "robust"
 
 
-def variance_scaling(fit: CouplingFit, problem: Problem, held: Held, level: float) -> Scaling | Unavailable:
+def variance_scaling(fit: CouplingFit, held: Held, level: float) -> Scaling | Unavailable:
     """The scaling of a parameter at the fit, or why there is none."""
     refused = too_few_blocks(fit.uncertainty)
     if refused is not None:
         return refused
-    gradient = held.gradient(fit.shared)
-    spread = freed(fit, problem, gradient != 0)
-    scaling = scaling_by(fit, spread, gradient, level, held.name)
-    if isinstance(scaling, Scaling) and problem.penalty.any():
-        # the sandwich leaves out what the penalty may be wrong by, which the curvature of the penalised curve holds
+    return _penalised(held, scaling_by(fit, fit.uncertainty, held.gradient(fit.shared), level, held.name))
+
+
+def scaling_at(fit: CouplingFit, held: Held, point: PathPoint, level: float) -> Scaling | Unavailable:
+    """The scaling of a parameter at a point of its profile: one or two sweeps.
+
+    For a parameter whose estimate sits at its bound, where the likelihood hardly depends on it: its variances mean
+    something only where the likelihood falls.
+    """
+    problem = held.at(point.x)
+    optimum = maximise(problem, point.estimate, held=held.mask)
+    freed = optimum.free.copy()
+    freed[held.place] = True
+    spread = covariances(problem, replace(optimum, free=freed))
+    gradient = np.zeros(freed.size)
+    gradient[held.place] = 1.0
+    return _penalised(held, too_few_blocks(spread) or scaling_by(fit, spread, gradient, level, held.name))
+
+
+def _penalised(held: Held, scaling: Scaling | Unavailable) -> Scaling | Unavailable:
+    """A ratio of 1 at least under a penalty: the sandwich leaves out what the penalty may be wrong by."""
+    if isinstance(scaling, Scaling) and held.problem.penalty.any():
         return replace(scaling, ratio=max(scaling.ratio, 1.0))
     return scaling
 
@@ -99,18 +116,9 @@ def scaling_by(
     return Scaling(robust / model, critical_value(level, spread.degrees_of_freedom(kind)))
 
 
-def freed(fit: CouplingFit, problem: Problem, used: BoolArray) -> Uncertainty:
-    """The fit's covariances; where one of the parameters used sits at its bound, those with it taken as estimated."""
-    if not fit.at_bound[used].any():
-        return fit.uncertainty
-    optimum = maximise(problem, fit.estimate, held=used)
-    return covariances(problem, replace(optimum, free=optimum.free | used))
-
-
-def plane_scaling(
-    fit: CouplingFit, spread: Uncertainty, gradients: FloatArray, penalised: bool
-) -> PlaneScaling | Unavailable:
+def plane_scaling(fit: CouplingFit, gradients: FloatArray, penalised: bool) -> PlaneScaling | Unavailable:
     """The scaling of two parameters with gradients (2, Q) by the working parameters."""
+    spread = fit.uncertainty
     refused = too_few_blocks(spread)
     if refused is not None:
         return refused

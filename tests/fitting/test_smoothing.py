@@ -13,6 +13,7 @@ from kernelfit import kernels, terms
 from kernelfit.engine.evaluate import expected_counts
 from kernelfit.engine.twin import dense_counts, dense_gradients
 from kernelfit.errors import ArgumentError, StorageError
+from kernelfit.fitting import smoothing as smoothing_module
 from kernelfit.fitting.maximise import Weighting, evaluate_locally, maximise
 from kernelfit.fitting.penalties import after_spike_penalty, kernel_penalty, with_weights
 from kernelfit.fitting.problem import Estimate, make_problem
@@ -130,6 +131,36 @@ def test_a_recording_without_coupling_can_be_fitted():
     assert fit.converged
     assert np.isfinite(fit.model.kernel.smoothing)
     assert fit.effective_by_term.loc["kernel", "effective"] < 7
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.errors.FitWarning")
+@pytest.mark.parametrize("smoothing", ["likelihood", "validation"])
+def test_where_the_data_determine_no_more_than_the_penalty_leaves_free(smoothing):
+    """Three distances and differences of third order: a parabola goes through them whatever the smoothing."""
+    rng = np.random.default_rng(3)
+    trains = {f"u{k}": np.unique(rng.uniform(0.0, 20.0, n)) for k, n in enumerate((170, 120, 30))}
+    few = kf.Recording.from_arrays(trains, np.array([[0.0, 0.0], [90.0, 0.0], [0.0, 170.0]]), windows=[(0.0, 20.0)])
+    kernel = kernels.Spline(n_basis=7, smoothing=smoothing, order=3)
+    fit = model(kernel, leak_rate=LEAK).fit(few, threads=2)
+    chosen = fit.smoothing.of("kernel")
+    assert chosen.lower == chosen.upper == chosen.value == 1.0  # any weight will do
+    assert fit.effective_by_term.loc["kernel", "effective"] == pytest.approx(3.0, abs=1e-6)
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.errors.FitWarning")
+def test_where_nothing_can_be_chosen_the_guess_stays_and_is_said_to_be_one(recording, monkeypatch, tmp_path):
+    def nothing_there(*_):
+        raise np.linalg.LinAlgError("no parabola")
+
+    monkeypatch.setattr(smoothing_module, "parabola_at", nothing_there)
+    fit = spline_model("likelihood", leak_rate=LEAK).fit(recording, threads=2)
+    assert not fit.smoothing.settled
+    assert fit.model.kernel.smoothing == fit.smoothing.of("kernel").value
+    said = next(n for n in fit.notes if n.where == "smoothing")
+    assert said.severity == "warning"
+    assert "could not choose the smoothing" in said.what
+    fit.save(tmp_path / "fit.json")
+    assert np.isnan(kf.load_fit(tmp_path / "fit.json").smoothing.log_marginal_likelihood)
 
 
 def test_other_orders_and_axes(recording):

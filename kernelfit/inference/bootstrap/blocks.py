@@ -8,10 +8,8 @@ import numpy as np
 
 from kernelfit._typing import FloatArray
 from kernelfit.engine.evaluate import TimeBlocks
-from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.errors import ModelError
-from kernelfit.fitting.block_length import FINER
-from kernelfit.fitting.by_block import usual_blocks
+from kernelfit.fitting.by_block import chosen_blocks
 from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.fitting.problem import Problem
 
@@ -31,12 +29,7 @@ def require_blocks(fit: CouplingFit) -> None:
 
 def blocks_of(fit: CouplingFit, problem: Problem) -> TimeBlocks:
     """The same blocks, to the bin: the usual ones, or joined as `fit.uncertainty.block_curve` says."""
-    usual = usual_blocks(problem, problem.leak(fit.shared))
-    finer = FINER if usual.n_bins.min() >= FINER else 1
-    longer = fit.uncertainty.block_curve.factor(finer)
-    if longer <= 1:
-        return usual
-    return time_blocks(problem.grid, longer * problem.grid.duration_s / usual.n_blocks)
+    return chosen_blocks(problem, problem.leak(fit.shared), fit.uncertainty.block_curve)
 
 
 def counts_by_block(problem: Problem, blocks: TimeBlocks) -> FloatArray:
