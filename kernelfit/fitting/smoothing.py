@@ -287,9 +287,11 @@ def _at_bound(weights: FloatArray, bounds: FloatArray) -> IntArray:
 
 
 def _grid(bounds: FloatArray) -> FloatArray:
-    """Smoothings to validate, from hardly any to as good as endless."""
-    low, high = bounds * [VALIDATED_INSIDE, 1.0 / VALIDATED_INSIDE]
-    return _rounded(np.geomspace(low, max(high, low * VALIDATED_INSIDE), VALIDATED_POINTS))
+    """Smoothings to validate, from hardly any to as good as endless; one where any will do."""
+    low, high = bounds.tolist()
+    if high < low * VALIDATED_INSIDE**3:
+        return _rounded(np.array([np.sqrt(low * high)]))
+    return _rounded(np.geomspace(low * VALIDATED_INSIDE, high / VALIDATED_INSIDE, VALIDATED_POINTS))
 
 
 def _with_second(problem: Problem, found: SearchResult, top: Optimum, held: BoolArray) -> SearchResult:
