@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Iterable, Mapping, Sequence
+import os
+from collections.abc import Collection, Iterable, Mapping, Sequence
 from typing import TypeAlias
 
 import numpy as np
 import pandas as pd
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import check_truth_value, described
 from kernelfit.errors import ArgumentError, Fault, RecordingError, TableError
 from kernelfit.recording.assembling import Parts, assembled
 from kernelfit.recording.cells import read_labels
@@ -17,6 +19,15 @@ from kernelfit.recording.columns import MAX_COORDINATE_UM, MAX_TIME_S, Measures
 from kernelfit.recording.raw_table import ROWS_FROM_0, RawTable, table_from_frame
 from kernelfit.recording.recording import COORDINATES, Origin, Recording, SourceFile
 from kernelfit.recording.table_checks import Sites, check_pairs, check_stretches
+
+_KINDS = {
+    "U": "text",
+    "S": "text",
+    "b": "truth values",
+    "c": "complex numbers",
+    "M": "dates",
+    "m": "lengths of time",
+}  # by numpy's letter for the kind of an array
 
 StretchSource: TypeAlias = "pd.DataFrame | Sequence[tuple[float, float]] | FloatArray"
 
@@ -27,7 +38,7 @@ def recording_from_arrays(
     windows: StretchSource | None = None,
     *,
     exclusions: StretchSource | None = None,
-    exclude_pairs: Iterable[tuple[str, str]] = (),
+    exclude_pairs: Iterable[tuple[str, str]] | None = None,
     groups: Sequence[str] | None = None,
     drop_duplicates: bool = False,
 ) -> Recording:
@@ -35,9 +46,12 @@ def recording_from_arrays(
 
     The hashes in ``origin.files`` are over the ids and the little-endian bytes of the arrays.
     """
+    check_truth_value(drop_duplicates, "drop_duplicates")
     if not isinstance(spike_times_s, Mapping):
-        kind = type(spike_times_s).__name__
-        raise RecordingError(f"spike_times_s is a {kind}. Give a mapping from unit id to spike times in seconds.")
+        raise RecordingError(
+            f"spike_times_s is {described(spike_times_s)}. Give a dictionary from unit id to spike times in seconds, "
+            "such as {'u01': [0.12, 0.57], 'u02': [0.3]}."
+        )
     faults: list[Fault] = []
     ids = _array_ids(list(spike_times_s), faults)
     positions = _array_positions(positions_um, len(ids), faults)
@@ -78,6 +92,10 @@ def _array_ids(keys: list[object], faults: list[Fault]) -> list[str]:
 def _float_array(values: object, name: str) -> FloatArray:
     """Numbers as a float array; text, truth values and ragged lists are refused."""
     remedy = "Give plain numbers, all rows of one length."
+    if values is None or isinstance(values, (str, bytes, os.PathLike)):
+        raise RecordingError(
+            f"{name} is {described(values)}. Give plain numbers; tables are read by kf.read_recording."
+        )
     try:
         array = np.asarray(values)
     except (ValueError, TypeError):
@@ -86,7 +104,8 @@ def _float_array(values: object, name: str) -> FloatArray:
         return np.empty(array.shape)
     holds_text = array.dtype == object and any(isinstance(v, (str, bytes)) for v in array.flat)
     if array.dtype.kind not in "iufO" or holds_text:
-        raise RecordingError(f"{name} holds {array.dtype.name}, not numbers. {remedy}")
+        kind = "text" if holds_text else _KINDS.get(array.dtype.kind, "other things")
+        raise RecordingError(f"{name} holds {kind}, not numbers. Give plain numbers.")
     try:
         return array.astype(np.float64)
     except (ValueError, TypeError, OverflowError):
@@ -112,8 +131,14 @@ def _array_positions(positions_um: object, n_units: int, faults: list[Fault]) ->
 def _array_groups(groups: Sequence[str] | None, n_units: int, faults: list[Fault]) -> tuple[str, ...] | None:
     if groups is None:
         return None
-    if isinstance(groups, str) or len(groups) != n_units:
-        raise RecordingError(f"groups needs one label for each of the {n_units} units, got {len(groups)}.")
+    if isinstance(groups, str) or not isinstance(groups, Collection):
+        raise RecordingError(
+            f"groups is {described(groups)}. Give a list with a label for each of the {n_units} units."
+        )
+    if len(groups) != n_units:
+        raise RecordingError(
+            f"groups holds {len(groups)} label{'s' * (len(groups) != 1)} for {n_units} units. Give one for each."
+        )
     labels, bad = read_labels(list(groups), required=False)
     faults.extend(Fault("groups", b.problem, b.remedy, row=b.at, value=str(groups[b.at])) for b in bad)
     return tuple(labels)
@@ -123,7 +148,8 @@ def _array_train(unit: str, times: object, drop_duplicates: bool, faults: list[F
     name = f"spike_times_s[{unit!r}]"
     time_s = _float_array(times, name)
     if time_s.ndim != 1:
-        raise RecordingError(f"{name} has shape {time_s.shape}. Give a flat list of times in seconds.")
+        what = "is a single number" if time_s.ndim == 0 else f"has shape {time_s.shape}"
+        raise RecordingError(f"{name} {what}. Give a flat list of times in seconds.")
     place = name + ROWS_FROM_0
     bad = ~(np.abs(time_s) <= MAX_TIME_S)
     for k in np.flatnonzero(bad).tolist():
@@ -150,18 +176,26 @@ def _stretch_table(given: StretchSource | None, role: str) -> RawTable | None:
         if bounds.size == 0:
             bounds = np.empty((0, 2))
         if bounds.ndim != 2 or bounds.shape[1] != 2:
-            raise RecordingError(f"{role} has shape {bounds.shape}. Give pairs of start and stop in seconds.")
+            what = "is a single number" if bounds.ndim == 0 else f"has shape {bounds.shape}"
+            raise RecordingError(
+                f"{role} {what}. Give pairs of start and stop in seconds, such as [(0.0, 60.0), (90.0, 300.0)]."
+            )
         given = pd.DataFrame(bounds, columns=["start_s", "stop_s"])
     return table_from_frame(given, role)
 
 
-def _pair_table(given: Iterable[tuple[str, str]]) -> RawTable | None:
+def _pair_table(given: Iterable[tuple[str, str]] | None) -> RawTable | None:
+    if given is None:
+        return None
     if isinstance(given, pd.DataFrame):
         return table_from_frame(given, "exclude_pairs")
+    remedy = "Give pairs of unit ids, such as [('u01', 'u02')]."
+    if isinstance(given, str) or not isinstance(given, Iterable):
+        raise ArgumentError(f"exclude_pairs is {described(given)}. {remedy}")
     pairs = list(given)
     for pair in pairs:
         if isinstance(pair, str) or not isinstance(pair, Sequence) or len(pair) != 2:
-            raise ArgumentError(f"exclude_pairs holds {pair!r}. Give pairs of unit ids such as ('u01', 'u02').")
+            raise ArgumentError(f"exclude_pairs holds {described(pair)}. {remedy}")
     if not pairs:
         return None
     columns = {"unit_a": [a for a, _ in pairs], "unit_b": [b for _, b in pairs]}

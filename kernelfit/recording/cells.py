@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import datetime
 import math
 import numbers
 import re
@@ -15,6 +16,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import AnyArray, FloatArray
+from kernelfit._validation import described
 
 # One column: text or mixed objects as a list, or a numeric array from a DataFrame or a Parquet file.
 Cells: TypeAlias = list[object] | AnyArray
@@ -108,7 +110,7 @@ def _slow_numbers(cells: list[object], decimal: str) -> tuple[FloatArray, list[B
             bad.append(BadCell(k, *_why_not_finite(math.nan)))
             continue
         elif isinstance(cell, (bool, np.bool_)) or not isinstance(cell, (numbers.Real, Decimal)):
-            bad.append(BadCell(k, f"A {type(cell).__name__}, not a number.", "Give plain numbers."))
+            bad.append(BadCell(k, f"{_sentence_start(cell)} instead of a plain number.", _plain_number_remedy(cell)))
             continue
         else:
             try:
@@ -128,6 +130,19 @@ def _number_from_text(text: str, decimal: str) -> float | None:
             return None
         text = text.replace(",", ".")
     return float(text) if _NUMBER.fullmatch(text) else None
+
+
+def _sentence_start(cell: object) -> str:
+    words = "a number with decimals" if isinstance(cell, (float, np.floating, Decimal)) else described(cell)
+    return words[0].upper() + words[1:]
+
+
+def _plain_number_remedy(cell: object) -> str:
+    if isinstance(cell, (list, tuple, np.ndarray)):
+        return "Give one number in each row."
+    if isinstance(cell, (datetime.date, datetime.timedelta)):
+        return "Give plain numbers, such as the seconds since the start of the recording."
+    return "Give plain numbers."
 
 
 def _why_not_finite(value: float) -> tuple[str, str]:
@@ -211,7 +226,7 @@ def read_labels(cells: Cells, *, required: bool = True) -> tuple[list[str], list
             elif isinstance(cell, (int, np.integer)) and not isinstance(cell, bool):
                 labels[k] = str(int(cell))
             elif not is_missing(cell):
-                bad.append(BadCell(k, f"A {type(cell).__name__}, and ids are text.", "Turn the column into text."))
+                bad.append(BadCell(k, f"{_sentence_start(cell)}, and ids are text.", "Turn the ids into text."))
     refused = {label for label in set(labels) if _is_refused(label)}
     if refused or (required and "" in set(labels)):
         known = {b.at for b in bad}

@@ -16,7 +16,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
 from kernelfit.errors import GridError
-from kernelfit.recording.recording import Recording, clock_text
+from kernelfit.recording.recording import Recording, check_recording, clock_text
 
 EDGE_TOLERANCE = 1e-6  # of a bin; times that lie on bin edges fall the same way on every machine
 STEPS_ALLOWED = 2  # a time and the start it is taken from are each half a step of doubles off, at most
@@ -85,9 +85,11 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
 
     Raises
     ------
+    ArgumentError : `recording` is none
     GridError : the width is not a positive number, is finer than any clock, is wider than a window, or leaves no bin
         to sum over
     """
+    check_recording(recording)
     _check_width(recording, bin_width, warm_up_s)
     bounds = recording.window_bounds
     ruler = _Ruler(bin_width, _tolerance(recording, bin_width))

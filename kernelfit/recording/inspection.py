@@ -12,7 +12,8 @@ from dataclasses import dataclass, field
 import numpy as np
 import pandas as pd
 
-from kernelfit.errors import RecordingError
+from kernelfit._validation import described, is_whole
+from kernelfit.errors import ArgumentError, RecordingError
 from kernelfit.recording.activity import Burstiness
 from kernelfit.recording.bin_width import BinWidthAdvice
 from kernelfit.recording.checks_input import check_input
@@ -23,7 +24,7 @@ from kernelfit.recording.coincidence import pairs_to_leave_out
 from kernelfit.recording.evidence import Evidence, gather
 from kernelfit.recording.findings import SEVERITIES, Finding, by_severity, counted, number, percent, seconds
 from kernelfit.recording.merged import merge_trains
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import Recording, check_recording
 
 EXCLUSION_COLUMNS = ("start_s", "stop_s", "units_at_once")
 _DECIMALS = 6  # of a second, in proposed stretches
@@ -164,7 +165,11 @@ def inspect_recording(recording: Recording, *, seed: int = 0) -> Inspection:
     Raises
     ------
     RecordingError : the exclusions leave nothing to look at
+    ArgumentError : no recording, or a seed that is none
     """
+    check_recording(recording)
+    if not is_whole(seed) or seed < 0:
+        raise ArgumentError(f"seed: {described(seed)} is no seed. Give a whole number, 0 or more.")
     if not len(merge_trains(recording).observed):
         raise RecordingError(
             f"{recording.origin.name('exclusions')}: the exclusions leave nothing of any window to look at. "

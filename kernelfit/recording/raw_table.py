@@ -12,6 +12,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import IntArray
+from kernelfit._validation import described
 from kernelfit.errors import ArgumentError, Fault, TableError, shortened
 from kernelfit.recording.cells import Cells, is_missing
 from kernelfit.recording.recording import SourceFile
@@ -197,7 +198,17 @@ def load_table(given: TableSource, role: str, name: str) -> RawTable:
     if isinstance(given, pd.DataFrame):
         return table_from_frame(given, role, name=name)
     if not isinstance(given, (str, os.PathLike)):
-        raise ArgumentError(f"{role}: expected a path or a DataFrame, got {type(given).__name__}.")
+        raise ArgumentError(
+            f"{role}: {described(given)} is neither a path nor a DataFrame. Give one of these, or build the recording "
+            "from arrays: kf.Recording.from_arrays(...)."
+        )
+    if given == "":
+        raise ArgumentError(f"{role}: the path is empty. Give the path of the file with the {role} in it.")
+    if isinstance(given, str) and given.count("\n") > 1:
+        raise ArgumentError(
+            f"{role}: {described(given)} looks like a table itself. Give the path of a file, or a DataFrame: "
+            "pandas.read_csv(io.StringIO(text), dtype={'unit': str})."
+        )
     path = Path(given)
     data = read_file(path, role, name)
     source = SourceFile(role, name, hashlib.sha256(data).hexdigest())

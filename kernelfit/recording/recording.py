@@ -11,6 +11,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit._validation import described, is_number
 from kernelfit.errors import ArgumentError, RecordingError
 
 if TYPE_CHECKING:
@@ -68,12 +69,23 @@ def _between(start_s: float | None, stop_s: float | None) -> str:
     return start if stop_s is None else f"{start} up to stop_s={clock_text(stop_s)}"
 
 
-def _frozen(values: FloatArray) -> FloatArray:
-    array = np.ascontiguousarray(values, dtype=np.float64)
+def _frozen(values: object, name: str) -> FloatArray:
+    try:
+        array = np.ascontiguousarray(values, dtype=np.float64)
+    except (ValueError, TypeError):
+        raise RecordingError(f"{name}: {described(values)} cannot be made an array of numbers.") from None
     if array.flags.writeable:
         array = array.copy()
         array.setflags(write=False)
     return array
+
+
+def _pairs(values: object, name: str) -> FloatArray:
+    """(n, 2) starts and stops; a flat list holds them in turn."""
+    bounds = _frozen(values, name)
+    if bounds.size % 2:
+        raise RecordingError(f"{name}: {bounds.size} numbers are no pairs of start and stop.")
+    return bounds.reshape(-1, 2)
 
 
 @dataclass(frozen=True, eq=False)
@@ -116,16 +128,16 @@ class Recording:
         if len(set(self.unit_ids)) != n:
             twice = next(u for u in self.unit_ids if self.unit_ids.count(u) > 1)
             raise RecordingError(f"Unit {twice!r} is listed twice. Unit ids must differ.")
-        object.__setattr__(self, "positions", _frozen(np.atleast_2d(self.positions)))
+        object.__setattr__(self, "positions", np.atleast_2d(_frozen(self.positions, "positions")))
         if self.positions.shape[0] != n or not 1 <= self.positions.shape[1] <= 3:
             raise RecordingError(
                 f"positions has shape {self.positions.shape}; {n} units need ({n}, 1), ({n}, 2) or ({n}, 3)."
             )
         if len(self.trains) != n:
             raise RecordingError(f"{len(self.trains)} spike trains for {n} units. Give one per unit.")
-        object.__setattr__(self, "trains", tuple(_frozen(t) for t in self.trains))
-        object.__setattr__(self, "window_bounds", _frozen(np.reshape(self.window_bounds, (-1, 2))))
-        object.__setattr__(self, "exclusion_bounds", _frozen(np.reshape(self.exclusion_bounds, (-1, 2))))
+        object.__setattr__(self, "trains", tuple(_frozen(t, "trains") for t in self.trains))
+        for name in ("window_bounds", "exclusion_bounds"):
+            object.__setattr__(self, name, _pairs(getattr(self, name), name))
         if self.window_bounds.shape[0] == 0:
             raise RecordingError("The recording has no window. Give at least one start and stop.")
 
@@ -139,7 +151,7 @@ class Recording:
         windows: pd.DataFrame | Sequence[tuple[float, float]] | None = None,
         *,
         exclusions: pd.DataFrame | Sequence[tuple[float, float]] | None = None,
-        exclude_pairs: Iterable[tuple[str, str]] = (),
+        exclude_pairs: Iterable[tuple[str, str]] | None = None,
         groups: Sequence[str] | None = None,
         drop_duplicates: bool = False,
     ) -> Recording:
@@ -252,7 +264,7 @@ class Recording:
         """
         try:
             return self._index[unit]
-        except KeyError:
+        except (KeyError, TypeError):  # a list, say, cannot be looked up
             raise RecordingError(self._unknown_unit(unit)) from None
 
     def spike_times(self, unit: str) -> FloatArray:
@@ -304,7 +316,21 @@ class Recording:
         Raises
         ------
         RecordingError : an unknown unit, group or condition, or nothing left
+        ArgumentError : a time or a count that is none
         """
+        for name, ids in (
+            ("units", units),
+            ("groups", groups),
+            ("conditions", conditions),
+            ("source_only", source_only),
+        ):
+            if ids is not None and not isinstance(ids, Iterable):
+                raise ArgumentError(f"{name}: {described(ids)} is no list. Give a list of ids or labels.")
+        for name, time_s in (("start_s", start_s), ("stop_s", stop_s)):
+            if time_s is not None and not is_number(time_s):
+                raise ArgumentError(f"{name}: {described(time_s)} is no time. Give seconds on the recording's clock.")
+        if min_spikes is not None and not is_number(min_spikes):
+            raise ArgumentError(f"min_spikes: {described(min_spikes)} is no count. Give a whole number, such as 50.")
         result = self._in_time(start_s, stop_s, conditions)
         keep = np.ones(self.n_units, dtype=bool)
         if units is not None:
@@ -337,10 +363,10 @@ class Recording:
             have = self.window_conditions
             unknown = wanted - set(have or ())
             if have is None or unknown:
-                known = ", ".join(sorted(set(have))) if have else "none: the windows carry no condition"
+                known = f"Known: {', '.join(sorted(set(have)))}." if have else "The windows have no column 'condition'."
                 raise RecordingError(
                     f"{self.origin.name('windows')}: no condition {', '.join(map(repr, sorted(unknown or wanted)))}. "
-                    f"Known: {known}."
+                    f"{known}"
                 )
             keep &= np.array([c in wanted for c in have])
         if start_s is not None:
@@ -370,10 +396,9 @@ class Recording:
         have = self.groups
         unknown = set(wanted) - set(have or ())
         if have is None or unknown:
-            known = ", ".join(sorted(set(have))) if have else "none: the sites table has no column 'group'"
+            known = f"Known: {', '.join(sorted(set(have)))}." if have else "The sites have no column 'group'."
             raise RecordingError(
-                f"{self.origin.name('sites')}: no group {', '.join(map(repr, sorted(unknown or set(wanted))))}. "
-                f"Known: {known}."
+                f"{self.origin.name('sites')}: no group {', '.join(map(repr, sorted(unknown or set(wanted))))}. {known}"
             )
         return np.array([g in set(wanted) for g in have], dtype=bool)
 
@@ -398,10 +423,14 @@ class Recording:
         Raises
         ------
         ArgumentError : a stretch that is not finite or does not end after it starts
+        RecordingError : no pairs of numbers
         """
         if isinstance(exclusions, pd.DataFrame):
-            exclusions = exclusions[["start_s", "stop_s"]].to_numpy(dtype=np.float64)
-        bounds = np.reshape(np.asarray(exclusions, dtype=np.float64), (-1, 2))
+            absent = [c for c in ("start_s", "stop_s") if c not in exclusions.columns]
+            if absent:
+                raise RecordingError(f"exclusions: there is no column {' and no column '.join(map(repr, absent))}.")
+            exclusions = exclusions[["start_s", "stop_s"]].to_numpy()
+        bounds = _pairs(exclusions, "exclusions")
         bad = ~np.isfinite(bounds).all(axis=1) | (bounds[:, 1] <= bounds[:, 0])
         if bad.any():
             k = int(np.flatnonzero(bad)[0])
@@ -420,4 +449,18 @@ class Recording:
         return (
             f"Recording({self.n_units} units, {self.n_coordinates} coordinates, {self.n_spikes} spikes in "
             f"{len(self.window_bounds)} window{'s' * (len(self.window_bounds) != 1)} of {clock_text(self.duration)} s)"
+        )
+
+
+def check_recording(given: object) -> None:
+    """Refuse what is not a recording, such as the path of one.
+
+    Raises
+    ------
+    ArgumentError : not a `Recording`
+    """
+    if not isinstance(given, Recording):
+        raise ArgumentError(
+            f"recording: {described(given)} is not a recording. Read one with kf.read_recording(spikes, sites), or "
+            "build it with kf.Recording.from_arrays(...)."
         )

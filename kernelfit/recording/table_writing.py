@@ -12,9 +12,10 @@ from pathlib import Path
 import numpy as np
 
 from kernelfit._typing import FloatArray
-from kernelfit.errors import OutputError, RecordingError
+from kernelfit._validation import described
+from kernelfit.errors import ArgumentError, OutputError, RecordingError
 from kernelfit.recording.cells import read_labels
-from kernelfit.recording.recording import COORDINATES, Recording
+from kernelfit.recording.recording import COORDINATES, Recording, check_recording
 
 TABLE_FILES = ("spikes.csv", "sites.csv", "windows.csv", "exclusions.csv", "exclude_pairs.csv")
 
@@ -44,6 +45,7 @@ def write_recording(recording: Recording, folder: str | os.PathLike[str], *, ove
     Raises
     ------
     OutputError : the folder is not empty, or cannot be written
+    ArgumentError : no recording, or no path
     RecordingError : an id or label that a table cannot hold (empty, line breaks, blanks at its ends)
 
     Examples
@@ -55,6 +57,9 @@ def write_recording(recording: Recording, folder: str | os.PathLike[str], *, ove
     >>> read_recording(folder / "spikes.csv", folder / "sites.csv", folder / "windows.csv").n_spikes
     3
     """
+    check_recording(recording)
+    if not isinstance(folder, (str, os.PathLike)):
+        raise ArgumentError(f"folder: {described(folder)} is no path. Name a folder for the tables.")
     tables = dict(zip(TABLE_FILES, _table_lines(recording), strict=True))
     target = Path(folder).resolve()
     _check_target(target, overwrite)

@@ -9,6 +9,7 @@ from pathlib import Path
 import numpy as np
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import check_truth_value
 from kernelfit.errors import Fault, TableError
 from kernelfit.recording.array_tables import recording_from_arrays
 from kernelfit.recording.assembling import Parts, assembled
@@ -80,8 +81,9 @@ def read_recording(
     TableError : anything wrong in the tables; every fault of every table, with file, row, column, value,
         remedy. Rows count lines as an editor does; rows of DataFrames and Parquet count from 0
     RecordingError : windows that hold no spike
-    ArgumentError : an unknown unit of measure, a sampling rate that is missing or out of place
+    ArgumentError : an unknown unit of measure, a sampling rate that is missing or out of place, no path
     """
+    check_truth_value(drop_duplicates, "drop_duplicates")
     measures = Measures(time_unit, sampling_rate_hz, length_unit, decimal)
     given: dict[str, TableSource] = {"spikes": spikes, "sites": sites}
     for role, source in (("windows", windows), ("exclusions", exclusions), ("exclude_pairs", exclude_pairs)):

@@ -11,6 +11,8 @@ import pytest
 
 import kernelfit as kf
 from kernelfit.errors import ArgumentError, RecordingError
+from kernelfit.recording.grid import make_grid
+from kernelfit.recording.inspection import inspect_recording
 from kernelfit.recording.recording import Origin, SourceFile
 
 
@@ -220,9 +222,9 @@ def test_selections_that_are_refused(rec, asked, message):
 
 def test_groups_and_conditions_that_were_never_given():
     bare = kf.Recording.from_arrays({"a": [1.0]}, [0.0])
-    with pytest.raises(RecordingError, match="none: the sites table has no column 'group'"):
+    with pytest.raises(RecordingError, match="The sites have no column 'group'"):
         bare.select(groups=["on"])
-    with pytest.raises(RecordingError, match="none: the windows carry no condition"):
+    with pytest.raises(RecordingError, match="The windows have no column 'condition'"):
         bare.select(conditions=["drug"])
 
 
@@ -242,3 +244,90 @@ def test_with_exclusions_replaces_and_sorts(rec, given):
 def test_exclusions_that_are_no_stretches(rec, bad):
     with pytest.raises(ArgumentError, match="is not a stretch with stop after start"):
         rec.with_exclusions(np.array(bad))
+
+
+# --- calls that cannot be meant: refused in words, never by a traceback from inside a library ----------------
+
+TWO = {"a": [0.1, 0.5, 1.2], "b": [0.3, 0.7, 1.1]}
+PLACES = [[0.0, 0.0], [100.0, 0.0]]
+
+BAD_CALLS = {
+    "nothing for spikes": (
+        lambda r: kf.Recording.from_arrays(None, PLACES),
+        "spike_times_s is None. Give a",
+    ),
+    "words for times": (
+        lambda r: kf.Recording.from_arrays({"a": "0.1", "b": [1.0]}, PLACES),
+        "spike_times_s['a'] is the text '0.1'. Give plain numbers",
+    ),
+    "no times": (lambda r: kf.Recording.from_arrays({"a": None, "b": [1.0]}, PLACES), "spike_times_s['a'] is None."),
+    "one number": (
+        lambda r: kf.Recording.from_arrays({"a": 1.0, "b": [1.0]}, PLACES),
+        "spike_times_s['a'] is a single number. Give a flat list",
+    ),
+    "dates": (
+        lambda r: kf.Recording.from_arrays({"a": np.array(["2026-01-01"], dtype="M8[s]"), "b": [1.0]}, PLACES),
+        "spike_times_s['a'] holds dates, not numbers.",
+    ),
+    "no positions": (lambda r: kf.Recording.from_arrays(TWO, None), "positions_um is None. Give plain numbers"),
+    "a word for positions": (lambda r: kf.Recording.from_arrays(TWO, "here"), "positions_um is the text 'here'."),
+    "a path for windows": (
+        lambda r: kf.Recording.from_arrays(TWO, PLACES, "w.csv"),
+        "windows is the text 'w.csv'. Give plain numbers; tables are read by kf.read_recording.",
+    ),
+    "one window without brackets": (
+        lambda r: kf.Recording.from_arrays(TWO, PLACES, (0.0, 2.0)),
+        "windows has shape (2,). Give pairs of start and stop in seconds, such as [(0.0, 60.0)",
+    ),
+    "a number for windows": (lambda r: kf.Recording.from_arrays(TWO, PLACES, 5), "windows is a single number."),
+    "one pair without brackets": (
+        lambda r: kf.Recording.from_arrays(TWO, PLACES, exclude_pairs=("a", "b")),
+        "exclude_pairs holds the text 'a'. Give pairs of unit ids, such as [('u01', 'u02')].",
+    ),
+    "a number for pairs": (
+        lambda r: kf.Recording.from_arrays(TWO, PLACES, exclude_pairs=5),
+        "exclude_pairs is 5. Give pairs",
+    ),
+    "a number for groups": (lambda r: kf.Recording.from_arrays(TWO, PLACES, groups=5), "groups is 5. Give a list"),
+    "words to the constructor": (
+        lambda r: kf.Recording(("a", "b"), PLACES, (["x"], [1.0]), [(0.0, 1.0)]),
+        "trains: a list cannot be made an array of numbers.",
+    ),
+    "a word for its positions": (
+        lambda r: kf.Recording(("a", "b"), "x", ([1.0], [1.0]), [(0.0, 1.0)]),
+        "positions: the text 'x' cannot be made an array of numbers.",
+    ),
+    "half a window": (
+        lambda r: kf.Recording(("a", "b"), PLACES, ([1.0], [1.0]), [0.0, 1.0, 2.0]),
+        "window_bounds: 3 numbers are no pairs of start and stop.",
+    ),
+    "a number for units": (lambda r: r.select(units=5), "units: 5 is no list. Give a list of ids or labels."),
+    "a word for a count": (lambda r: r.select(min_spikes="many"), "min_spikes: the text 'many' is no count."),
+    "a word for a time": (lambda r: r.select(start_s="5"), "start_s: the text '5' is no time."),
+    "no time": (lambda r: r.select(stop_s=float("nan")), "stop_s: nan is no time. Give seconds"),
+    "a list for a unit": (lambda r: r.spike_times(["a"]), "no unit ['a'] among its 2 units."),
+    "a path for exclusions": (lambda r: r.with_exclusions("x.csv"), "exclusions: the text 'x.csv' cannot be made"),
+    "half an exclusion": (lambda r: r.with_exclusions([1.0, 2.0, 3.0]), "exclusions: 3 numbers are no pairs"),
+    "other columns": (
+        lambda r: r.with_exclusions(pd.DataFrame({"from": [1.0], "to": [2.0]})),
+        "exclusions: there is no column 'start_s' and no column 'stop_s'.",
+    ),
+    "a path for a recording": (lambda r: make_grid("s.csv", 0.001), "recording: the text 's.csv' is not a recording."),
+    "nothing to look at": (lambda r: inspect_recording(None), "recording: None is not a recording."),
+    "a word for a seed": (lambda r: inspect_recording(r, seed="x"), "seed: the text 'x' is no seed."),
+    "nothing to write": (lambda r: kf.write_recording(None, "folder"), "recording: None is not a recording."),
+    "nowhere to write": (lambda r: kf.write_recording(r, None), "folder: None is no path."),
+}
+
+
+@pytest.mark.parametrize("call", BAD_CALLS.values(), ids=BAD_CALLS.keys())
+def test_calls_that_cannot_be_meant_are_refused_in_words(call):
+    make, words = call
+    with pytest.raises(kf.KernelfitError) as caught:
+        make(kf.Recording.from_arrays(TWO, PLACES, [(0.0, 2.0)]))
+    assert words in str(caught.value)
+    assert len(str(caught.value)) < 300
+
+
+def test_no_pairs_may_be_said_as_none():
+    assert kf.Recording.from_arrays(TWO, PLACES, exclude_pairs=None).excluded_pairs == ()

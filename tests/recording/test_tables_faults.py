@@ -514,7 +514,28 @@ def test_options_out_of_range(tmp_path, options, message):
     assert message in str(caught.value)
 
 
-@pytest.mark.parametrize("given", [None, 7, ["spikes.csv"], b"spikes.csv"])
-def test_neither_path_nor_frame(tmp_path, given):
-    with pytest.raises(ArgumentError, match="spikes: expected a path or a DataFrame, got"):
+@pytest.mark.parametrize(
+    ("given", "words"),
+    [
+        (None, "spikes: None is neither a path nor a DataFrame."),
+        (7, "spikes: 7 is neither a path"),
+        (["spikes.csv"], "spikes: a list is neither a path"),
+        ({"unit": ["u1"], "time_s": [1.0]}, "spikes: a dictionary is neither a path"),
+        (b"spikes.csv", "spikes: bytes is neither a path"),
+        ("", "spikes: the path is empty."),
+        (SPIKES, "looks like a table itself. Give the path of a file, or a DataFrame"),
+    ],
+)
+def test_neither_path_nor_frame(tmp_path, given, words):
+    with pytest.raises(ArgumentError) as caught:
         kf.read_recording(given, write(tmp_path)["sites"])
+    assert words in str(caught.value)
+    assert len(str(caught.value)) < 300
+
+
+def test_a_word_is_no_truth_value(tmp_path):
+    """ "no" counts as true in Python: duplicates would be dropped unasked."""
+    with pytest.raises(ArgumentError, match="drop_duplicates: the text 'no' is neither True nor False"):
+        kf.read_recording(**write(tmp_path), drop_duplicates="no")
+    with pytest.raises(ArgumentError, match="drop_duplicates: 1 is neither True nor False"):
+        kf.Recording.from_arrays({"a": [1.0]}, [0.0], drop_duplicates=1)

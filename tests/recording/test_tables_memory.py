@@ -113,11 +113,11 @@ BAD_FRAMES = {
     ),
     "a float among ids": (
         {"unit": ["u1", 2.5], "time_s": [1.0, 2.0]},
-        "row 1, column unit: '2.5': A float, and ids are text.",
+        "row 1, column unit: '2.5': A number with decimals, and ids are text.",
     ),
     "truth values for ids": (
         {"unit": [True, False], "time_s": [1.0, 2.0]},
-        "row 0, column unit: 'True': A bool, and ids are text.",
+        "row 0, column unit: 'True': A truth value, and ids are text.",
     ),
     "no id": ({"unit": ["u1", None], "time_s": [1.0, 2.0]}, "row 1, column unit", "Empty cell where an id is needed."),
     "nan": ({"unit": ["u1", "u1"], "time_s": [1.0, np.nan]}, "row 1, column time_s: 'nan': Missing value."),
@@ -130,11 +130,18 @@ BAD_FRAMES = {
     "too large an integer": ({"unit": ["u1"], "time_s": [10**400]}, "column time_s", "Not a finite number."),
     "dates": (
         {"unit": ["u1"], "time_s": [pd.Timestamp("2026-01-01")]},
-        "column time_s: '2026-01-01 00:00:00': A Timestamp, not a number.",
+        "column time_s: '2026-01-01 00:00:00': A date instead of a plain number.",
     ),
-    "durations": ({"unit": ["u1"], "time_s": [pd.Timedelta("1s")]}, "column time_s", "A Timedelta, not a number."),
-    "truth values": ({"unit": ["u1"], "time_s": [True]}, "column time_s: 'True': A bool, not a number."),
-    "complex": ({"unit": ["u1"], "time_s": [1j]}, "column time_s: '1j': A complex, not a number."),
+    "durations": (
+        {"unit": ["u1"], "time_s": [pd.Timedelta("1s")]},
+        "column time_s",
+        "A length of time instead of a plain",
+    ),
+    "truth values": (
+        {"unit": ["u1"], "time_s": [True]},
+        "column time_s: 'True': A truth value instead of a plain",
+    ),
+    "complex": ({"unit": ["u1"], "time_s": [1j]}, "column time_s: '1j': A complex number instead of a plain number."),
     "duplicate": (
         {"unit": ["u1", "u2", "u1"], "time_s": [1.0, 1.0, 1.0]},
         "row 2, column time_s: '1.0': Unit 'u1' has a spike at this time already in row 0.",
@@ -291,11 +298,11 @@ def test_the_hashes_follow_the_contents():
             "positions_um cannot be made an array of numbers",
         ),
         ({"a": [[1.0]]}, [0.0], {}, RecordingError, "spike_times_s['a'] has shape (1, 1)."),
-        ({"a": ["1.0"]}, [0.0], {}, RecordingError, "spike_times_s['a'] holds str"),
-        ({"a": ["1.0", None]}, [0.0], {}, RecordingError, "spike_times_s['a'] holds object, not numbers"),
-        ({"a": [True]}, [0.0], {}, RecordingError, "spike_times_s['a'] holds bool, not numbers"),
+        ({"a": ["1.0"]}, [0.0], {}, RecordingError, "spike_times_s['a'] holds text, not numbers"),
+        ({"a": ["1.0", None]}, [0.0], {}, RecordingError, "spike_times_s['a'] holds text, not numbers"),
+        ({"a": [True]}, [0.0], {}, RecordingError, "spike_times_s['a'] holds truth values, not numbers"),
         ({}, [], {}, RecordingError, "spike_times_s holds no units"),
-        ([[1.0]], [0.0], {}, RecordingError, "spike_times_s is a list. Give a mapping"),
+        ([[1.0]], [0.0], {}, RecordingError, "spike_times_s is a list. Give a dictionary from unit id to spike times"),
         ({"a": []}, [0.0], {}, RecordingError, "the recording holds no spikes"),
         (
             {"a": [1.0], " a": [2.0]},
@@ -305,15 +312,15 @@ def test_the_hashes_follow_the_contents():
             "'a': Two units have this id (blanks around ids do not count).",
         ),
         ({"": [1.0]}, [0.0], {}, TableError, "column unit: '': Empty cell"),
-        ({7.0: [1.0]}, [0.0], {}, TableError, "column unit: '7.0': A float, and ids are text."),
+        ({7.0: [1.0]}, [0.0], {}, TableError, "column unit: '7.0': A number with decimals, and ids are text."),
         (
             {"a": [1.0]},
             [0.0],
             {"groups": ["x", "y"]},
             RecordingError,
-            "groups needs one label for each of the 1 units, got 2",
+            "groups holds 2 labels for 1 units. Give one for each.",
         ),
-        ({"a": [1.0]}, [0.0], {"groups": "x"}, RecordingError, "groups needs one label"),
+        ({"a": [1.0]}, [0.0], {"groups": "x"}, RecordingError, "groups is the text 'x'. Give a list"),
         (
             {"a": [1.0]},
             [0.0],
@@ -350,7 +357,13 @@ def test_the_hashes_follow_the_contents():
             TableError,
             "exclude_pairs table (rows counted from 0), row 0, column unit_b: 'b': The unit is not in spike_times_s.",
         ),
-        ({"a": [1.0]}, [0.0], {"exclude_pairs": ["ab"]}, ArgumentError, "exclude_pairs holds 'ab'. Give pairs"),
+        (
+            {"a": [1.0]},
+            [0.0],
+            {"exclude_pairs": ["ab"]},
+            ArgumentError,
+            "exclude_pairs holds the text 'ab'.",
+        ),
     ],
 )
 def test_bad_arrays(times, positions, options, error, message):
