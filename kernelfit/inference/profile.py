@@ -1,9 +1,9 @@
 """Profile likelihood: every value of one parameter that a likelihood-ratio test keeps, everything else re-estimated.
 
 Two kinds of interval come from one curve. "Model" takes the drop of the log-likelihood as it is and cuts twice the drop
-at the chi-square quantile of one degree of freedom. "Robust" divides the drop by the ratio of the robust to the
-model-based variance of the parameter (vertical scaling) and cuts it at the squared t quantile of the blocks of time:
-that is the interval to believe where waves and slow states make bins depend on each other.
+at the chi-square quantile of one degree of freedom. "Robust" divides the drop by the ratio of the robust variance of
+the parameter to the one that the curve implies (vertical scaling) and cuts it at the squared t quantile of the blocks
+of time: that is the interval to believe where waves and slow states make bins depend on each other.
 
 References
 ----------
@@ -35,7 +35,7 @@ from kernelfit.inference.profile_conditions import (
 from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.profile_walk import Walk, Walked, farther, walk
 from kernelfit.inference.scales import natural_values, shared_names
-from kernelfit.inference.scaling import Scaling, scaling_at, variance_scaling
+from kernelfit.inference.scaling import Scaling, scaling_at, scaling_by
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -56,7 +56,8 @@ class Profile:
     level : coverage of the intervals
     interval : by the drop as it is
     scaled : by the drop over `variance_ratio`, or the reason why it cannot be had
-    variance_ratio : robust over model-based variance of the parameter; NaN where `scaled` cannot be had
+    variance_ratio : robust variance of the parameter over the one that the curve implies; NaN where `scaled` cannot be
+        had
     on_log : whether the curve is near a parabola over the logarithm of the value
     penalised : whether the curve is of the penalised log-likelihood
     notes : what a reader must know
@@ -113,12 +114,10 @@ def profile_parameter(
     held = hold(problem, fit.shared, name)
     if isinstance(held, Unavailable):
         return held
-    scaling = variance_scaling(fit, held, level)
     if fit.at_bound[held.gradient(fit.shared) != 0].any():
         walked, scaling = _from_a_bound(fit, held, cut, level, n_points)
     else:
-        cuts = [cut.root, *([scaling.root_cut(cut.widened)] if isinstance(scaling, Scaling) else [])]
-        walked = walk(held, held.into(fit.estimate), np.array(cuts), n_points)
+        walked, scaling = _from_the_top(fit, held, cut, level, n_points)
     if isinstance(walked, Unavailable):
         return walked
     model = walked.interval("model", cut.root, with_zero=cut.with_zero)
@@ -145,11 +144,26 @@ def profile_parameter(
     )
 
 
+def _from_the_top(
+    fit: CouplingFit, held: Held, cut: Cut, level: float, n_points: int
+) -> tuple[Walked | Unavailable, Scaling | Unavailable]:
+    """The walk of a parameter, and how the robust kind scales it."""
+    scaling: Scaling | Unavailable = Unavailable("")
+
+    def cuts(here: Walk) -> list[float]:
+        nonlocal scaling
+        scaling = scaling_by(fit, fit.uncertainty, held, here, level)
+        return [cut.root, *([scaling.root_cut(cut.widened)] if isinstance(scaling, Scaling) else [])]
+
+    walked = walk(held, held.into(fit.estimate), cuts, n_points)
+    return walked, scaling
+
+
 def _from_a_bound(
     fit: CouplingFit, held: Held, cut: Cut, level: float, n_points: int
 ) -> tuple[Walked | Unavailable, Scaling | Unavailable]:
     """The walk of a parameter whose estimate sits at its bound, its variances taken where the likelihood falls."""
-    walked = walk(held, held.into(fit.estimate), np.array([cut.root]), n_points)
+    walked = walk(held, held.into(fit.estimate), lambda _: [cut.root], n_points)
     if isinstance(walked, Unavailable):
         return walked, walked
     ends = [c.x for c in walked.crossings.values() if c.x is not None]

@@ -27,9 +27,9 @@ from kernelfit.inference.held import Held, hold
 from kernelfit.inference.profile_conditions import check_converged, check_level, model_cut
 from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.profile_point import point_of
-from kernelfit.inference.profile_walk import walk
+from kernelfit.inference.profile_walk import Walk, walk
 from kernelfit.inference.scales import shared_names
-from kernelfit.inference.scaling import Scaling, scaling_by, too_few_blocks
+from kernelfit.inference.scaling import Scaling, scaling_by
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -236,11 +236,15 @@ def _at_length(fit: CouplingFit, held: Held, length_um: float, level: float, sta
     optimum = maximise(problem, Estimate(start.own, shared), held=beside)
     estimate = optimum.estimate
     spread = covariances(problem, optimum)
-    gradient = held.gradient(estimate.shared)
-    scaling = too_few_blocks(spread) or scaling_by(fit, spread, gradient, level, AMPLITUDE_NAME)
     cut = model_cut(fit, AMPLITUDE_NAME, level)
-    cuts = [cut.root, *([scaling.root_cut(cut.widened)] if isinstance(scaling, Scaling) else [])]
-    walked = walk(held, estimate, np.array(cuts), WALK_POINTS, point_of(held, optimum))
+    scaling: Scaling | Unavailable = Unavailable("")
+
+    def cuts(here: Walk) -> list[float]:
+        nonlocal scaling
+        scaling = scaling_by(fit, spread, held, here, level)
+        return [cut.root, *([scaling.root_cut(cut.widened)] if isinstance(scaling, Scaling) else [])]
+
+    walked = walk(held, estimate, cuts, WALK_POINTS, point_of(held, optimum))
     model: ProfileInterval | Unavailable
     scaled: ProfileInterval | Unavailable
     if isinstance(walked, Unavailable):
@@ -251,7 +255,7 @@ def _at_length(fit: CouplingFit, held: Held, length_um: float, level: float, sta
         if isinstance(scaling, Unavailable):
             scaled = scaling
         else:
-            scaled = walked.interval("robust", cuts[1], scaling.ratio, with_zero=cut.with_zero)
+            scaled = walked.interval("robust", scaling.root_cut(cut.widened), scaling.ratio, with_zero=cut.with_zero)
     row = _Row(
         length_um=length_um,
         estimate=float(estimate.shared[held.place]),

@@ -1,15 +1,13 @@
 """The likelihood over two parameters at once, everything else climbed: a surface on a grid, and where to cut it.
 
-The grid covers the widest region asked for: what is known from the profiles of either parameter gives its sides, and
-from their points and those of the grid itself the others are foreseen at each further point, so that most take a single
-sweep. The robust kind divides the drop, in each direction from the top, by the ratio of the two quadratic forms
+The robust kind divides the drop, in each direction from the top, by the ratio of the two quadratic forms
 (Chandler and Bate 2007, Biometrika 94, 167-183, section 3).
 """
 
 from __future__ import annotations
 
 import time
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -18,30 +16,19 @@ from scipy.stats import chi2
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.errors import ArgumentError, Unavailable
-from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.outcome import Note
-from kernelfit.fitting.problem import Estimate, Problem
+from kernelfit.fitting.problem import Problem
 from kernelfit.fitting.progress import ProgressCallback
-from kernelfit.inference.held import Held, hold
 from kernelfit.inference.profile_conditions import check_call, discrete_names, fixed_leak, profile_notes
-from kernelfit.inference.profile_point import (
-    POINT_ITERATIONS,
-    POINT_TOLERANCE,
-    PathPoint,
-    foreseen_in_plane,
-    settled,
-)
-from kernelfit.inference.profile_walk import BETTER, Walked, walk
-from kernelfit.inference.scaling import PlaneScaling, plane_scaling
+from kernelfit.inference.profile_surface import LEVELS, WALK_POINTS, Surface, hold_both, surface_of
+from kernelfit.inference.profile_walk import BETTER
+from kernelfit.inference.scaling import robust_covariance
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
     from kernelfit.recording.recording import Recording
 
 N_GRID = 11  # points along each side
-LEVELS = (0.50, 0.90, 0.95)
-WALK_POINTS = 4
-NEIGHBOURS = 12  # points from which the next is foreseen
 
 
 @dataclass(frozen=True, eq=False)
@@ -114,16 +101,17 @@ def profile_contour(
     problem = fit.problem(recording, threads=threads)
     problem.clock.callback, problem.clock.stage = progress, f"contour of {names[0]} and {names[1]}"
     problem.clock.expected_sweeps = int(1.3 * n_points**2) + 8 * WALK_POINTS
-    pair = _hold_both(problem, fit.shared, names)
+    pair = hold_both(problem, fit.shared, names)
     if isinstance(pair, Unavailable):
         return pair
     gradients = np.array([h.gradient(fit.shared) for h in pair.single])
-    scaling = plane_scaling(fit, gradients, bool(problem.penalty.any()))
-    surface = _surface(fit, pair, scaling, n_points)
+    robust = robust_covariance(fit, fit.uncertainty, gradients)
+    surface = surface_of(fit, pair, robust, n_points)
     if isinstance(surface, Unavailable):
         return surface
     first, second = pair.single
     scaled: FloatArray | Unavailable
+    scaling = surface.scaling
     if isinstance(scaling, Unavailable):
         scaled, cuts = scaling, np.full(len(LEVELS), np.nan)
     else:
@@ -149,127 +137,7 @@ def profile_contour(
     )
 
 
-@dataclass(frozen=True, eq=False)
-class _Pair:
-    """Two parameters held at once: each by itself, and the problem in which both are coordinates.
-
-    `both` is the one of the two (`base` says which) that may have needed other coordinates, the other held beside it.
-    """
-
-    single: tuple[Held, Held]
-    both: Held
-    base: int
-    places: tuple[int, int]
-
-    def point(self, x: float, y: float, start: Estimate) -> _Point:
-        """Climb everything else."""
-        shared = start.shared.copy()
-        shared[list(self.places)] = x, y
-        # in changed coordinates the bounds of the others follow from the value that is held
-        problem = self.both.at((x, y)[self.base])
-        optimum = maximise(
-            problem,
-            Estimate(start.own, shared),
-            held=self.both.mask,
-            tolerance=POINT_TOLERANCE,
-            max_iterations=POINT_ITERATIONS,
-        )
-        objective, estimate = settled(problem, optimum)
-        return _Point(x, y, objective, estimate, optimum.converged)
-
-    def from_walk(self, k: int, point: PathPoint) -> _Point:
-        """A point of the profile of parameter k, as one of the surface."""
-        estimate = self.both.into(self.single[k].back(point.estimate))
-        x, y = (float(estimate.shared[p]) for p in self.places)
-        return _Point(x, y, point.objective, estimate, point.converged)
-
-
-@dataclass(frozen=True, eq=False)
-class _Point:
-    x: float
-    y: float
-    objective: float
-    estimate: Estimate
-    converged: bool
-
-
-@dataclass(frozen=True, eq=False)
-class _Surface:
-    x: FloatArray
-    y: FloatArray
-    top: tuple[float, float]
-    best: float
-    drop: FloatArray
-    converged: BoolArray
-    walks: tuple[Walked, Walked]
-
-
-def _hold_both(problem: Problem, shared: FloatArray, names: tuple[str, str]) -> _Pair | Unavailable:
-    first = hold(problem, shared, names[0])
-    if isinstance(first, Unavailable):
-        return first
-    second = hold(problem, shared, names[1], (first.place,))
-    if isinstance(second, Unavailable):
-        second = hold(problem, shared, names[1])
-        if isinstance(second, Unavailable):
-            return second
-        again = hold(problem, shared, names[0], (second.place,))
-        if isinstance(again, Unavailable):
-            return again
-        first = again
-    if first.problem is not problem and second.problem is not problem:
-        return Unavailable(f"{names[0]} and {names[1]} both mix several parameters, and cannot be held together")
-    base = int(second.problem is not problem)
-    places = (first.place, second.place)
-    one = (first, second)[base]
-    both = replace(one, beside=(*one.beside, places[1 - base]))
-    return _Pair((first, second), both, base, places)
-
-
-def _surface(
-    fit: CouplingFit, pair: _Pair, scaling: PlaneScaling | Unavailable, n_points: int
-) -> _Surface | Unavailable:
-    walks: list[Walked] = []
-    for k, held in enumerate(pair.single):
-        cuts = [float(np.sqrt(chi2.ppf(LEVELS[-1], 2)))]
-        if isinstance(scaling, PlaneScaling):
-            cuts.append(float(np.sqrt(scaling.cut(LEVELS[-1]) * scaling.ratio(k))))
-        walked = walk(held, held.into(fit.estimate), np.array(cuts), WALK_POINTS)
-        if isinstance(walked, Unavailable):
-            return walked
-        walks.append(walked)
-    known = [pair.from_walk(k, p) for k, walked in enumerate(walks) for p in walked.walk.points]
-    sides = [np.linspace(w.walk.points[0].x, w.walk.points[-1].x, n_points) for w in walks]
-    objective, converged = np.full((n_points, n_points), np.nan), np.zeros((n_points, n_points), dtype=bool)
-    size = np.array([np.ptp(side) for side in sides])
-    for i, j in _snake(n_points):
-        x, y = float(sides[0][i]), float(sides[1][j])
-        near = sorted(known, key=lambda p: np.hypot((p.x - x) / size[0], (p.y - y) / size[1]))[:NEIGHBOURS]
-        steps = np.array([[(p.x - x) / size[0], (p.y - y) / size[1]] for p in near])
-        point = pair.point(x, y, foreseen_in_plane(steps, [p.estimate for p in near]))
-        if not point.converged:
-            again = pair.point(x, y, near[0].estimate)
-            point = max(point, again, key=lambda p: (p.converged, p.objective))
-        objective[i, j], converged[i, j] = point.objective, point.converged
-        if np.isfinite(point.objective):
-            known.append(point)
-    best = max(known, key=lambda p: p.objective)
-    drop = best.objective - objective
-    return _Surface(sides[0], sides[1], (best.x, best.y), best.objective, drop, converged, (walks[0], walks[1]))
-
-
-def _snake(n: int) -> list[tuple[int, int]]:
-    """Rows of a square grid from the middle to one side, then to the other; each begins where the last one ended."""
-    middle = n // 2
-    rows = [*range(middle, n), *range(middle - 1, -1, -1)]
-    path: list[tuple[int, int]] = []
-    for k, i in enumerate(rows):
-        along = range(n) if k % 2 == 0 else range(n - 1, -1, -1)
-        path += [(i, j) for j in along]
-    return path
-
-
-def _notes(fit: CouplingFit, problem: Problem, names: tuple[str, str], surface: _Surface) -> tuple[Note, ...]:
+def _notes(fit: CouplingFit, problem: Problem, names: tuple[str, str], surface: Surface) -> tuple[Note, ...]:
     where = " and ".join(names)
     notes: list[Note] = []
     for name, walked in zip(names, surface.walks, strict=True):

@@ -35,7 +35,7 @@ class PathPoint:
     converged: bool  # whether the others reached their top
 
 
-def path_point(held: Held, x: float, start: Estimate) -> PathPoint:
+def path_point(held: Held, x: float, start: Estimate, tolerance: float = POINT_TOLERANCE) -> PathPoint:
     """Climb everything else from `start` with x held."""
     problem = held.at(x)
     shared = start.shared.copy()
@@ -44,7 +44,7 @@ def path_point(held: Held, x: float, start: Estimate) -> PathPoint:
         problem,
         Estimate(start.own, shared),
         held=held.mask,
-        tolerance=POINT_TOLERANCE,
+        tolerance=tolerance,
         max_iterations=POINT_ITERATIONS,
     )
     return point_of(held, optimum)

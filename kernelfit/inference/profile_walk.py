@@ -8,6 +8,7 @@ where the root is.
 from __future__ import annotations
 
 from bisect import insort
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
@@ -27,6 +28,8 @@ FARTHEST = 1e3  # first steps: an amplitude that has not been refused by then is
 MOST_REFINEMENTS = 40
 HASTE = 4  # roots of cubics tried before a bracket is halved where they do not close in
 MOST_HALVINGS = 40
+NEARBY = 0.2  # standard errors from the top, where slopes are taken for its curvature
+TIGHT_POINT = 1e-8
 TOO_NEAR = 0.3  # of the first target: a target this near to the last point is passed over
 OVERSHOOT = 1.06  # the walk ends a little beyond the last cut
 BETTER = 1e-2  # log-likelihood units above the fit: another optimum, and no rounding
@@ -72,9 +75,7 @@ class Walk:
     def try_at(self, x: float) -> PathPoint:
         """One more point, from where the known ones say the others stand. Raises BetterOptimumError."""
         near = sorted(self.points, key=lambda p: abs(p.x - x))
-        start = foreseen(near[:4], x)
-        beside = list(self.held.beside)
-        start.shared[beside] = self.top.estimate.shared[beside]  # not left to the rounding of a weighted sum
+        start = self._start(near[:4], x)
         point = path_point(self.held, x, start)
         astray = not point.converged or self.drop(point) > 4.0 * max(self._expected_drop(near[0], x), 1.0)
         if astray:  # foreseen too boldly: from the neighbour itself
@@ -90,6 +91,22 @@ class Walk:
         """Points from the top outwards on one side (-1 lower, 1 upper), the top first."""
         outward = [p for p in self.points if sign * (p.x - self.top.x) >= 0.0]
         return sorted(outward, key=lambda p: sign * p.x)
+
+    def curvature(self) -> float:
+        """Observed curvature of the objective at the top, everything else climbed: from the slopes on either side.
+
+        Expected curvature where x may not move to both sides. The two points join the others.
+        """
+        step = NEARBY / float(np.sqrt(self.top.curvature))
+        places = [self.top.x + sign * step for sign in (-1, 1)]
+        if places[0] < self.limit(-1) or places[1] > self.limit(1):
+            return self.top.curvature
+        sides: list[PathPoint] = []
+        for x in places:
+            sides.append(path_point(self.held, x, self._start([self.top, *sides], x), TIGHT_POINT))
+        self.points = [sides[0], *self.points, sides[1]]
+        observed = (sides[0].slope - sides[1].slope) / (2.0 * step)
+        return observed if observed > 0.0 else self.top.curvature
 
     def out(self, sign: int, targets: FloatArray) -> None:
         """Walk out on one side, from target to target.
@@ -136,6 +153,12 @@ class Walk:
                 break
             self.try_at(x if n < HASTE or n % 2 else 0.5 * (a.x + b.x))
         return Crossing(x, goal, x, False)
+
+    def _start(self, known: list[PathPoint], x: float) -> Estimate:
+        start = foreseen(known, x)
+        beside = list(self.held.beside)
+        start.shared[beside] = self.top.estimate.shared[beside]  # not left to the rounding of a weighted sum
+        return start
 
     # --- foreseeing -------------------------------------------------------------------------------------
 
@@ -203,7 +226,11 @@ class Walked:
 
 
 def walk(
-    held: Held, start: Estimate, cuts: FloatArray, n_points: int, top: PathPoint | None = None
+    held: Held,
+    start: Estimate,
+    choose_cuts: Callable[[Walk], Sequence[float]],
+    n_points: int,
+    top: PathPoint | None = None,
 ) -> Walked | Unavailable:
     """Walk a profile out to the farthest cut on both sides, and find where it crosses each.
 
@@ -211,13 +238,12 @@ def walk(
     ----------
     held : the parameter
     start : the optimum, in the coordinates of `held`
-    cuts : roots of twice the drop
+    choose_cuts : roots of twice the drop, from the walk at its top
     n_points : aimed at on each side
     top : the point at the optimum, where it is known
     """
     top = path_point(held, float(start.shared[held.place]), start) if top is None else top
     first = top.objective
-    targets = _targets(cuts, n_points)
     for _ in range(MOST_RESTARTS):
         if not top.curvature > 0.0:
             return Unavailable(f"the recording says nothing about {held.name}: the likelihood does not change with it")
@@ -225,9 +251,10 @@ def walk(
             top = _climbed(held, top)
         here = Walk(held, top)
         try:
+            cuts = choose_cuts(here)
             for sign in (1, -1):
-                here.out(sign, targets)
-            crossings = {(sign, float(cut)): here.crossing(sign, float(cut)) for sign in (1, -1) for cut in cuts}
+                here.out(sign, _targets(np.array(cuts), n_points))
+            crossings = {(sign, cut): here.crossing(sign, cut) for sign in (1, -1) for cut in cuts}
             return Walked(here, crossings, top.objective - first)
         except BetterOptimumError as found:
             top = _climbed(held, found.point)

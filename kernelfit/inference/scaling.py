@@ -1,26 +1,27 @@
 """How much of a drop of the log-likelihood counts where bins depend on each other: vertical scaling.
 
-The robust over the model-based variance of a parameter says how much too sure the likelihood is of it. Dividing the
-drop by that ratio gives it the curvature that the robust variance asks for and keeps its shape, and with it open ends
-and skew (Chandler and Bate 2007, Biometrika 94, 167-183). For several parameters at once the ratio depends on the
-direction: it is that of the two quadratic forms.
+The robust variance of a parameter over the one that the curve itself implies, the inverse of its curvature at the top,
+says how much too sure the likelihood is. Dividing the drop by that ratio gives it the curvature that the robust
+variance asks for and keeps its shape, and with it open ends and skew (Chandler and Bate 2007, Biometrika 94, 167-183).
+For several parameters at once the ratio depends on the direction: it is that of the two quadratic forms.
 """
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 from scipy.stats import f as f_distribution
 
 from kernelfit._typing import FloatArray
+from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.errors import Unavailable
-from kernelfit.fitting.covariance import REFUSED_BELOW, Uncertainty, covariances
-from kernelfit.fitting.maximise import maximise
+from kernelfit.fitting.covariance import REFUSED_BELOW, Uncertainty
 from kernelfit.inference.held import Held
 from kernelfit.inference.intervals import critical_value
 from kernelfit.inference.profile_point import PathPoint
+from kernelfit.inference.profile_walk import Walk
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -29,7 +30,7 @@ if TYPE_CHECKING:
 
 @dataclass(frozen=True)
 class Scaling:
-    """Robust over model-based variance of one parameter, and the t quantile that goes with it."""
+    """Robust variance of one parameter over the one its likelihood implies, and the t quantile that goes with it."""
 
     ratio: float
     critical: float
@@ -41,30 +42,31 @@ class Scaling:
 
 @dataclass(frozen=True, eq=False)
 class PlaneScaling:
-    """The same for two parameters: both covariances (2, 2) of the coordinates held, and degrees of freedom.
+    """The same for two parameters: covariances (2, 2) of the coordinates held, implied by the likelihood and robust.
 
     `at_most` bounds the factor, 1 where a penalty is part of the curve.
     """
 
-    model: FloatArray
+    implied: FloatArray
     robust: FloatArray
     degrees_of_freedom: float
     at_most: float = np.inf
 
     def factor(self, step: FloatArray) -> FloatArray:
         """(...,) by what the drop is multiplied, for steps (..., 2) from the top; 1 at the top itself."""
-        forms = [np.einsum("...i,ij,...j->...", step, np.linalg.inv(c), step) for c in (self.robust, self.model)]
+        forms = [np.einsum("...i,ij,...j->...", step, np.linalg.inv(c), step) for c in (self.robust, self.implied)]
         with np.errstate(invalid="ignore", divide="ignore"):
             ratio = np.where(forms[1] > 0.0, forms[0] / forms[1], 1.0)
         return np.asarray(np.minimum(ratio, self.at_most))
 
     def cut(self, level: float) -> float:
-        """Twice the scaled drop at that level: F quantile of 2 and the blocks less one."""
-        return 2.0 * float(f_distribution.ppf(level, 2, self.degrees_of_freedom))
+        """Twice the scaled drop at that level."""
+        return plane_cut(level, self.degrees_of_freedom)
 
-    def ratio(self, k: int) -> float:
-        """Robust over model-based variance of parameter k."""
-        return max(float(self.robust[k, k] / self.model[k, k]), 1.0 / self.at_most)
+
+def plane_cut(level: float, degrees_of_freedom: float) -> float:
+    """Twice the scaled drop of two parameters at a level: twice the F quantile of 2 and the blocks less one."""
+    return 2.0 * float(f_distribution.ppf(level, 2, degrees_of_freedom))
 
 
 def scaled_kind(fit: CouplingFit, spread: Uncertainty) -> CovarianceKind:
@@ -73,63 +75,55 @@ def scaled_kind(fit: CouplingFit, spread: Uncertainty) -> CovarianceKind:
     return "jackknife" if made else "robust"
 
 
-def variance_scaling(fit: CouplingFit, held: Held, level: float) -> Scaling | Unavailable:
-    """The scaling of a parameter at the fit, or why there is none."""
-    refused = too_few_blocks(fit.uncertainty)
-    if refused is not None:
-        return refused
-    return _penalised(held, scaling_by(fit, fit.uncertainty, held.gradient(fit.shared), level, held.name))
-
-
-def scaling_at(fit: CouplingFit, held: Held, point: PathPoint, level: float) -> Scaling | Unavailable:
-    """The scaling of a parameter at a point of its profile: one or two sweeps.
-
-    For a parameter whose estimate sits at its bound, where the likelihood hardly depends on it: its variances mean
-    something only where the likelihood falls.
-    """
-    problem = held.at(point.x)
-    optimum = maximise(problem, point.estimate, held=held.mask)
-    freed = optimum.free.copy()
-    freed[held.place] = True
-    spread = covariances(problem, replace(optimum, free=freed))
-    gradient = np.zeros(freed.size)
-    gradient[held.place] = 1.0
-    return _penalised(held, too_few_blocks(spread) or scaling_by(fit, spread, gradient, level, held.name))
-
-
-def _penalised(held: Held, scaling: Scaling | Unavailable) -> Scaling | Unavailable:
-    """A ratio of 1 at least under a penalty: the sandwich leaves out what the penalty may be wrong by."""
-    if isinstance(scaling, Scaling) and held.problem.penalty.any():
-        return replace(scaling, ratio=max(scaling.ratio, 1.0))
-    return scaling
-
-
-def scaling_by(
-    fit: CouplingFit, spread: Uncertainty, gradient: FloatArray, level: float, name: str
-) -> Scaling | Unavailable:
-    """The scaling of a parameter by covariances; `gradient` (Q,) is its derivative by the working parameters."""
-    used = gradient != 0
-    kind = scaled_kind(fit, spread)
-    model, robust = (float(gradient[used] @ spread.shared(k)[np.ix_(used, used)] @ gradient[used]) for k in _both(kind))
-    if not (model > 0.0 and np.isfinite(robust) and robust > 0.0):
-        return Unavailable(f"{name} has no robust variance to scale the likelihood by")
-    return Scaling(robust / model, critical_value(level, spread.degrees_of_freedom(kind)))
-
-
-def plane_scaling(fit: CouplingFit, gradients: FloatArray, penalised: bool) -> PlaneScaling | Unavailable:
-    """The scaling of two parameters with gradients (2, Q) by the working parameters."""
-    spread = fit.uncertainty
+def robust_covariance(fit: CouplingFit, spread: Uncertainty, gradients: FloatArray) -> FloatArray | Unavailable:
+    """(k, k) robust covariance of coordinates with gradients (k, Q) by the working parameters, or why there is none."""
     refused = too_few_blocks(spread)
     if refused is not None:
         return refused
-    kind = scaled_kind(fit, spread)
     used = (gradients != 0).any(axis=0)
     g = gradients[:, used]
-    model, robust = (g @ spread.shared(k)[np.ix_(used, used)] @ g.T for k in _both(kind))
-    for covariance in (model, robust):
-        if not np.isfinite(covariance).all() or np.linalg.matrix_rank(covariance, hermitian=True) < 2:
-            return Unavailable("one of the two parameters has no robust variance to scale the likelihood by")
-    return PlaneScaling(model, robust, spread.degrees_of_freedom(kind), 1.0 if penalised else np.inf)
+    covariance = np.asarray(g @ spread.shared(scaled_kind(fit, spread))[np.ix_(used, used)] @ g.T)
+    if not np.isfinite(covariance).all() or np.linalg.matrix_rank(covariance, hermitian=True) < len(gradients):
+        return Unavailable("no robust variance to scale the likelihood by: the fit has none")
+    return covariance
+
+
+def scaling_by(fit: CouplingFit, spread: Uncertainty, held: Held, here: Walk, level: float) -> Scaling | Unavailable:
+    """The scaling of a parameter by a robust covariance and the curvature of its profile at the top."""
+    gradient = held.gradient(held.back(here.top.estimate).shared)
+    variance = robust_covariance(fit, spread, gradient[None])
+    if isinstance(variance, Unavailable):
+        return variance
+    return _scaling(fit, held, float(variance[0, 0]) * here.curvature(), level, spread)
+
+
+def scaling_at(fit: CouplingFit, held: Held, point: PathPoint, level: float) -> Scaling | Unavailable:
+    """The scaling of a parameter whose estimate sits at its bound, at a point where the likelihood falls: a sweep.
+
+    At the bound the likelihood hardly depends on it. Here the spread of its scores by block of time, less what the
+    other parameters explain of them, is compared with the expected one.
+    """
+    refused = too_few_blocks(fit.uncertainty)
+    if refused is not None:
+        return refused
+    problem = held.at(point.x)
+    blocks = time_blocks(problem.grid, fit.uncertainty.block_length_s)
+    score = problem.evaluate(point.estimate, blocks=blocks).score
+    n_own = point.estimate.own.shape[1]
+    own, shared = score[..., :n_own], score[..., n_own:].sum(axis=1)
+    efficient = shared[:, held.place] + shared @ point.tangent.shared
+    efficient = efficient + np.einsum("gnp,np->g", own, point.tangent.own)
+    if not point.curvature > 0.0:
+        return Unavailable(f"{held.name} has no variance where the likelihood falls")
+    spread = float(np.var(efficient, ddof=1)) * efficient.size
+    return _scaling(fit, held, spread / point.curvature, level, fit.uncertainty)
+
+
+def _scaling(fit: CouplingFit, held: Held, ratio: float, level: float, spread: Uncertainty) -> Scaling:
+    if held.problem.penalty.any():  # the sandwich leaves out what the penalty may be wrong by
+        ratio = max(ratio, 1.0)
+    freedom = spread.degrees_of_freedom(scaled_kind(fit, spread))
+    return Scaling(ratio, critical_value(level, freedom))
 
 
 def too_few_blocks(spread: Uncertainty) -> Unavailable | None:
@@ -138,7 +132,3 @@ def too_few_blocks(spread: Uncertainty) -> Unavailable | None:
         return None
     blocks = f"{spread.n_blocks} block{'s' * (spread.n_blocks != 1)} of time"
     return Unavailable(f"no robust variance to scale the likelihood by: {blocks}, {REFUSED_BELOW} are needed")
-
-
-def _both(kind: CovarianceKind) -> tuple[CovarianceKind, CovarianceKind]:
-    return "model", kind

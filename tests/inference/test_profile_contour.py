@@ -65,10 +65,29 @@ def test_the_table_has_a_row_for_each_point(contour):
     assert float(row["log_likelihood_drop"].iloc[0]) == contour.drop[2, 5]
 
 
-def test_scaling_by_equal_covariances_changes_nothing(fit):
-    same = replace(fit.uncertainty, shared_robust=fit.uncertainty.shared_model)
-    contour = replace(fit, uncertainty=same).profile_contour("length_um", "leak_rate", n_points=3)
-    assert np.allclose(contour.scaled_drop, contour.drop, rtol=1e-9)
+def test_the_robust_kind_compares_with_the_covariance_that_the_surface_implies(fit, contour):
+    # Expected: inverse of the Hessian of the drop by second differences, good to about one in a hundred.
+    step = 0.1 * np.sqrt(np.diag(fit.uncertainty.shared_model)[1:])
+
+    def drop(*signs):
+        shared = fit.shared.copy()
+        shared[1:] += signs * step
+        held = np.array([False, True, True])
+        return fit.log_likelihood - maximise(fit.problem(), Estimate(fit.own, shared), held=held).local.objective
+
+    corner = (drop(1, 1) + drop(-1, -1) - drop(1, -1) - drop(-1, 1)) / 4.0
+    hessian = np.array([[drop(1, 0) + drop(-1, 0), corner], [corner, drop(0, 1) + drop(0, -1)]]) / np.outer(step, step)
+    robust = fit.uncertainty.shared_robust[1:, 1:]
+    expected = PlaneScaling(np.linalg.inv(hessian), robust, 1.0)
+    a, b = (np.log(v) for v in (contour.values_a, contour.values_b))
+    steps = np.stack(np.meshgrid(a - fit.shared[1], b - fit.shared[2], indexing="ij"), axis=-1)
+    assert np.allclose(contour.scaled_drop / contour.drop, expected.factor(steps), rtol=0.03)
+
+
+def test_scaling_by_equal_covariances_changes_nothing():
+    covariance = np.array([[1.0, 0.4], [0.4, 2.0]])
+    same = PlaneScaling(covariance, covariance, 20.0)
+    assert same.factor(np.random.default_rng(1).normal(size=(5, 2))) == pytest.approx(1.0, rel=1e-12)
 
 
 def test_the_factor_is_that_of_the_two_quadratic_forms():
@@ -76,7 +95,8 @@ def test_the_factor_is_that_of_the_two_quadratic_forms():
     scaling = PlaneScaling(np.diag([1.0, 2.0]), np.diag([4.0, 18.0]), 20.0)
     factor = scaling.factor(np.array([[0.3, 0.0], [0.0, -2.0], [1.0, 1.0], [0.0, 0.0]]))
     assert factor == pytest.approx([0.25, 1.0 / 9.0, (1 / 4 + 1 / 18) / (1 + 1 / 2), 1.0], rel=1e-12)
-    assert (scaling.ratio(0), scaling.ratio(1)) == pytest.approx((4.0, 9.0))
+    held_up = replace(scaling, at_most=0.2)
+    assert held_up.factor(np.array([[0.3, 0.0], [0.0, -2.0]])) == pytest.approx([0.2, 1.0 / 9.0], rel=1e-12)
 
 
 def test_two_that_mix_parameters_cannot_be_held_together():
