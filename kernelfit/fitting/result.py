@@ -462,11 +462,12 @@ class CouplingFit(Profiled, Analysed):
 
         Raises
         ------
+        ArgumentError : no path
         OutputError : the file cannot be written
         """
         from kernelfit.fitting.storage import save_fit  # storage builds on this module
 
-        save_fit(self, Path(path))
+        save_fit(self, path)
 
 
 def covariance_kind(kind: str) -> CovarianceKind:

@@ -15,7 +15,8 @@ from dataclasses import asdict
 from pathlib import Path
 from typing import Any, cast
 
-from kernelfit.errors import KernelfitError, OutputError, StorageError, Unavailable
+from kernelfit._validation import described
+from kernelfit.errors import ArgumentError, KernelfitError, OutputError, StorageError, Unavailable
 from kernelfit.fitting.detection import CouplingVerdict
 from kernelfit.fitting.effective import TermSize
 from kernelfit.fitting.outcome import Note, ScoreTest, SolverReport
@@ -34,13 +35,17 @@ FORMAT_VERSION = 1
 CHECK_SUM = "sha256"
 
 
-def save_fit(fit: CouplingFit, path: Path) -> None:
+def save_fit(fit: CouplingFit, path: str | Path) -> None:
     """Write a fit, whole or not at all.
 
     Raises
     ------
+    ArgumentError : no path
     OutputError : the file cannot be written
     """
+    if not isinstance(path, (str, os.PathLike)):
+        raise ArgumentError(f"path: {described(path)} is no path. Name a file, such as 'fit.json'.")
+    path = Path(path)
     content = describe_fit(fit)
     text = json.dumps({**content, CHECK_SUM: check_sum(content)}, indent=1, allow_nan=False)
     try:
@@ -59,13 +64,27 @@ def save_fit(fit: CouplingFit, path: Path) -> None:
         ) from error
 
 
+def _why_unreadable(error: Exception) -> str:
+    """In words what the JSON library says in its own."""
+    if isinstance(error, UnicodeDecodeError):
+        return "it is not text"
+    if isinstance(error, json.JSONDecodeError):
+        if not error.doc.strip():
+            return "it is empty"
+        return f"from line {error.lineno} on it is not JSON"
+    return "it is nested without end"
+
+
 def load_fit(path: str | Path) -> CouplingFit:
     """Read a fit that `CouplingFit.save` wrote. It holds no spikes: methods that need them take `recording`.
 
     Raises
     ------
+    ArgumentError : no path
     StorageError : no such file, damaged, not a kernelfit fit, or of a later format
     """
+    if not isinstance(path, (str, os.PathLike)):
+        raise ArgumentError(f"path: {described(path)} is no path. Give the path of a fit.json.")
     path = Path(path)
     try:
         content = json.loads(path.read_text(encoding="utf-8"))
@@ -73,7 +92,8 @@ def load_fit(path: str | Path) -> CouplingFit:
         raise StorageError(f"{path}: cannot be read ({error.strerror}). Give the path of a fit.json.") from error
     except (UnicodeDecodeError, json.JSONDecodeError, RecursionError) as error:
         raise StorageError(
-            f"{path}: damaged, or not a saved fit ({error}). Fit again, or copy the file again from where it was made."
+            f"{path}: damaged, or not a saved fit ({_why_unreadable(error)}). Fit again, or copy the file again from "
+            "where it was made."
         ) from error
     if not isinstance(content, dict) or content.get("format") != FORMAT:
         raise StorageError(f"{path}: JSON, but not a fit saved by kernelfit. Give the fit.json of a results folder.")

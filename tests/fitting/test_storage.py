@@ -5,6 +5,7 @@ from __future__ import annotations
 import copy
 import json
 import os
+import re
 
 import numpy as np
 import pandas as pd
@@ -12,7 +13,7 @@ import pytest
 from worlds import LEAK, NOTHING, model, simulated
 
 import kernelfit as kf
-from kernelfit.errors import OutputError, StorageError
+from kernelfit.errors import ArgumentError, OutputError, StorageError
 from kernelfit.fitting.storage import check_sum, describe_fit, load_fit
 from kernelfit.recording.recording import Recording
 
@@ -175,6 +176,14 @@ def test_missing_file(tmp_path):
         kf.load_fit(tmp_path)
 
 
+@pytest.mark.parametrize("path", [None, 5, ["fit.json"]])
+def test_what_is_no_path_is_refused(simple, path):
+    with pytest.raises(ArgumentError, match=r"path: .* is no path\. Give the path of a fit\.json"):
+        kf.load_fit(path)
+    with pytest.raises(ArgumentError, match=r"path: .* is no path\. Name a file"):
+        simple.save(path)
+
+
 @pytest.mark.parametrize("share", [0.0, 0.001, 0.3, 0.9, 0.999])
 def test_a_truncated_file(saved, share):
     text = saved.read_bytes()
@@ -186,8 +195,9 @@ def test_a_truncated_file(saved, share):
 @pytest.mark.parametrize(
     ("content", "says"),
     [
-        (b"\x89PNG\r\n\x1a\n\x00\xff", "damaged, or not a saved fit"),
-        (b"unit,time_s\nu01,0.5\n", "damaged, or not a saved fit"),
+        (b"\x89PNG\r\n\x1a\n\x00\xff", "damaged, or not a saved fit (it is not text)."),
+        (b"unit,time_s\nu01,0.5\n", "damaged, or not a saved fit (from line 1 on it is not JSON)."),
+        (b"", "damaged, or not a saved fit (it is empty)."),
         (b"{}", "JSON, but not a fit saved by kernelfit"),
         (b"[1, 2]", "JSON, but not a fit"),
         (b"null", "JSON, but not a fit"),
@@ -199,7 +209,7 @@ def test_a_truncated_file(saved, share):
 )
 def test_foreign_files(tmp_path, content, says):
     (tmp_path / "other.json").write_bytes(content)
-    with pytest.raises(StorageError, match=says) as error:
+    with pytest.raises(StorageError, match=re.escape(says)) as error:
         kf.load_fit(tmp_path / "other.json")
     assert "other.json" in str(error.value)
 
