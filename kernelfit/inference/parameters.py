@@ -230,6 +230,8 @@ def distances_with_pairs(fit: CouplingFit) -> tuple[float, float]:
     distance = cdist(fit.positions[fit.targets], fit.positions[firing])
     in_range = (distance >= near - SAME_DISTANCE_UM) & (distance <= far + SAME_DISTANCE_UM)
     kept = in_range & (fit.targets[:, None] != firing)
+    if not kept.any():  # the sources fired outside the bins that count, and are heard only from there
+        return near, far
     return float(distance[kept].min()), float(distance[kept].max())
 
 

@@ -261,7 +261,7 @@ def stretches_sentence(fit: CouplingFit) -> str:
     row = worth.loc[name]
     counted = f"{count_text(fit.n_spikes)} spikes in {duration_text(fit.duration_s)}"
     worth_of = f"about {count_text(row['stretches'])} independent stretches of {block_text(fit.block_length_s)}"
-    if row["ratio"] < RATIO_WORTH_SAYING:
+    if not row["ratio"] >= RATIO_WORTH_SAYING:  # also where there is no ratio
         return f"For the {short_name(str(name))}, {counted} are worth {worth_of}."
     return (
         f"For the {short_name(str(name))}, {counted} are worth {worth_of}, or as much as "
