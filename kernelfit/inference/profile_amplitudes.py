@@ -24,7 +24,7 @@ from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.held import Held, hold
-from kernelfit.inference.profile_conditions import check_converged, check_level, model_cut
+from kernelfit.inference.profile_conditions import check_converged, check_level, discrete_names, model_cut
 from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.profile_point import point_of
 from kernelfit.inference.profile_walk import Walk, walk
@@ -104,8 +104,7 @@ def compatible_amplitudes(
     treatment = "fixed" if not problem.fits_leak else "re-estimated" if held_leak is None else "held"
     leak_rate = fit.leak_rate if held_leak is None else held_leak
     largest = max(row.largest for row in rows)
-    hat = fit.model.kernel.name == "mexican-hat"
-    stated_at = "at distance 0" if hat else f"at {fit.reference_distance_um:.4g} µm"
+    stated_at = _stated_at(fit)
     return CompatibleAmplitudes(
         level=level,
         leak=treatment,
@@ -117,6 +116,13 @@ def compatible_amplitudes(
         seconds=time.monotonic() - started,
         rows=table,
     )
+
+
+def _stated_at(fit: CouplingFit) -> str:
+    """Where the amplitude is J, in words."""
+    if discrete_names(fit):
+        return "within the radius"
+    return "at distance 0" if fit.model.kernel.name == "mexican-hat" else f"at {fit.reference_distance_um:.4g} µm"
 
 
 def _one_of_each(fit: CouplingFit) -> Unavailable | None:

@@ -83,8 +83,8 @@ def _interval(kind: str, profile: RadiusProfile, problem: Problem, level: float,
     ]
     return ProfileInterval(
         kind=kind,
-        lower=lower,
-        upper=upper,
+        lower=0.0 if reasons[0] else lower,
+        upper=np.inf if reasons[1] else upper,
         lower_open=bool(reasons[0]),
         upper_open=bool(reasons[1]),
         lower_reason=reasons[0],

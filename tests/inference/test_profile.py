@@ -428,7 +428,9 @@ def disc():
 
 def test_a_radius_is_profiled_over_the_distances_of_the_array(disc):
     profile = disc.profile("length_um")
-    assert (profile.scaled.lower, profile.scaled.upper) == disc.radius_interval
+    lower, upper = disc.radius_interval
+    assert profile.scaled.lower == (0.0 if profile.scaled.lower_open else lower)
+    assert profile.scaled.upper == (np.inf if profile.scaled.upper_open else upper)
     curve = profile.curve
     assert curve["log_likelihood_drop"].min() == 0.0
     place = int(curve["log_likelihood_drop"].argmin())

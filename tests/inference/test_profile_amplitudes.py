@@ -94,6 +94,7 @@ def test_a_disc_is_held_at_radii_between_the_distances():
     found = fit.compatible_amplitudes()
     candidates = fit.model.kernel.radius_candidates(fit.distinct_um)
     assert np.isin(found.table["length_um"], candidates).all()
+    assert "|J| within the radius is below" in found.sentence
 
 
 def test_families_with_other_parameters_say_so(recording):
