@@ -20,18 +20,17 @@ from dataclasses import dataclass
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.engine.evaluate import Evaluation
 from kernelfit.errors import ArgumentError
-from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_symmetric
-from kernelfit.fitting.block_length import BlockCurve, block_curve, joined
-from kernelfit.fitting.by_block import BlockSums, chosen_blocks, sums_by_block
+from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.block_influence import block_influence, influence_left_out
+from kernelfit.fitting.block_length import BlockCurve, block_curve
+from kernelfit.fitting.by_block import chosen_blocks, sums_by_block
 from kernelfit.fitting.curvature import excess_curvature
 from kernelfit.fitting.maximise import Local, Optimum, penalised
 from kernelfit.fitting.problem import Problem
 from kernelfit.model.coupling import CovarianceKind
 
 REFUSED_BELOW = 6  # blocks: a variance of fewer numbers means nothing
-LEAST_LEFT = 1e-6  # of the information on a parameter, once a block is left out
 SMALLEST_EIGENVALUE = 1e-9  # of the information scaled to a unit diagonal: below this parameters cannot be told apart
 
 
@@ -108,19 +107,19 @@ def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
     variance = np.diag(_spread(inverse, free))
     information = observed_information(problem, local, variance, free)
     observed = eliminate(information)
-    influence = _influence(usual.sums, observed, free, weak is None)
+    influence = block_influence(usual.sums, observed, free, determined=weak is None)
     curve = block_curve(influence.shared, usual.finer, problem.grid.duration_s)
     used = usual
     if curve.factor(usual.finer) > 1:
         blocks = chosen_blocks(problem, problem.leak(optimum.estimate.shared), curve)
         used = sums_by_block(problem, optimum.estimate, blocks)
-        influence = _influence(used.sums, observed, free, weak is None)
+        influence = block_influence(used.sums, observed, free, determined=weak is None)
     influence = influence.joined(used.finer)
     n_blocks = used.blocks.n_blocks
     correction = n_blocks / (n_blocks - 1.0) if n_blocks >= REFUSED_BELOW else np.nan
     left_out = None
     if weak is None and n_blocks >= REFUSED_BELOW and used.has_information:
-        left_out = _left_out(used, information, free)
+        left_out = influence_left_out(used, information, free)
     through_shared = elimination.reduced @ np.nan_to_num(inverse)
     return Uncertainty(
         shared_model=_spread(inverse, free),
@@ -135,30 +134,6 @@ def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
         block_curve=curve.over(free),
         weak_direction=None if weak is None else _columns(weak[None], free)[0],
     )
-
-
-@dataclass(frozen=True, eq=False)
-class _Influence:
-    """What each block of time moves the estimates by: own (G, n, P) and free shared ones (G, Q)."""
-
-    own: FloatArray
-    shared: FloatArray
-
-    def joined(self, size: int) -> _Influence:
-        """The same for each `size` neighbouring blocks together."""
-        n = len(self.own)
-        own = joined(self.own.reshape(n, -1), size)
-        return _Influence(own.reshape(len(own), *self.own.shape[1:]), joined(self.shared, size))
-
-    @property
-    def squared_shared(self) -> FloatArray:
-        """(Q, Q) sum of products over blocks."""
-        return np.asarray(self.shared.T @ self.shared)
-
-    @property
-    def squared_own(self) -> FloatArray:
-        """(n, P, P) sum of products over blocks."""
-        return np.asarray(np.einsum("gnp,gnq->npq", self.own, self.own))
 
 
 def observed_information(problem: Problem, local: Local, variance: FloatArray, free: BoolArray) -> Arrow:
@@ -178,43 +153,6 @@ def observed_information(problem: Problem, local: Local, variance: FloatArray, f
         return expected
     observed = Arrow(expected.own, expected.cross, expected.shared + excess[np.ix_(free, free)])
     return observed if _weak_direction(eliminate(observed).schur) is None else expected
-
-
-def _influence(sums: Evaluation, elimination: Elimination, free: BoolArray, determined: bool) -> _Influence:
-    n_own = elimination.own_inverse.shape[1]
-    score_own = sums.score[..., :n_own]
-    efficient = elimination.efficient_score(score_own, sums.score[..., n_own:].sum(axis=1)[:, free])
-    shared = solve_symmetric(elimination.schur, efficient.T).T if determined else np.full_like(efficient, np.nan)
-    own = np.einsum("npk,gnk->gnp", elimination.own_inverse, score_own) - np.einsum(
-        "npq,gq->gnp", elimination.reduced, np.nan_to_num(shared)
-    )
-    return _Influence(own, shared)
-
-
-def _left_out(by_block: BlockSums, information: Arrow, free: BoolArray) -> _Influence | None:
-    """What leaving out each block would take from the estimates, in one step from the information that is left.
-
-    None where all that is known of some parameter stands in one block: without it nothing is left to estimate from.
-    """
-    whole = np.diag(eliminate(information).schur)
-    sums = by_block.sums
-    n_own = sums.own_own.shape[-1]
-    n_fine = len(sums.score)
-    scores = joined(sums.score.reshape(n_fine, -1), by_block.finer).reshape(-1, *sums.score.shape[1:])
-    own, shared = [], []
-    for g, score in enumerate(scores):
-        here = Arrow(sums.own_own[g], sums.own_shared[g], sums.shared_shared[g]).only(free)
-        rest = Arrow(information.own - here.own, information.cross - here.cross, information.shared - here.shared)
-        try:
-            left = eliminate(rest)
-            own_step, shared_step = left.solve(score[:, :n_own], score[:, n_own:].sum(axis=0)[free])
-        except np.linalg.LinAlgError:
-            return None
-        if (np.diag(left.schur) < LEAST_LEFT * whole).any():
-            return None
-        own.append(own_step)
-        shared.append(shared_step)
-    return _Influence(np.array(own), np.array(shared))
 
 
 def _weak_direction(schur: FloatArray) -> FloatArray | None:

@@ -15,6 +15,7 @@ import pandas as pd
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit.engine.evaluate import SweepData, TimeBlocks
 from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.block_influence import block_influence, influence_left_out
 from kernelfit.fitting.by_block import BlockSums, chosen_blocks, sums_by_block
 from kernelfit.fitting.covariance import observed_information
 from kernelfit.fitting.maximise import Optimum, Weighting, maximise, penalised
@@ -107,29 +108,15 @@ class _Work:
 
 def _first_order(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, the information taken as it is with it."""
-    elimination = eliminate(work.information)
-    score = by_block.sums.score
-    n_own = elimination.own_inverse.shape[1]
-    efficient = elimination.efficient_score(score[..., :n_own], score[..., n_own:].sum(axis=1)[:, work.fit.free])
-    return -solve_symmetric(elimination.schur, efficient.T).T
+    return (
+        -block_influence(by_block.sums, eliminate(work.information), work.fit.free, True).joined(by_block.finer).shared
+    )
 
 
 def _without_blocks(work: _Work, by_block: BlockSums) -> FloatArray:
-    """(G, free) move on leaving each block out, from the information that is left where it is known by block."""
-    if not by_block.has_information:
-        return _first_order(work, by_block)
-    whole, sums, free = work.information, by_block.sums, work.fit.free
-    n_own = sums.own_own.shape[-1]
-    moves = np.full((by_block.blocks.n_blocks, int(free.sum())), np.nan)
-    for g in range(len(moves)):
-        here = Arrow(sums.own_own[g], sums.own_shared[g], sums.shared_shared[g]).only(free)
-        rest = Arrow(whole.own - here.own, whole.cross - here.cross, whole.shared - here.shared)
-        try:
-            step = eliminate(rest).solve(sums.score[g, :, :n_own], sums.score[g, :, n_own:].sum(axis=0)[free])[1]
-        except np.linalg.LinAlgError:  # all that is known of a parameter stands in this block: no estimate without it
-            continue
-        moves[g] = -step
-    return moves
+    """(G, free) move on leaving each block out, from the information that is left where that is known and enough."""
+    left = influence_left_out(by_block, work.information, work.fit.free) if by_block.has_information else None
+    return _first_order(work, by_block) if left is None else -left.shared
 
 
 def _by_unit(work: _Work, by_block: BlockSums) -> pd.DataFrame:
