@@ -109,7 +109,7 @@ class _Work:
 def _first_order(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, the information taken as it is with it."""
     return (
-        -block_influence(by_block.sums, eliminate(work.information), work.fit.free, True).joined(by_block.finer).shared
+        -block_influence(by_block.sums, eliminate(work.information), work.fit.free, determined=True).joined(by_block.finer).shared
     )
 
 

@@ -17,6 +17,7 @@ from kernelfit.report.content_tables import TABLE_DECIMALS, value_cell
 from kernelfit.report.derived_data import MarkedKernel, marked_kernel
 from kernelfit.report.numbers import count_text, duration_text, interval_text, number_text, range_text
 from kernelfit.report.page import Cell, Column, Table
+from kernelfit.report.profile_data import ProfilesData, profiles_data
 from kernelfit.report.readings import LEVEL, kind_word, parameter_of
 from kernelfit.report.sureness_data import BlocksData, Compared, InfluenceData, Interval, KindsData
 from kernelfit.report.words import RATIO_WORTH_SAYING, block_text, level_text, listed
@@ -33,12 +34,13 @@ SHORT = {"amplitude": "amplitude", "length_um": "length", "leak_rate": "leak rat
 
 @dataclass(frozen=True, eq=False)
 class SureFigures:
-    """Data of the figures, or the reason why there is none."""
+    """Data of the figures, or the reason why there is none; no profiles where they were not asked for."""
 
     kinds: KindsData | Unavailable
     blocks: BlocksData | Unavailable
     influence: InfluenceData | Unavailable
     marked: MarkedKernel | Unavailable
+    profiles: ProfilesData | Unavailable | None
 
 
 @dataclass(frozen=True, eq=False)
@@ -59,6 +61,7 @@ def sure_content(fit: CouplingFit, sureness: Sureness) -> SureContent:
         blocks=blocks_data(fit),
         influence=influence_data(fit, sureness),
         marked=marked_kernel(fit, sureness.derived),
+        profiles=profiles_data(fit, tuple(sureness.profiles.values())) if sureness.profiles else None,
     )
     return SureContent(
         sentences=tuple(

@@ -19,6 +19,7 @@ from kernelfit.report.figures_array import draw_array, draw_raster
 from kernelfit.report.figures_derived import draw_marked_kernel
 from kernelfit.report.figures_fit import draw_after_spike, draw_ks
 from kernelfit.report.figures_kernel import draw_kernel, draw_time_course
+from kernelfit.report.figures_profile import draw_profiles
 from kernelfit.report.figures_sureness import draw_blocks, draw_influence, draw_kinds
 from kernelfit.report.folder import FileEntry, ResultsFolder, check_folder, files_list
 from kernelfit.report.look import save_figure
@@ -245,6 +246,20 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
             wide=True,
             numbers="" if isinstance(sure.kinds, Unavailable) else "intervals.csv",
         )
+        profiles = sure.profiles
+        if profiles is not None:
+            add(
+                "profiles",
+                profiles,
+                draw_profiles,
+                "profile likelihood of every parameter",
+                "" if isinstance(profiles, Unavailable) else profiles.caption,
+                alt=f"{_title(profiles)}. Fall of the log-likelihood against the value of each parameter.",
+                wide=True,
+                numbers=""
+                if isinstance(profiles, Unavailable)
+                else numbers_of("figures/profiles.csv", profiles.numbers(), "numbers of the profiles"),
+            )
         add(
             "blocks",
             sure.blocks,
@@ -342,7 +357,7 @@ def _kernel(content: FitContent, pictures: dict[str, Picture]) -> Section:
 
 def _sure(content: FitContent, pictures: dict[str, Picture]) -> Section:
     blocks: list[Block] = [Text(s) for s in content.sure]
-    below: list[Block] = [*_shown(pictures, "intervals"), content.tables.std_errors]
+    below: list[Block] = [*_shown(pictures, "intervals", "profiles"), content.tables.std_errors]
     if content.sureness is not None:
         more = content.sureness
         blocks += [Text(s) for s in more.sentences]
