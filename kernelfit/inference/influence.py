@@ -108,9 +108,8 @@ class _Work:
 
 def _first_order(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, the information taken as it is with it."""
-    return (
-        -block_influence(by_block.sums, eliminate(work.information), work.fit.free, determined=True).joined(by_block.finer).shared
-    )
+    moves = block_influence(by_block.sums, eliminate(work.information), work.fit.free, determined=True)
+    return -moves.joined(by_block.finer).shared
 
 
 def _without_blocks(work: _Work, by_block: BlockSums) -> FloatArray:
