@@ -12,6 +12,7 @@ from scipy.special import gammaln, xlogy
 from statsmodels.stats.multitest import multipletests
 
 from kernelfit._typing import FloatArray, IntArray
+from kernelfit._validation import check_level, given_as
 from kernelfit.diagnostics import ks
 from kernelfit.diagnostics.independence import SerialIndependence, serial_independence
 from kernelfit.diagnostics.rescaling import RescaledTrain, rescale, uniform_scale
@@ -133,11 +134,10 @@ class Goodness:
         return int((self.units["p_adjusted"] < 1.0 - self.level).sum())
 
     def _train(self, unit: str) -> RescaledTrain:
-        try:
-            place = self.units.index.get_loc(unit)
-        except KeyError:
+        if not isinstance(unit, str) or unit not in self.units.index:
             known = ", ".join(map(repr, list(self.units.index[:3])))
-            raise RecordingError(f"No unit {unit!r} in this fit. Ids are text; the first are {known}.") from None
+            raise RecordingError(f"{given_as('unit', unit)} is not in this fit. Ids are text; the first are {known}.")
+        place = self.units.index.get_loc(unit)
         if not isinstance(place, int):
             raise RecordingError(f"Unit {unit!r} is listed more than once.")
         return self.trains[place]
@@ -177,8 +177,7 @@ def goodness_of_fit(
     """
     if len(unit_ids) != compensator.n_units:
         raise ArgumentError(f"{len(unit_ids)} unit ids for {compensator.n_units} units of the compensator.")
-    if not 0.0 < level < 1.0:
-        raise ArgumentError(f"level={level!r} is not between 0 and 1. 0.95 is usual.")
+    check_level(level)
     trains, pooled = rescale(compensator, seed=seed)
     units = pd.DataFrame([_test(train) for train in trains], columns=list(COLUMNS))
     units.index = pd.Index(list(unit_ids), name="unit", dtype=object)

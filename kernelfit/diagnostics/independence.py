@@ -8,7 +8,8 @@ import numpy as np
 from statsmodels.tsa.stattools import acf, q_stat
 
 from kernelfit._typing import FloatArray
-from kernelfit.errors import ArgumentError, Unavailable
+from kernelfit._validation import check_whole
+from kernelfit.errors import Unavailable
 
 VALUES_PER_LAG = 4  # fewer values than this per lag, and the chi-square law of the statistic is far off
 
@@ -43,14 +44,13 @@ def serial_independence(values: FloatArray, *, n_lags: int = 10) -> SerialIndepe
 
     Raises
     ------
-    ArgumentError : n_lags below 1
+    ArgumentError : n_lags below 1 or not a whole number
 
     References
     ----------
     Ljung & Box (1978), Biometrika 65, 297-303.
     """
-    if n_lags < 1:
-        raise ArgumentError(f"n_lags={n_lags} is not a number of lags. Use 1 or more; 10 is usual.")
+    check_whole(n_lags, "n_lags", 1, "; 10 is usual")
     if values.size < VALUES_PER_LAG * n_lags:
         return Unavailable(f"{values.size} gaps are too few for {n_lags} lags; {VALUES_PER_LAG * n_lags} are needed.")
     if np.ptp(values) == 0:

@@ -4,11 +4,12 @@ from __future__ import annotations
 
 import itertools
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Iterable, Mapping, Sequence
 
 import numpy as np
 
 from kernelfit._typing import FloatArray, IntArray
+from kernelfit._validation import check_seed, described, flat_numbers, given_as, numbers, positive
 from kernelfit.engine.compiled import compiled
 from kernelfit.engine.links import fill_cells
 from kernelfit.errors import ArgumentError, SimulationError
@@ -188,7 +189,7 @@ def simulate_recording(
     after_spike_constants_s: FloatArray | None = None,
     after_spike_coefficients: FloatArray | None = None,
     rate_course: Callable[[FloatArray], FloatArray] | None = None,
-    unit_ids: tuple[str, ...] | None = None,
+    unit_ids: Sequence[str] | None = None,
 ) -> Recording:
     """A recording of a network with a known kernel, run in bins from rest; pairs on one site are not coupled.
 
@@ -216,26 +217,17 @@ def simulate_recording(
     ArgumentError : an argument out of range or of the wrong shape
     SimulationError : the network explodes; the message says why and what to do
     """
-    positions = np.asarray(positions_um, dtype=np.float64)
-    positions = positions[:, None] if positions.ndim == 1 else positions
+    positions = _positions(positions_um)
     n = len(positions)
     the_link = link_from(link)
-    rates = np.broadcast_to(np.asarray(baseline_hz, dtype=np.float64), (n,)) if np.size(baseline_hz) in (1, n) else None
-    if rates is None or not (np.isfinite(rates) & (rates >= 0)).all():
-        raise ArgumentError(f"baseline_hz must be one rate of 0 Hz or more, or {n} of them, one a unit.")
-    for name, value in (("leak_rate", leak_rate), ("duration", duration), ("bin_width", bin_width)):
-        if not (math.isfinite(value) and value > 0):
-            raise ArgumentError(f"{name}={value} must be a positive number.")
-    ids = tuple(f"u{k + 1:0{max(2, len(str(n)))}d}" for k in range(n)) if unit_ids is None else unit_ids
-    if len(ids) != n:
-        raise ArgumentError(f"{len(ids)} unit_ids for {n} positions.")
-    site = same_site_labels(positions)
-    distance = np.sqrt(np.sum((positions[:, None] - positions[None]) ** 2, axis=-1))
-    coupled = site[:, None] != site[None]
-    table = np.zeros((n, n))
-    table[coupled] = np.asarray(kernel(distance[coupled]), dtype=np.float64)
-    if not np.isfinite(table).all():
-        raise ArgumentError("kernel gives values that are not finite at some distance of these positions.")
+    rates = _rates(baseline_hz, n)
+    leak_rate = positive(leak_rate, "leak_rate", "1/s, such as 50")
+    duration = positive(duration, "duration", "seconds, such as 60")
+    bin_width = positive(bin_width, "bin_width", "seconds, such as 0.001")
+    if not isinstance(seed, np.random.Generator):
+        check_seed(seed)
+    ids = _ids(unit_ids, n)
+    table = _table(kernel, positions)
     decay, coefficients = _after_spike(after_spike_constants_s, after_spike_coefficients, bin_width, n)
     rng = np.random.default_rng(seed)
     n_bins = math.floor(duration / bin_width + 1e-6)
@@ -253,16 +245,68 @@ def simulate_recording(
     return Recording(ids, positions, trains, np.array([[0.0, duration]]))
 
 
+def _positions(positions_um: object) -> FloatArray:
+    """(n, 1 to 3) µm."""
+    remedy = "Give a row for each unit with 1 to 3 coordinates in µm, such as [[0, 0], [100, 0]]."
+    given = numbers(positions_um, "positions_um", remedy)
+    positions = given[:, None] if given.ndim == 1 else given
+    if positions.ndim != 2 or not len(positions) or positions.shape[1] not in (1, 2, 3):
+        raise ArgumentError(f"positions_um has shape {given.shape}. {remedy}")
+    return positions
+
+
+def _rates(baseline_hz: object, n: int) -> FloatArray:
+    """(n,) Hz."""
+    remedy = f"Give one rate of 0 Hz or more, or {n} of them, one a unit."
+    rates = flat_numbers(baseline_hz, "baseline_hz", remedy, least=0.0)
+    if rates.size not in (1, n):
+        raise ArgumentError(f"baseline_hz holds {rates.size} rates. {remedy}")
+    return np.broadcast_to(rates, (n,))
+
+
+def _ids(unit_ids: object, n: int) -> tuple[str, ...]:
+    """Names of the units: those given, or u01, u02, ..."""
+    if unit_ids is None:
+        return tuple(f"u{k + 1:0{max(2, len(str(n)))}d}" for k in range(n))
+    remedy = f"Give {n} different names, such as ['a', 'b', ...], or None."
+    if isinstance(unit_ids, (str, Mapping)) or not isinstance(unit_ids, Iterable):
+        raise ArgumentError(f"{given_as('unit_ids', unit_ids)} is no list of names. {remedy}")
+    ids = tuple(unit_ids)
+    for unit in ids:
+        if not (isinstance(unit, str) and unit.strip()):
+            raise ArgumentError(f"unit_ids holds {described(unit)}, which is no name. {remedy}")
+    if len(ids) != n or len(set(ids)) != n:
+        twice = "" if len(ids) != n else ", not all of them different"
+        raise ArgumentError(f"{len(ids)} unit_ids for {n} positions{twice}. {remedy}")
+    return ids
+
+
+def _table(kernel: object, positions: FloatArray) -> FloatArray:
+    """(n, n) jump by source and target."""
+    remedy = "Give a function of distances, such as kf.kernels.Gaussian().at(...) or fit.kernel."
+    if not callable(kernel):
+        raise ArgumentError(f"{given_as('kernel', kernel)} cannot be called. {remedy}")
+    site = same_site_labels(positions)
+    distance = np.sqrt(np.sum((positions[:, None] - positions[None]) ** 2, axis=-1))
+    coupled = site[:, None] != site[None]
+    jumps = numbers(kernel(distance[coupled]), "kernel(distances_um)", remedy)
+    if jumps.shape not in ((), (int(coupled.sum()),)):
+        raise ArgumentError(f"kernel gave values of shape {jumps.shape} for {int(coupled.sum())} distances. {remedy}")
+    table = np.zeros(coupled.shape)
+    table[coupled] = jumps
+    return table
+
+
 def _course(rate_course: Callable[[FloatArray], FloatArray] | None, n_bins: int, bin_width: float) -> FloatArray | None:
     if rate_course is None:
         return None
+    remedy = "Give a function from times in seconds to one finite number for each time."
+    if not callable(rate_course):
+        raise ArgumentError(f"{given_as('rate_course', rate_course)} cannot be called. {remedy}")
     start_s = np.asarray(bin_width * np.arange(n_bins), dtype=np.float64)
-    course = np.asarray(rate_course(start_s), dtype=np.float64)
-    if course.shape != (n_bins,) or not np.isfinite(course).all():
-        raise ArgumentError(
-            f"rate_course gave values of shape {course.shape} for {n_bins} times, or some that are not finite. "
-            "It must give one finite number for each time."
-        )
+    course = numbers(rate_course(start_s), "rate_course(time_s)", remedy)
+    if course.shape != (n_bins,):
+        raise ArgumentError(f"rate_course gave values of shape {course.shape} for {n_bins} times. {remedy}")
     return course
 
 
@@ -271,15 +315,20 @@ def _after_spike(
 ) -> tuple[FloatArray, FloatArray]:
     if constants_s is None or coefficients is None:
         if constants_s is not coefficients:
-            raise ArgumentError("after_spike_constants_s and after_spike_coefficients go together: give both or none.")
+            given = "after_spike_coefficients" if constants_s is None else "after_spike_constants_s"
+            raise ArgumentError(
+                f"{given} alone: after_spike_constants_s and after_spike_coefficients go together. Give both or none."
+            )
         return np.empty(0), np.empty((0, n))
-    constants = np.atleast_1d(np.asarray(constants_s, dtype=np.float64))
-    weights = np.asarray(coefficients, dtype=np.float64)
+    remedy = "Give time constants of positive seconds, and a coefficient a time constant, for all units or for each."
+    constants = flat_numbers(constants_s, "after_spike_constants_s", remedy)
+    weights = numbers(coefficients, "after_spike_coefficients", remedy)
+    shape = weights.shape
+    weights = np.atleast_1d(weights)
     weights = weights[:, None] if weights.ndim == 1 else weights
-    if weights.shape[0] != constants.size or weights.shape[1] not in (1, n) or not (constants > 0).all():
-        raise ArgumentError(
-            f"after_spike_coefficients of shape {weights.shape} for {constants.size} time constants: "
-            "give one a time constant, "
-            "for all units or for each; time constants are positive seconds."
-        )
+    if weights.ndim != 2 or weights.shape[0] != constants.size or weights.shape[1] not in (1, n):
+        many = f"{constants.size} time constant{'s' * (constants.size != 1)} and {n} units"
+        raise ArgumentError(f"after_spike_coefficients of shape {shape} for {many}. {remedy}")
+    if not (constants > 0).all():
+        raise ArgumentError(f"after_spike_constants_s holds {constants.min():g}, which is not above 0. {remedy}")
     return np.exp(-bin_width / constants), np.ascontiguousarray(np.broadcast_to(weights, (constants.size, n)))

@@ -11,8 +11,8 @@ import numpy as np
 from scipy.special import gammaln, xlogy
 
 from kernelfit._typing import FloatArray
-from kernelfit._validation import is_whole
-from kernelfit.errors import ArgumentError, FitWarning, NotIdentifiedError
+from kernelfit._validation import check_callback, check_seed, check_threads
+from kernelfit.errors import FitWarning, NotIdentifiedError
 from kernelfit.fitting.added_term import after_spike_test
 from kernelfit.fitting.arrow import SingularOwnBlock
 from kernelfit.fitting.bounds import bound_reasons, in_words, run_off_parameters
@@ -32,7 +32,7 @@ from kernelfit.fitting.search import SearchResult, search
 from kernelfit.fitting.smoothing import choose, first_ridge, first_smoothing
 from kernelfit.fitting.smoothing_notes import smoothing_notes
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import Recording, check_recording
 from kernelfit.version import __version__
 
 
@@ -47,7 +47,10 @@ def fit_model(
 ) -> CouplingFit:
     """Estimate a model from a recording; see `CouplingModel.fit`."""
     kind = covariance_kind(covariance)
-    _check_call(recording, threads, seed)
+    check_recording(recording)
+    check_threads(threads)
+    check_seed(seed)
+    check_callback(progress)
     started = time.monotonic()
     problem = make_problem(model, recording, threads=threads, progress=progress)
     try:
@@ -109,18 +112,6 @@ def fit_model(
         created=datetime.now(UTC).isoformat(timespec="seconds"),
         recording=recording,
     )
-
-
-def _check_call(recording: object, threads: int | None, seed: int) -> None:
-    if not isinstance(recording, Recording):
-        raise ArgumentError(
-            f"recording={recording!r:.60}: not a Recording. Read one with kf.read_recording(spikes, sites), or build "
-            "it with kf.Recording.from_arrays(...)."
-        )
-    if threads is not None and not (is_whole(threads) and threads >= 1):
-        raise ArgumentError(f"threads={threads!r} must be a whole number from 1 on, or None for all there are.")
-    if not (is_whole(seed) and seed >= 0):
-        raise ArgumentError(f"seed={seed!r} must be a whole number, 0 or more.")
 
 
 def _undetermined_unit(problem: Problem, recording: Recording, place: int) -> str:

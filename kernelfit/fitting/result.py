@@ -10,6 +10,18 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray, IntArray
+from kernelfit._validation import (
+    DISTANCES,
+    check_level,
+    check_seed,
+    check_threads,
+    check_truth_value,
+    distances,
+    flat_numbers,
+    given_as,
+    is_number,
+    numbers,
+)
 from kernelfit.engine.evaluate import Point, SweepData, compensate, evaluate, expected_counts
 from kernelfit.errors import ArgumentError, StorageError, Unavailable
 from kernelfit.fitting.analyses import LEVEL, Analysed
@@ -22,8 +34,8 @@ from kernelfit.fitting.profiles import Profiled
 from kernelfit.fitting.smoothing import Smoothing
 from kernelfit.kernels import DistanceRange, KernelCurve
 from kernelfit.model.coupling import CouplingModel, CovarianceKind
-from kernelfit.recording.grid import Grid, make_grid
-from kernelfit.recording.recording import Origin, Recording
+from kernelfit.recording.grid import Grid, bins_between, make_grid
+from kernelfit.recording.recording import Origin, Recording, clock_text
 
 if TYPE_CHECKING:
 
@@ -211,8 +223,13 @@ class CouplingFit(Profiled, Analysed):
         return self.model.kernel.curve(self.shared[: self.n_kernel], self.span)
 
     def kernel(self, distances_um: FloatArray) -> FloatArray:
-        """J, the effect of one spike on the predictor, at each distance (µm); same shape as the input."""
-        return self.kernel_curve(distances_um)
+        """J, the effect of one spike on the predictor, at each distance (µm); same shape as the input.
+
+        Raises
+        ------
+        ArgumentError : something that is no distance
+        """
+        return self.kernel_curve(numbers(distances_um, "distances_um", DISTANCES, least=0.0))
 
     def kernel_band(self, distances_um: FloatArray, level: float = LEVEL, simultaneous: bool = False) -> pd.DataFrame:
         """The fitted kernel with a band.
@@ -239,13 +256,13 @@ class CouplingFit(Profiled, Analysed):
 
         Raises
         ------
-        ArgumentError : a level outside (0, 1)
+        ArgumentError : a level outside (0, 1), or something that is no distance
         """
         from kernelfit.inference.parameters import kernel_band
 
-        if not 0.0 < level < 1.0:
-            raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
-        return kernel_band(self, np.atleast_1d(np.asarray(distances_um, dtype=np.float64)), level, simultaneous)
+        check_level(level)
+        check_truth_value(simultaneous, "simultaneous")
+        return kernel_band(self, distances(distances_um), level, simultaneous)
 
     @property
     def after_spike_constants_s(self) -> FloatArray:
@@ -258,10 +275,15 @@ class CouplingFit(Profiled, Analysed):
         Parameters
         ----------
         lags_s : (n_lags,) seconds after the spike; the first bin after a spike is the shortest lag that means anything
+
+        Raises
+        ------
+        ArgumentError : something that is no lag
         """
+        lags = _lags(lags_s)
         if self.own.shape[1] == 1:
             return Unavailable("the model has no after-spike term")
-        traces = np.exp(-np.asarray(lags_s)[None, :] / self.after_spike_constants_s[:, None])
+        traces = np.exp(-lags[None, :] / self.after_spike_constants_s[:, None])
         curves = np.full((len(self.unit_ids), traces.shape[1]), np.nan)
         curves[self.targets] = np.exp(self.own[:, 1:] @ traces)
         return curves
@@ -275,17 +297,21 @@ class CouplingFit(Profiled, Analysed):
 
         Raises
         ------
-        ArgumentError : no such unit
+        ArgumentError : no such unit, a level outside (0, 1), or something that is no lag
         """
         from kernelfit.inference.parameters import after_spike_band
 
+        lags = _lags(lags_s)
+        check_level(level)
+        check_truth_value(simultaneous, "simultaneous")
         if self.own.shape[1] == 1:
             return Unavailable("the model has no after-spike term")
-        return after_spike_band(self, self._target_of(unit), np.asarray(lags_s), level, simultaneous)
+        return after_spike_band(self, self._target_of(unit), lags, level, simultaneous)
 
     def _target_of(self, unit: str) -> int:
-        if unit not in self.unit_ids:
-            raise ArgumentError(f"no unit {unit!r} in this fit. Units: {', '.join(self.unit_ids[:5])}, ...")
+        if not isinstance(unit, str) or unit not in self.unit_ids:
+            known = ", ".join(self.unit_ids[:5]) + (", ..." if len(self.unit_ids) > 5 else "")
+            raise ArgumentError(f"{given_as('unit', unit)} is not in this fit. Its units: {known}.")
         place = np.flatnonzero(self.targets == self.unit_ids.index(unit))
         if place.size == 0:
             raise ArgumentError(f"unit {unit!r} was not explained: silent in the bins that count, or source-only.")
@@ -351,6 +377,7 @@ class CouplingFit(Profiled, Analysed):
         ------
         StorageError : no recording at hand, or another one
         """
+        check_threads(threads)
         self._with_recording(recording)  # refuses another recording
         return make_problem(self.model, cast(Recording, recording or self.recording), threads=threads)
 
@@ -379,12 +406,14 @@ class CouplingFit(Profiled, Analysed):
 
         Raises
         ------
+        ArgumentError : a seed that is none
         StorageError : no recording, or another one
         """
         from kernelfit.diagnostics.goodness import (
             goodness_of_fit,
         )  # diagnostics stand above; the contract wants it here
 
+        check_seed(seed)
         _, data, point = self._with_recording(recording)
         return goodness_of_fit(
             compensate(data, point),
@@ -401,22 +430,29 @@ class CouplingFit(Profiled, Analysed):
 
         Parameters
         ----------
-        start_s, stop_s : on the recording's clock; cut to the window that holds `start_s`
+        start_s, stop_s : on the recording's clock: every bin that this stretch touches, of the window that holds
+            `start_s`
 
         Raises
         ------
         ArgumentError : no window holds `start_s`, or the stretch is empty or not finite
         StorageError : no recording, or another one
         """
-        if not (np.isfinite(start_s) and np.isfinite(stop_s)):
-            raise ArgumentError(f"start_s={start_s}, stop_s={stop_s}: both must be finite times in seconds.")
+        if not (is_number(start_s) and is_number(stop_s)):
+            raise ArgumentError(
+                f"{given_as('start_s', start_s)}, {given_as('stop_s', stop_s)}: both must be finite times in seconds, "
+                "on the recording's clock."
+            )
         grid, data, point = self._with_recording(recording)
-        w = int(np.searchsorted(grid.window_start_s, start_s, side="right")) - 1
         width = grid.bin_width
-        first = int((start_s - grid.window_start_s[max(w, 0)]) / width + 1e-6)
-        n = min(int(np.ceil((stop_s - start_s) / width - 1e-6)), int(grid.window_n_bins[max(w, 0)]) - first)
-        if w < 0 or n <= 0:
-            raise ArgumentError(f"no window holds the stretch from {start_s:g} s to {stop_s:g} s.")
+        w, first, n = bins_between(recording or cast(Recording, self.recording), grid, float(start_s), float(stop_s))
+        if n <= 0:
+            begin, end = self.window_bounds[0, 0], self.window_bounds[-1, 1]
+            raise ArgumentError(
+                f"start_s={clock_text(start_s)}, stop_s={clock_text(stop_s)}: no window holds this stretch. Give one "
+                f"that starts in a window and ends later; the windows lie between {clock_text(begin)} and "
+                f"{clock_text(end)} s."
+            )
         at = int(grid.window_first_bin[w]) + first
         rate = np.full((n, len(self.unit_ids)), np.nan)
         rate[:, self.targets] = expected_counts(data, point, at, n) / width
@@ -470,6 +506,10 @@ class CouplingFit(Profiled, Analysed):
         save_fit(self, path)
 
 
+def _lags(lags_s: object) -> FloatArray:
+    return flat_numbers(lags_s, "lags_s", "Give seconds after the spike, such as [0.002, 0.01, 0.1].", least=0.0)
+
+
 def covariance_kind(kind: str) -> CovarianceKind:
     """Check the name of a covariance.
 
@@ -477,10 +517,9 @@ def covariance_kind(kind: str) -> CovarianceKind:
     ------
     ArgumentError : neither "robust" nor "jackknife" nor "model"
     """
-    for known in get_args(CovarianceKind):
-        if kind == known:
-            return cast(CovarianceKind, known)
-    raise ArgumentError(f"covariance={kind!r} is not known. Say 'robust', 'jackknife' or 'model'.")
+    if isinstance(kind, str) and kind in get_args(CovarianceKind):
+        return cast(CovarianceKind, kind)
+    raise ArgumentError(f"{given_as('covariance', kind)} is not known. Say 'robust', 'jackknife' or 'model'.")
 
 
 __all__ = ["CouplingFit", "Uncertainty", "covariance_kind"]

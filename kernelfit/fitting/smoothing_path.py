@@ -10,7 +10,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit._validation import is_number
+from kernelfit._validation import check_truth_value, distances, flat_numbers
 from kernelfit.errors import ArgumentError
 from kernelfit.fitting.effective import term_sizes
 from kernelfit.fitting.maximise import Optimum, evaluate_locally, maximise
@@ -65,7 +65,7 @@ class SmoothingPath:
 
     def kernels(self, distances_um: FloatArray) -> FloatArray:
         """(L, m) J at each distance (µm) under each smoothing."""
-        d = np.asarray(distances_um, dtype=np.float64)
+        d = distances(distances_um)
         return np.array([self.kernel.value(theta, d, self.span) for theta in self.theta])
 
     @property
@@ -96,6 +96,7 @@ def smoothing_path(
     threads: int | None = None,
 ) -> SmoothingPath:
     """Refit a kernel at each smoothing of a grid; see `CouplingFit.smoothing_path`."""
+    check_truth_value(validate, "validate")
     problem = fit.problem(recording, threads=threads)
     penalty = kernel_penalty(problem)
     if penalty is None:
@@ -149,10 +150,12 @@ def _grid(problem: Problem, optimum: Optimum, penalty: Penalty, now: float) -> F
 
 
 def _checked(smoothing: Sequence[float] | FloatArray) -> FloatArray:
-    values = [v for v in np.ravel(smoothing).tolist() if is_number(v) and v > 0]
-    if not values or len(values) < np.size(smoothing):
-        raise ArgumentError(f"smoothing={smoothing!r}: give positive numbers, such as np.geomspace(0.1, 1e5, 13).")
-    return np.array(sorted(values))
+    remedy = "Give positive numbers, such as np.geomspace(0.1, 1e5, 13)."
+    values = flat_numbers(smoothing, "smoothing", remedy)
+    if not values.size or not (values > 0).all():
+        held = f"holds {values.min():g}, which is not above 0" if values.size else "holds no number"
+        raise ArgumentError(f"smoothing {held}. {remedy}")
+    return np.sort(values)
 
 
 def _log_marginal(problem: Problem, optimum: Optimum, penalty: Penalty, weight: float) -> float:

@@ -99,7 +99,7 @@ def profile_parameter(
     progress: ProgressCallback | None,
 ) -> Profile | Unavailable:
     """Profile of one shared parameter; see `CouplingFit.profile`."""
-    check_call(fit, (name,), level, n_points)
+    check_call(fit, {"name": name}, level, n_points, progress)
     started = time.monotonic()
     if name == "leak_rate" and fit.model.leak_rate is not None:
         return fixed_leak(fit)

@@ -17,14 +17,14 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit._validation import is_number
+from kernelfit._validation import check_callback, check_level, flat_numbers, given_as, is_number
 from kernelfit.errors import ArgumentError, Unavailable
 from kernelfit.fitting.covariance import covariances
 from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.held import Held, hold
-from kernelfit.inference.profile_conditions import check_converged, check_level, discrete_names, model_cut
+from kernelfit.inference.profile_conditions import check_converged, discrete_names, model_cut
 from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.profile_point import point_of
 from kernelfit.inference.profile_walk import Walk, walk
@@ -88,6 +88,7 @@ def compatible_amplitudes(
 ) -> CompatibleAmplitudes | Unavailable:
     """The set of amplitudes at each length; see `CouplingFit.compatible_amplitudes`."""
     check_level(level)
+    check_callback(progress)
     check_converged(fit)
     refused = _one_of_each(fit)
     if refused is not None:
@@ -148,8 +149,9 @@ def _lengths(fit: CouplingFit, problem: Problem, lengths_um: Sequence[float] | F
             return np.asarray(inside[np.unique(np.linspace(0, inside.size - 1, N_LENGTHS).astype(int))])
         started = np.exp(fit.model.kernel.shape_grid(problem.span)[:, 1])
         return np.asarray(np.geomspace(started.min(), started.max(), N_LENGTHS))
-    lengths = np.unique(np.atleast_1d(np.asarray(lengths_um, dtype=np.float64)))
-    wrong = lengths[~(np.isfinite(lengths) & (lengths >= low) & (lengths <= high))]
+    remedy = f"Give lengths in µm that this array can tell, {low:.4g} to {high:.4g}."
+    lengths = np.unique(flat_numbers(lengths_um, "lengths_um", remedy))
+    wrong = lengths[~((lengths >= low) & (lengths <= high))]
     if wrong.size or not lengths.size:
         which = f"{wrong[0]:g}" if wrong.size else "none"
         raise ArgumentError(
@@ -201,15 +203,16 @@ def _held_leak(fit: CouplingFit, problem: Problem, leak: LeakTreatment) -> float
     """The leak rate to hold, 1/s; None where it is climbed or fixed by the model. Raises ArgumentError."""
     if leak is None:
         leak = "re-estimated" if fit.verdict.found else "held"
+    given = given_as("leak", leak)
     if isinstance(leak, str):
         if leak not in ("re-estimated", "held"):
-            raise ArgumentError(f"leak={leak!r} is not known. Say 're-estimated', 'held' or a leak rate in 1/s.")
+            raise ArgumentError(f"{given} is not known. Say 're-estimated', 'held' or a leak rate in 1/s.")
         return fit.leak_rate if problem.fits_leak and leak == "held" else None
     if not problem.fits_leak:
-        raise ArgumentError(f"leak={leak!r}: the model fixes the leak rate at {fit.leak_rate:g} 1/s. Leave it out.")
+        raise ArgumentError(f"{given}: the model fixes the leak rate at {fit.leak_rate:g} 1/s. Leave it out.")
     slowest, fastest = problem.leak_limits
     if not (is_number(leak) and slowest <= leak <= fastest):
-        raise ArgumentError(f"leak={leak!r} must be a rate from {slowest:.3g} to {fastest:.3g} 1/s.")
+        raise ArgumentError(f"{given} must be a rate from {slowest:.3g} to {fastest:.3g} 1/s.")
     return float(leak)
 
 

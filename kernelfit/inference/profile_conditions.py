@@ -2,15 +2,17 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
-from kernelfit._validation import is_number, is_whole
+from kernelfit._validation import check_callback, check_level, check_whole, given_as
 from kernelfit.errors import ArgumentError, NotConvergedError, Unavailable
 from kernelfit.fitting.outcome import Note
 from kernelfit.fitting.problem import Problem
+from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.intervals import critical_value
 from kernelfit.inference.profile_walk import Walked
 from kernelfit.inference.scales import shared_names
@@ -22,22 +24,20 @@ FEWEST_POINTS = 2
 SAME_SITE_NAME = "same_site"
 
 
-def check_call(fit: CouplingFit, names: tuple[str, ...], level: float, n_points: int) -> None:
-    """Refuse what cannot be profiled. Raises ArgumentError, NotConvergedError."""
+def check_call(
+    fit: CouplingFit, names: Mapping[str, str], level: float, n_points: int, progress: ProgressCallback | None
+) -> None:
+    """Refuse what cannot be profiled; `names` of parameters by argument. Raises ArgumentError, NotConvergedError."""
     known = (*shared_names(fit), *["leak_rate"] * (fit.model.leak_rate is not None))
-    for name in names:
-        if name not in known:
-            raise ArgumentError(f"no parameter {name!r} in this fit. Parameters: {', '.join(known)}.")
+    for argument, name in names.items():
+        if not isinstance(name, str) or name not in known:
+            raise ArgumentError(
+                f"{given_as(argument, name)} is no parameter of this fit. Its parameters: {', '.join(known)}."
+            )
     check_level(level)
-    if not (is_whole(n_points) and n_points >= FEWEST_POINTS):
-        raise ArgumentError(f"n_points={n_points!r} must be a whole number from {FEWEST_POINTS} on.")
+    check_whole(n_points, "n_points", FEWEST_POINTS)
+    check_callback(progress)
     check_converged(fit)
-
-
-def check_level(level: float) -> None:
-    """Refuse a level that is none (ArgumentError)."""
-    if not (is_number(level) and 0.0 < level < 1.0):
-        raise ArgumentError(f"level={level!r} must lie strictly between 0 and 1, such as 0.95.")
 
 
 def check_converged(fit: CouplingFit) -> None:

@@ -89,7 +89,7 @@ def profile_contour(
     progress: ProgressCallback | None,
 ) -> ProfileContour | Unavailable:
     """Profile of two shared parameters; see `CouplingFit.profile_contour`."""
-    check_call(fit, names, LEVELS[-1], n_points)
+    check_call(fit, {"first": names[0], "second": names[1]}, LEVELS[-1], n_points, progress)
     if names[0] == names[1]:
         raise ArgumentError(f"{names[0]!r} twice: a contour needs two different parameters.")
     if "leak_rate" in names and fit.model.leak_rate is not None:

@@ -17,7 +17,7 @@ import numpy as np
 from numpy.typing import ArrayLike
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit._validation import is_number
+from kernelfit._validation import DISTANCES, given_as, is_number, is_whole, numbers
 from kernelfit.errors import ArgumentError, NotIdentifiedError
 
 SHORTEST_IN_REFERENCES = 0.2  # lengths are bounded to [d_ref / 5, 5 x largest distance]
@@ -53,13 +53,16 @@ class DistanceRange:
 
     def __post_init__(self) -> None:
         require_positive("reference_um", self.reference_um)
-        if not 0.0 <= self.smallest_um <= self.largest_um < np.inf:
+        known = is_number(self.smallest_um) and is_number(self.largest_um)
+        if not (known and 0.0 <= self.smallest_um <= self.largest_um):
             raise ArgumentError(
-                f"smallest_um={self.smallest_um}, largest_um={self.largest_um}: the range of distances must "
-                "be finite, not negative, and in this order. Check the positions."
+                f"{given_as('smallest_um', self.smallest_um)}, {given_as('largest_um', self.largest_um)}: the range "
+                "of distances must be finite, not negative, and in this order. Check the positions."
             )
-        if self.n_coordinates not in (1, 2, 3):
-            raise ArgumentError(f"n_coordinates={self.n_coordinates}: a position has 1, 2 or 3 coordinates.")
+        if not (is_whole(self.n_coordinates) and self.n_coordinates in (1, 2, 3)):
+            raise ArgumentError(
+                f"{given_as('n_coordinates', self.n_coordinates)}: a position has 1, 2 or 3 coordinates."
+            )
 
     @property
     def length_limits(self) -> tuple[float, float]:
@@ -382,9 +385,7 @@ class KernelCurve:
         ------
         ArgumentError : a distance that is negative or not finite
         """
-        d = np.asarray(distance_um, dtype=np.float64)
-        if not (np.isfinite(d) & (d >= 0)).all():
-            raise ArgumentError("distance_um: distances must be finite and not negative (µm).")
+        d = numbers(distance_um, "distance_um", DISTANCES, least=0.0)
         return self.kernel.value(self.theta, d.ravel(), self.span).reshape(d.shape)
 
     @property
@@ -406,10 +407,16 @@ class KernelCurve:
 # --- small parts shared by the families -------------------------------------------------------------------
 
 
-def require_positive(name: str, value: float) -> None:
+def require_positive(name: str, value: object) -> None:
     """Refuse a value that is not a finite number above zero (ArgumentError)."""
-    if not (np.isfinite(value) and value > 0):
-        raise ArgumentError(f"{name}={value}: must be a finite number above 0.")
+    if not (is_number(value) and value > 0):
+        raise ArgumentError(f"{given_as(name, value)} must be a finite number above 0.")
+
+
+def require_number(name: str, value: object) -> None:
+    """Refuse a value that is not a finite number (ArgumentError)."""
+    if not is_number(value):
+        raise ArgumentError(f"{given_as(name, value)} must be a finite number.")
 
 
 def at_reference(reference_um: float, n_coordinates: int = 2) -> DistanceRange:

@@ -18,6 +18,7 @@ from kernelfit.kernels.base import (
     Parameter,
     at_reference,
     exponential,
+    require_number,
     require_positive,
 )
 
@@ -129,6 +130,10 @@ class DifferenceOfGaussians(Kernel):
         ------
         ArgumentError : lengths not above 0, or the wide one not above the narrow one
         """
+        require_number("narrow_amplitude", narrow_amplitude)
+        require_positive("narrow_length_um", narrow_length_um)
+        require_number("wide_amplitude", wide_amplitude)
+        require_positive("wide_length_um", wide_length_um)
         natural = np.array([narrow_amplitude, narrow_length_um, wide_amplitude, wide_length_um])
         span = at_reference(reference_um)
         return self.curve(self.working(natural, span), span)
@@ -171,5 +176,6 @@ class MexicanHat(Kernel):
 
         The reference distance makes no difference here.
         """
+        require_number("amplitude", amplitude)
         require_positive("length_um", length_um)
         return self.curve(np.array([amplitude, np.log(length_um)]), at_reference(reference_um, n_coordinates))

@@ -17,6 +17,7 @@ from kernelfit.kernels.base import (
     KernelCurve,
     Parameter,
     at_reference,
+    require_number,
     require_positive,
 )
 
@@ -78,6 +79,7 @@ class Disc(Kernel):
 
         The reference distance makes no difference here.
         """
+        require_number("amplitude", amplitude)
         require_positive("length_um", length_um)
         return self.curve(np.array([amplitude, np.log(length_um)]), at_reference(reference_um))
 

@@ -22,6 +22,7 @@ from kernelfit.kernels.base import (
     Parameter,
     at_reference,
     exponential,
+    require_number,
     require_positive,
 )
 
@@ -45,6 +46,7 @@ class Flat(Kernel):
 
     def at(self, *, amplitude: float, reference_um: float = 1.0) -> KernelCurve:
         """The kernel with this amplitude (per spike). The reference distance makes no difference here."""
+        require_number("amplitude", amplitude)
         return self.curve(np.array([amplitude]), at_reference(reference_um))
 
 
@@ -67,6 +69,7 @@ class Exponential(Kernel):
 
     def at(self, *, amplitude: float, length_um: float, reference_um: float) -> KernelCurve:
         """The kernel with `amplitude` (per spike) at `reference_um`, falling by 1/e every `length_um`."""
+        require_number("amplitude", amplitude)
         require_positive("length_um", length_um)
         return self.curve(np.array([amplitude, np.log(length_um)]), at_reference(reference_um))
 
@@ -90,6 +93,7 @@ class Gaussian(Kernel):
 
     def at(self, *, amplitude: float, length_um: float, reference_um: float) -> KernelCurve:
         """The kernel with `amplitude` (per spike) at `reference_um` and standard deviation `length_um`."""
+        require_number("amplitude", amplitude)
         require_positive("length_um", length_um)
         return self.curve(np.array([amplitude, np.log(length_um)]), at_reference(reference_um))
 
@@ -141,6 +145,7 @@ class PowerLaw(Kernel):
         self, *, amplitude: float, exponent: float, reference_um: float, length_um: float | None = None
     ) -> KernelCurve:
         """The kernel with `amplitude` (per spike) at `reference_um`; `length_um` is s where it is fitted."""
+        require_number("amplitude", amplitude)
         require_positive("exponent", exponent)
         if (length_um is not None) != self.fit_scale:
             raise ArgumentError(

@@ -7,6 +7,7 @@ from dataclasses import fields
 from difflib import get_close_matches
 from typing import cast
 
+from kernelfit._validation import given_as
 from kernelfit.errors import ArgumentError
 from kernelfit.kernels.base import Kernel
 from kernelfit.kernels.centre_surround import DifferenceOfGaussians, MexicanHat
@@ -40,7 +41,7 @@ def kernel_from(kernel: str | Kernel) -> Kernel:
     if isinstance(kernel, type) and issubclass(kernel, Kernel):
         raise ArgumentError(f"kernel={kernel.__name__}: a class; make an object: {kernel.__name__}().")
     raise ArgumentError(
-        f"kernel={kernel!r}: need a name ({', '.join(KERNELS)}) or an object: kernels.Gaussian()."
+        f"{given_as('kernel', kernel)}: need a name ({', '.join(KERNELS)}) or an object: kernels.Gaussian()."
     )
 
 

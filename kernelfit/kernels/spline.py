@@ -13,7 +13,7 @@ import numpy as np
 from scipy.interpolate import BSpline
 
 from kernelfit._typing import FloatArray, IntArray
-from kernelfit._validation import is_number, is_whole
+from kernelfit._validation import flat_numbers, is_number, is_whole
 from kernelfit.errors import ArgumentError, ModelError, NotIdentifiedError
 from kernelfit.kernels.base import DistanceRange, Kernel, KernelCurve, Parameter, SmoothingChoice
 
@@ -186,7 +186,8 @@ class Spline(Kernel):
         """
         span = DistanceRange(largest_um, smallest_um, largest_um)  # the reference makes no difference here
         self._knots(span)
-        return self.curve(np.asarray(coefficients, dtype=np.float64), span)
+        needed = f"Give {self.n_basis} coefficients, finite numbers."
+        return self.curve(flat_numbers(coefficients, "coefficients", needed), span)
 
     def _on_axis(self, d_um: FloatArray) -> FloatArray:
         return np.asarray(np.log(d_um)) if self.axis == "log-distance" else d_um

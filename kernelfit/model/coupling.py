@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal, cast
 
-from kernelfit._validation import is_number
+from kernelfit._validation import given_as, is_number, positive
 from kernelfit.errors import ArgumentError
 from kernelfit.kernels import Kernel, kernel_from
 from kernelfit.model.links import Link, link_from
@@ -68,23 +68,23 @@ class CouplingModel:
         rate_course: str | NoRateCourse = "none",
         warm_up_s: float = 0.0,
     ) -> None:
-        if same_site not in ("exclude", "own", "kernel"):
-            raise ArgumentError(f"same_site={same_site!r} is not known. Say 'exclude', 'own' or 'kernel'.")
+        if not isinstance(same_site, str) or same_site not in ("exclude", "own", "kernel"):
+            raise ArgumentError(f"{given_as('same_site', same_site)} is not known. Say 'exclude', 'own' or 'kernel'.")
         put = object.__setattr__  # the one place where the frozen fields are filled
         put(self, "kernel", kernel_from(kernel))
         put(self, "link", link_from(link))
-        put(self, "bin_width", _positive("bin_width", bin_width, "seconds, such as 0.001"))
-        put(self, "leak_rate", None if leak_rate is None else _positive("leak_rate", leak_rate, "1/s, such as 50"))
+        put(self, "bin_width", positive(bin_width, "bin_width", "seconds, such as 0.001"))
+        put(self, "leak_rate", None if leak_rate is None else positive(leak_rate, "leak_rate", "1/s, such as 50"))
         put(
             self,
             "max_distance",
-            None if max_distance is None else _positive("max_distance", max_distance, "µm, such as 500"),
+            None if max_distance is None else positive(max_distance, "max_distance", "µm, such as 500"),
         )
         put(self, "same_site", cast(SameSiteTreatment, same_site))
         put(self, "after_spike", after_spike_from(after_spike))
         put(self, "rate_course", rate_course_from(rate_course))
         if not (is_number(warm_up_s) and warm_up_s >= 0):
-            raise ArgumentError(f"warm_up_s={warm_up_s!r} must be a number of seconds, 0 or more.")
+            raise ArgumentError(f"{given_as('warm_up_s', warm_up_s)} must be a number of seconds, 0 or more.")
         put(self, "warm_up_s", float(warm_up_s))
 
     def settled(self, *, smoothing: float | None = None, ridge: float | None = None) -> CouplingModel:
@@ -136,9 +136,3 @@ class CouplingModel:
         from kernelfit.fitting.fit import fit_model  # fitting builds on this module
 
         return fit_model(self, recording, covariance, threads=threads, seed=seed, progress=progress)
-
-
-def _positive(name: str, value: object, what: str) -> float:
-    if not (is_number(value) and value > 0):
-        raise ArgumentError(f"{name}={value!r} must be a positive number of {what}.")
-    return float(value)

@@ -10,6 +10,7 @@ from typing import ClassVar
 import numpy as np
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import given_as
 from kernelfit.errors import ArgumentError
 
 EXP = 0  # codes by which the compiled loops know a link
@@ -68,8 +69,8 @@ def link_from(link: str | Link) -> Link:
     """
     if isinstance(link, Link):
         return link
-    if link not in LINKS:
-        close = get_close_matches(str(link), LINKS, n=1)
+    if not isinstance(link, str) or link not in LINKS:
+        close = get_close_matches(link, LINKS, n=1) if isinstance(link, str) else []
         hint = f" Did you mean {close[0]!r}?" if close else ""
-        raise ArgumentError(f"link={link!r} is not known. Known links: {', '.join(sorted(LINKS))}.{hint}")
+        raise ArgumentError(f"{given_as('link', link)} is not known. Known links: {', '.join(sorted(LINKS))}.{hint}")
     return LINKS[link]()

@@ -10,7 +10,7 @@ from typing import ClassVar, Literal
 import numpy as np
 
 from kernelfit._typing import FloatArray
-from kernelfit._validation import is_number
+from kernelfit._validation import given_as, is_number
 from kernelfit.errors import ArgumentError
 
 FIRST_RIDGE = 0.01
@@ -112,11 +112,14 @@ def after_spike_from(term: str | AfterSpikeTerm) -> AfterSpikeTerm:
     """
     if isinstance(term, (AfterSpike, NoAfterSpike)):
         return term
-    if term == AfterSpike.name:
-        return AfterSpike()
-    if term == NoAfterSpike.name:
-        return NoAfterSpike()
-    raise ArgumentError(f"after_spike={term!r} is not known. Say 'basis', 'none' or give kf.terms.AfterSpike(...).")
+    if isinstance(term, str):
+        if term == AfterSpike.name:
+            return AfterSpike()
+        if term == NoAfterSpike.name:
+            return NoAfterSpike()
+    raise ArgumentError(
+        f"{given_as('after_spike', term)} is not known. Say 'basis', 'none' or give kf.terms.AfterSpike(...)."
+    )
 
 
 def rate_course_from(term: str | NoRateCourse) -> NoRateCourse:
@@ -128,6 +131,6 @@ def rate_course_from(term: str | NoRateCourse) -> NoRateCourse:
     """
     if isinstance(term, NoRateCourse):
         return term
-    if term == NoRateCourse.name:
+    if isinstance(term, str) and term == NoRateCourse.name:
         return NoRateCourse()
-    raise ArgumentError(f"rate_course={term!r} is not known. Say 'none'.")
+    raise ArgumentError(f"{given_as('rate_course', term)} is not known. Say 'none'.")

@@ -121,6 +121,30 @@ def make_grid(recording: Recording, bin_width: float, *, warm_up_s: float = 0.0)
     return grid
 
 
+def bins_between(recording: Recording, grid: Grid, start_s: float, stop_s: float) -> tuple[int, int, int]:
+    """Which bins of one window a stretch of time touches, by the rounding that counts spikes.
+
+    Parameters
+    ----------
+    recording, grid : a grid and what it was made from
+    start_s, stop_s : on the recording's clock; the window is the one that holds `start_s`
+
+    Returns
+    -------
+    window, first bin counted from its start, number of bins (0 where no window holds `start_s`, or nothing follows it)
+    """
+    ruler = _Ruler(grid.bin_width, _tolerance(recording, grid.bin_width))
+    on_edge = start_s + ruler.tolerance * grid.bin_width
+    window = int(np.searchsorted(grid.window_start_s, on_edge, side="right")) - 1
+    if window < 0:
+        return 0, 0, 0
+    n_bins = int(grid.window_n_bins[window])
+    spans = np.array([start_s, stop_s]) - grid.window_start_s[window]
+    spans = np.clip(spans, 0.0, (n_bins + 1) * grid.bin_width)
+    first, last = int(ruler.floor(spans)[0]), min(int(ruler.ceil(spans)[1]), n_bins)
+    return window, first, max(last - first, 0)
+
+
 @dataclass(frozen=True, slots=True)
 class _Ruler:
     """Spans of time in whole bins; a span within `tolerance` (of a bin) of a whole number counts as that number.

@@ -253,7 +253,7 @@ def test_a_unit_that_excites_itself_to_death_is_told_apart():
 @pytest.mark.parametrize(
     ("change", "says"),
     [
-        ({"baseline_hz": -1.0}, "baseline_hz must be one rate"),
+        ({"baseline_hz": -1.0}, r"baseline_hz=-1.0 is below 0\. Give one rate of 0 Hz or more, or 4 of them"),
         ({"baseline_hz": np.array([1.0, 2.0])}, "or 4 of them"),
         ({"baseline_hz": np.nan}, "baseline_hz"),
         ({"leak_rate": 0.0}, "leak_rate=0.0 must be a positive number"),
@@ -266,7 +266,7 @@ def test_a_unit_that_excites_itself_to_death_is_told_apart():
         ({"after_spike_constants_s": np.array([0.01])}, "go together"),
         (
             {"after_spike_constants_s": np.array([0.01]), "after_spike_coefficients": np.zeros((2, 4))},
-            r"shape \(2, 4\) for 1 time constants",
+            r"shape \(2, 4\) for 1 time constant and 4 units",
         ),
     ],
 )
@@ -274,6 +274,48 @@ def test_refusals_name_the_argument(change, says):
     call = {"positions_um": LINE, "kernel": WEAK, "baseline_hz": 8.0, "leak_rate": 40.0, "duration": 1.0, "seed": 1}
     with pytest.raises(ArgumentError, match=says):
         simulate_recording(**{**call, **change})
+
+
+SIMULATION = {
+    "positions_um": LINE, "kernel": WEAK, "baseline_hz": 8.0, "leak_rate": 40.0, "duration": 1.0, "seed": 1
+}  # fmt: skip
+MAY_BE_NONE = {
+    "after_spike_constants_s": np.array([0.01]), "after_spike_coefficients": np.array([0.1]),
+    "rate_course": np.zeros_like, "unit_ids": ("a", "b", "c", "d"),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("value", ["x", None, ["x"], {}, object(), 1j], ids=repr)
+@pytest.mark.parametrize("name", [*SIMULATION, "link", "bin_width"])
+def test_every_argument_is_refused_by_name(name, value):
+    with pytest.raises(ArgumentError, match=rf"^{name}( |=)") as refused:
+        simulate_recording(**{**SIMULATION, name: value})
+    if value == "x":
+        assert "'x'" in str(refused.value)
+
+
+@pytest.mark.parametrize("value", ["x", "abcd", ["x"], {}, object(), 1j], ids=repr)
+@pytest.mark.parametrize("name", MAY_BE_NONE)
+def test_every_choice_is_refused_by_name(name, value):
+    simulate_recording(**SIMULATION, **MAY_BE_NONE)
+    says = rf"^({name}( |=)|1 unit_ids for 4 positions|0 unit_ids)"
+    with pytest.raises(ArgumentError, match=says):
+        simulate_recording(**{**SIMULATION, **MAY_BE_NONE, name: value})
+
+
+@pytest.mark.parametrize("gives", ["x", None, [1.0, 2.0], np.zeros((2, 2)), [np.nan] * 12, {}], ids=repr)
+def test_functions_that_give_no_numbers(gives):
+    """4 units have 12 coupled pairs, and a second 1000 bins."""
+    with pytest.raises(ArgumentError, match=r"^kernel( |=|\(distances_um\)).*Give a function of distances"):
+        simulate_recording(**{**SIMULATION, "kernel": lambda d: gives})
+    with pytest.raises(ArgumentError, match=r"^rate_course( |=|\(time_s\)).*one finite number for each time"):
+        simulate_recording(**SIMULATION, rate_course=lambda t: gives)
+
+
+def test_names_differ():
+    with pytest.raises(ArgumentError, match="4 unit_ids for 4 positions, not all of them different"):
+        simulate_recording(**SIMULATION, unit_ids=["a", "b", "c", "a"])
+    assert simulate_recording(**SIMULATION, unit_ids=["a", "b", "c", "d"]).unit_ids == ("a", "b", "c", "d")
 
 
 def test_a_slow_course_multiplies_all_rates_in_its_time():

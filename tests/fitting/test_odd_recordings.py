@@ -119,5 +119,5 @@ def test_numbers_of_a_call_are_checked(recording, options):
 
 
 def test_what_is_not_a_recording_is_refused():
-    with pytest.raises(ArgumentError, match=r"recording='spikes.csv': not a Recording.*read_recording"):
+    with pytest.raises(ArgumentError, match=r"recording: the text 'spikes.csv' is not a recording.*read_recording"):
         model().fit("spikes.csv")

@@ -394,7 +394,7 @@ def test_what_cannot_be_profiled(recording, fit, tmp_path):
     profile = stated.profile("leak_rate")
     assert isinstance(profile, Unavailable)
     assert "fixed by the model at 40" in profile.reason
-    with pytest.raises(ArgumentError, match=r"no parameter 'reach'.*length_um"):
+    with pytest.raises(ArgumentError, match=r"name='reach' is no parameter.*length_um"):
         fit.profile("reach")
     with pytest.raises(ArgumentError, match=r"level=1\.5"):
         fit.profile("length_um", level=1.5)

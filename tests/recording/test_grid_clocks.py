@@ -15,7 +15,7 @@ from hypothesis import strategies as st
 
 import kernelfit as kf
 from kernelfit.errors import GridError
-from kernelfit.recording.grid import Grid, make_grid
+from kernelfit.recording.grid import Grid, bins_between, make_grid
 from kernelfit.recording.recording import clock_text
 
 TICKS_PER_S = 10_000
@@ -121,6 +121,56 @@ def test_the_fit_does_not_depend_on_the_clock():
         np.testing.assert_array_equal(there.parameters["estimate"], here.parameters["estimate"])
         np.testing.assert_array_equal(there.parameters["std_error"], here.parameters["std_error"])
         np.testing.assert_array_equal(there.goodness().units["ks_statistic"], here.goodness().units["ks_statistic"])
+
+
+@settings(max_examples=300, deadline=None)
+@given(shift=CLOCKS, start=st.integers(0, 9_999), first=st.integers(0, 9_999), length=st.integers(1, 12_000))
+@example(EPOCH_TICKS + 4567, 0, 30, 50)
+@example(EPOCH_TICKS, 3, 0, 1)
+def test_bins_of_a_stretch_are_those_of_integer_arithmetic(shift, start, first, length):
+    """Every bin of 10 ticks that the stretch touches, counted from the start of the window, a thousand in all."""
+    rec = recording(shift, [[start]], [(start, start + 10_000)])
+    times = [seconds(shift + start + first), seconds(shift + start + first + length)]
+    window, bin_, n = bins_between(rec, make_grid(rec, 0.001), *times)
+    last = min(-(-(first + length) // BIN_TICKS), 1_000)
+    assert (window, bin_, n) == (0, first // BIN_TICKS, last - first // BIN_TICKS)
+
+
+@pytest.mark.parametrize("shift", [0, EPOCH_TICKS, EPOCH_TICKS + 4567])
+def test_stretches_that_no_window_holds(shift):
+    rec = recording(shift, [[100, 6_000]], [(0, 2_000), (5_003, 7_003)])
+    grid = make_grid(rec, 0.001)
+
+    def n_bins(a, b):
+        return bins_between(rec, grid, seconds(shift + a), seconds(shift + b))[2]
+
+    assert [n_bins(*s) for s in ((-20, -10), (2_000, 2_100), (3_000, 6_000), (7_003, 8_000), (40, 40))] == [0] * 5
+    assert bins_between(rec, grid, seconds(shift + 5_003), seconds(shift + 9_000)) == (1, 0, 200)
+    assert bins_between(rec, grid, -1e300, 1e300)[2] == 0
+    assert bins_between(rec, grid, 1e300, 1e301)[2] == 0
+
+
+@pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
+def test_fitted_rates_do_not_depend_on_the_clock():
+    """The stretch from the 101st bin to the 150th, and what was counted in it, on both clocks."""
+    law = kf.kernels.Exponential().at(amplitude=0.4, length_um=120.0, reference_um=100.0)
+    simulated = kf.simulate_recording(100.0 * np.arange(4.0)[:, None], law, 4.0, 30.0, 10.0, 2, bin_width=0.001)
+    ticks = [np.unique(np.round(TICKS_PER_S * train).astype(int)).tolist() for train in simulated.trains]
+    rates = []
+    for shift in (0, EPOCH_TICKS + 4567):
+        times = {f"u{k}": [seconds(t + shift) for t in train] for k, train in enumerate(ticks)}
+        windows = [(seconds(shift), seconds(shift + 100_000))]
+        fit = kf.CouplingModel(kernel="exponential", bin_width=0.001).fit(
+            kf.Recording.from_arrays(times, simulated.positions, windows), threads=1
+        )
+        rates.append(fit.fitted_rates(seconds(shift + 1_000), seconds(shift + 1_500)))
+    here, there = rates
+    assert here.counts.shape == there.counts.shape == (50, 4)
+    np.testing.assert_array_equal(there.counts, here.counts)
+    np.testing.assert_array_equal(there.rate_hz, here.rate_hz)
+    for unit, train in enumerate(ticks):
+        bins = np.array(train)[(np.array(train) >= 1_000) & (np.array(train) < 1_500)] // BIN_TICKS - 100
+        np.testing.assert_array_equal(here.counts[:, unit], np.bincount(bins, minlength=50))
 
 
 def test_bins_finer_than_the_clock_are_refused_with_what_to_do():

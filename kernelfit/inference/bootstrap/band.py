@@ -13,6 +13,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import check_level, check_truth_value, given_as
 from kernelfit.errors import ArgumentError
 from kernelfit.inference.bands import standard_errors
 from kernelfit.inference.bootstrap.ends import RANK_SLACK
@@ -29,10 +30,10 @@ def replicated_band(
     bootstrap: Bootstrap, distances_um: FloatArray, level: float, simultaneous: bool, method: str
 ) -> pd.DataFrame:
     """See `Bootstrap.kernel_band`."""
-    if not 0.0 < level < 1.0:
-        raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
-    if method not in METHODS:
-        raise ArgumentError(f"method={method!r} is not known. Say 'symmetric' or 'studentised'.")
+    check_level(level)
+    check_truth_value(simultaneous, "simultaneous")
+    if not isinstance(method, str) or method not in METHODS:
+        raise ArgumentError(f"{given_as('method', method)} is not known. Say 'symmetric' or 'studentised'.")
     fit = bootstrap.fit
     near, far = distances_with_pairs(fit)
     inside = (distances_um >= near - SAME_DISTANCE_UM) & (distances_um <= far + SAME_DISTANCE_UM)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from kernelfit._validation import given_as
 from kernelfit.errors import ArgumentError
 from kernelfit.inference.bootstrap.block_weights import BlockWeights
 from kernelfit.inference.bootstrap.kind import BootstrapKind
@@ -20,7 +21,9 @@ def kind_from(kind: str | BootstrapKind) -> BootstrapKind:
     """
     if isinstance(kind, BootstrapKind):
         return kind
-    if kind in KINDS:
+    if isinstance(kind, str) and kind in KINDS:
         return KINDS[kind]()
     names = ", ".join(repr(name) for name in KINDS)
-    raise ArgumentError(f"kind={kind!r} is not known. Say {names}, or give kf.bootstrap.BlockWeights('multinomial').")
+    raise ArgumentError(
+        f"{given_as('kind', kind)} is not known. Say {names}, or give kf.bootstrap.BlockWeights('multinomial')."
+    )

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, get_args
+from typing import TYPE_CHECKING, cast, get_args
 
 import numpy as np
 import pandas as pd
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import check_level, given_as
 from kernelfit.errors import ArgumentError
 from kernelfit.inference.bootstrap.ends import (
     Ends,
@@ -156,17 +157,16 @@ def interval_method(bootstrap: Bootstrap, level: float, method: str) -> Interval
     ------
     ArgumentError : no such method, one the kind has not, or a level outside (0, 1)
     """
-    if not 0.0 < level < 1.0:
-        raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
-    if method == "bca" and not bootstrap.kind.by_blocks:
+    check_level(level)
+    if isinstance(method, str) and method == "bca" and not bootstrap.kind.by_blocks:
         raise ArgumentError(
             f"method='bca' needs the influence of blocks of time, which kind={bootstrap.kind.name!r} does not rest on. "
             "Say 'percentile', 'basic' or 'studentised', or use kind='one-step'."
         )
-    for known in get_args(IntervalMethod):
-        if method == known:
-            return known  # type: ignore[no-any-return]
-    raise ArgumentError(f"method={method!r} is not known. Say 'percentile', 'basic', 'studentised' or 'bca'.")
+    if isinstance(method, str) and method in get_args(IntervalMethod):
+        return cast(IntervalMethod, method)
+    known = "'percentile', 'basic', 'studentised' or 'bca'"
+    raise ArgumentError(f"{given_as('method', method)} is not known. Say {known}.")
 
 
 def spread_along(slope: FloatArray, covariance: FloatArray) -> float:

@@ -10,6 +10,8 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import BoolArray, FloatArray
+from kernelfit._validation import distances, given_as
+from kernelfit.errors import ArgumentError
 from kernelfit.inference.bootstrap.band import replicated_band
 from kernelfit.inference.bootstrap.interval_scale import IntervalScale
 from kernelfit.inference.bootstrap.kind import BootstrapKind
@@ -135,10 +137,9 @@ class Bootstrap:
 
         Raises
         ------
-        ArgumentError : a level or a method that cannot be had
+        ArgumentError : a level or a method that cannot be had, or something that is no distance
         """
-        distances = np.atleast_1d(np.asarray(distances_um, dtype=np.float64))
-        return replicated_band(self, distances, level, simultaneous, method)
+        return replicated_band(self, distances(distances_um), level, simultaneous, method)
 
     def of(self, function: SharedFunction, *, slope: SharedFunction | None = None) -> Replicated:
         """Any figure that follows from the shared parameters, at the fit and at every replicate.
@@ -152,11 +153,20 @@ class Bootstrap:
         Returns
         -------
         Replicated : with `.estimate`, `.values` and `.intervals(level, method)`
+
+        Raises
+        ------
+        ArgumentError : not a function
         """
+        for name, given in (("function", function), ("slope", slope)):
+            if not callable(given) and (given is not None or name == "function"):
+                raise ArgumentError(f"{given_as(name, given)} cannot be called. Give a function of the parameters.")
         return Replicated.of(self, function, slope)
 
     def of_kernel(self, function: Callable[[KernelCurve], FloatArray]) -> Replicated:
         """The same for a figure that follows from the kernel alone: `function` takes a `KernelCurve`."""
+        if not callable(function):
+            raise ArgumentError(f"{given_as('function', function)} cannot be called. Give a function of a kernel.")
         kernel, span, n = self.fit.model.kernel, self.fit.span, self.fit.n_kernel
         return self.of(lambda shared: function(kernel.curve(shared[:n], span)))
 

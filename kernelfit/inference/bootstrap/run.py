@@ -16,14 +16,14 @@ from pathlib import Path
 import numpy as np
 from joblib import Parallel, delayed
 
-from kernelfit._validation import is_whole
+from kernelfit._validation import check_callback, check_seed, check_whole, given_as
 from kernelfit.errors import ArgumentError, NotConvergedError
 from kernelfit.fitting.result import CouplingFit
 from kernelfit.inference.bootstrap.journal import Journal, header
 from kernelfit.inference.bootstrap.kind import BootstrapKind, Replicate, Replicator
 from kernelfit.inference.bootstrap.registry import kind_from
 from kernelfit.inference.bootstrap.result import Bootstrap
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import Recording, check_recording
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,7 +59,8 @@ def bootstrap(
 ) -> Bootstrap:
     """Replicates of a fit; see `CouplingFit.bootstrap`."""
     kind = kind_from(kind)
-    _check_call(fit, n_replicates, seed, jobs)
+    _check_call(n_replicates, seed, recording, jobs, folder, progress)
+    _check_converged(fit)
     replicator = kind.replicator(fit, recording)
     collected = _Collected(n_replicates, progress)
     if folder is None:
@@ -80,13 +81,21 @@ def bootstrap(
     return _result(fit, kind, seed, collected)
 
 
-def _check_call(fit: CouplingFit, n_replicates: int, seed: int, jobs: int | None) -> None:
-    if not (is_whole(n_replicates) and n_replicates >= 1):
-        raise ArgumentError(f"n_replicates={n_replicates!r} must be a whole number from 1 on.")
-    if not (is_whole(seed) and seed >= 0):
-        raise ArgumentError(f"seed={seed!r} must be a whole number, 0 or more.")
-    if jobs is not None and not (is_whole(jobs) and jobs >= 1):
-        raise ArgumentError(f"jobs={jobs!r} must be a whole number of processes from 1 on, or None for all there are.")
+def _check_call(
+    n_replicates: object, seed: object, recording: object, jobs: object, folder: object, progress: object
+) -> None:
+    check_whole(n_replicates, "n_replicates", 1)
+    check_seed(seed)
+    if recording is not None:
+        check_recording(recording)
+    if jobs is not None:
+        check_whole(jobs, "jobs", 1, ", or None for as many processes as the machine has")
+    if folder is not None and not isinstance(folder, (str, os.PathLike)):
+        raise ArgumentError(f"{given_as('folder', folder)} is no path. Name a folder to keep the replicates in.")
+    check_callback(progress)
+
+
+def _check_converged(fit: CouplingFit) -> None:
     if not fit.converged:
         raise NotConvergedError(
             f"{fit.origin.name('spikes')}: the fit did not reach an optimum ({fit.solver.message}), so its replicates "

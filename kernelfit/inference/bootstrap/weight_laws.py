@@ -14,6 +14,7 @@ from typing import ClassVar
 import numpy as np
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import given_as
 from kernelfit.errors import ArgumentError
 
 GOLDEN = 0.5 * (1.0 + np.sqrt(5.0))  # the two values of Mammen's law are GOLDEN and 1 - GOLDEN, about 0
@@ -155,9 +156,11 @@ def weight_law_from(law: str | WeightLaw, *, refits: bool) -> WeightLaw:
     ArgumentError : no such law, or one that a refit cannot use
     """
     fitting = [name for name, known in WEIGHT_LAWS.items() if known.refits or not refits]
-    made = law if isinstance(law, WeightLaw) else WEIGHT_LAWS[law]() if law in WEIGHT_LAWS else None
+    made = law if isinstance(law, WeightLaw) else None
+    if isinstance(law, str) and law in WEIGHT_LAWS:
+        made = WEIGHT_LAWS[law]()
     if made is None or (refits and not made.refits):
         why = "is not known" if made is None else "has negative weights, which a refit cannot use"
         given = made.name if made is not None else law
-        raise ArgumentError(f"law={given!r} {why}. Say {', '.join(repr(name) for name in fitting)}.")
+        raise ArgumentError(f"{given_as('law', given)} {why}. Say {', '.join(repr(name) for name in fitting)}.")
     return made

@@ -9,8 +9,10 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from kernelfit._typing import FloatArray
+from kernelfit._validation import given_as
 from kernelfit.errors import ArgumentError
 from kernelfit.inference.bootstrap.ends import percentile_ends
+from kernelfit.inference.bootstrap.result import Bootstrap
 from kernelfit.inference.derived.figure import DerivedFigure, Lost
 from kernelfit.inference.derived.row import Losses, Row, opened
 from kernelfit.inference.derived.setting import Law
@@ -19,7 +21,6 @@ from kernelfit.inference.intervals import critical_value
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
-    from kernelfit.inference.bootstrap import Bootstrap
 
 
 @dataclass(frozen=True, eq=False)
@@ -106,6 +107,8 @@ class ReplicateSpread:
 
 
 def require_same_fit(bootstrap: Bootstrap, fit: CouplingFit) -> None:
-    """Refuse a bootstrap of another fit (ArgumentError)."""
+    """Refuse a bootstrap of another fit, or what is none (ArgumentError)."""
+    if not isinstance(bootstrap, Bootstrap):
+        raise ArgumentError(f"{given_as('bootstrap', bootstrap)} is no bootstrap. Pass fit.bootstrap(...) of this fit.")
     if not np.array_equal(bootstrap.fit.shared, fit.shared) or bootstrap.fit.unit_ids != fit.unit_ids:
         raise ArgumentError("bootstrap=: these are replicates of another fit. Pass fit.bootstrap(...) of this one.")

@@ -9,7 +9,8 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import FloatArray
-from kernelfit.errors import ArgumentError, Unavailable
+from kernelfit._validation import check_level, distances
+from kernelfit.errors import Unavailable
 from kernelfit.inference.derived.figure import DerivedFigure, Lost
 from kernelfit.inference.derived.memory import TimeConstant
 from kernelfit.inference.derived.network import SpectralRadius, leading_mode, stability_words
@@ -60,15 +61,15 @@ def derived_table(
     ArgumentError : a level or a distance out of range, a bootstrap of another fit
     StorageError : `recording` is not the one that was fitted
     """
-    if not 0.0 < level < 1.0:
-        raise ArgumentError(f"level={level} must lie strictly between 0 and 1, such as 0.95.")
+    check_level(level)
+    if bootstrap is not None:
+        require_same_fit(bootstrap, fit)
     law = setting_of(fit, recording).at(fit.shared)
-    figures = derived_figures(law, _checked(distances_um))
+    figures = derived_figures(law, None if distances_um is None else distances(distances_um))
     spread: DeltaSpread | ReplicateSpread
     if bootstrap is None:
         spread = DeltaSpread.of(fit, law, level)
     else:
-        require_same_fit(bootstrap, fit)
         spread = ReplicateSpread.of(bootstrap, law, figures, level)
     return as_table(figures, [_row(figure, law, fit, spread) for figure in figures])
 
@@ -141,12 +142,3 @@ def _stability(figure: DerivedFigure, law: Law, row: Row) -> str:
         return ""
     suppresses = leading_mode(law, pairs)[0] < 0.0
     return stability_words(row.estimate, row.lower, row.upper, suppresses=suppresses)
-
-
-def _checked(distances_um: FloatArray | None) -> FloatArray | None:
-    if distances_um is None:
-        return None
-    distances = np.atleast_1d(np.asarray(distances_um, dtype=np.float64))
-    if distances.ndim != 1 or not (np.isfinite(distances) & (distances >= 0)).all():
-        raise ArgumentError(f"distances_um={distances_um}: a list of distances (µm), finite and not negative.")
-    return distances
