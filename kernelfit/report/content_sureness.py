@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
 from kernelfit.inference.profile import Profile
 from kernelfit.inference.scales import shared_names
@@ -29,6 +31,7 @@ KINDS: tuple[CovarianceKind, ...] = ("model", "robust", "jackknife")
 BOOTSTRAP, PROFILE = "bootstrap", "profile"
 WIDER = 1.15  # jackknife over robust standard error: from here on a few stretches carry the estimate
 CARRIES = 1.0  # robust standard errors that one stretch or unit moves a parameter by: worth a warning
+OTHER_BLOCKS = "(The test of any coupling cuts blocks of its own, before there are estimates.)"
 SHORT = {"amplitude": "amplitude", "length_um": "length", "leak_rate": "leak rate", "exponent": "exponent"}
 
 
@@ -112,7 +115,12 @@ def kinds_data(fit: CouplingFit, sureness: Sureness) -> KindsData | Unavailable:
         compared.append(Compared(axis_name(fit, name), estimate.value, tuple(intervals)))
     if not compared:
         return Unavailable("no parameter was estimated")
-    return KindsData(_kinds_title(fit), tuple(compared), kind_word(fit.covariance_kind), LEVEL)
+    return KindsData(
+        kinds_title(fit.std_errors["ratio"].to_numpy(dtype=np.float64), compared),
+        tuple(compared),
+        kind_word(fit.covariance_kind),
+        LEVEL,
+    )
 
 
 def _wald(fit: CouplingFit, name: str, kind: CovarianceKind) -> Interval:
@@ -147,15 +155,37 @@ def _bootstrap(sureness: Sureness, name: str) -> Interval:
     return Interval(BOOTSTRAP, float(lower), float(upper), str(table["note"].to_dict()[name]))
 
 
-def _kinds_title(fit: CouplingFit) -> str:
-    ratios = fit.std_errors["ratio"].to_numpy(dtype=np.float64)
+def kinds_title(ratios: FloatArray, compared: Sequence[Compared]) -> str:
+    """What intervals of several kinds say together: that they agree only where every end drawn does.
+
+    Parameters
+    ----------
+    ratios : robust over model-based standard errors, NaN where there is none
+    compared : parameters with the intervals that are drawn
+    """
     known = ratios[np.isfinite(ratios)]
-    if known.size == 0:
+    if known.size and (known.max() >= RATIO_WORTH_SAYING or known.min() <= 1.0 / RATIO_WORTH_SAYING):
+        shown = range_text(known.min(), known.max()) if known.size > 1 else number_text(float(known[0]), 2)
+        return f"Robust intervals are {shown} times as wide as those that take the model at its word"
+    several = [p for p in compared if sum(i.known for i in p.intervals) > 1]
+    if not several:
         return "Intervals of every kind"
-    if known.max() < RATIO_WORTH_SAYING:
-        return "All kinds of interval agree"
-    shown = range_text(known.min(), known.max()) if known.size > 1 else number_text(float(known[0]), 2)
-    return f"Robust intervals are {shown} times as wide as those that take the model at its word"
+    differing = [p.name for p in several if not _ends_agree(p)]
+    if differing:
+        return f"Kinds of interval differ for {listed(differing)}"
+    return "All kinds of interval agree"
+
+
+def _ends_agree(parameter: Compared) -> bool:
+    """Whether every kind reaches about as far from the estimate, on either side; an open end agrees with open ones."""
+    drawn = [i for i in parameter.intervals if i.known]
+    for reach in (
+        [parameter.estimate - i.lower for i in drawn],
+        [i.upper - parameter.estimate for i in drawn],
+    ):
+        if not max(reach) <= RATIO_WORTH_SAYING * min(reach):
+            return False
+    return True
 
 
 def blocks_data(fit: CouplingFit) -> BlocksData | Unavailable:
@@ -247,10 +277,11 @@ def blocks_sentence(fit: CouplingFit) -> str:
         return ""
     length = block_text(fit.block_length_s)
     if curve.settled:
-        return f"Blocks of {length} are long enough: what one does to the estimates does not foretell the next."
+        long_enough = f"Blocks of {length} are long enough: what one does to the estimates does not foretell the next."
+        return f"{long_enough} {OTHER_BLOCKS}"
     return (
         f"Blocks of {length} are too short, and there are too few to join more of them: what one does to the estimates "
-        "still foretells the next. Read the robust intervals as lower limits of the uncertainty."
+        f"still foretells the next. Read the robust intervals as lower limits of the uncertainty. {OTHER_BLOCKS}"
     )
 
 
