@@ -11,6 +11,7 @@ import numpy as np
 
 from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
+from kernelfit.fitting.block_length import BlockCurve
 from kernelfit.inference.profile import Profile
 from kernelfit.inference.scales import shared_names
 from kernelfit.inference.sureness import Sureness
@@ -31,6 +32,7 @@ KINDS: tuple[CovarianceKind, ...] = ("model", "robust", "jackknife")
 BOOTSTRAP, PROFILE = "bootstrap", "profile"
 WIDER = 1.15  # jackknife over robust standard error: from here on a few stretches carry the estimate
 CARRIES = 1.0  # robust standard errors that one stretch or unit moves a parameter by: worth a warning
+FLAT_WITHIN = 2.0  # Monte-Carlo errors of a standard error from G blocks, 1/sqrt(2 (G - 1)) of it
 OTHER_BLOCKS = "(The test of any coupling cuts blocks of its own, before there are estimates.)"
 SHORT = {"amplitude": "amplitude", "length_um": "length", "leak_rate": "leak rate", "exponent": "exponent"}
 
@@ -196,13 +198,8 @@ def blocks_data(fit: CouplingFit) -> BlocksData | Unavailable:
         return Unavailable("there are too few blocks of time")
     chosen = curve.std_error[curve.chosen][used]
     model = np.sqrt(np.diag(fit.uncertainty.shared_model))[used]
-    title = (
-        "Standard errors no longer depend on the length of the blocks"
-        if curve.settled
-        else "Standard errors still grow with the length of the blocks"
-    )
     return BlocksData(
-        title=title,
+        title=blocks_title(curve),
         length_s=curve.length_s,
         n_blocks=curve.n_blocks,
         names=tuple(short_name(n) for n, u in zip(shared_names(fit), used, strict=True) if u),
@@ -271,18 +268,68 @@ def _jackknife_over_robust(fit: CouplingFit) -> float:
 
 
 def blocks_sentence(fit: CouplingFit) -> str:
-    """How the length of the blocks was chosen."""
+    """What the length of the blocks rests on."""
     curve = fit.uncertainty.block_curve
     if not np.isfinite(curve.std_error[curve.chosen]).any():
         return ""
-    length = block_text(fit.block_length_s)
-    if curve.settled:
-        long_enough = f"Blocks of {length} are long enough: what one does to the estimates does not foretell the next."
-        return f"{long_enough} {OTHER_BLOCKS}"
-    return (
-        f"Blocks of {length} are too short, and there are too few to join more of them: what one does to the estimates "
-        f"still foretells the next. Read the robust intervals as lower limits of the uncertainty. {OTHER_BLOCKS}"
+    return f"{blocks_text(curve, block_text(fit.block_length_s))} {OTHER_BLOCKS}"
+
+
+def blocks_title(curve: BlockCurve) -> str:
+    """What the curve of standard errors against the length of the blocks shows, and no more."""
+    if not curve.settled:
+        return "Standard errors still grow with the length of the blocks"
+    longer = _flat_beyond(curve)
+    if longer is None:
+        return f"No dependence between neighbouring blocks could be seen ({_chosen_blocks(curve)} blocks)"
+    if longer:
+        return "Standard errors no longer depend on the length of the blocks"
+    return "Standard errors change with the length of the blocks, though neighbouring ones look independent"
+
+
+def blocks_text(curve: BlockCurve, length: str) -> str:
+    """The same as text, with the power of the test: few blocks show only strong dependence.
+
+    Parameters
+    ----------
+    curve : of standard errors against the length of the blocks
+    length : that of the blocks used, in words
+    """
+    if not curve.settled:
+        return (
+            f"Blocks of {length} are too short, and there are too few to join more of them: what one does to the "
+            "estimates still foretells the next. Read the robust intervals as lower limits of the uncertainty."
+        )
+    n = _chosen_blocks(curve)
+    seen = float(curve.threshold[curve.chosen]) - 1.0 / n  # the estimate of no correlation lies 1/n below 0
+    text = (
+        f"At blocks of {length} no dependence between neighbouring blocks could be seen ({n} blocks, which would show "
+        f"a correlation above {number_text(seen, 2)})"
     )
+    longer = _flat_beyond(curve)
+    if longer is None:
+        return f"{text}; there are too few blocks to try longer ones."
+    if longer:
+        return f"{text}, and over longer ones standard errors stay the same, as far as chance lets them."
+    return (
+        f"{text}, but over longer ones standard errors change by more than chance would have it. Read the robust "
+        "intervals with care."
+    )
+
+
+def _chosen_blocks(curve: BlockCurve) -> int:
+    return int(curve.n_blocks[curve.chosen])
+
+
+def _flat_beyond(curve: BlockCurve) -> bool | None:
+    """Whether standard errors of longer blocks lie within Monte-Carlo errors of those used; None: no longer ones."""
+    if curve.chosen + 1 >= curve.length_s.size:
+        return None
+    at_chosen = curve.std_error[curve.chosen]
+    known = np.isfinite(at_chosen) & (at_chosen > 0)
+    change = np.abs(curve.std_error[curve.chosen + 1 :, known] / at_chosen[known] - 1.0)
+    allowed = FLAT_WITHIN / np.sqrt(2.0 * (curve.n_blocks[curve.chosen + 1 :] - 1.0))
+    return bool((change <= allowed[:, None]).all())
 
 
 def stretches_sentence(fit: CouplingFit) -> str:

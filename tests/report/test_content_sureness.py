@@ -7,7 +7,8 @@ import math
 import numpy as np
 import pytest
 
-from kernelfit.report.content_sureness import kinds_title
+from kernelfit.fitting.block_length import BlockCurve
+from kernelfit.report.content_sureness import blocks_text, blocks_title, kinds_title
 from kernelfit.report.sureness_data import Compared, Interval
 
 ALIKE = np.array([1.2, 0.9])
@@ -47,3 +48,38 @@ def test_ends_open_in_every_kind_agree_and_one_interval_alone_says_nothing():
 def test_robust_ones_much_wider_or_narrower_are_the_title(ratios, shown):
     title = kinds_title(np.array([*ratios, np.nan]), [compared((0.2, 0.5), (0.2, 0.5))])
     assert title == f"Robust intervals are {shown} times as wide as those that take the model at its word"
+
+
+def curve(std_error, n_blocks, *, chosen, settled=True):
+    """Of one parameter beside one that was not estimated."""
+    n = np.array(n_blocks, dtype=float)
+    errors = np.column_stack([std_error, np.full(n.size, np.nan)])
+    return BlockCurve(240.0 / n, n, errors, np.zeros_like(errors), 1.65 / np.sqrt(n), chosen, settled)
+
+
+def test_few_blocks_without_correlation_are_no_evidence_of_long_enough_ones():
+    """1.65/sqrt(10) - 1/10 = 0.42: what ten blocks would show."""
+    few = curve([0.9, 1.0, 1.1], [40, 20, 10], chosen=2)
+    assert blocks_title(few) == "No dependence between neighbouring blocks could be seen (10 blocks)"
+    text = blocks_text(few, "24 s")
+    assert "no dependence between neighbouring blocks could be seen (10 blocks" in text
+    assert "a correlation above 0.42" in text
+    assert "too few blocks to try longer ones" in text
+    assert "long enough" not in text
+
+
+@pytest.mark.parametrize(
+    ("longer", "flat"),
+    [(1.0, True), (1.31, True), (1.34, False), (0.66, False)],  # 2/sqrt(2 (20 - 1)) = 0.324
+)
+def test_standard_errors_no_longer_depend_on_a_length_only_where_longer_ones_were_tried(longer, flat):
+    tried = curve([0.5, 1.0, longer], [80, 40, 20], chosen=1)
+    assert (blocks_title(tried) == "Standard errors no longer depend on the length of the blocks") is flat
+    assert ("standard errors stay the same" in blocks_text(tried, "6 s")) is flat
+    assert ("change by more than chance" in blocks_text(tried, "6 s")) is not flat
+
+
+def test_blocks_that_go_together_are_too_short():
+    short = curve([0.9, 1.0, 1.1], [80, 40, 20], chosen=2, settled=False)
+    assert "still grow" in blocks_title(short)
+    assert "lower limits" in blocks_text(short, "12 s")
