@@ -335,19 +335,23 @@ def _flat_beyond(curve: BlockCurve) -> bool | None:
 def stretches_sentence(fit: CouplingFit) -> str:
     """What the recording is worth for the headline parameter, beside what was counted."""
     worth = fit.worth
-    names = [n for n in worth.index if np.isfinite(worth.loc[n, "stretches"])]
+    names = [n for n in worth.index if np.isfinite(worth.loc[n, "independent_stretches"])]
     if not names:
         return ""
     name = next((n for n in names if n == "length_um"), names[0])
     row = worth.loc[name]
-    counted = f"{count_text(fit.n_spikes)} spikes in {duration_text(fit.duration_s)}"
-    worth_of = f"about {count_text(row['stretches'])} independent stretches of {block_text(fit.block_length_s)}"
-    if not row["ratio"] >= RATIO_WORTH_SAYING:  # also where there is no ratio
-        return f"For the {short_name(str(name))}, {counted} are worth {worth_of}."
+    what = short_name(str(name))
+    text = (
+        f"For the {what}, {count_text(fit.n_spikes)} spikes in {duration_text(fit.duration_s)} hold about "
+        f"{count_text(row['independent_stretches'])} independent stretches of {block_text(fit.block_length_s)}"
+    )
+    if row["ratio"] >= RATIO_WORTH_SAYING:
+        text += (
+            f" and are worth as much as {count_text(row['spikes'])} spikes in {duration_text(row['seconds'])} of a "
+            "recording in which every bin were independent given the model"
+        )
     return (
-        f"For the {short_name(str(name))}, {counted} are worth {worth_of}, or as much as "
-        f"{count_text(row['spikes'])} spikes in {duration_text(row['seconds'])} of a recording in which every bin were "
-        "independent given the model."
+        f"{text}. The estimate is carried as if by {count_text(row['carrying_stretches'])} stretches that pull alike."
     )
 
 
@@ -399,9 +403,10 @@ def worth_table(fit: CouplingFit) -> Table | None:
         (
             Cell(str(name)),
             value_cell(float(row["ratio"]), 2),
-            Cell(count_text(row["stretches"]), float(row["stretches"])),
             Cell(count_text(row["spikes"]), float(row["spikes"])),
             Cell(duration_text(float(row["seconds"])), float(row["seconds"])),
+            Cell(count_text(row["independent_stretches"]), float(row["independent_stretches"])),
+            Cell(count_text(row["carrying_stretches"]), float(row["carrying_stretches"])),
         )
         for name, row in worth.iterrows()
     )
@@ -413,9 +418,10 @@ def worth_table(fit: CouplingFit) -> Table | None:
         columns=(
             Column("name", numeric=False),
             Column("robust / model-based"),
-            Column("independent stretches"),
             Column("spikes"),
             Column("time"),
+            Column("independent stretches"),
+            Column("stretches that carry it"),
         ),
         rows=rows,
         file="worth.csv",
