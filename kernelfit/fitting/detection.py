@@ -11,6 +11,9 @@ seldom and a band happens to hold no coincidence, its scores are all small, of o
 own spread they would look certain. A spread above the expected one, that of bursts, is divided out, so that one leak
 does not drown the others; flips that spread less than expected are stretched to it. Blocks are joined as long as
 neighbours go together, which they do where rates drift over more than a block.
+
+Where pairs on one site have a coefficient of their own, coupling across distance is asked for beside it, and the
+coefficient is tested by itself, in the same way, at the fit without any coupling.
 """
 
 from __future__ import annotations
@@ -41,12 +44,15 @@ class CouplingVerdict:
     p_value : of the sign-flip test of any coupling
     critical_z : how many standard errors an amplitude chosen for its length and leak must lie from zero
     sentence : the verdict in words
+    same_site_found : whether units on one site were found to be coupled by a coefficient of their own, which tells the
+        leak too
     """
 
     found: bool
     p_value: float
     critical_z: float
     sentence: str
+    same_site_found: bool = False
 
 
 def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
@@ -57,8 +63,31 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
     null : the fit without coupling and its sweeps by leak rate
     seed : of the sign flips
     """
+    test = _tested([_directions(sweep) for sweep in null.sweeps], seed)
+    on_sites = [_Directions(s.same_site.block_score, s.same_site.information) for s in null.sweeps if s.same_site]
+    same_site = _tested(on_sites, seed) if on_sites else None
+    found = test.p_value <= LEVEL
+    same_site_found = same_site is not None and same_site.p_value <= LEVEL
+    return CouplingVerdict(found, test.p_value, test.critical_z, _sentence(test, same_site), same_site_found)
+
+
+@dataclass(frozen=True)
+class _Test:
+    """p-value of the largest statistic over the leaks, 95 % quantile of the largest |z|, and blocks flipped."""
+
+    p_value: float
+    critical_z: float
+    n_blocks: int
+
+    @property
+    def shown(self) -> str:
+        return "< 0.001" if self.p_value < 0.001 else f"= {self.p_value:.2g}"
+
+
+def _tested(directions: list[_Directions], seed: int) -> _Test:
+    """Flip the signs of whole blocks of time."""
     rng = np.random.default_rng(seed)
-    directions = _joined([_directions(sweep) for sweep in null.sweeps])
+    directions = _joined(directions)
     n_blocks = directions[0].scores.shape[0]
     signs = rng.choice(np.array([-1.0, 1.0]), size=(N_FLIPS, n_blocks))
     observed, flipped, searched = 0.0, np.zeros(N_FLIPS), np.zeros(N_FLIPS)
@@ -72,25 +101,29 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
         searched = np.maximum(searched, np.sum((draws @ own) * draws, axis=1))
     reached = flipped >= observed * (1.0 - ROUNDING)
     p_value = (1.0 + float(np.sum(reached))) / (N_FLIPS + 1.0)
-    critical_z = float(np.sqrt(np.quantile(searched, 1.0 - LEVEL)))
-    found = p_value <= LEVEL
-    return CouplingVerdict(found, p_value, critical_z, _sentence(found, p_value, n_blocks))
+    return _Test(p_value, float(np.sqrt(np.quantile(searched, 1.0 - LEVEL))), n_blocks)
 
 
-def _sentence(found: bool, p_value: float, n_blocks: int) -> str:
-    if n_blocks < FEWEST_BLOCKS:
-        blocks = f"{n_blocks} block{'s' * (n_blocks != 1)} of time"
+def _sentence(test: _Test, same_site: _Test | None) -> str:
+    across = "" if same_site is None else " across distance"
+    nothing = "Length and leak rate mean nothing here."
+    beside = ""
+    if same_site is not None:
+        told = same_site.p_value <= LEVEL
+        beside = f" Units on one site {'are' if told else 'are not shown to be'} coupled (p {same_site.shown})."
+        if told:
+            nothing = "The kernel's length means nothing here; the leak rate is that of units on one site."
+    if test.n_blocks < FEWEST_BLOCKS:
+        blocks = f"{test.n_blocks} block{'s' * (test.n_blocks != 1)} of time"
         return (
-            f"No coupling to describe: the recording is too short to test for any ({blocks}; {FEWEST_BLOCKS} are "
-            "needed). Length and leak rate mean nothing here."
+            f"No coupling{across} to describe: the recording is too short to test for any ({blocks}; {FEWEST_BLOCKS} "
+            f"are needed). {nothing}"
         )
-    shown = "< 0.001" if p_value < 0.001 else f"= {p_value:.2g}"
-    test = f"test of any coupling, sign flips of {n_blocks} blocks of time: p {shown}"
-    if found:
-        return f"Units' rates change after spikes of other units ({test})."
+    shown = f"test of any coupling{across}, sign flips of {test.n_blocks} blocks of time: p {test.shown}"
+    if test.p_value <= LEVEL:
+        return f"Units' rates change after spikes of other units{across} ({shown}).{beside}"
     return (
-        f"No coupling to describe: the recording is described as well without any ({test}). Length and leak rate mean "
-        "nothing here."
+        f"No coupling{across} to describe: the recording is described as well without any ({shown}).{beside} {nothing}"
     )
 
 

@@ -12,7 +12,7 @@ from kernelfit.fitting.covariance import Uncertainty, covariances
 from kernelfit.fitting.maximise import LOOSE, TIGHT, Optimum, maximise
 from kernelfit.fitting.null import Null, NullSweep, null_blocks, null_sweep
 from kernelfit.fitting.problem import Estimate, Problem
-from kernelfit.fitting.search import SearchResult, StartRecord, held_by_nothing, promising
+from kernelfit.fitting.search import SearchResult, StartRecord, held_by_nothing, promising, start_at
 from kernelfit.kernels.bands import Bands
 
 MOST_RADII = 40
@@ -187,7 +187,7 @@ def _gain_by_radius(
 ) -> tuple[FloatArray, FloatArray]:
     """Gain a quadratic promises for each radius, and the amplitude, from one sweep with a band between each two."""
     bands = Bands(tuple(float(r) for r in candidates))
-    fine = null_sweep(problem, bands, sweep.leak, null.optimum.estimate, null_blocks(problem))
+    fine = null_sweep(problem, bands, sweep.leak, null.optimum.estimate, null_blocks(problem), sweep.same_site)
     score = fine.information @ fine.coupling
     gains, amplitudes = np.full(candidates.size, -np.inf), np.zeros(candidates.size)
     for k in range(candidates.size):
@@ -202,5 +202,4 @@ def _gain_by_radius(
 def _start(problem: Problem, null: Null, sweep: NullSweep, place: int, radius_um: float, amplitude: float) -> Estimate:
     theta = np.full(problem.n_kernel, amplitude)
     theta[place] = np.log(radius_um)
-    rest = [0.0] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)
-    return Estimate(null.optimum.estimate.own, np.concatenate([theta, rest]))
+    return start_at(problem, null, sweep, theta)

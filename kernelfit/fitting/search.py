@@ -65,8 +65,16 @@ def start_estimates(problem: Problem, null: Null, sweep: NullSweep, n: int) -> l
     informed = information > NO_INFORMATION * information.max()  # not so where all sources of a band are silent
     weight = np.where(informed, 1.0 / np.where(informed, variance, 1.0), 0.0)
     thetas = problem.kernel.starts(null.distance_um, sweep.coupling, weight, problem.span, n=n)
-    rest = [0.0] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)
-    return [Estimate(null.optimum.estimate.own, np.concatenate([theta, rest])) for theta in thetas]
+    return [start_at(problem, null, sweep, theta) for theta in thetas]
+
+
+def start_at(problem: Problem, null: Null, sweep: NullSweep, theta: FloatArray) -> Estimate:
+    """A start with this kernel (K,); leak, own parameters and same-site coefficient are those of the sweep."""
+    own, same_site = null.optimum.estimate.own, 0.0
+    if sweep.same_site is not None:
+        own, same_site = sweep.same_site.estimate.own, sweep.same_site.coefficient
+    rest = [same_site] * int(problem.has_same_site) + [np.log(sweep.leak)] * int(problem.fits_leak)
+    return Estimate(own, np.concatenate([theta, rest]))
 
 
 def shrunk(problem: Problem, estimate: Estimate, floor: float) -> Estimate | Local:

@@ -225,7 +225,7 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
         saturated_log_likelihood=float(ll["saturated"]),
         uncoupled_log_likelihood=float(ll["without_coupling"]),
         spectral_radius=float(c["spectral_radius"]),
-        verdict=CouplingVerdict(**c["verdict"]),
+        verdict=CouplingVerdict(**c["verdict"] | {"same_site_found": bool(c["verdict"]["same_site_found"])}),
         notes=tuple(Note(**n) for n in c["notes"]),
         solver=SolverReport(
             converged=bool(s["converged"]),

@@ -51,11 +51,18 @@ def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[
 
 
 def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldIntervals:
-    values, jacobian, _, _, on_log = _natural(fit)
-    critical = critical_value(level, fit.uncertainty.degrees_of_freedom(kind))
+    values, jacobian, names, _, on_log = _natural(fit)
+    critical = np.full(values.size, critical_value(level, fit.uncertainty.degrees_of_freedom(kind)))
     if not fit.verdict.found:  # chosen for its length and leak: the wider interval says so
-        critical = max(critical, fit.verdict.critical_z)
+        critical[~_told_by_sites(fit, names)] = max(critical[0], fit.verdict.critical_z) if critical.size else np.nan
     return wald_intervals(values, jacobian, fit.uncertainty.shared(kind), on_log, critical)
+
+
+def _told_by_sites(fit: CouplingFit, names: list[str]) -> BoolArray:
+    """(K,) parameters that pairs on one site tell, whether or not there is coupling across distance."""
+    known = fit.verdict.same_site_found
+    own = known or fit.model.leak_rate is not None  # with a leak that was stated nothing was searched over
+    return np.array([(name == "same_site" and own) or (name == "leak_rate" and known) for name in names], dtype=bool)
 
 
 def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.DataFrame:
@@ -105,10 +112,13 @@ def _without_coupling(fit: CouplingFit, table: pd.DataFrame) -> None:
     family = fit.model.kernel.parameters(fit.span)
     fits_leak = fit.model.leak_rate is None
     shape = np.array([*(p.shape for p in family), *[False] * fit.has_same_site, *[True] * fits_leak])
+    told = _told_by_sites(fit, list(table.index))
+    shape &= ~told
+    nothing = "no coupling across distance" if fit.has_same_site else "no coupling"
     table.loc[shape, ["estimate", "std_error", "lower", "upper"]] = np.nan
-    table.loc[shape, "note"] = f"{NOT_IDENTIFIED}: no coupling to describe"
-    widened = ~shape & np.isfinite(table["std_error"].to_numpy(dtype=np.float64))
-    table.loc[widened, "note"] = "no coupling found; interval widened for the search over length and leak"
+    table.loc[shape, "note"] = f"{NOT_IDENTIFIED}: {nothing} to describe"
+    widened = ~shape & ~told & np.isfinite(table["std_error"].to_numpy(dtype=np.float64))
+    table.loc[widened, "note"] = f"{nothing} found; interval widened for the search over length and leak"
     tested = widened & (table.index != "same_site")  # that test leaves pairs on one site out
     outside = tested & ((table["lower"] > 0) | (table["upper"] < 0)).to_numpy()
     table.loc[outside, "note"] += " and out to 0, which the test of any coupling does not exclude"
