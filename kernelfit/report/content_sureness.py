@@ -371,13 +371,15 @@ def influence_sentence(fit: CouplingFit, sureness: Sureness) -> str:
         name = str(row["parameter"])
         before = _estimate(fit, name)
         unit = str(fit.parameters.loc[name, "unit"])
-        after = before + float(row["refitted"])
+        reached = bool(row["converged"])
+        after = before + float(row["refitted" if reached else "one_step"])
+        how = "refitted" if reached else "in one step; the refit did not converge"
         what = f"the stretch from {row['which']}" if kind == "stretch" else f"unit {row['which']}"
         parts.append(
             f"without {what} the {short_name(name)} would be {number_text(after)} instead of "
-            f"{number_text(before)}{' ' + unit if unit else ''}"
+            f"{number_text(before)}{' ' + unit if unit else ''} ({how})"
         )
-    return f"What moves the estimates most: {listed(parts)} (refitted)."
+    return f"What moves the estimates most: {listed(parts)}."
 
 
 def _estimate(fit: CouplingFit, name: str) -> float:

@@ -5,10 +5,15 @@ from __future__ import annotations
 import math
 
 import numpy as np
+import pandas as pd
 import pytest
+from fakes import fake_fit
 
+from kernelfit.errors import Unavailable
 from kernelfit.fitting.block_length import BlockCurve
-from kernelfit.report.content_sureness import blocks_text, blocks_title, kinds_title
+from kernelfit.inference.influence import Influence
+from kernelfit.inference.sureness import Sureness
+from kernelfit.report.content_sureness import blocks_text, blocks_title, influence_sentence, kinds_title
 from kernelfit.report.sureness_data import Compared, Interval
 
 ALIKE = np.array([1.2, 0.9])
@@ -83,3 +88,31 @@ def test_blocks_that_go_together_are_too_short():
     short = curve([0.9, 1.0, 1.1], [80, 40, 20], chosen=2, settled=False)
     assert "still grow" in blocks_title(short)
     assert "lower limits" in blocks_text(short, "12 s")
+
+
+def carried(stretch_converged, unit_converged):
+    """A stretch that moves the length of 262 µm by 30 (one step) or 44, a unit that moves it by -20 or -31."""
+    refits = pd.DataFrame(
+        {
+            "left_out": ["stretch", "unit"],
+            "which": ["3 to 6 s", "u7"],
+            "parameter": ["length_um", "length_um"],
+            "one_step": [30.0, -20.0],
+            "refitted": [44.0, -31.0],
+            "converged": [stretch_converged, unit_converged],
+        }
+    )
+    moves = pd.DataFrame({"length_um_in_std_errors": [1.5, -0.2]})
+    influence = Influence(("length_um",), moves, moves, moves, refits)
+    return Sureness(Unavailable("not asked for"), influence, {}, pd.DataFrame(), {})
+
+
+def test_a_refit_that_converged_is_quoted_and_one_that_did_not_is_not():
+    fit = fake_fit()
+    both = influence_sentence(fit, carried(True, True))
+    assert "would be 306 instead of 262 µm (refitted)" in both
+    assert "would be 231 instead of 262 µm (refitted)" in both
+    one = influence_sentence(fit, carried(False, True))
+    assert "would be 292 instead of 262 µm (in one step; the refit did not converge)" in one
+    assert "would be 231 instead of 262 µm (refitted)" in one
+    assert "306" not in one
