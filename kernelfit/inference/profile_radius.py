@@ -3,14 +3,16 @@
 from __future__ import annotations
 
 import time
+from collections.abc import Sequence
 from typing import TYPE_CHECKING
 
 import numpy as np
 import pandas as pd
 
 from kernelfit.errors import Unavailable
+from kernelfit.fitting.maximise import LOOSE, Optimum, maximise
 from kernelfit.fitting.outcome import Note
-from kernelfit.fitting.problem import Problem
+from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.radius import RadiusProfile, edge_critical, profile_around, variance_inflation
 from kernelfit.inference.profile import Profile
 from kernelfit.inference.profile_conditions import is_penalised, profile_notes
@@ -32,10 +34,10 @@ def profile_of_radius(fit: CouplingFit, problem: Problem, name: str, level: floa
     place = names.index(name)
     refused = too_few_blocks(fit.uncertainty)
     ratio = variance_inflation(fit.uncertainty) if refused is None else 1.0
-    profile, estimates = profile_around(problem, place, fit.estimate)
+    profile, optima = _climbed(problem, place, *profile_around(problem, place, fit.estimate))
     drop = profile.objective.max() - profile.objective
     best = float(profile.radius_um[np.argmin(drop)])
-    natural = natural_values(fit, np.array([e.shared for e in estimates]))
+    natural = natural_values(fit, np.array([o.estimate.shared for o in optima]))
     table = pd.DataFrame(
         {
             "value": profile.radius_um,
@@ -46,7 +48,7 @@ def profile_of_radius(fit: CouplingFit, problem: Problem, name: str, level: floa
     for k, other in enumerate(names):
         if other != name:
             table[other] = natural[:, k]
-    table["converged"] = True
+    table["converged"] = [o.converged for o in optima]
     edge = Note(
         "info",
         "The likelihood jumps at the distances of the array: a point for each radius between two of them that was "
@@ -64,10 +66,34 @@ def profile_of_radius(fit: CouplingFit, problem: Problem, name: str, level: floa
         variance_ratio=ratio if refused is None else np.nan,
         on_log=True,
         penalised=is_penalised(problem),
-        notes=(*profile_notes(fit, problem, name, None), edge),
+        notes=(*profile_notes(fit, problem, name, None), edge, *_not_climbed(name, optima)),
         n_sweeps=problem.clock.sweeps,
         seconds=time.monotonic() - started,
         table=table,
+    )
+
+
+def _climbed(
+    problem: Problem, place: int, profile: RadiusProfile, estimates: Sequence[Estimate]
+) -> tuple[RadiusProfile, list[Optimum]]:
+    """Every point once more from where it stands, for what the optimiser says of it: one sweep at a top."""
+    held = np.arange(problem.n_shared) == place
+    optima = [maximise(problem, estimate, held=held, tolerance=LOOSE) for estimate in estimates]
+    return RadiusProfile(profile.radius_um, np.array([o.local.objective for o in optima])), optima
+
+
+def _not_climbed(name: str, optima: Sequence[Optimum]) -> tuple[Note, ...]:
+    """Say so where the rest did not reach its top."""
+    n = sum(not o.converged for o in optima)
+    if n == 0:
+        return ()
+    return (
+        Note(
+            "warning",
+            f"At {n} of {len(optima)} radii the other parameters did not reach their top.",
+            name,
+            "Read the curve there as a lower limit of the likelihood.",
+        ),
     )
 
 

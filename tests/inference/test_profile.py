@@ -14,6 +14,7 @@ from scipy.optimize import brentq, minimize
 from scipy.stats import chi2, t
 from worlds import BIN_S, GAUSSIAN, LEAK, NOTHING, array, model, simulated
 
+import kernelfit.inference.profile_radius as profile_radius
 import kernelfit.inference.profile_walk as walking
 from kernelfit import Unavailable, kernels, load_fit
 from kernelfit.errors import ArgumentError, NotConvergedError, StorageError
@@ -439,6 +440,25 @@ def test_a_radius_is_profiled_over_the_distances_of_the_array(disc):
         expected = dropped(disc, 1, np.log(curve["value"][k]))
         assert curve["log_likelihood_drop"][k] == pytest.approx(expected, abs=0.02)  # climbed loosely, by design
     assert any("jumps at the distances" in note.what for note in profile.notes)
+
+
+def test_a_radius_at_which_the_climb_stops_short_is_marked(disc, monkeypatch):
+    """Every second climb says that it stopped short."""
+    whole = disc.profile("length_um")
+    assert whole.curve["converged"].all()
+    assert not any("did not reach their top" in note.what for note in whole.notes)
+    asked = []
+
+    def short(problem, start, **options):
+        asked.append(start)
+        return replace(maximise(problem, start, **options), converged=len(asked) % 2 == 0)
+
+    monkeypatch.setattr(profile_radius, "maximise", short)
+    cut = disc.profile("length_um")
+    np.testing.assert_array_equal(cut.curve["converged"], np.arange(len(cut.curve)) % 2 == 1)
+    n = (len(cut.curve) + 1) // 2
+    wanted = f"At {n} of {len(cut.curve)} radii the other parameters did not reach their top."
+    assert wanted in [note.what for note in cut.notes]
 
 
 def test_beside_a_radius_the_others_are_profiled_with_it_held(disc):
