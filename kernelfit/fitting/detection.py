@@ -119,7 +119,8 @@ def _sentence(test: _Test, same_site: _Test | None) -> str:
             f"No coupling{across} to describe: the recording is too short to test for any ({blocks}; {FEWEST_BLOCKS} "
             f"are needed). {nothing}"
         )
-    shown = f"test of any coupling{across}, sign flips of {test.n_blocks} blocks of time: p {test.shown}"
+    blocks = f"{test.n_blocks} blocks of time cut for this test"  # those of the standard errors are others
+    shown = f"test of any coupling{across}, sign flips of {blocks}: p {test.shown}"
     if test.p_value <= LEVEL:
         return f"Units' rates change after spikes of other units{across} ({shown}).{beside}"
     return (

@@ -11,6 +11,7 @@ from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.outcome import Note, Severity
 from kernelfit.fitting.problem import SLOWEST_LEAK_SHARE, Problem
 from kernelfit.recording.activity import gaps, longest_break, paused
+from kernelfit.recording.findings import counted, names, number, seconds
 from kernelfit.recording.merged import merge_trains
 from kernelfit.recording.recording import Recording
 
@@ -79,18 +80,20 @@ def fit_notes(
         notes.append(
             Note(
                 "warning",
-                f"The time constant stated, {1 / leak:.3g} s, is above 1/{SLOWEST_LEAK_SHARE:g} of the "
-                f"{problem.grid.duration_s:.4g} s that count: coupling so slow cannot be told from a drifting rate.",
+                f"The time constant stated, {seconds(1 / leak)}, is above 1/{SLOWEST_LEAK_SHARE:g} of the "
+                f"{number(problem.grid.duration_s, 4)} s that count: coupling so slow cannot be told from a drifting "
+                "rate.",
                 "leak rate",
                 "State a faster leak rate, or record longer.",
             )
         )
+    block_s = f"{number(spread.block_length_s)} s"
     if spread.n_blocks < REFUSED_BELOW:
         many = "a single block" if spread.n_blocks == 1 else f"only {spread.n_blocks} blocks"
         notes.append(
             Note(
                 "warning",
-                f"The {problem.grid.duration_s:.3g} s that count are {many} of time ({REFUSED_BELOW} are needed): "
+                f"The {number(problem.grid.duration_s)} s that count are {many} of time ({REFUSED_BELOW} are needed): "
                 "there are no robust standard errors.",
                 "standard errors",
                 "Record longer, or read the model-based ones: fit.with_covariance('model') (--intervals model).",
@@ -100,7 +103,7 @@ def fit_notes(
         notes.append(
             Note(
                 "warning",
-                f"Robust standard errors rest on {spread.n_blocks} blocks of time of {spread.block_length_s:.3g} s; "
+                f"Robust standard errors rest on {spread.n_blocks} blocks of time of {block_s}; "
                 f"fewer than {FEW_BLOCKS} tend to come out too small.",
                 "standard errors",
                 "Record longer, or read those of the jackknife, made for few blocks: fit.with_covariance('jackknife') "
@@ -111,7 +114,7 @@ def fit_notes(
         notes.append(
             Note(
                 "warning",
-                f"Neighbouring blocks of time of {spread.block_length_s:.3g} s still go together, and there are too "
+                f"Neighbouring blocks of time of {block_s} still go together, and there are too "
                 "few to join more of them: slow states outlast a block, and robust standard errors are too small.",
                 "standard errors",
                 "Record longer; read the intervals as lower limits of the uncertainty.",
@@ -129,11 +132,11 @@ def _pause(recording: Recording) -> list[Note]:
     silences = gaps(train)
     if not paused(silences["length_s"].to_numpy(dtype=np.float64), longest_break(train)):
         return []
-    start, stop = float(silences["start_s"].iloc[0]), float(silences["stop_s"].iloc[0])
+    start, stop = (number(float(silences[end].iloc[0]), 5) for end in ("start_s", "stop_s"))
     return [
         Note(
             "warning",
-            f"No unit fires from {start:.5g} s to {stop:.5g} s, far longer than other silences: a pause of the "
+            f"No unit fires from {start} s to {stop} s, far longer than other silences: a pause of the "
             "acquisition that is taken for silence looks like slow, far-reaching coupling.",
             "windows",
             "If acquisition stopped there, give a windows table with the stretches that were recorded.",
@@ -146,11 +149,10 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
     silent = np.flatnonzero((problem.grid.counts_in_sum == 0) & ~recording.source_only_mask)
     if silent.size:
         ids = [recording.unit_ids[k] for k in silent]
-        shown = ", ".join(ids[:8]) + (f" and {len(ids) - 8} more" if len(ids) > 8 else "")
         notes.append(
             Note(
                 "info",
-                f"{len(ids)} unit{'s' * (len(ids) != 1)} without a spike in the bins that count: {shown}.",
+                f"{counted(len(ids), 'unit')} without a spike in the bins that count: {names(ids)}.",
                 "units",
                 "Baseline minus infinity, rate 0; not explained, still a source where it fires in other bins.",
             )
@@ -160,7 +162,7 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
         notes.append(
             Note(
                 "info",
-                f"{n_same} pair{'s' * (n_same != 1)} of units on one site left out of the kernel.",
+                f"{counted(n_same, 'pair')} of units on one site left out of the kernel.",
                 "pairs on one site",
                 "Detection hides coincident spikes there; same_site='own' (--same-site own) gives them a coefficient "
                 "of their own.",
@@ -180,8 +182,8 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
         notes.append(
             Note(
                 "info",
-                f"No windows were given: the window runs from {start:g} s (floor of the first spike) to {stop:g} s "
-                "(first whole second after the last).",
+                f"No windows were given: the window runs from {number(start, 5)} s (floor of the first spike) to "
+                f"{number(stop, 5)} s (first whole second after the last).",
                 "windows",
                 "Give a windows table where acquisition started earlier or stopped later.",
             )
@@ -191,7 +193,8 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
         notes.append(
             Note(
                 "info",
-                f"{problem.grid.n_outside} spikes lie outside the windows: those before a window feed its first state.",
+                f"{_spikes_lie(problem.grid.n_outside)} outside the windows: those before a window feed its first "
+                "state.",
                 "windows",
                 "Nothing to do where this is meant.",
             )
@@ -200,9 +203,13 @@ def _recording_notes(problem: Problem, recording: Recording) -> list[Note]:
         notes.append(
             Note(
                 "info",
-                f"{problem.grid.n_excluded} spikes lie inside exclusions: they are not explained and drive nothing.",
+                f"{_spikes_lie(problem.grid.n_excluded)} inside exclusions: they are not explained and drive nothing.",
                 "exclusions",
                 "Nothing to do where this is meant.",
             )
         )
     return notes
+
+
+def _spikes_lie(n: int) -> str:
+    return f"{counted(n, 'spike')} {'lies' if n == 1 else 'lie'}"

@@ -20,6 +20,7 @@ from kernelfit.fitting.progress import Progress, ProgressCallback, peak_memory_b
 from kernelfit.kernels import DistanceRange, Kernel, PairGeometry, pair_geometry
 from kernelfit.model.coupling import CouplingModel
 from kernelfit.model.terms import FIRST_RIDGE
+from kernelfit.recording.findings import number
 from kernelfit.recording.grid import Grid, make_grid
 from kernelfit.recording.recording import Recording
 
@@ -252,16 +253,25 @@ def target_units(recording: Recording, grid: Grid) -> IntArray:
 
 
 def geometry_of(model: CouplingModel, recording: Recording, targets: IntArray) -> PairGeometry:
-    """Distances of a recording and the pairs its model keeps; `targets` are unit indices."""
+    """Distances of a recording and the pairs its model keeps; `targets` are unit indices.
+
+    Raises
+    ------
+    ModelError : no two sites, or no pair left for the kernel; the message names the sites table
+    """
     is_target = np.zeros(recording.n_units, dtype=bool)
     is_target[targets] = True
-    return pair_geometry(
-        recording.positions,
-        max_distance_um=model.max_distance,
-        same_site=model.same_site,
-        excluded_pairs=excluded_pair_mask(recording),
-        targets=is_target,
-    )
+    try:
+        return pair_geometry(
+            recording.positions,
+            max_distance_um=model.max_distance,
+            same_site=model.same_site,
+            excluded_pairs=excluded_pair_mask(recording),
+            targets=is_target,
+        )
+    except ModelError as error:
+        said = str(error)
+        raise ModelError(f"{recording.origin.name('sites')}: {said[0].lower()}{said[1:]}") from None
 
 
 def make_problem(
@@ -291,7 +301,7 @@ def make_problem(
         )
     if targets.size == 0:
         raise ModelError(
-            f"{spikes}: no unit has a spike in the bins that are explained ({grid.duration_s:g} s in windows, "
+            f"{spikes}: no unit has a spike in the bins that are explained ({number(grid.duration_s)} s in windows, "
             "exclusions and warm-up left out). Check the unit of time (time_unit), the windows and the exclusions."
         )
     geometry = geometry_of(model, recording, targets)

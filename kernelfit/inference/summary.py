@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit.inference.parameters import NOT_IDENTIFIED
+from kernelfit.recording.findings import number
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -44,8 +45,8 @@ def summary_text(fit: CouplingFit) -> str:
         *([CONDITIONAL] if conditional else []),
         *[_row(str(name), row) for name, row in table.iterrows()],
         f"  {time_constant}amplitudes at {fit.reference_distance_um:.4g} µm; {kind}",
-        f"{len(fit.targets)} of {len(fit.unit_ids)} units explained, {fit.n_spikes} spikes, {fit.duration_s:g} s in "
-        f"{fit.n_blocks} blocks of {fit.block_length_s:.3g} s",
+        f"{len(fit.targets)} of {len(fit.unit_ids)} units explained, {fit.n_spikes:,} spikes, "
+        f"{number(fit.duration_s)} s in {fit.n_blocks} blocks of {number(fit.block_length_s)} s",
         f"log-likelihood {fit.log_likelihood:.4f}, {fit.n_parameters} parameters, AIC {fit.aic:.2f}, BIC "
         f"{fit.bic:.2f}; "
         f"{'converged' if fit.converged else 'NOT CONVERGED'}: {fit.solver.message}",

@@ -38,8 +38,8 @@ def _whole_array(e: Evidence) -> Iterator[Finding]:
         "warning",
         f"{counted(len(events.bounds), 'moment')} at which {events.threshold} or more of {events.n_active} active "
         f"units fire within 1 ms of one spike (median {number(float(np.median(most)))}, at most {int(most.max())}); "
-        f"trains shifted by up to 50 ms give {_few(events.expected_by_chance)}. {percent(share)} of the spikes lie "
-        "there and make distant units look coupled.",
+        f"trains shifted by up to 50 ms have {_few(events.expected_by_chance)}. Of all spikes, {percent(share)} lie "
+        "there, and make distant units look coupled.",
         f"{_stretch(events.bounds)}; see proposed_exclusions",
         "Leave them out: rec.with_exclusions(inspection.proposed_exclusions), or --exclusions "
         f"proposed_exclusions.csv.{doubt}",
@@ -72,7 +72,8 @@ def _stretch(bounds: FloatArray) -> str:
 
 
 def _few(expected: float) -> str:
-    return "fewer than 1" if expected < 1.0 else f"about {number(expected, 2)}"
+    """How many such moments, in words that may end a sentence before one that begins with a number."""
+    return "fewer than one" if expected < 1.0 else f"about {number(expected, 2)} of them"
 
 
 def _far_coincidences(e: Evidence) -> Iterator[Finding]:

@@ -64,6 +64,11 @@ def clock_text(time_s: float) -> str:
     return f"{time_s:.6f}".rstrip("0").rstrip(".") if abs(time_s) >= 1.0 else f"{time_s:g}"
 
 
+def stretch_text(start_s: float, stop_s: float) -> str:
+    """A stretch of time on the recording's clock, to the millisecond: "12.5 to 20 s"."""
+    return f"{clock_text(round(float(start_s), 3))} to {clock_text(round(float(stop_s), 3))} s"
+
+
 def _between(start_s: float | None, stop_s: float | None) -> str:
     start = "" if start_s is None else f" from start_s={clock_text(start_s)} on"
     return start if stop_s is None else f"{start} up to stop_s={clock_text(stop_s)}"

@@ -13,7 +13,7 @@ from kernelfit.recording.activity import intervals
 from kernelfit.recording.inspection import Inspection
 from kernelfit.recording.layout import SAME_SITE
 from kernelfit.recording.merged import MergedTrain, merge_trains, time_step
-from kernelfit.recording.recording import Recording
+from kernelfit.recording.recording import Recording, clock_text
 from kernelfit.report.content_array import array_data
 from kernelfit.report.content_figures import representative_stretch
 from kernelfit.report.figure_data import ArrayData
@@ -237,8 +237,8 @@ def _asked(recording: Recording, start_s: float, length_s: float) -> tuple[float
     if k.size == 0:
         first, last = bounds[0, 0], bounds[-1, 1]
         raise ArgumentError(
-            f"The raster cannot start at {start_s:g} s: no window holds that time. Give a time in one of the "
-            f"windows, which run from {first:g} s to {last:g} s."
+            f"The raster cannot start at {clock_text(start_s)} s: no window holds that time. Give a time in one of the "
+            f"windows, which run from {clock_text(first)} s to {clock_text(last)} s."
         )
     return start_s, min(start_s + length_s, float(bounds[k[0], 1]))
 

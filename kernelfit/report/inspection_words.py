@@ -189,7 +189,8 @@ def _course(inspection: Inspection) -> tuple[str, ...]:
 
 def _distances_lead(inspection: Inspection) -> str:
     if math.isnan(inspection.reference_distance_um):
-        return "All units lie on one site: nothing can be said about distance."
+        sites = inspection.recording.origin.name("sites")
+        return f"All units lie on one site ({sites}): nothing can be said about distance."
     table = inspection.distances
     if table.empty:
         return "No pair of units is left for a kernel."

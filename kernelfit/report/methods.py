@@ -170,7 +170,7 @@ def _estimation_sentences(fit: CouplingFit) -> list[str]:
     sentences = [f"All parameters were estimated jointly by {by}."]
     sentences.append(
         "Whether there is any coupling was tested on the scores of the fit without it, over a grid of leak rates, by "
-        f"random sign flips of blocks of time (Hansen 1996; seed {fit.seed})."
+        f"random sign flips of blocks of time cut for that test (Hansen 1996; seed {fit.seed})."
     )
     if not fit.converged:
         sentences.append("The estimation did not converge.")

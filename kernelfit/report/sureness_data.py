@@ -9,6 +9,7 @@ import numpy as np
 import pandas as pd
 
 from kernelfit._typing import FloatArray
+from kernelfit.recording.recording import stretch_text
 
 
 @dataclass(frozen=True)
@@ -87,7 +88,7 @@ class InfluenceData:
         stretches.insert(
             0,
             "which",
-            [f"{m - w / 2:.6g} to {m + w / 2:.6g} s" for m, w in zip(self.middle_s, self.width_s, strict=True)],
+            [stretch_text(m - w / 2, m + w / 2) for m, w in zip(self.middle_s, self.width_s, strict=True)],
         )
         units = pd.DataFrame(self.by_unit, columns=list(self.names))
         units.insert(0, "which", list(self.unit_ids))

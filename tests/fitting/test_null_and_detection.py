@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import re
 from types import SimpleNamespace
 
 import numpy as np
@@ -170,6 +171,7 @@ def test_blocks_that_go_together_are_joined():
     assert rejected(lambda rng: drifting(rng, 5.0)) <= 0.25
     verdict = detect_coupling(scored(*drifting(np.random.default_rng(1), 5.0)), 0)
     assert "sign flips of 256 blocks" not in verdict.sentence
+    assert re.search(r"sign flips of [0-9]+ blocks of time cut for this test: p", verdict.sentence)
 
 
 def test_joined_blocks_still_find_what_is_there():

@@ -200,12 +200,13 @@ def test_one_active_unit_is_refused():
 
 
 def test_all_units_on_one_site_are_refused():
-    with pytest.raises(ModelError, match="All 5 units lie on one site"):
+    with pytest.raises(ModelError, match=r"^sites table: all 5 units lie on one site .*length_unit"):
         refused(positions=POSITIONS * 1e-3)
 
 
 def test_no_pair_within_reach_is_refused():
-    with pytest.raises(ModelError, match=r"max_distance = 50 µm: the smallest distance in the array is 92"):
+    says = r"^sites table: no pair of units lies within max_distance = 50 µm: the smallest distance in the array is 92"
+    with pytest.raises(ModelError, match=says):
         refused(CouplingModel(bin_width=0.02, max_distance=50.0))
 
 

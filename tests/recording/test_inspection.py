@@ -5,6 +5,7 @@ Expected values are the faults themselves, planted with known places and sizes.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from dataclasses import replace
 
@@ -239,7 +240,10 @@ def test_planted_artefacts_are_proposed_and_masking_them_clears_the_page(clean: 
     trains = with_artefacts(clean, np.random.default_rng(5), moments, share=0.6)
     recording = recording_of(trains)
     inspection = inspect_recording(recording)
-    assert inspection.find("whole_array_events") is not None
+    events = inspection.find("whole_array_events")
+    assert events is not None
+    assert re.search(r"by up to 50 ms have fewer than one\. Of all spikes, [0-9.]+ % lie there", events.what)
+    assert not any(re.search(r"[0-9]\. [0-9]", f.what) for f in inspection.findings)  # reads as one number
     proposed = inspection.proposed_exclusions
     assert len(proposed) == moments.size
     assert ((proposed["start_s"] < moments) & (moments < proposed["stop_s"])).all()

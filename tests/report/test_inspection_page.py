@@ -223,6 +223,11 @@ def test_a_raster_outside_the_windows_is_refused(inspection: Inspection) -> None
         figures_data(inspection, raster_start_s=300.0)
 
 
+def test_where_the_raster_cannot_start_is_written_out(inspection: Inspection) -> None:
+    with pytest.raises(ArgumentError, match=r"cannot start at 1700000012\.5 s: .* run from 0 s to 300 s"):
+        figures_data(inspection, raster_start_s=1700000012.5)
+
+
 def test_the_rate_course_holds_all_spikes_and_breaks_between_windows() -> None:
     recording = replace(faulty_recording(), window_bounds=np.array([[0.0, 100.0], [200.0, 300.0]]))
     inspection = inspect_recording(recording)

@@ -12,6 +12,7 @@ from kernelfit.errors import ModelError
 from kernelfit.fitting.by_block import chosen_blocks
 from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.fitting.problem import Problem
+from kernelfit.recording.findings import number
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -22,8 +23,8 @@ def require_blocks(fit: CouplingFit) -> None:
     if fit.n_blocks < REFUSED_BELOW:
         raise ModelError(
             f"{fit.origin.name('spikes')}: {fit.n_blocks} block{'s' * (fit.n_blocks != 1)} of time "
-            f"({fit.block_length_s:.3g} s each) cannot be resampled, {REFUSED_BELOW} are needed. Record longer, or use "
-            "kind='parametric', which takes the model for true."
+            f"({number(fit.block_length_s)} s each) cannot be resampled, {REFUSED_BELOW} are needed. Record longer, or "
+            "use kind='parametric', which takes the model for true."
         )
 
 

@@ -17,6 +17,7 @@ from kernelfit.errors import NotIdentifiedError
 from kernelfit.inference.bootstrap.blocks import require_blocks
 from kernelfit.inference.bootstrap.kind import BootstrapKind, Replicate
 from kernelfit.inference.bootstrap.weight_laws import WeightLaw, weight_law_from
+from kernelfit.recording.findings import number
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -54,7 +55,8 @@ class OneStep(BootstrapKind):
         return {"kind": self.name, "law": self.law.name}
 
     def words(self, fit: CouplingFit) -> str:
-        return f"one step with {self.law.name} weights on {fit.n_blocks} blocks of time of {fit.block_length_s:.3g} s"
+        blocks = f"{fit.n_blocks} blocks of time of {number(fit.block_length_s)} s"
+        return f"one step with {self.law.name} weights on {blocks}"
 
     def replicator(self, fit: CouplingFit, recording: Recording | None) -> OneStepReplicator:
         require_blocks(fit)
