@@ -22,6 +22,7 @@ from kernelfit.fitting.maximise import Optimum, Weighting, maximise, penalised
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.inference.scales import natural_values, shared_names
 from kernelfit.recording.grid import Grid
+from kernelfit.recording.recording import stretch_text
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -185,7 +186,7 @@ def _refits(work: _Work, blocks: TimeBlocks, stretches: pd.DataFrame, units: pd.
                     "left_out": kind,
                     "which": units.index[worst]
                     if kind == "unit"
-                    else f"{stretches['start_s'][worst]:.6g} to {stretches['stop_s'][worst]:.6g} s",
+                    else stretch_text(stretches["start_s"][worst], stretches["stop_s"][worst]),
                     "parameter": name,
                     "one_step": float(table[name].iloc[worst]),
                     "refitted": float(work.changes(move[None])[0, k]),
