@@ -211,7 +211,7 @@ def test_after_spike_curves_and_bands(fit):
     assert (band["lower"] <= band["estimate"]).all()
     assert (band["estimate"] <= band["upper"]).all()
     assert fit.after_spike_test is None
-    with pytest.raises(ArgumentError, match="no unit 'nobody'"):
+    with pytest.raises(ArgumentError, match="unit='nobody' is not in this fit"):
         fit.after_spike_band("nobody", lags)
 
 
