@@ -15,6 +15,9 @@ from kernelfit._typing import BoolArray, FloatArray
 LEAST_OWN = 1e-13  # smallest eigenvalue of an own block with a unit diagonal: below it an inverse is rounding
 
 
+SMALLEST_EIGENVALUE = 1e-9  # of information scaled to a unit diagonal: below this parameters cannot be told apart
+
+
 class SingularOwnBlock(np.linalg.LinAlgError):
     """The own parameters of one unit cannot be told apart. `place` is its index among the targets."""
 
@@ -99,3 +102,46 @@ def solve_leniently(matrix: FloatArray, right: FloatArray) -> FloatArray:
     scale = np.where(diagonal > 0, 1.0 / np.sqrt(np.where(diagonal > 0, diagonal, 1.0)), 0.0)
     inverse = np.linalg.pinv(matrix * scale[:, None] * scale[None, :], rcond=1e-10, hermitian=True)
     return np.asarray(scale[:, None] * (inverse @ (scale[:, None] * right)))
+
+
+@dataclass(frozen=True, eq=False)
+class Determined:
+    """A positive semidefinite matrix (Q, Q) split into what it determines and what it says nothing about.
+
+    scale (Q,) one over the root of the diagonal, 1 where that is not positive; value (Q,), vector (Q, Q) eigenvalues,
+    ascending, and eigenvectors of the matrix scaled to a unit diagonal.
+    """
+
+    scale: FloatArray
+    value: FloatArray
+    vector: FloatArray
+
+    @classmethod
+    def of(cls, matrix: FloatArray) -> Determined:
+        """Split a matrix."""
+        diagonal = np.diag(matrix)
+        informed = diagonal > 0
+        scale = 1.0 / np.sqrt(np.where(informed, diagonal, 1.0))
+        scaled = np.where(informed[:, None] & informed[None, :], matrix * scale[:, None] * scale[None, :], 0.0)
+        return cls(scale, *np.linalg.eigh(scaled))
+
+    @property
+    def weak(self) -> FloatArray:
+        """(W, Q) unit vectors of the scaled matrix along which it says nothing, the weakest first."""
+        rows = self.vector[:, ~(self.value > SMALLEST_EIGENVALUE)].T
+        largest = np.argmax(np.abs(rows), axis=1) if rows.size else np.zeros(len(rows), dtype=np.int64)
+        return np.asarray(rows * np.where(rows[np.arange(len(rows)), largest] < 0, -1.0, 1.0)[:, None])
+
+    def solve(self, right: FloatArray) -> FloatArray:
+        """The solution in what is determined, without a part along the weak vectors."""
+        kept = self.value > SMALLEST_EIGENVALUE
+        part = self.vector[:, kept]
+        return np.asarray((((right.T * self.scale) @ part / self.value[kept]) @ part.T * self.scale).T)
+
+
+def solve_determined(matrix: FloatArray, right: FloatArray) -> FloatArray:
+    """`solve_symmetric` where the matrix determines everything, and its solution in what is determined where not."""
+    if matrix.shape[0] == 0:
+        return np.zeros_like(right)
+    split = Determined.of(matrix)
+    return split.solve(right) if len(split.weak) else solve_symmetric(matrix, right)

@@ -8,7 +8,7 @@ import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.engine.evaluate import Evaluation
-from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_symmetric
+from kernelfit.fitting.arrow import Arrow, Elimination, eliminate, solve_determined
 from kernelfit.fitting.block_length import joined
 from kernelfit.fitting.by_block import BlockSums
 
@@ -39,21 +39,20 @@ class BlockInfluence:
         return np.asarray(np.einsum("gnp,gnq->npq", self.own, self.own))
 
 
-def block_influence(sums: Evaluation, elimination: Elimination, free: BoolArray, *, determined: bool) -> BlockInfluence:
-    """What each block of `sums` moves the estimates by, one step.
+def block_influence(sums: Evaluation, elimination: Elimination, free: BoolArray) -> BlockInfluence:
+    """What each block of `sums` moves the estimates by, one step, along what the information determines.
 
     Parameters
     ----------
     sums, elimination : scores by block; the information of the free parameters, own ones eliminated
     free : (Q,) shared parameters that were estimated
-    determined : False where the information is singular: shared moves are NaN
     """
     n_own = elimination.own_inverse.shape[1]
     score_own = sums.score[..., :n_own]
     efficient = elimination.efficient_score(score_own, sums.score[..., n_own:].sum(axis=1)[:, free])
-    shared = solve_symmetric(elimination.schur, efficient.T).T if determined else np.full_like(efficient, np.nan)
+    shared = solve_determined(elimination.schur, efficient.T).T
     own = np.einsum("npk,gnk->gnp", elimination.own_inverse, score_own) - np.einsum(
-        "npq,gq->gnp", elimination.reduced, np.nan_to_num(shared)
+        "npq,gq->gnp", elimination.reduced, shared
     )
     return BlockInfluence(own, shared)
 

@@ -63,6 +63,11 @@ class BlockCurve:
 
         return replace(self, std_error=wide(self.std_error), correlation=wide(self.correlation))
 
+    def without(self, loose: BoolArray) -> BlockCurve:
+        """The same with NaN for some of the shared parameters."""
+        blank = np.where(loose, np.nan, 0.0)
+        return replace(self, std_error=self.std_error + blank, correlation=self.correlation + blank)
+
     def table(self, names: tuple[str, ...]) -> pd.DataFrame:
         """One row for each length: block_length_s, n_blocks, chosen, then std_error and correlation by parameter."""
         columns: dict[str, object] = {

@@ -7,6 +7,9 @@ Where few blocks carry most of the information the sandwich is too narrow, becau
 are judged by. The one-step jackknife sees that: what the estimates would be without each block, from the information
 that is left.
 
+Where some combination of parameters changes nothing, covariances are those of what is determined, and `determines` says
+of a parameter, or of a figure made from several, whether it is.
+
 References
 ----------
 Huber (1967); White (1982), Econometrica 50, 1-25; Liang and Zeger (1986), Biometrika 73, 13-22. Jackknife form of the
@@ -15,13 +18,13 @@ cluster variance: Bell and McCaffrey (2002), Survey Methodology 28, 169-181.
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.errors import ArgumentError
-from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.arrow import SMALLEST_EIGENVALUE, Arrow, Determined, eliminate, solve_determined
 from kernelfit.fitting.block_influence import block_influence, influence_left_out
 from kernelfit.fitting.block_length import BlockCurve, block_curve
 from kernelfit.fitting.by_block import chosen_blocks, sums_by_block
@@ -31,12 +34,14 @@ from kernelfit.fitting.problem import Problem
 from kernelfit.model.coupling import CovarianceKind
 
 REFUSED_BELOW = 6  # blocks: a variance of fewer numbers means nothing
-SMALLEST_EIGENVALUE = 1e-9  # of the information scaled to a unit diagonal: below this parameters cannot be told apart
+LOADS = SMALLEST_EIGENVALUE**0.5  # share of a weak direction that would add as much variance as all else being known
 
 
 @dataclass(frozen=True, eq=False)
 class Uncertainty:
     """Covariances on the working scale; parameters that were held or sit at a bound have rows of NaN.
+
+    They hold nothing along the weak directions: ask `determines` before a variance is quoted.
 
     Parameters
     ----------
@@ -44,10 +49,13 @@ class Uncertainty:
     own_model, own_robust : (n_targets, P, P), each unit's own parameters
     shared_jackknife, own_jackknife : the same, one-step jackknife over blocks; None where a block holds all that is
         known of some parameter, or where information by block would fill the memory
-    block_influence : (G, Q) what each block of time moved the shared estimates by (one step)
+    block_influence : (G, Q) what each block of time moved the shared estimates by (one step); NaN where there is a
+        weak direction, as what blocks move along it is not known
     n_blocks, block_length_s : clusters of the robust kind
     block_curve : standard errors against the length of the blocks, from which it was chosen
-    weak_direction : (Q,) the combination of parameters the recording says nothing about, or None
+    weak_moves : (W, Q) combinations of parameters that change nothing, in units of `alone`, each of length 1; the
+        weakest first, mostly none
+    alone : (Q,) model-based standard errors, were everything else known
     """
 
     shared_model: FloatArray
@@ -60,7 +68,28 @@ class Uncertainty:
     n_blocks: int
     block_length_s: float
     block_curve: BlockCurve
-    weak_direction: FloatArray | None
+    weak_moves: FloatArray
+    alone: FloatArray
+
+    @property
+    def weak_direction(self) -> FloatArray | None:
+        """(Q,) the combination of parameters the recording says least about, or None where it tells all apart."""
+        return self.weak_moves[0] if len(self.weak_moves) else None
+
+    def determines(self, gradient: FloatArray) -> BoolArray:
+        """(m,) whether the recording determines figures with these derivatives by the working parameters.
+
+        Parameters
+        ----------
+        gradient : (K, m) by the first K shared parameters; those that were not estimated count as known
+
+        Returns
+        -------
+        False for figures of which weak directions make up more than `LOADS`
+        """
+        size = np.nan_to_num(self.alone[: len(gradient)])[:, None] * gradient
+        along = np.linalg.norm(np.nan_to_num(self.weak_moves[:, : len(gradient)]) @ size, axis=0)
+        return np.asarray(along <= LOADS * np.linalg.norm(size, axis=0))
 
     def shared(self, kind: CovarianceKind) -> FloatArray:
         """(Q, Q) of that kind. Raises ArgumentError for a jackknife that was not made."""
@@ -98,48 +127,49 @@ def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
     usual = optimum.by_block if optimum.by_block is not None else sums_by_block(problem, optimum.estimate)
     local = penalised(problem, optimum.estimate, usual.together)
     elimination = eliminate(local.information.only(free))
-    weak = _weak_direction(elimination.schur)
-    inverse = (
-        solve_symmetric(elimination.schur, np.eye(int(free.sum())))
-        if weak is None
-        else np.full((int(free.sum()), int(free.sum())), np.nan)
-    )
+    split = Determined.of(elimination.schur)
+    weak = len(split.weak) > 0
+    inverse = solve_determined(elimination.schur, np.eye(int(free.sum())))
     variance = np.diag(_spread(inverse, free))
     information = observed_information(problem, local, variance, free)
     observed = eliminate(information)
-    influence = block_influence(usual.sums, observed, free, determined=weak is None)
+    influence = block_influence(usual.sums, observed, free)
     curve = block_curve(influence.shared, usual.finer, problem.grid.duration_s)
     used = usual
     if curve.factor(usual.finer) > 1:
         blocks = chosen_blocks(problem, problem.leak(optimum.estimate.shared), curve)
         used = sums_by_block(problem, optimum.estimate, blocks)
-        influence = block_influence(used.sums, observed, free, determined=weak is None)
+        influence = block_influence(used.sums, observed, free)
     influence = influence.joined(used.finer)
     n_blocks = used.blocks.n_blocks
     correction = n_blocks / (n_blocks - 1.0) if n_blocks >= REFUSED_BELOW else np.nan
     left_out = None
-    if weak is None and n_blocks >= REFUSED_BELOW and used.has_information:
+    if not weak and n_blocks >= REFUSED_BELOW and used.has_information:
         left_out = influence_left_out(used, information, free)
-    through_shared = elimination.reduced @ np.nan_to_num(inverse)
-    return Uncertainty(
+    through_shared = elimination.reduced @ inverse
+    result = Uncertainty(
         shared_model=_spread(inverse, free),
         shared_robust=_spread(correction * influence.squared_shared, free),
         own_model=elimination.own_inverse + through_shared @ np.swapaxes(elimination.reduced, 1, 2),
         own_robust=correction * influence.squared_own,
         shared_jackknife=None if left_out is None else _spread(left_out.squared_shared / correction, free),
         own_jackknife=None if left_out is None else left_out.squared_own / correction,
-        block_influence=_columns(influence.shared, free),
+        block_influence=_columns(np.full_like(influence.shared, np.nan) if weak else influence.shared, free),
         n_blocks=n_blocks,
         block_length_s=float(np.mean(used.blocks.n_bins)) * problem.data.bin_width,
         block_curve=curve.over(free),
-        weak_direction=None if weak is None else _columns(weak[None], free)[0],
+        weak_moves=_columns(split.weak, free),
+        alone=_columns(split.scale[None], free)[0],
     )
+    loose = ~result.determines(np.eye(free.size))
+    return replace(result, block_curve=result.block_curve.without(loose)) if loose.any() else result
 
 
 def observed_information(problem: Problem, local: Local, variance: FloatArray, free: BoolArray) -> Arrow:
     """The observed information of the free parameters: minus the Hessian of the penalised objective.
 
-    Where it is not positive definite, as beside a top that was not reached, the expected one takes its place.
+    Where it is not positive definite, as beside a top that was not reached, the expected one takes its place; so it
+    does where parameters cannot be told apart.
 
     Parameters
     ----------
@@ -148,23 +178,13 @@ def observed_information(problem: Problem, local: Local, variance: FloatArray, f
     free : (Q,) parameters that were estimated
     """
     expected = local.information.only(free)
+    if len(Determined.of(eliminate(expected).schur).weak):
+        return expected
     excess = excess_curvature(problem, local, np.sqrt(variance))
     if not excess.any():
         return expected
     observed = Arrow(expected.own, expected.cross, expected.shared + excess[np.ix_(free, free)])
-    return observed if _weak_direction(eliminate(observed).schur) is None else expected
-
-
-def _weak_direction(schur: FloatArray) -> FloatArray | None:
-    """The combination of parameters without information, or None where there is none."""
-    if schur.shape[0] == 0:
-        return None
-    diagonal = np.diag(schur)
-    if not (diagonal > 0).all():
-        return np.asarray(diagonal <= 0, dtype=np.float64)
-    scale = 1.0 / np.sqrt(diagonal)
-    value, vector = np.linalg.eigh(schur * scale[:, None] * scale[None, :])
-    return None if value[0] > SMALLEST_EIGENVALUE else np.asarray(vector[:, 0])
+    return expected if len(Determined.of(eliminate(observed).schur).weak) else observed
 
 
 def _spread(matrix: FloatArray, free: BoolArray) -> FloatArray:

@@ -23,7 +23,8 @@ def describe_uncertainty(uncertainty: Uncertainty) -> dict[str, Any]:
         "block_influence": plain(uncertainty.block_influence),
         "n_blocks": uncertainty.n_blocks,
         "block_length_s": uncertainty.block_length_s,
-        "weak_direction": plain_or_null(uncertainty.weak_direction),
+        "weak_moves": plain(uncertainty.weak_moves),
+        "alone": plain(uncertainty.alone),
         "block_curve": {
             "length_s": plain(curve.length_s),
             "n_blocks": plain(curve.n_blocks),
@@ -59,5 +60,6 @@ def restore_uncertainty(u: Mapping[str, Any], n_targets: int, n_own: int, n_shar
             chosen=int(c["chosen"]),
             settled=bool(c["settled"]),
         ),
-        weak_direction=floats_or_none(u["weak_direction"], n_shared),
+        weak_moves=floats(u["weak_moves"], len(u["weak_moves"]), n_shared),
+        alone=floats(u["alone"], n_shared),
     )

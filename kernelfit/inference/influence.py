@@ -14,7 +14,7 @@ import pandas as pd
 
 from kernelfit._typing import FloatArray, IntArray
 from kernelfit.engine.evaluate import SweepData, TimeBlocks
-from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
+from kernelfit.fitting.arrow import Arrow, eliminate, solve_determined
 from kernelfit.fitting.block_influence import block_influence, influence_left_out
 from kernelfit.fitting.by_block import BlockSums, chosen_blocks, sums_by_block
 from kernelfit.fitting.covariance import observed_information
@@ -109,7 +109,7 @@ class _Work:
 
 def _first_order(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, the information taken as it is with it."""
-    moves = block_influence(by_block.sums, eliminate(work.information), work.fit.free, determined=True)
+    moves = block_influence(by_block.sums, eliminate(work.information), work.fit.free)
     return -moves.joined(by_block.finer).shared
 
 
@@ -126,7 +126,7 @@ def _by_unit(work: _Work, by_block: BlockSums) -> pd.DataFrame:
     n_own = elimination.own_inverse.shape[1]
     own, shared = score[:, :n_own], score[:, n_own:][:, free]
     efficient = shared - np.einsum("npq,np->nq", elimination.reduced, own)
-    moves = -solve_symmetric(elimination.schur, efficient.T).T
+    moves = -solve_determined(elimination.schur, efficient.T).T
     table = {"n_spikes": fit.counts[fit.targets], **work.columns(moves)}
     return pd.DataFrame(table, index=pd.Index([fit.unit_ids[k] for k in fit.targets], name="unit", dtype=object))
 

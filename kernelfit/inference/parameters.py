@@ -55,7 +55,8 @@ def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldInte
     critical = np.full(values.size, critical_value(level, fit.uncertainty.degrees_of_freedom(kind)))
     if not fit.verdict.found:  # chosen for its length and leak: the wider interval says so
         critical[~_told_by_sites(fit, names)] = max(critical[0], fit.verdict.critical_z) if critical.size else np.nan
-    return wald_intervals(values, jacobian, fit.uncertainty.shared(kind), on_log, critical)
+    known = np.where(fit.uncertainty.determines(jacobian.T)[:, None], jacobian, 0.0)
+    return wald_intervals(values, known, fit.uncertainty.shared(kind), on_log, critical)
 
 
 def _told_by_sites(fit: CouplingFit, names: list[str]) -> BoolArray:
@@ -135,7 +136,8 @@ def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> s
     reasons = [fit.bound_reasons[q] for q in used if fit.at_bound[q] != 0]
     if reasons:
         return "at its bound: " + "; ".join(reasons)
-    if np.isnan(np.diag(fit.uncertainty.shared_model)[used]).any() and used.size:
+    unknown = np.isnan(np.diag(fit.uncertainty.shared_model)[used]).any()
+    if used.size and (unknown or not fit.uncertainty.determines(jacobian_row[:, None])[0]):
         family = fit.model.kernel.parameters(fit.span)
         if used[0] < len(family) and family[used[0]].discrete:
             return ""
@@ -226,6 +228,7 @@ def _band(
         lower[between], upper[between] = min(within - spread, 0.0), max(within + spread, 0.0)
     if not fit.verdict.found:  # the test of any coupling does not exclude that there is none
         lower, upper = np.minimum(lower, 0.0), np.maximum(upper, 0.0)
+    lower[~fit.uncertainty.determines(gradient)] = upper[~fit.uncertainty.determines(gradient)] = np.nan
     unknown = (gradient[loose(fit)[:n]] != 0).any(axis=0)
     estimate[unknown] = lower[unknown] = upper[unknown] = np.nan
     return estimate, lower, upper

@@ -229,7 +229,10 @@ def test_parameters_that_cannot_be_told_apart_are_named():
     optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05, 0.0])), held=held)
     spread = covariances(problem, dataclasses.replace(optimum, free=np.array([True, True])))
     np.testing.assert_array_equal(spread.weak_direction, [0.0, 1.0])
-    assert np.isnan(spread.shared_model).all()
+    np.testing.assert_array_equal(spread.determines(np.eye(2)), [True, False])
+    alone = covariances(problem, optimum)
+    assert spread.shared_model[0, 0] == pytest.approx(alone.shared_model[0, 0], rel=1e-12)
+    assert spread.shared_robust[0, 0] == pytest.approx(alone.shared_robust[0, 0], rel=1e-12)
     assert np.isfinite(spread.own_model).all()
 
 

@@ -80,6 +80,10 @@ class DeltaSpread:
             return Row(estimate=value)
         std_errors = np.sqrt(np.maximum(np.diag(self.covariance), 0.0))
         slope = gradient_of(figure, law, free, std_errors)[free]
+        whole = np.zeros((free.size, 1))
+        whole[free, 0] = slope
+        if not self.fit.uncertainty.determines(whole)[0]:
+            return Row(estimate=value)
         variance = float(slope @ self.covariance[np.ix_(free, free)] @ slope)
         std_error = float(np.sqrt(max(variance, 0.0)))
         half = self.critical * std_error
