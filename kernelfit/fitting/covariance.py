@@ -29,7 +29,7 @@ from kernelfit.fitting.block_influence import block_influence, influence_left_ou
 from kernelfit.fitting.block_length import BlockCurve, block_curve
 from kernelfit.fitting.by_block import chosen_blocks, sums_by_block
 from kernelfit.fitting.curvature import excess_curvature
-from kernelfit.fitting.maximise import Local, Optimum, penalised
+from kernelfit.fitting.maximise import Local, Optimum, Weighting, penalised
 from kernelfit.fitting.problem import Problem
 from kernelfit.model.coupling import CovarianceKind
 
@@ -165,7 +165,9 @@ def covariances(problem: Problem, optimum: Optimum) -> Uncertainty:
     return replace(result, block_curve=result.block_curve.without(loose)) if loose.any() else result
 
 
-def observed_information(problem: Problem, local: Local, variance: FloatArray, free: BoolArray) -> Arrow:
+def observed_information(
+    problem: Problem, local: Local, variance: FloatArray, free: BoolArray, weighting: Weighting | None = None
+) -> Arrow:
     """The observed information of the free parameters: minus the Hessian of the penalised objective.
 
     Where it is not positive definite, as beside a top that was not reached, the expected one takes its place; so it
@@ -176,11 +178,12 @@ def observed_information(problem: Problem, local: Local, variance: FloatArray, f
     problem, local : the model on the recording, and its derivatives at the optimum
     variance : (Q,) model-based, working scale; NaN where there is none
     free : (Q,) parameters that were estimated
+    weighting : of blocks of time, as `local` was made with
     """
     expected = local.information.only(free)
     if len(Determined.of(eliminate(expected).schur).weak):
         return expected
-    excess = excess_curvature(problem, local, np.sqrt(variance))
+    excess = excess_curvature(problem, local, np.sqrt(variance), weighting)
     if not excess.any():
         return expected
     observed = Arrow(expected.own, expected.cross, expected.shared + excess[np.ix_(free, free)])

@@ -11,7 +11,7 @@ from __future__ import annotations
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.fitting.maximise import Local, evaluate_locally
+from kernelfit.fitting.maximise import Local, Weighting, evaluate_locally
 from kernelfit.fitting.problem import Estimate, Problem
 
 STEP = 1e-3  # of a standard error: differences of scores are then good to about six digits
@@ -25,7 +25,9 @@ def curved_parameters(problem: Problem) -> BoolArray:
     return np.array([*kernel, *[False] * problem.has_same_site, *[True] * problem.fits_leak], dtype=bool)
 
 
-def excess_curvature(problem: Problem, local: Local, std_errors: FloatArray) -> FloatArray:
+def excess_curvature(
+    problem: Problem, local: Local, std_errors: FloatArray, weighting: Weighting | None = None
+) -> FloatArray:
     """Minus the Hessian of the penalised objective less its expected information, in the shared parameters.
 
     Own parameters take part in neither: the predictor is linear in them, and its slope by a shared parameter does not
@@ -36,6 +38,7 @@ def excess_curvature(problem: Problem, local: Local, std_errors: FloatArray) -> 
     problem : the model on the recording
     local : objective and derivatives at the optimum
     std_errors : (Q,) working scale; parameters without any are left out
+    weighting : of blocks of time, as `local` was made with
 
     Returns
     -------
@@ -48,7 +51,9 @@ def excess_curvature(problem: Problem, local: Local, std_errors: FloatArray) -> 
         step = np.zeros(size)
         step[q] = min(STEP * std_errors[q], LONGEST_STEP)
         up, down = (
-            evaluate_locally(problem, Estimate(local.estimate.own, local.estimate.shared + sign * step)).score_shared
+            evaluate_locally(
+                problem, Estimate(local.estimate.own, local.estimate.shared + sign * step), weighting
+            ).score_shared
             for sign in (1.0, -1.0)
         )
         excess[:, q] = (down - up) / (2.0 * step[q]) - local.information.shared[:, q]

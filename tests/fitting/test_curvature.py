@@ -62,16 +62,17 @@ def test_one_step_is_near_full_refits_and_would_not_be_by_the_expected_informati
         ours, full = (b.kernel_band(d, simultaneous=simultaneous) for b in (step, refits))
         widths = spread * (ours["upper"] - ours["lower"]) / (full["upper"] - full["lower"])
         assert widths.mean() == pytest.approx(1.0, abs=0.1)
-    monkeypatch.setattr(covariance, "excess_curvature", lambda problem, local, errors: np.zeros((3, 3)))
+    monkeypatch.setattr(covariance, "excess_curvature", lambda problem, local, errors, weighting: np.zeros((3, 3)))
     expected = model().fit(recording).bootstrap("one-step", n_replicates=199)
     assert spread * np.sqrt(expected.covariance[1, 1] / refits.covariance[1, 1]) > 1.1
 
 
 def test_where_there_is_no_top_the_expected_information_is_used(monkeypatch):
     recording = simulated(7, duration_s=60.0)
-    monkeypatch.setattr(covariance, "excess_curvature", lambda problem, local, errors: np.zeros((3, 3)))
+    monkeypatch.setattr(covariance, "excess_curvature", lambda problem, local, errors, weighting: np.zeros((3, 3)))
     expected = model().fit(recording)
     downhill = -np.diag([0.0, 1.5, 0.0]) @ np.linalg.inv(expected.uncertainty.shared_model)
-    monkeypatch.setattr(covariance, "excess_curvature", lambda problem, local, errors: 0.5 * (downhill + downhill.T))
+    downhill = 0.5 * (downhill + downhill.T)
+    monkeypatch.setattr(covariance, "excess_curvature", lambda problem, local, errors, weighting: downhill)
     fit = model().fit(recording)
     np.testing.assert_array_equal(fit.uncertainty.shared_robust, expected.uncertainty.shared_robust)

@@ -322,7 +322,7 @@ def test_progress_is_told_stage_by_stage(recording):
     assert [p.sweeps for p in told] == list(range(1, len(told) + 1))
     assert all(p.expected_sweeps >= p.sweeps and p.seconds_left >= 0 for p in told)
     stages = list(dict.fromkeys(p.stage for p in told))
-    assert stages == ["rates without coupling", "looking for coupling", "climbing"]
+    assert stages == ["rates without coupling", "looking for coupling", "climbing", "standard errors"]
     silent = model("gaussian", after_spike="basis").fit(recording, threads=2)
     np.testing.assert_array_equal(silent.shared, fit.shared)
 

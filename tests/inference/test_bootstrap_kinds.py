@@ -59,7 +59,7 @@ def test_every_block_counting_once_is_the_fit_itself(fit, recording):
 
 def test_blocks_are_those_of_the_robust_covariance(recording):
     """Also where usual blocks were joined, as with a slow state common to all units."""
-    slow = simulated(3, duration_s=60.0, rate_course=lambda t: 0.4 * np.sin(2 * np.pi * t / 20.0))
+    slow = simulated(3, duration_s=60.0, rate_course=lambda t: 0.6 * np.sin(2 * np.pi * t / 20.0))
     usual = 0
     for recording_made in (recording, slow):
         fit = model(leak_rate=LEAK).fit(recording_made)

@@ -90,8 +90,8 @@ def test_changes_of_the_rate_are_the_band_transformed(exponential, kind):
     d = np.array([100.0, 150.0, 250.0])
     told = fit.derived(0.9, d).filter(like="percent", axis=0)
     band = fit.kernel_band(d, level=0.9)
-    for column in ("estimate", "lower", "upper"):
-        np.testing.assert_allclose(told[column], 100 * np.expm1(band[column]), rtol=1e-6)
+    for column in ("estimate", "lower", "upper"):  # ends by differences of the figure, good to five digits
+        np.testing.assert_allclose(told[column], 100 * np.expm1(band[column]), rtol=1e-5)
 
 
 def test_a_higher_level_is_wider(hat):

@@ -15,11 +15,18 @@ import numpy as np
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.engine.evaluate import TimeBlocks
 from kernelfit.fitting.arrow import eliminate, solve_symmetric
+from kernelfit.fitting.covariance import observed_information
 from kernelfit.fitting.maximise import Optimum, Weighting, maximise, penalised
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.inference.bootstrap.blocks import blocks_of, counts_by_block, require_blocks
 from kernelfit.inference.bootstrap.kind import BootstrapKind, Replicate
-from kernelfit.inference.bootstrap.refitting import TOLERANCE, explaining, failure, held_parameters
+from kernelfit.inference.bootstrap.refitting import (
+    TOLERANCE,
+    explaining,
+    failure,
+    held_parameters,
+    inverse_information,
+)
 from kernelfit.inference.bootstrap.weight_laws import WeightLaw, weight_law_from
 
 if TYPE_CHECKING:
@@ -99,13 +106,16 @@ class WeightedReplicator:
         return Replicate(optimum.estimate.shared, optimum.at_bound, covariance, not trouble, trouble or optimum.message)
 
     def _covariance(self, problem: Problem, optimum: Optimum, weight: FloatArray) -> FloatArray | None:
-        """Clustered by the blocks as they were weighted, from one sweep at the optimum."""
+        """Clustered by the blocks as they were weighted, by the observed information as that of the fit is."""
         free, n_own = optimum.free, optimum.estimate.own.shape[1]
         sums = problem.evaluate(optimum.estimate, blocks=self.blocks, block_weight=weight)
         weighted = replace(sums, score=weight[:, None, None] * sums.score)
         covariance = np.full((free.size, free.size), np.nan)
         try:
-            elimination = eliminate(penalised(problem, optimum.estimate, weighted).information.only(free))
+            local = penalised(problem, optimum.estimate, weighted)
+            variance = np.diag(inverse_information(local.information, free))
+            weighting = Weighting(self.blocks, weight)
+            elimination = eliminate(observed_information(problem, local, variance, free, weighting))
             shared = sums.score[..., n_own:].sum(axis=1)[:, free]
             efficient = elimination.efficient_score(sums.score[..., :n_own], shared)
             influence = solve_symmetric(elimination.schur, efficient.T).T
