@@ -86,6 +86,7 @@ def fit_model(
         own=optimum.estimate.own,
         shared=optimum.estimate.shared,
         at_bound=optimum.at_bound,
+        free=optimum.free,
         bound_reasons=bound_reasons(problem, optimum),
         span=problem.span,
         distinct_um=by_distance["distance_um"].to_numpy(),

@@ -61,6 +61,7 @@ class CouplingFit(Profiled, Analysed):
     shared : (Q,) kernel parameters (working scale), same-site coefficient, log leak rate
     at_bound : (Q,) -1 or 1 where a parameter sits at its lower or upper bound, or where nothing holds it on that side;
         else 0
+    free : (Q,) True for parameters that were estimated and sit at no bound, whether or not they have a variance
     bound_reasons : what each bound that was reached means, or why nothing holds a parameter
     span, distinct_um, n_pairs : distances the kernel covers, and unordered pairs at each
     radius_interval : 95 % likelihood interval of a discrete length, or None
@@ -87,6 +88,7 @@ class CouplingFit(Profiled, Analysed):
     own: FloatArray
     shared: FloatArray
     at_bound: FloatArray
+    free: BoolArray
     bound_reasons: tuple[str, ...]
     span: DistanceRange
     distinct_um: FloatArray
@@ -385,11 +387,6 @@ class CouplingFit(Profiled, Analysed):
     def estimate(self) -> Estimate:
         """Own and shared parameters on the working scale, as `problem` takes them."""
         return Estimate(self.own, self.shared)
-
-    @property
-    def free(self) -> BoolArray:
-        """(Q,) True for shared parameters that were estimated and do not sit at a bound."""
-        return np.asarray(np.isfinite(np.diag(self.uncertainty.shared_model)))
 
     def _likelihood_is(self, data: SweepData, point: Point) -> bool:
         """Whether the log-likelihood on these data is the fit's: it is not on another recording."""

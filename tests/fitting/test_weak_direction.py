@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import dataclasses
+
 import numpy as np
 import pytest
-from worlds import BIN_S, LEAK, model
+from worlds import BIN_S, LEAK, model, simulated
 
 import kernelfit as kf
 from kernelfit import kernels, simulate_recording
@@ -83,7 +85,25 @@ def test_a_file_keeps_what_is_determined(fit, tmp_path):
     loaded = kf.load_fit(tmp_path / "fit.json")
     np.testing.assert_array_equal(loaded.uncertainty.weak_moves, fit.uncertainty.weak_moves)
     np.testing.assert_array_equal(loaded.uncertainty.alone, fit.uncertainty.alone)
+    np.testing.assert_array_equal(loaded.free, fit.free)
     np.testing.assert_array_equal(loaded.kernel_band(DISTANCES), fit.kernel_band(DISTANCES))
+
+
+def test_parameters_that_were_estimated_are_free_whatever_their_variance(fit):
+    assert fit.free.dtype == bool
+    np.testing.assert_array_equal(fit.free, fit.at_bound == 0)
+    assert fit.free.sum() > np.isfinite(fit.parameters["std_error"]).sum()
+
+
+def test_a_variance_that_is_missing_holds_nothing_in_a_refit():
+    """Too few numbers for a covariance must not keep a smoothing path where it begins."""
+    recording = simulated(1)
+    fit = fit_model(model(kernels.Spline(n_basis=5, smoothing=1.0)), recording, threads=2)
+    nothing = np.full_like(fit.uncertainty.shared_model, np.nan)
+    bare = dataclasses.replace(fit, uncertainty=dataclasses.replace(fit.uncertainty, shared_model=nothing))
+    paths = [f.smoothing_path([0.01, 1e6], recording=recording, threads=2) for f in (fit, bare)]
+    np.testing.assert_allclose(paths[1].log_likelihood, paths[0].log_likelihood, rtol=1e-12)
+    assert np.ptp(paths[1].log_likelihood) > 0
 
 
 def test_influence_goes_on_along_what_is_determined(fit, recording):
