@@ -21,6 +21,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.stats import norm
 
 from kernelfit._typing import FloatArray
 from kernelfit.fitting.null import Null, NullSweep
@@ -31,6 +32,7 @@ LEVEL = 0.05
 FEWEST_BLOCKS = 6  # with fewer there are too few patterns of signs for a p-value of 5 %
 ENOUGH_BLOCKS = 12  # no joining below this
 TOGETHER = 1.3  # standard errors of the correlation of neighbouring blocks
+SEARCH_LEVELS = (0.0, 0.1, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.9, 0.98, 0.99, 0.995, 0.999)  # and 0.95
 ROUNDING = 1e-9  # a pattern of signs as extreme as the observed one must not miss it by rounding
 
 
@@ -46,6 +48,7 @@ class CouplingVerdict:
     sentence : the verdict in words
     same_site_found : whether units on one site were found to be coupled by a coefficient of their own, which tells the
         leak too
+    search_roots : roots of the quantiles of the largest squared z over the search, at SEARCH_LEVELS
     """
 
     found: bool
@@ -53,6 +56,24 @@ class CouplingVerdict:
     critical_z: float
     sentence: str
     same_site_found: bool = False
+    search_roots: tuple[float, ...] = ()
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "search_roots", tuple(self.search_roots))  # a list where they were read from a file
+
+    def critical_at(self, level: float) -> float:
+        """How many standard errors such an amplitude must lie from zero at another level; `critical_z` at 95 %.
+
+        Between the levels of `search_roots` linear in log(1 - level); beyond the last in proportion to the normal
+        quantile, which grows faster than the root of a statistic of several directions; never below the first.
+        """
+        known = (*SEARCH_LEVELS, 1.0 - LEVEL) if self.search_roots else (1.0 - LEVEL,)
+        roots = (*self.search_roots, self.critical_z)
+        order = np.argsort(known)
+        levels, root = np.array(known)[order], np.array(roots)[order]
+        if level <= levels[-1]:
+            return float(np.interp(-np.log1p(-level), -np.log1p(-levels), root))
+        return float(root[-1] * norm.ppf(0.5 * (1.0 + level)) / norm.ppf(0.5 * (1.0 + levels[-1])))
 
 
 def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
@@ -68,15 +89,18 @@ def detect_coupling(null: Null, seed: int) -> CouplingVerdict:
     same_site = _tested(on_sites, seed) if on_sites else None
     found = test.p_value <= LEVEL
     same_site_found = same_site is not None and same_site.p_value <= LEVEL
-    return CouplingVerdict(found, test.p_value, test.critical_z, _sentence(test, same_site), same_site_found)
+    return CouplingVerdict(
+        found, test.p_value, test.critical_z, _sentence(test, same_site), same_site_found, test.search_roots
+    )
 
 
 @dataclass(frozen=True)
 class _Test:
-    """p-value of the largest statistic over the leaks, 95 % quantile of the largest |z|, and blocks flipped."""
+    """p-value of the largest statistic over the leaks, quantiles of the largest |z|, and blocks flipped."""
 
     p_value: float
     critical_z: float
+    search_roots: tuple[float, ...]
     n_blocks: int
 
     @property
@@ -101,7 +125,8 @@ def _tested(directions: list[_Directions], seed: int) -> _Test:
         searched = np.maximum(searched, np.sum((draws @ own) * draws, axis=1))
     reached = flipped >= observed * (1.0 - ROUNDING)
     p_value = (1.0 + float(np.sum(reached))) / (N_FLIPS + 1.0)
-    return _Test(p_value, float(np.sqrt(np.quantile(searched, 1.0 - LEVEL))), n_blocks)
+    *roots, critical_z = (float(np.sqrt(np.quantile(searched, q))) for q in (*SEARCH_LEVELS, 1.0 - LEVEL))
+    return _Test(p_value, critical_z, tuple(roots), n_blocks)
 
 
 def _sentence(test: _Test, same_site: _Test | None) -> str:

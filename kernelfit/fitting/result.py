@@ -38,7 +38,6 @@ from kernelfit.recording.grid import Grid, bins_between, make_grid
 from kernelfit.recording.recording import Origin, Recording, clock_text
 
 if TYPE_CHECKING:
-
     from kernelfit.diagnostics.goodness import Goodness
 
 SAME_LIKELIHOOD = 1e-9  # relative: sums in another order differ by less, another recording by more
@@ -251,7 +250,7 @@ class CouplingFit(Profiled, Analysed):
             above the largest distance at which a firing unit has a partner: nothing was recorded there
             (`fit.kernel` extrapolates). Gaps between those two are bridged by the kernel's formula. Where no coupling
             was found the band is widened for the search over length and leak, and holds zero; a parameter at its bound
-            is taken as known; between the ends of a radius' interval the band holds the amplitude and zero. NaN where
+            is taken as known; between the ends of a radius' interval (95 % at any level) it holds J and 0; NaN where
             nothing has a standard error, or where nothing holds an amplitude. Under a penalty the model-based band is
             the Bayesian one, which covers the curve on average over its distances; where the data chose the smoothing
             every kind of band allows for not knowing it

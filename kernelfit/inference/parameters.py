@@ -14,12 +14,14 @@ from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.inference.bands import standard_errors, sup_t_critical
 from kernelfit.inference.edges import cut_notes, loose, natural_limits, radius_notes, run_off
 from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
+from kernelfit.inference.not_found import search_root, widened_words
 from kernelfit.kernels.base import SAME_DISTANCE_UM
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
     from kernelfit.model.coupling import CovarianceKind
 
+RADIUS_LEVEL = 0.95  # of the interval of a radius that a fit holds
 FIXED = "fixed"
 NOT_IDENTIFIED = "not identified"
 
@@ -54,7 +56,7 @@ def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldInte
     values, jacobian, names, _, on_log = _natural(fit)
     critical = np.full(values.size, critical_value(level, fit.uncertainty.degrees_of_freedom(kind)))
     if not fit.verdict.found:  # chosen for its length and leak: the wider interval says so
-        critical[~_told_by_sites(fit, names)] = max(critical[0], fit.verdict.critical_z) if critical.size else np.nan
+        critical[~_told_by_sites(fit, names)] = max(critical[0], search_root(fit, level)) if critical.size else np.nan
     known = np.where(fit.uncertainty.determines(jacobian.T)[:, None], jacobian, 0.0)
     return wald_intervals(values, known, fit.uncertainty.shared(kind), on_log, critical)
 
@@ -95,6 +97,8 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
         if parameter.discrete and fit.radius_interval is not None:
             table.loc[parameter.name, ["std_error", "lower", "upper"]] = [np.nan, *fit.radius_interval]
             profiled = "profiled over the distances of the array; the interval is a likelihood interval"
+            if level != RADIUS_LEVEL:
+                profiled += f" at {100 * RADIUS_LEVEL:g} % whatever the level; fit.profile has others"
             table.loc[parameter.name, "note"] = "; ".join([profiled, *radius_notes(fit, k, fit.radius_interval)])
     table.loc[(jacobian[:, loose(fit)] != 0).any(axis=1), numbers] = np.nan
     open_end = run_off(fit) & (np.count_nonzero(jacobian, axis=1) == 1)
@@ -119,7 +123,7 @@ def _without_coupling(fit: CouplingFit, table: pd.DataFrame) -> None:
     table.loc[shape, ["estimate", "std_error", "lower", "upper"]] = np.nan
     table.loc[shape, "note"] = f"{NOT_IDENTIFIED}: {nothing} to describe"
     widened = ~shape & ~told & np.isfinite(table["std_error"].to_numpy(dtype=np.float64))
-    table.loc[widened, "note"] = f"{nothing} found; interval widened for the search over length and leak"
+    table.loc[widened, "note"] = f"{nothing} found{'; interval ' * bool(widened_words(fit))}{widened_words(fit)}"
     tested = widened & (table.index != "same_site")  # that test leaves pairs on one site out
     outside = tested & ((table["lower"] > 0) | (table["upper"] < 0)).to_numpy()
     table.loc[outside, "note"] += " and out to 0, which the test of any coupling does not exclude"
@@ -216,7 +220,7 @@ def _band(
     if simultaneous:
         critical = sup_t_critical(gradient, covariance, level, freedom)
     if not fit.verdict.found:
-        critical = max(critical, fit.verdict.critical_z)
+        critical = max(critical, search_root(fit, level))
     half = critical * standard_errors(gradient, covariance)
     lower, upper = estimate - half, estimate + half
     if fit.radius_interval is not None:  # between its ends a distance may lie within the radius or beyond it

@@ -24,6 +24,7 @@ from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.problem import Estimate, Problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.held import Held, hold
+from kernelfit.inference.not_found import widened_words
 from kernelfit.inference.profile_conditions import check_converged, discrete_names, model_cut
 from kernelfit.inference.profile_ends import ProfileInterval
 from kernelfit.inference.profile_point import point_of
@@ -292,7 +293,7 @@ def _sentence(
         "fixed": f"the leak fixed at {leak_rate:.3g} 1/s",
         "re-estimated": "the leak re-estimated at each",
     }[leak]
-    widened = "" if fit.verdict.found else ", widened for the search over length and leak"
+    widened = f", {widened_words(fit)}" if widened_words(fit) else ""
     names = ", ".join(n for n in shared_names(fit) if n not in (AMPLITUDE_NAME, LENGTH_NAME, "leak_rate"))
     also = f" and {names}" if names else ""
     return (

@@ -14,6 +14,7 @@ from kernelfit.fitting.outcome import Note
 from kernelfit.fitting.problem import Problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.intervals import critical_value
+from kernelfit.inference.not_found import search_root, widened_words
 from kernelfit.inference.profile_walk import Walked
 from kernelfit.inference.scales import shared_names
 
@@ -81,7 +82,7 @@ def model_cut(fit: CouplingFit, name: str, level: float) -> Cut:
     """The cut of one parameter: a normal quantile; for an amplitude, widened where no coupling was found."""
     root = critical_value(level, np.inf)
     searched = not fit.verdict.found and name not in shape_names(fit)
-    widened = fit.verdict.critical_z if searched else 0.0
+    widened = search_root(fit, level) if searched else 0.0
     return Cut(max(root, widened), widened, searched and name != SAME_SITE_NAME)  # the test leaves same sites out
 
 
@@ -136,11 +137,11 @@ def profile_notes(fit: CouplingFit, problem: Problem, name: str, walked: Walked 
         )
     if not fit.verdict.found:
         shape = name in shape_names(fit)
+        widened = f"the cut is {widened_words(fit)}, and " if widened_words(fit) else ""
         what = (
             f"No coupling was found, so {name} means nothing: its profile only shows what the recording does not say."
             if shape
-            else "No coupling was found: the cut is widened for the search over length and leak, and an interval that "
-            "leaves 0 out is taken out to it."
+            else f"No coupling was found: {widened}an interval that leaves 0 out is taken out to it."
         )
         notes.append(Note("warning", what, name, "fit.compatible_amplitudes() states what is left of the amplitude."))
     discrete = discrete_names(fit) - {name}

@@ -9,11 +9,11 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 from scipy.special import gammaln, xlogy
-from scipy.stats import binom, kstest
+from scipy.stats import binom, kstest, norm
 from worlds import BIN_S, LEAK, NOTHING, array, model, simulated
 
 from kernelfit.engine.twin import dense_counts, dense_gradients
-from kernelfit.fitting.detection import FEWEST_BLOCKS, LEVEL, detect_coupling
+from kernelfit.fitting.detection import FEWEST_BLOCKS, LEVEL, CouplingVerdict, detect_coupling
 from kernelfit.fitting.null import NullSweep, fit_null, leak_grid, null_blocks, with_bands
 from kernelfit.fitting.problem import Estimate, make_problem
 from kernelfit.recording.recording import Recording
@@ -237,6 +237,24 @@ def test_power_on_coupled_recordings():
     """A minute each. The test is wary where one burst carries all: of half a minute it would miss one in ten."""
     found = [verdict_of(simulated(seed, duration_s=60.0), seed=seed).found for seed in range(2000, 2016)]
     assert np.mean(found) >= 0.8
+
+
+def test_critical_values_at_other_levels_are_the_quantiles_of_the_same_statistic():
+    """One band: the root of its flipped sums over their spread; 400 equal blocks make that normal."""
+    scores = np.tile([[1.0], [-1.0]], (200, 1))
+    verdict = detect_coupling(scored(scores, np.array([400.0])), 0)
+    for level in (0.5, 0.6, 0.8, 0.9, 0.95, 0.98, 0.99):
+        assert verdict.critical_at(level) == pytest.approx(norm.ppf(0.5 * (1 + level)), abs=0.2)
+    assert verdict.critical_at(0.95) == pytest.approx(verdict.critical_z, rel=1e-12)
+    rising = [verdict.critical_at(level) for level in (0.01, 0.3, 0.75, 0.94, 0.97, 0.995, 0.9995, 0.99999)]
+    assert rising == sorted(rising)
+    assert rising[-1] > verdict.search_roots[-1]
+
+
+def test_a_verdict_without_other_levels_is_never_narrower_than_it_knows():
+    known = CouplingVerdict(False, 0.4, 3.0, "No coupling to describe.")
+    assert known.critical_at(0.5) == known.critical_at(0.95) == 3.0
+    assert known.critical_at(0.99) == pytest.approx(3.0 * 2.5758 / 1.95996, rel=1e-4)
 
 
 def test_critical_values_are_wider_than_pointwise_ones(null):

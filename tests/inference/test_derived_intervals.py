@@ -215,7 +215,8 @@ def test_without_coupling_a_fixed_leak_leaves_the_network_a_number():
     assert not fit.verdict.found
     table = fit.derived()
     assert np.isfinite(table.loc["extra_spikes", NUMBERS].astype(float)).all()
-    assert "widened for the search" in table.loc["extra_spikes", "note"]
+    assert "no coupling found" in table.loc["extra_spikes", "note"]
+    assert "widened" not in table.loc["extra_spikes", "note"]  # neither a length nor a leak was searched for
     tau = table.loc["time_constant_s"]
     assert tau["estimate"] == 1 / LEAK
     assert tau["note"] == "fixed"

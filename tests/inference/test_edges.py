@@ -8,8 +8,11 @@ import numpy as np
 import pytest
 
 import kernelfit as kf
-from kernelfit.fitting.detection import CouplingVerdict
+from kernelfit.fitting.detection import SEARCH_LEVELS, CouplingVerdict
 from kernelfit.fitting.problem import FASTEST_LEAK_BINS, SLOWEST_LEAK_SHARE
+from kernelfit.inference.intervals import critical_value
+from kernelfit.inference.parameters import parameter_table
+from kernelfit.inference.profile_conditions import model_cut
 
 pytestmark = pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
 
@@ -82,6 +85,10 @@ def test_the_radius_says_where_the_array_ends():
     assert row["upper"] == fit.distinct_um[-1]
     assert "upper end at its bound: a disc that holds every pair" in row["note"]
     assert "likelihood interval" in row["note"]
+    assert "whatever the level" not in row["note"]
+    at_half = parameter_table(fit, "robust", 0.5).loc["length_um"]
+    assert (at_half["lower"], at_half["upper"]) == fit.radius_interval
+    assert "at 95 % whatever the level" in at_half["note"]
     inside = dataclasses.replace(fit, radius_interval=(fit.distinct_um[3], fit.distinct_um[5]))
     assert "bound" not in inside.parameters.loc["length_um", "note"]
 
@@ -115,6 +122,36 @@ def test_an_interval_that_holds_zero_says_no_more_than_it_did(gaussian):
     row = unsure.parameters.loc["amplitude"]
     assert row["note"] == "no coupling found; interval widened for the search over length and leak"
     assert row["lower"] < 0 < row["upper"]
+
+
+def test_the_search_is_paid_for_at_the_level_asked_for(gaussian):
+    """Wider at 99 % and narrower at 50 %, by the quantiles the verdict holds; nothing where nothing was searched."""
+    roots = tuple(1.5 + 2.0 * level for level in SEARCH_LEVELS)
+    verdict = dataclasses.replace(NOT_FOUND, critical_z=3.4, search_roots=roots)
+    found = with_spread(gaussian, amplitude=10.0)
+    unsure = dataclasses.replace(found, verdict=verdict)
+    at = gaussian.distinct_um[:1]
+    for level, root in ((0.5, 2.5), (0.95, 3.4), (0.99, 3.48)):
+        row = parameter_table(unsure, unsure.covariance_kind, level).loc["amplitude"]
+        assert row["upper"] - row["estimate"] == pytest.approx(root * row["std_error"], rel=1e-9)
+        band, plain = (fit.kernel_band(at, level=level).iloc[0] for fit in (unsure, found))
+        wider = root / critical_value(level, found.uncertainty.degrees_of_freedom("robust"))
+        assert band["upper"] - band["estimate"] == pytest.approx(wider * (plain["upper"] - plain["estimate"]), rel=1e-9)
+        assert model_cut(unsure, "amplitude", level).widened == pytest.approx(root, rel=1e-9)
+
+
+def test_a_flat_kernel_at_a_stated_leak_pays_for_no_search():
+    coupled = fitted("flat", kf.kernels.Flat().at(amplitude=0.2), 20.0, leak_rate=LEAK)
+    fit = dataclasses.replace(coupled, verdict=NOT_FOUND)
+    found = dataclasses.replace(fit, verdict=dataclasses.replace(NOT_FOUND, found=True))
+    row, plain = fit.parameters.loc["amplitude"], found.parameters.loc["amplitude"]
+    assert row["upper"] == plain["upper"]
+    assert row["lower"] == min(plain["lower"], 0.0)
+    assert row["note"].startswith("no coupling found")
+    assert "widened" not in row["note"]
+    assert model_cut(fit, "amplitude", 0.95).widened == 0.0
+    d = fit.distinct_um[:1]
+    assert fit.kernel_band(d)["upper"][0] == found.kernel_band(d)["upper"][0]
 
 
 @pytest.mark.parametrize("kernel", ["gaussian", "flat"])

@@ -17,6 +17,7 @@ from kernelfit._validation import check_level, check_truth_value, given_as
 from kernelfit.errors import ArgumentError
 from kernelfit.inference.bands import standard_errors
 from kernelfit.inference.bootstrap.ends import RANK_SLACK
+from kernelfit.inference.not_found import search_root
 from kernelfit.inference.parameters import distances_with_pairs
 from kernelfit.kernels.base import SAME_DISTANCE_UM
 
@@ -66,8 +67,7 @@ def _half_widths(bootstrap: Bootstrap, d: FloatArray, level: float, simultaneous
         critical = np.full(d.size, np.quantile(np.max(size, axis=1), level, method="weibull"))
     else:
         critical = np.quantile(size, level, axis=0, method="weibull")
-    if not bootstrap.fit.verdict.found:  # chosen for its length and leak: the wider band says so
-        critical = np.maximum(critical, bootstrap.fit.verdict.critical_z)
+    critical = np.maximum(critical, search_root(bootstrap.fit, level))  # chosen for its length and leak
     return np.asarray(critical * spread)
 
 

@@ -18,6 +18,7 @@ from kernelfit.inference.derived.row import Losses, Row, opened
 from kernelfit.inference.derived.setting import Law
 from kernelfit.inference.derived.spread import laws_at_radii, union
 from kernelfit.inference.intervals import critical_value
+from kernelfit.inference.not_found import search_root
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -92,9 +93,8 @@ class ReplicateSpread:
 
     def _widened(self, figure: DerivedFigure, row: Row) -> Row:
         """Where no coupling was found: as much wider as the search over length and leak asks."""
-        verdict = self.bootstrap.fit.verdict
-        factor = verdict.critical_z / critical_value(self.level, np.inf)
-        if verdict.found or factor <= 1.0:
+        factor = search_root(self.bootstrap.fit, self.level) / critical_value(self.level, np.inf)
+        if factor <= 1.0:
             return row
         least = figure.least if figure.on_log else 0.0
 

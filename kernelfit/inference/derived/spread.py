@@ -19,6 +19,7 @@ from kernelfit.inference.derived.figure import DerivedFigure, Lost
 from kernelfit.inference.derived.row import Losses, Row, opened
 from kernelfit.inference.derived.setting import DrawnLaw, Law
 from kernelfit.inference.intervals import critical_value
+from kernelfit.inference.not_found import search_root
 from kernelfit.inference.parameters import too_few_blocks
 
 if TYPE_CHECKING:
@@ -48,7 +49,7 @@ class DeltaSpread:
         covariance = fit.uncertainty.shared(fit.covariance_kind)
         critical = critical_value(level, freedom)
         if not fit.verdict.found:
-            critical = max(critical, fit.verdict.critical_z)
+            critical = max(critical, search_root(fit, level))
         draws = draws_of(fit, law, covariance, freedom) if fit.verdict.found else []
         return cls(fit, covariance, critical, level, draws)
 

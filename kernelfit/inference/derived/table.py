@@ -19,6 +19,7 @@ from kernelfit.inference.derived.replicates import ReplicateSpread, require_same
 from kernelfit.inference.derived.row import Row
 from kernelfit.inference.derived.setting import Law, setting_of
 from kernelfit.inference.derived.spread import DeltaSpread, depends_on
+from kernelfit.inference.not_found import widened_words
 from kernelfit.inference.parameters import FIXED
 
 if TYPE_CHECKING:
@@ -28,7 +29,6 @@ if TYPE_CHECKING:
 
 AT_LIMIT = 1e-6  # relative
 NOT_FOUND = "not identified: no coupling to describe"
-WIDENED = "no coupling found; interval widened for the search over length and leak"
 
 
 def derived_table(
@@ -100,7 +100,8 @@ def _row(figure: DerivedFigure, law: Law, fit: CouplingFit, spread: DeltaSpread 
         return Row(estimate=value, notes=(FIXED,))
     row = spread.row(figure, law, value).with_note(_taken_as_known(figure, law, fit))
     if row.has_interval and not fit.verdict.found:
-        row = row.with_note(WIDENED)
+        widened = widened_words(fit)
+        row = row.with_note(f"no coupling found; interval {widened}" if widened else "no coupling found")
     return row.with_note(_stability(figure, law, row))
 
 
