@@ -25,6 +25,7 @@ from kernelfit.model.terms import AfterSpike
 
 EVERY = 2  # every second time constant of the term: a coarser basis tells as well whether anything is there, for less
 LEVEL = 0.05
+LITTLE = 0.01  # bits per spike (own choice): below a hundredth the description of the spike times hardly improves
 
 
 def fewest_blocks(n_terms: int) -> int:
@@ -79,11 +80,25 @@ def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest | Unavaila
     p_value = float(chi2.sf(statistic, n_traces))
     gain = 0.5 * float(score @ np.linalg.pinv(schur, rcond=1e-10, hermitian=True) @ score)
     bits = gain / (problem.data.n_spikes * np.log(2.0))
+    return ScoreTest(statistic, n_traces, p_value, bits, _advice(bits, p_value))
+
+
+def _advice(bits: float, p_value: float) -> str:
+    """How much a term would add, and how sure that is: two questions, as little is shown by many spikes, and much
+    may not be by few."""
     shown = "p < 0.001" if p_value < 0.001 else f"p = {p_value:.2g}"
-    advice = (
-        f"A unit's own past matters here: an after-spike term would add about {bits:.2g} bits per spike ({shown}). "
-        "Without it the kernel absorbs part of it; fit with after_spike='basis' (--after-spike basis)."
-        if p_value <= LEVEL
-        else f"An after-spike term would add little: about {bits:.2g} bits per spike ({shown})."
-    )
-    return ScoreTest(statistic, n_traces, p_value, bits, advice)
+    said = f"about {bits:.2g} bits per spike ({shown})"
+    fit = "fit with after_spike='basis' (--after-spike basis)"
+    if p_value <= LEVEL and bits >= LITTLE:
+        return (
+            f"A unit's own past matters here: an after-spike term would add {said}. Without it the kernel absorbs part "
+            f"of it; {fit}."
+        )
+    if p_value <= LEVEL:
+        return f"A unit's own past can be seen here, but an after-spike term would add little: {said}."
+    if bits >= LITTLE:
+        return (
+            f"An after-spike term might add {said}: too much to leave aside, and too uncertain to be told from chance; "
+            f"{fit} and compare."
+        )
+    return f"An after-spike term would add little: {said}."

@@ -8,7 +8,7 @@ from scipy.stats import chi2
 from worlds import LEAK, model, simulated
 
 import kernelfit as kf
-from kernelfit.fitting.added_term import EVERY, LEVEL, fewest_blocks
+from kernelfit.fitting.added_term import EVERY, LEVEL, LITTLE, _advice, fewest_blocks
 from kernelfit.fitting.outcome import ScoreTest
 
 pytestmark = pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
@@ -61,3 +61,15 @@ def test_the_reason_is_kept_on_disk(tmp_path):
     fit.save(tmp_path / "fit.json")
     assert kf.load_fit(tmp_path / "fit.json").after_spike_test == fit.after_spike_test
     assert isinstance(fit.after_spike_test, kf.Unavailable)
+
+
+def test_little_is_said_of_little_and_not_of_the_uncertain():
+    much, hardly, unsure, nothing = (
+        _advice(bits, p) for bits, p in ((0.2, 1e-5), (0.0004, 1e-5), (0.2, 0.3), (0.0004, 0.3))
+    )
+    assert "matters here: an after-spike term would add about 0.2 bits per spike (p < 0.001)" in much
+    assert "can be seen here, but an after-spike term would add little" in hardly
+    assert "little" not in unsure
+    assert "too uncertain to be told from chance; fit with after_spike='basis'" in unsure
+    assert nothing == "An after-spike term would add little: about 0.0004 bits per spike (p = 0.3)."
+    assert "matters here" in _advice(LITTLE, LEVEL)

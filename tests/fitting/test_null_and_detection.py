@@ -13,7 +13,7 @@ from scipy.stats import binom, kstest, norm
 from worlds import BIN_S, LEAK, NOTHING, array, model, simulated
 
 from kernelfit.engine.twin import dense_counts, dense_gradients
-from kernelfit.fitting.detection import FEWEST_BLOCKS, LEVEL, CouplingVerdict, detect_coupling
+from kernelfit.fitting.detection import FEWEST_BLOCKS, LEVEL, MORE_FLIPS, CouplingVerdict, detect_coupling
 from kernelfit.fitting.null import NullSweep, fit_null, leak_grid, null_blocks, with_bands
 from kernelfit.fitting.problem import Estimate, make_problem
 from kernelfit.recording.recording import Recording
@@ -184,6 +184,31 @@ def test_too_few_blocks_are_said_to_be_too_few():
     assert "too short to test for any (5 blocks of time; 6 are needed)" in detect_coupling(few, 0).sentence
     assert not detect_coupling(few, 0).found
     assert detect_coupling(enough, 0).p_value == pytest.approx(2 / 64, abs=4 * np.sqrt(2 / 64 / 1999))
+
+
+def test_p_near_the_level_is_judged_by_more_flips_and_no_longer_hangs_on_the_seed():
+    """Scores for which p lies near 5 %: 1999 flips decide by the seed (Monte-Carlo error 0.005), 19,999 by 0.0015."""
+    rng = np.random.default_rng(4)
+    base = rng.normal(size=(100, 1))
+    base -= base.mean()
+
+    def shifted(z):
+        return scored(base + z / 10.0, np.full(1, 100.0))
+
+    def p_values(z):
+        return np.array([detect_coupling(shifted(z), seed).p_value for seed in range(12)])
+
+    near = next(z for z in np.arange(1.6, 2.4, 0.02) if detect_coupling(shifted(z), 99).p_value < 0.052)
+    p = p_values(near)
+    exact = p.mean()
+    assert abs(exact - LEVEL) < 0.006
+    assert p.std() < 2 * np.sqrt(exact * (1 - exact) / MORE_FLIPS)
+    assert f"from {MORE_FLIPS:,} flips" in detect_coupling(shifted(near), 0).sentence
+    far = detect_coupling(shifted(1.0), 0)
+    assert "from 1,999 flips" in far.sentence
+    assert not far.found
+    assert "no coupling could be shown" in far.sentence
+    assert "as well" not in far.sentence
 
 
 N_SIZE = 400

@@ -46,7 +46,7 @@ def test_pairs_on_one_site_alone_are_no_coupling_across_distance(fit):
     assert not fit.verdict.found
     assert fit.verdict.same_site_found
     assert fit.verdict.sentence.startswith("No coupling across distance")
-    assert "Units on one site are coupled (p < 0.001)" in fit.verdict.sentence
+    assert "Units on one site are coupled (p < 0.001 from 1,999 flips)" in fit.verdict.sentence
 
 
 def test_what_pairs_on_one_site_tell_is_stated(fit):
