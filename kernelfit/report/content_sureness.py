@@ -8,6 +8,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
+from scipy.stats import norm
 
 from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
@@ -32,7 +33,7 @@ KINDS: tuple[CovarianceKind, ...] = ("model", "robust", "jackknife")
 BOOTSTRAP, PROFILE = "bootstrap", "profile"
 WIDER = 1.15  # jackknife over robust standard error: from here on a few stretches carry the estimate
 CARRIES = 1.0  # robust standard errors that one stretch or unit moves a parameter by: worth a warning
-FLAT_WITHIN = 2.0  # Monte-Carlo errors of a standard error from G blocks, 1/sqrt(2 (G - 1)) of it
+BY_CHANCE = 0.05  # standard errors that grow so much over longer blocks, where nothing depends on anything
 OTHER_BLOCKS = "(The test of any coupling cuts blocks of its own, before there are estimates.)"
 SHORT = {"amplitude": "amplitude", "length_um": "length", "leak_rate": "leak rate", "exponent": "exponent"}
 
@@ -283,8 +284,8 @@ def blocks_title(curve: BlockCurve) -> str:
     if longer is None:
         return f"No dependence between neighbouring blocks could be seen ({_chosen_blocks(curve)} blocks)"
     if longer:
-        return "Standard errors no longer depend on the length of the blocks"
-    return "Standard errors change with the length of the blocks, though neighbouring ones look independent"
+        return "Standard errors do not grow with the length of the blocks"
+    return "Standard errors grow with the length of the blocks, though neighbouring ones look independent"
 
 
 def blocks_text(curve: BlockCurve, length: str) -> str:
@@ -310,9 +311,9 @@ def blocks_text(curve: BlockCurve, length: str) -> str:
     if longer is None:
         return f"{text}; there are too few blocks to try longer ones."
     if longer:
-        return f"{text}, and over longer ones standard errors stay the same, as far as chance lets them."
+        return f"{text}, and over longer ones standard errors do not grow."
     return (
-        f"{text}, but over longer ones standard errors change by more than chance would have it. Read the robust "
+        f"{text}, but over longer ones standard errors grow by more than chance would have it. Read the robust "
         "intervals with care."
     )
 
@@ -322,14 +323,19 @@ def _chosen_blocks(curve: BlockCurve) -> int:
 
 
 def _flat_beyond(curve: BlockCurve) -> bool | None:
-    """Whether standard errors of longer blocks lie within Monte-Carlo errors of those used; None: no longer ones."""
+    """Whether standard errors of longer blocks are no larger than those used, but for chance; None: no longer ones.
+
+    Smaller ones are no sign of anything: fewer blocks scatter more. Chance is that of all lengths and parameters looked
+    at, 1 in 20 together.
+    """
     if curve.chosen + 1 >= curve.length_s.size:
         return None
     at_chosen = curve.std_error[curve.chosen]
     known = np.isfinite(at_chosen) & (at_chosen > 0)
-    change = np.abs(curve.std_error[curve.chosen + 1 :, known] / at_chosen[known] - 1.0)
-    allowed = FLAT_WITHIN / np.sqrt(2.0 * (curve.n_blocks[curve.chosen + 1 :] - 1.0))
-    return bool((change <= allowed[:, None]).all())
+    growth = curve.std_error[curve.chosen + 1 :, known] / at_chosen[known] - 1.0
+    error = 1.0 / np.sqrt(2.0 * (curve.n_blocks[curve.chosen + 1 :] - 1.0))
+    allowed = norm.ppf((1.0 - BY_CHANCE) ** (1.0 / max(growth.size, 1))) * error
+    return bool((growth <= allowed[:, None]).all())
 
 
 def stretches_sentence(fit: CouplingFit) -> str:
