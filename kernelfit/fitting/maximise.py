@@ -77,7 +77,7 @@ class Optimum:
     upper). An amplitude without a bound is marked so where nothing holds it on that side, and what is tied to such a
     one is not free either.
     `decrement` is the squared length of the next step in standard errors. `by_block` holds the sums of the last sweep
-    by blocks of time, where it was made so.
+    by blocks of time, where it was made so. `on_ridge` marks a climb that ended because steps no longer gained much.
     """
 
     local: Local
@@ -88,6 +88,7 @@ class Optimum:
     decrement: float
     message: str
     by_block: BlockSums | None = None
+    on_ridge: bool = False
 
     @property
     def estimate(self) -> Estimate:
@@ -168,7 +169,7 @@ def maximise(
     damping, decrement, stale = FIRST_DAMPING, np.inf, 0
     gains: list[float] = []
     by_block: BlockSums | None = None
-    message, converged, iteration = "", False, 0
+    message, converged, on_ridge, iteration = "", False, False, 0
     while iteration < max_iterations:
         iteration += 1
         run_off = _run_off(problem, local, run_off, driven_um)
@@ -201,7 +202,8 @@ def maximise(
                 break
             gains.append(gained)
             if len(gains) > RIDGE_STEPS and sum(gains[-RIDGE_STEPS:]) < RIDGE_GAIN:
-                converged, message = True, (
+                converged, on_ridge = True, True
+                message = (
                     f"the likelihood is flat here: {RIDGE_STEPS} steps raised its logarithm by less than "
                     f"{RIDGE_GAIN:g} in all"
                 )
@@ -219,7 +221,9 @@ def maximise(
     pushed = _pushed_out(local, bounds)
     at_bound = np.where(pushed, np.where(local.estimate.shared <= bounds[:, 0], -1.0, 1.0), 0.0)
     run_off = _run_off(problem, local, run_off, driven_um) & ~held
-    optimum = Optimum(local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message, by_block)
+    optimum = Optimum(
+        local, ~held & ~pushed, at_bound, converged, iteration, float(decrement), message, by_block, on_ridge
+    )
     return with_run_off(problem, optimum, run_off) if run_off.any() else optimum
 
 

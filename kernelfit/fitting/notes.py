@@ -7,7 +7,7 @@ import numpy as np
 from kernelfit.fitting.bounds import bound_reasons, in_words, run_off_parameters, shared_names
 from kernelfit.fitting.covariance import REFUSED_BELOW, Uncertainty
 from kernelfit.fitting.detection import CouplingVerdict
-from kernelfit.fitting.maximise import Optimum
+from kernelfit.fitting.maximise import RIDGE_GAIN, RIDGE_STEPS, Optimum
 from kernelfit.fitting.outcome import Note, Severity
 from kernelfit.fitting.problem import SLOWEST_LEAK_SHARE, Problem
 from kernelfit.recording.activity import gaps, longest_break, paused
@@ -33,6 +33,18 @@ def fit_notes(
                 "optimiser",
                 "Treat every number with caution. Try a simpler kernel, wider bins, or a fixed leak rate "
                 "(leak_rate=..., --leak-rate).",
+            )
+        )
+    elif optimum.on_ridge:
+        notes.append(
+            Note(
+                "info",
+                f"The climb ended on a ridge, not at a sharp top: its last {RIDGE_STEPS} steps raised the "
+                f"log-likelihood by less than {RIDGE_GAIN:g} in all. Along it other values of the parameters describe "
+                "the recording as well as those that are stated.",
+                "optimiser",
+                "Read the intervals rather than the estimates, and fit.profile(...) for how far the ridge goes; a "
+                "kernel with fewer parameters may have a top.",
             )
         )
     if not verdict.found:

@@ -79,7 +79,8 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
     _, jacobian, names, units, _ = _natural(fit)
     whole = _intervals(fit, kind, level)
     wald = whole.within(natural_limits(fit))
-    notes = [_note(fit, kind, row) or cut for row, cut in zip(jacobian, cut_notes(fit, whole, wald), strict=True)]
+    cuts = cut_notes(fit, whole, wald)
+    notes = [_note(fit, kind, k, jacobian[k], names) or cuts[k] for k in range(len(names))]
     table = pd.DataFrame(
         {
             "estimate": wald.estimate.copy(),
@@ -131,15 +132,17 @@ def _without_coupling(fit: CouplingFit, table: pd.DataFrame) -> None:
     table.loc[tested, "upper"] = table.loc[tested, "upper"].clip(lower=0.0)
 
 
-def _note(fit: CouplingFit, kind: CovarianceKind, jacobian_row: FloatArray) -> str:
-    """Why a parameter has no standard error, where it has none."""
+def _note(fit: CouplingFit, kind: CovarianceKind, k: int, jacobian_row: FloatArray, names: list[str]) -> str:
+    """Why parameter k has no standard error, where it has none."""
     used = np.flatnonzero(jacobian_row)
     without = [q for q in used if run_off(fit)[q]] or [q for q in used if loose(fit)[q]]
     if without:
         return f"{NOT_IDENTIFIED}: {fit.bound_reasons[without[0]]}"
-    reasons = [fit.bound_reasons[q] for q in used if fit.at_bound[q] != 0]
-    if reasons:
-        return "at its bound: " + "; ".join(reasons)
+    stopped = [q for q in used if fit.at_bound[q] != 0]
+    if stopped:
+        own = [f"at its bound: {fit.bound_reasons[k]}"] if k in stopped else []
+        others = [f"goes with {names[q]}, at its bound: {fit.bound_reasons[q]}" for q in stopped if q != k]
+        return "; ".join(own + others)
     unknown = np.isnan(np.diag(fit.uncertainty.shared_model)[used]).any()
     if used.size and (unknown or not fit.uncertainty.determines(jacobian_row[:, None])[0]):
         family = fit.model.kernel.parameters(fit.span)

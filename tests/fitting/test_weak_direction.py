@@ -52,6 +52,30 @@ def test_the_combination_is_named(fit):
     assert any("changes nothing" in note.what for note in fit.notes)
 
 
+def test_a_climb_that_ended_on_a_ridge_is_noted(fit):
+    """Converged, as nothing is gained any more, but a reader must not take the numbers for a top."""
+    assert fit.converged
+    assert "flat here" in fit.solver.message
+    ridge = next(note for note in fit.notes if "ended on a ridge" in note.what)
+    assert ridge.severity == "info"
+    assert "fit.profile" in ridge.remedy
+
+
+def test_a_top_has_no_such_note():
+    fit = fit_model(model("gaussian"), simulated(1), threads=2)
+    assert not any("ridge" in note.what for note in fit.notes)
+
+
+def test_a_bound_of_another_parameter_is_named_as_that_ones(fit):
+    """The wide length is the narrow one times a factor: it goes with that, and is not itself longer than the bound."""
+    reason = "longer than 1440 µm"
+    at_bound = np.array([0.0, 1.0, 0.0, 0.0, 0.0])
+    stopped = dataclasses.replace(fit, at_bound=at_bound, free=at_bound == 0, bound_reasons=("", reason, "", "", ""))
+    notes = stopped.parameters["note"]
+    assert notes["narrow_length_um"] == f"at its bound: {reason}"
+    assert notes["wide_length_um"] == f"goes with narrow_length_um, at its bound: {reason}"
+
+
 def test_leak_and_kernel_have_the_errors_of_coefficients_by_distance(fit, by_band):
     """Three coefficients describe three distances as well as any kernel: the same J, the same model-based errors."""
     optimum, spread = by_band
