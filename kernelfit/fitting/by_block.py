@@ -15,6 +15,7 @@ N_BLOCKS = 100
 SHORTEST_BLOCK_S = 1.0
 SHORTEST_BLOCK_TAUS = 20.0
 FEWEST_BLOCKS = 10  # with 20 tau above a tenth of the recording there would soon be one block, and no variance
+SHORTENED = 0.95  # of a block's length, time and again
 MOST_NUMBERS = 20_000_000  # of the information by block: 160 MB
 
 
@@ -59,9 +60,16 @@ def block_length_s(duration_s: float, leak: float) -> float:
 
 
 def usual_blocks(problem: Problem, leak: float) -> TimeBlocks:
-    """Blocks of the usual length at a leak rate (1/s)."""
-    length_s = block_length_s(problem.grid.duration_s, leak)
-    return time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
+    """Blocks of the usual length at a leak rate (1/s), or shorter ones where windows would leave fewer than
+    `FEWEST_BLOCKS`: a window little longer than a block is one block, however much is left over."""
+    duration_s = problem.grid.duration_s
+    shortest = min(max(duration_s / N_BLOCKS, SHORTEST_BLOCK_S), duration_s)
+    length_s = min(block_length_s(duration_s, leak), duration_s)
+    blocks = time_blocks(problem.grid, length_s)
+    while blocks.n_blocks < FEWEST_BLOCKS and length_s > shortest:
+        length_s = max(shortest, SHORTENED * length_s)
+        blocks = time_blocks(problem.grid, length_s)
+    return blocks
 
 
 def chosen_blocks(problem: Problem, leak: float, curve: BlockCurve) -> TimeBlocks:

@@ -108,6 +108,16 @@ class Uncertainty:
         return np.inf if kind == "model" else float(self.n_blocks - 1)
 
     def _made(self, jackknife: FloatArray | None) -> FloatArray:
+        if jackknife is None and self.n_blocks < REFUSED_BELOW:
+            raise ArgumentError(
+                f"covariance='jackknife' cannot be had here: the recording makes {self.n_blocks} "
+                f"block{'s' * (self.n_blocks != 1)} of time, and {REFUSED_BELOW} are needed. Use 'model'."
+            )
+        if jackknife is None and self.weak_direction is not None:
+            raise ArgumentError(
+                "covariance='jackknife' cannot be had here: some parameters cannot be told apart (see fit.notes), and "
+                "what each block does to them is not known. Use 'robust'."
+            )
         if jackknife is None:
             raise ArgumentError(
                 "covariance='jackknife' cannot be had here: without one of the blocks of time some parameter would not "

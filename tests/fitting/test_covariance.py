@@ -15,12 +15,13 @@ from kernelfit.engine.evaluate import whole
 from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.engine.twin import dense_counts, dense_gradients, evaluate_plainly
 from kernelfit.errors import ArgumentError
-from kernelfit.fitting.by_block import block_length_s
+from kernelfit.fitting.by_block import FEWEST_BLOCKS, block_length_s, usual_blocks
 from kernelfit.fitting.covariance import covariances
 from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.null import first_estimate
 from kernelfit.fitting.problem import Estimate, make_problem
 from kernelfit.kernels.bands import Bands
+from kernelfit.recording.recording import Recording
 
 CASES = {
     "gaussian": (model("gaussian"), [0.1, np.log(120.0), np.log(LEAK)]),
@@ -234,6 +235,37 @@ def test_parameters_that_cannot_be_told_apart_are_named():
     assert spread.shared_model[0, 0] == pytest.approx(alone.shared_model[0, 0], rel=1e-12)
     assert spread.shared_robust[0, 0] == pytest.approx(alone.shared_robust[0, 0], rel=1e-12)
     assert np.isfinite(spread.own_model).all()
+
+
+@pytest.mark.parametrize(
+    ("n_windows", "window_s", "least"), [(5, 38.0, 10), (5, 37.0, 10), (7, 30.0, 10), (3, 50.0, 10)]
+)
+def test_windows_do_not_leave_fewer_blocks_than_a_variance_needs(n_windows, window_s, least):
+    """With a leak of 0.5/s blocks are a tenth of the sum, which windows little longer than that cannot be cut into."""
+    entire = simulated(1, duration_s=60.0 * n_windows)
+    trains = {unit: entire.spike_times(unit) for unit in entire.unit_ids}
+    windows = [(60.0 * k, 60.0 * k + window_s) for k in range(n_windows)]
+    windows[0] = (windows[0][0], windows[0][1] - 0.5)
+    recording = Recording.from_arrays(trains, entire.positions, windows)
+    problem = make_problem(model("flat", leak_rate=0.5), recording)
+    blocks = usual_blocks(problem, 0.5)
+    assert blocks.n_blocks >= least
+    assert blocks.n_bins.min() * BIN_S > 0.5 * problem.grid.duration_s / FEWEST_BLOCKS
+    assert blocks.n_bins.sum() == problem.data.n_bins
+
+
+def test_windows_as_short_as_a_block_stay_whole():
+    entire = simulated(1, duration_s=40.0)
+    trains = {unit: entire.spike_times(unit) for unit in entire.unit_ids}
+    recording = Recording.from_arrays(trains, entire.positions, [(8.0 * k, 8.0 * k + 1.5) for k in range(5)])
+    assert usual_blocks(make_problem(model("flat", leak_rate=0.5), recording), 0.5).n_blocks == 5
+
+
+def test_too_few_blocks_for_a_jackknife_are_counted(recording):
+    problem = make_problem(model("flat", leak_rate=LEAK), recording.select(stop_s=4.0), threads=1)
+    optimum = maximise(problem, Estimate(first_estimate(problem).own, np.array([0.05])))
+    with pytest.raises(ArgumentError, match="the recording makes 4 blocks of time, and 6 are needed"):
+        covariances(problem, optimum).shared("jackknife")
 
 
 @pytest.mark.parametrize(
