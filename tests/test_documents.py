@@ -78,6 +78,20 @@ def test_the_python_example_of_the_first_page_runs_as_it_stands(
     assert "amplitude" in capsys.readouterr().out
 
 
+def test_the_map_of_the_package_names_files_that_are_where_it_says() -> None:
+    (table,) = re.findall(r"## Map of the package\n\n(.*?)\n\n", GUIDE.read_text(encoding="utf-8"), flags=re.DOTALL)
+    place, seen = "", set()
+    for row in table.splitlines()[2:]:
+        first, rest = row.strip("| ").split(" | ", 1) if not row.startswith("| |") else ("", row)
+        if first:
+            (place, *_) = re.findall(r"`([\w/]+/)`", first) or [""]
+        seen.add(place)
+        for name in re.findall(r"`(\w+\.py)`", first + rest):
+            assert (ROOT / "kernelfit" / place / name).is_file(), f"the map speaks of {name} in kernelfit/{place}"
+    parts = {f"{folder.name}/" for folder in (ROOT / "kernelfit").iterdir() if (folder / "__init__.py").is_file()}
+    assert parts - {"comparison/", "network/"} <= seen  # one row for both, which hold nothing yet
+
+
 @pytest.mark.parametrize("document", sorted(ROOT.glob("*.md")), ids=lambda p: p.name)
 def test_what_a_document_points_to_exists(document: Path) -> None:
     for name in PATHS.findall(document.read_text(encoding="utf-8")):
@@ -103,6 +117,8 @@ def test_links_lead_somewhere(document: Path) -> None:
         "scripts/make_demo_recording",
         "scripts/benchmark",
         "scripts/calibrate",
+        "scripts/interval_study",
+        "scripts/smoothing_study",
     ],
 )
 def test_scripts_can_be_run(name: str) -> None:

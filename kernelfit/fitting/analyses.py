@@ -53,8 +53,9 @@ class Analysed:
         ratio : robust over model-based standard error, on the working scale
         spikes, seconds : of an ideal recording, one in which every bin is independent given the model, that would leave
             the estimate as uncertain: those counted, over the square of the ratio, never more than were counted
-        stretches : independent blocks of time that carry the estimate, 3 (sum d^2)^2 / sum d^4 of the blocks'
-            influences d: all blocks where these are normal, few where a few blocks pull much harder than the others
+        independent_stretches : blocks of time, fewer where neighbours go together
+        carrying_stretches : how many of them carry the estimate, (sum d^2)^2 / sum d^4 of the blocks' influences d: few
+            where a few blocks pull much harder than the others
         """
         from kernelfit.inference.worth import worth_table
 
