@@ -14,10 +14,10 @@ from dataclasses import replace
 import numpy as np
 from scipy.stats import chi2
 
-from kernelfit.engine.time_blocks import time_blocks
 from kernelfit.errors import Unavailable
 from kernelfit.fitting.arrow import Arrow, eliminate, solve_leniently
-from kernelfit.fitting.by_block import block_length_s
+from kernelfit.fitting.block_length import BlockCurve
+from kernelfit.fitting.by_block import chosen_blocks
 from kernelfit.fitting.maximise import Optimum
 from kernelfit.fitting.outcome import ScoreTest
 from kernelfit.fitting.problem import Estimate, Problem
@@ -37,14 +37,19 @@ def fewest_blocks(n_terms: int) -> int:
     return math.floor(float(chi2.isf(LEVEL, n_terms))) + 1
 
 
-def after_spike_test(problem: Problem, optimum: Optimum) -> ScoreTest | Unavailable:
-    """Score test of a lag basis common to all units at a fit without after-spike effects; with few blocks, why not."""
+def after_spike_test(problem: Problem, optimum: Optimum, curve: BlockCurve) -> ScoreTest | Unavailable:
+    """Score test of a lag basis common to all units at a fit without after-spike effects; with few blocks, why not.
+
+    Parameters
+    ----------
+    problem, optimum : the fit
+    curve : which blocks of time its standard errors rest on; those of the test are the same
+    """
     constants = AfterSpike().constants(problem.data.bin_width)[::EVERY]
     n_traces = constants.size
     here = replace(problem, trace_decay=np.exp(-problem.data.bin_width / constants))
     own = np.column_stack([optimum.estimate.own, np.zeros((problem.data.n_targets, n_traces))])
-    length_s = block_length_s(problem.grid.duration_s, problem.leak(optimum.estimate.shared))
-    blocks = time_blocks(problem.grid, min(length_s, problem.grid.duration_s))
+    blocks = chosen_blocks(problem, problem.leak(optimum.estimate.shared), curve)
     needed = fewest_blocks(n_traces)
     if blocks.n_blocks < needed:
         counted = f"{blocks.n_blocks} block{'s' * (blocks.n_blocks != 1)} of time"

@@ -2,8 +2,10 @@
 
 Blocks are clusters: scores may depend on each other within one and not between two. Where a recording has states that
 outlast a block, neighbouring blocks go together, the sum of their scores spreads more than the parts say, and standard
-errors grow with the length of the blocks. The length is taken where that stops: neighbouring blocks are joined as long
-as they are detectably correlated and enough are left.
+errors grow with the length of the blocks. The length is taken where that stops for good: one step beyond the longest at
+which neighbouring blocks are detectably correlated, as long as enough are left. Shorter lengths without a correlation
+are passed over, as slow states show only once a block has summed them up: blocks much shorter than a state hold so much
+other noise that the little they share with their neighbours is lost in it.
 
 Reference
 ---------
@@ -94,7 +96,7 @@ def neighbour_correlation(influence: FloatArray) -> FloatArray:
 
 
 def block_curve(influence: FloatArray, usual: int, duration_s: float) -> BlockCurve:
-    """The curve, and the length to use.
+    """The curve, and the length to use: twice the longest one at which neighbours go together, or the usual one.
 
     Parameters
     ----------

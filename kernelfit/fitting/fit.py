@@ -65,7 +65,7 @@ def fit_model(
         sizes = term_sizes(problem, optimum)
     except SingularOwnBlock as error:
         raise NotIdentifiedError(_undetermined_unit(problem, recording, error.place)) from error
-    added = after_spike_test(problem, optimum) if problem.trace_decay.size == 0 else None
+    added = after_spike_test(problem, optimum, spread.block_curve) if problem.trace_decay.size == 0 else None
     notes = fit_notes(problem, recording, optimum, spread, verdict) + smoothing_notes(
         chosen.smoothing, sizes, problem.kernel
     )

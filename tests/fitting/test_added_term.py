@@ -2,13 +2,16 @@
 
 from __future__ import annotations
 
+import dataclasses
+
 import numpy as np
 import pytest
 from scipy.stats import chi2
 from worlds import LEAK, model, simulated
 
 import kernelfit as kf
-from kernelfit.fitting.added_term import EVERY, LEVEL, LITTLE, _advice, fewest_blocks
+from kernelfit.fitting.added_term import EVERY, LEVEL, LITTLE, _advice, after_spike_test, fewest_blocks
+from kernelfit.fitting.maximise import maximise
 from kernelfit.fitting.outcome import ScoreTest
 
 pytestmark = pytest.mark.filterwarnings("ignore::kernelfit.KernelfitWarning")
@@ -61,6 +64,20 @@ def test_the_reason_is_kept_on_disk(tmp_path):
     fit.save(tmp_path / "fit.json")
     assert kf.load_fit(tmp_path / "fit.json").after_spike_test == fit.after_spike_test
     assert isinstance(fit.after_spike_test, kf.Unavailable)
+
+
+def test_blocks_of_the_test_are_those_of_the_standard_errors():
+    """Where a slow state joined the usual blocks, the test counts the joined ones."""
+    slow = simulated(3, duration_s=60.0, rate_course=lambda t: 0.6 * np.sin(2 * np.pi * t / 20.0))
+    fit = model(leak_rate=LEAK).fit(slow, threads=2)
+    problem, curve = fit.problem(), fit.uncertainty.block_curve
+    optimum = maximise(problem, fit.estimate)
+    usual = int(np.argmin(np.abs(curve.length_s - 1.0)))
+    assert curve.chosen > usual
+    again = after_spike_test(problem, optimum, curve)
+    by_usual = after_spike_test(problem, optimum, dataclasses.replace(curve, chosen=usual))
+    assert again.statistic == pytest.approx(fit.after_spike_test.statistic, rel=1e-6)
+    assert by_usual.statistic != pytest.approx(again.statistic, rel=1e-2)
 
 
 def test_little_is_said_of_little_and_not_of_the_uncertain():

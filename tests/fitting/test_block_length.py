@@ -41,6 +41,16 @@ def test_independent_blocks_keep_the_usual_length():
     np.testing.assert_allclose(usual[0].length_s, [0.25, 0.5, 1.0, 2.0, 4.0])
 
 
+def test_a_length_without_correlation_does_not_end_the_search():
+    """Blocks of the usual length, 4, alternate in sign and hide a state of 32: at twice that it is plain to see."""
+    place = np.arange(640)
+    hidden = np.where(place // 4 % 2 == 0, 1.0, -1.0) + 0.5 * np.where(place // 32 % 2 == 0, 1.0, -1.0)
+    curve = block_curve(hidden[:, None], 4, 160.0)
+    together = curve.correlation[:, 0] > curve.threshold
+    np.testing.assert_array_equal(together[2:4], [False, True])
+    assert curve.factor(4) >= 4
+
+
 def variance_of_sum(n, memory):
     """Of n steps of white noise plus a first-order autoregression, both of variance 1: the sum in closed form."""
     slow = (1 + memory) / (1 - memory) - 2 * memory * (1 - memory**n) / (n * (1 - memory) ** 2)
