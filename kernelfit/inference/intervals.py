@@ -20,9 +20,10 @@ class WaldIntervals:
     upper: FloatArray
 
     def within(self, limits: FloatArray) -> WaldIntervals:
-        """The same with ends moved to `limits` (K, 2), past which a parameter cannot be told; estimates stay inside."""
-        lower = np.minimum(np.maximum(self.lower, limits[:, 0]), self.estimate)
-        upper = np.maximum(np.minimum(self.upper, limits[:, 1]), self.estimate)
+        """The same with ends moved to `limits` (K, 2), past which nothing can be told, or to an estimate there."""
+        least, most = np.minimum(limits[:, 0], self.estimate), np.maximum(limits[:, 1], self.estimate)
+        lower = np.minimum(np.maximum(self.lower, least), most)
+        upper = np.minimum(np.maximum(self.upper, least), most)
         return replace(self, lower=lower, upper=upper)
 
 

@@ -4,6 +4,10 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+import numpy as np
+
+from kernelfit._typing import BoolArray
+
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
 
@@ -29,3 +33,16 @@ def search_root(fit: CouplingFit, level: float) -> float:
     if fit.verdict.found or not searched_over(fit):
         return 0.0
     return fit.verdict.critical_at(level)
+
+
+def meaningless(fit: CouplingFit) -> tuple[str, ...]:
+    """Names of parameters that mean nothing without coupling: shapes, and the leak unless pairs on one site tell it."""
+    shapes = [p.name for p in fit.model.kernel.parameters(fit.span) if p.shape]
+    return (*shapes, *["leak_rate"] * (not fit.verdict.same_site_found))
+
+
+def told_by_sites(fit: CouplingFit, names: list[str]) -> BoolArray:
+    """(K,) parameters that pairs on one site tell, whether or not there is coupling across distance."""
+    known = fit.verdict.same_site_found
+    own = known or fit.model.leak_rate is not None  # with a leak that was stated nothing was searched over
+    return np.array([(name == "same_site" and own) or (name == "leak_rate" and known) for name in names], dtype=bool)

@@ -12,9 +12,10 @@ from scipy.spatial.distance import cdist
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.fitting.covariance import REFUSED_BELOW
 from kernelfit.inference.bands import standard_errors, sup_t_critical
-from kernelfit.inference.edges import cut_notes, loose, natural_limits, radius_notes, run_off
+from kernelfit.inference.edges import radius_notes
 from kernelfit.inference.intervals import WaldIntervals, critical_value, wald_intervals
-from kernelfit.inference.not_found import search_root, widened_words
+from kernelfit.inference.not_found import search_root, told_by_sites
+from kernelfit.inference.stated import NOT_IDENTIFIED, bounded_table, loose_reason, state, state_band
 from kernelfit.kernels.base import SAME_DISTANCE_UM
 
 if TYPE_CHECKING:
@@ -23,7 +24,6 @@ if TYPE_CHECKING:
 
 RADIUS_LEVEL = 0.95  # of the interval of a radius that a fit holds
 FIXED = "fixed"
-NOT_IDENTIFIED = "not identified"
 
 
 def _natural(fit: CouplingFit) -> tuple[FloatArray, FloatArray, list[str], list[str], BoolArray]:
@@ -56,16 +56,9 @@ def _intervals(fit: CouplingFit, kind: CovarianceKind, level: float) -> WaldInte
     values, jacobian, names, _, on_log = _natural(fit)
     critical = np.full(values.size, critical_value(level, fit.uncertainty.degrees_of_freedom(kind)))
     if not fit.verdict.found:  # chosen for its length and leak: the wider interval says so
-        critical[~_told_by_sites(fit, names)] = max(critical[0], search_root(fit, level)) if critical.size else np.nan
+        critical[~told_by_sites(fit, names)] = max(critical[0], search_root(fit, level)) if critical.size else np.nan
     known = np.where(fit.uncertainty.determines(jacobian.T)[:, None], jacobian, 0.0)
     return wald_intervals(values, known, fit.uncertainty.shared(kind), on_log, critical)
-
-
-def _told_by_sites(fit: CouplingFit, names: list[str]) -> BoolArray:
-    """(K,) parameters that pairs on one site tell, whether or not there is coupling across distance."""
-    known = fit.verdict.same_site_found
-    own = known or fit.model.leak_rate is not None  # with a leak that was stated nothing was searched over
-    return np.array([(name == "same_site" and own) or (name == "leak_rate" and known) for name in names], dtype=bool)
 
 
 def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.DataFrame:
@@ -78,21 +71,8 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
     """
     _, jacobian, names, units, _ = _natural(fit)
     whole = _intervals(fit, kind, level)
-    wald = whole.within(natural_limits(fit))
-    cuts = cut_notes(fit, whole, wald)
-    notes = [_note(fit, kind, k, jacobian[k], names) or cuts[k] for k in range(len(names))]
-    table = pd.DataFrame(
-        {
-            "estimate": wald.estimate.copy(),
-            "std_error": wald.std_error.copy(),
-            "lower": wald.lower.copy(),
-            "upper": wald.upper.copy(),
-            "unit": units,
-            "note": notes,
-        },
-        index=pd.Index(names, name="parameter", dtype=object),
-    )
-    numbers = ["estimate", "std_error", "lower", "upper"]
+    notes = [_note(fit, kind, k, jacobian[k], names) for k in range(len(names))]
+    table = bounded_table(fit, names, whole, units, notes)
     family = fit.model.kernel.parameters(fit.span)
     for k, parameter in enumerate(family):
         if parameter.discrete and fit.radius_interval is not None:
@@ -101,43 +81,18 @@ def parameter_table(fit: CouplingFit, kind: CovarianceKind, level: float) -> pd.
             if level != RADIUS_LEVEL:
                 profiled += f" at {100 * RADIUS_LEVEL:g} % whatever the level; fit.profile has others"
             table.loc[parameter.name, "note"] = "; ".join([profiled, *radius_notes(fit, k, fit.radius_interval)])
-    table.loc[(jacobian[:, loose(fit)] != 0).any(axis=1), numbers] = np.nan
-    open_end = run_off(fit) & (np.count_nonzero(jacobian, axis=1) == 1)
-    table.loc[open_end & (fit.at_bound < 0), "lower"] = -np.inf
-    table.loc[open_end & (fit.at_bound > 0), "upper"] = np.inf
-    if not fit.verdict.found:
-        _without_coupling(fit, table)
+    state(fit, table, jacobian)
     if fit.model.leak_rate is not None:
         table.loc["leak_rate", "estimate"] = fit.model.leak_rate
         table.loc["leak_rate", ["unit", "note"]] = ["1/s", FIXED]
     return table
 
 
-def _without_coupling(fit: CouplingFit, table: pd.DataFrame) -> None:
-    """State what a table of estimates can say where no coupling was found."""
-    family = fit.model.kernel.parameters(fit.span)
-    fits_leak = fit.model.leak_rate is None
-    shape = np.array([*(p.shape for p in family), *[False] * fit.has_same_site, *[True] * fits_leak])
-    told = _told_by_sites(fit, list(table.index))
-    shape &= ~told
-    nothing = "no coupling across distance" if fit.has_same_site else "no coupling"
-    table.loc[shape, ["estimate", "std_error", "lower", "upper"]] = np.nan
-    table.loc[shape, "note"] = f"{NOT_IDENTIFIED}: {nothing} to describe"
-    widened = ~shape & ~told & np.isfinite(table["std_error"].to_numpy(dtype=np.float64))
-    table.loc[widened, "note"] = f"{nothing} found{'; interval ' * bool(widened_words(fit))}{widened_words(fit)}"
-    tested = widened & (table.index != "same_site")  # that test leaves pairs on one site out
-    outside = tested & ((table["lower"] > 0) | (table["upper"] < 0)).to_numpy()
-    table.loc[outside, "note"] += " and out to 0, which the test of any coupling does not exclude"
-    table.loc[tested, "lower"] = table.loc[tested, "lower"].clip(upper=0.0)
-    table.loc[tested, "upper"] = table.loc[tested, "upper"].clip(lower=0.0)
-
-
 def _note(fit: CouplingFit, kind: CovarianceKind, k: int, jacobian_row: FloatArray, names: list[str]) -> str:
     """Why parameter k has no standard error, where it has none."""
     used = np.flatnonzero(jacobian_row)
-    without = [q for q in used if run_off(fit)[q]] or [q for q in used if loose(fit)[q]]
-    if without:
-        return f"{NOT_IDENTIFIED}: {fit.bound_reasons[without[0]]}"
+    if loose_reason(fit, jacobian_row):
+        return loose_reason(fit, jacobian_row)
     stopped = [q for q in used if fit.at_bound[q] != 0]
     if stopped:
         own = [f"at its bound: {fit.bound_reasons[k]}"] if k in stopped else []
@@ -233,11 +188,8 @@ def _band(
         spread = float(critical * standard_errors(slope, covariance)[0])
         between = (d_um > fit.radius_interval[0]) & (d_um < fit.radius_interval[1])
         lower[between], upper[between] = min(within - spread, 0.0), max(within + spread, 0.0)
-    if not fit.verdict.found:  # the test of any coupling does not exclude that there is none
-        lower, upper = np.minimum(lower, 0.0), np.maximum(upper, 0.0)
     lower[~fit.uncertainty.determines(gradient)] = upper[~fit.uncertainty.determines(gradient)] = np.nan
-    unknown = (gradient[loose(fit)[:n]] != 0).any(axis=0)
-    estimate[unknown] = lower[unknown] = upper[unknown] = np.nan
+    state_band(fit, gradient, estimate, (lower, upper))
     return estimate, lower, upper
 
 

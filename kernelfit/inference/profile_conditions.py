@@ -14,7 +14,7 @@ from kernelfit.fitting.outcome import Note
 from kernelfit.fitting.problem import Problem
 from kernelfit.fitting.progress import ProgressCallback
 from kernelfit.inference.intervals import critical_value
-from kernelfit.inference.not_found import search_root, widened_words
+from kernelfit.inference.not_found import meaningless, search_root, told_by_sites, widened_words
 from kernelfit.inference.profile_walk import Walked
 from kernelfit.inference.scales import shared_names
 
@@ -81,14 +81,10 @@ class Cut:
 def model_cut(fit: CouplingFit, name: str, level: float) -> Cut:
     """The cut of one parameter: a normal quantile; for an amplitude, widened where no coupling was found."""
     root = critical_value(level, np.inf)
-    searched = not fit.verdict.found and name not in shape_names(fit)
+    told = bool(told_by_sites(fit, [name])[0])
+    searched = not fit.verdict.found and name not in meaningless(fit) and not told
     widened = search_root(fit, level) if searched else 0.0
     return Cut(max(root, widened), widened, searched and name != SAME_SITE_NAME)  # the test leaves same sites out
-
-
-def shape_names(fit: CouplingFit) -> set[str]:
-    """Names of parameters that mean nothing without coupling."""
-    return {"leak_rate", *(p.name for p in fit.model.kernel.parameters(fit.span) if p.shape)}
 
 
 def profile_notes(fit: CouplingFit, problem: Problem, name: str, walked: Walked | None) -> tuple[Note, ...]:
@@ -136,7 +132,7 @@ def profile_notes(fit: CouplingFit, problem: Problem, name: str, walked: Walked 
             )
         )
     if not fit.verdict.found:
-        shape = name in shape_names(fit)
+        shape = name in meaningless(fit)
         widened = f"the cut is {widened_words(fit)}, and " if widened_words(fit) else ""
         what = (
             f"No coupling was found, so {name} means nothing: its profile only shows what the recording does not say."

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from kernelfit.inference.parameters import NOT_IDENTIFIED
+from kernelfit.inference.stated import NOT_IDENTIFIED
 from kernelfit.recording.findings import number
 
 if TYPE_CHECKING:

@@ -9,7 +9,7 @@ import pandas as pd
 
 from kernelfit._typing import FloatArray
 from kernelfit.fitting.block_length import neighbour_correlation
-from kernelfit.inference.profile_conditions import shape_names
+from kernelfit.inference.not_found import meaningless
 from kernelfit.inference.scales import shared_names
 
 if TYPE_CHECKING:
@@ -41,7 +41,7 @@ def worth_table(fit: CouplingFit) -> pd.DataFrame:
         index=pd.Index(names, name="parameter", dtype=object),
     )
     if not fit.verdict.found:
-        table.loc[[name for name in names if name in shape_names(fit)]] = np.nan
+        table.loc[[name for name in names if name in meaningless(fit)]] = np.nan
     return table
 
 

@@ -19,6 +19,7 @@ from kernelfit.inference.bands import standard_errors
 from kernelfit.inference.bootstrap.ends import RANK_SLACK
 from kernelfit.inference.not_found import search_root
 from kernelfit.inference.parameters import distances_with_pairs
+from kernelfit.inference.stated import state_band
 from kernelfit.kernels.base import SAME_DISTANCE_UM
 
 if TYPE_CHECKING:
@@ -50,6 +51,8 @@ def replicated_band(
         spread = float(_half_widths(bootstrap, closest, level, simultaneous, method)[0])
         between = inside & (distances_um > fit.radius_interval[0]) & (distances_um < fit.radius_interval[1])
         lower[between], upper[between] = min(within - spread, 0.0), max(within + spread, 0.0)
+    gradient = fit.model.kernel.gradient(fit.shared[: fit.n_kernel], distances_um, fit.span)
+    state_band(fit, gradient, estimate, (lower, upper))
     return pd.DataFrame({"distance_um": distances_um, "estimate": estimate, "lower": lower, "upper": upper})
 
 
