@@ -83,3 +83,23 @@ def test_an_amplitude_that_nothing_holds_has_no_number_and_an_open_end(fit):
     assert row["note"].startswith("not identified: no spike follows another")
     band = boot.kernel_band(fit.distinct_um[:2])
     assert band[["estimate", "lower", "upper"]].isna().all(axis=None)
+
+
+# --- smoothing that the data chose ----------------------------------------------------------------------------
+
+
+def test_one_step_says_that_it_holds_the_smoothing_and_is_the_sandwich_without_what_that_adds():
+    recording = simulated(3, n_side=4, duration_s=30.0)
+    chosen = model(kernels.Spline(n_basis=6, smoothing="likelihood"), leak_rate=LEAK).fit(recording, threads=2)
+    boot = chosen.bootstrap("one-step", n_replicates=4000, seed=1)
+    assert "at the smoothing chosen (what not knowing it adds to the intervals of the fit is not" in boot.sentence
+    influence, n = chosen.uncertainty.block_influence, chosen.n_blocks
+    sandwich = np.diag(n / (n - 1.0) * influence.T @ influence)
+    np.testing.assert_allclose(np.var(boot.replicates, axis=0), sandwich, rtol=0.1)  # 2 % by chance
+    robust = np.diag(chosen.uncertainty.shared_robust)
+    assert (robust >= sandwich * (1.0 - 1e-9)).all()
+    assert (robust > 1.01 * sandwich).any()
+
+
+def test_one_step_says_nothing_of_a_smoothing_that_was_stated(fit):
+    assert "smoothing" not in boot_of(fit).sentence

@@ -30,7 +30,9 @@ class OneStep(BootstrapKind):
 
     Weights of a law have mean 1: W is the weight less 1, over its standard deviation. The covariance of the replicates
     is that of the robust covariance, G/(G - 1) included where the weights sum to G (exponential, multinomial), without
-    it where they are independent (rademacher, mammen). Parameters at a bound stay there.
+    it where they are independent (rademacher, mammen). Parameters at a bound stay there. Where the data chose the
+    smoothing of the kernel, that holds for the robust covariance at the smoothing chosen: what not knowing it
+    adds to the intervals of the fit is not in the influence of blocks, so it is not in these replicates.
 
     Studentised intervals are best with multinomial and Mammen weights, whose third moment is 1 as that of resampling;
     exponential ones carry twice the skewness of the scores, random signs none.
@@ -56,7 +58,7 @@ class OneStep(BootstrapKind):
 
     def words(self, fit: CouplingFit) -> str:
         blocks = f"{fit.n_blocks} blocks of time of {number(fit.block_length_s)} s"
-        return f"one step with {self.law.name} weights on {blocks}"
+        return f"one step with {self.law.name} weights on {blocks}{_held_smoothing(fit)}"
 
     def replicator(self, fit: CouplingFit, recording: Recording | None) -> OneStepReplicator:
         require_blocks(fit)
@@ -68,6 +70,13 @@ class OneStep(BootstrapKind):
                 "parameters apart (see fit.notes). Use kind='block-weights' or 'parametric'."
             )
         return OneStepReplicator(fit.shared, np.ascontiguousarray(influence[:, moves]), moves, fit.at_bound, self.law)
+
+
+def _held_smoothing(fit: CouplingFit) -> str:
+    """Say so where the intervals of the fit allow for more than the replicates do."""
+    if fit.smoothing is None or fit.smoothing.of("kernel") is None:
+        return ""
+    return " at the smoothing chosen (what not knowing it adds to the intervals of the fit is not in the replicates)"
 
 
 @dataclass(frozen=True, eq=False)
