@@ -11,7 +11,7 @@ import math
 import os
 import tempfile
 from collections.abc import Mapping
-from dataclasses import asdict
+from dataclasses import asdict, fields
 from pathlib import Path
 from typing import Any, cast
 
@@ -227,7 +227,7 @@ def _restore(c: Mapping[str, Any]) -> CouplingFit:
         saturated_log_likelihood=float(ll["saturated"]),
         uncoupled_log_likelihood=float(ll["without_coupling"]),
         spectral_radius=float(c["spectral_radius"]),
-        verdict=CouplingVerdict(**c["verdict"] | {"same_site_found": bool(c["verdict"]["same_site_found"])}),
+        verdict=CouplingVerdict(**{f.name: c["verdict"][f.name] for f in fields(CouplingVerdict)}),
         notes=tuple(Note(**n) for n in c["notes"]),
         solver=SolverReport(
             converged=bool(s["converged"]),
