@@ -89,12 +89,13 @@ class _Work:
         return [name for name, free in zip(shared_names(self.fit), self.fit.free, strict=True) if free]
 
     def changes(self, moves: FloatArray) -> FloatArray:
-        """(n, free) natural changes of (n, free) moves on the working scale."""
+        """(n, free) natural changes of (n, free) moves on the working scale; NaN for what is not determined."""
+        told = np.isfinite(np.diag(self.fit.uncertainty.shared("model")))[self.fit.free]
         there = np.tile(self.fit.shared, (len(moves), 1))
-        there[:, self.fit.free] += moves
-        return np.asarray(
-            (natural_values(self.fit, there) - natural_values(self.fit, self.fit.shared))[:, self.fit.free]
-        )
+        there[:, self.fit.free] += np.where(told, moves, 0.0)  # along a direction without information a move is noise
+        changes = natural_values(self.fit, there) - natural_values(self.fit, self.fit.shared)
+        known = np.isfinite(self.fit.std_errors["model"].to_numpy(dtype=np.float64))
+        return np.asarray(np.where(known, changes, np.nan)[:, self.fit.free])
 
     def columns(self, moves: FloatArray) -> dict[str, FloatArray]:
         """Change of each parameter, and the move on the working scale in robust standard errors."""
@@ -115,7 +116,8 @@ def _first_order(work: _Work, by_block: BlockSums) -> FloatArray:
 
 def _without_blocks(work: _Work, by_block: BlockSums) -> FloatArray:
     """(G, free) move on leaving each block out, from the information that is left where that is known and enough."""
-    left = influence_left_out(by_block, work.information, work.fit.free) if by_block.has_information else None
+    enough = by_block.has_information and work.fit.uncertainty.weak_direction is None
+    left = influence_left_out(by_block, work.information, work.fit.free) if enough else None
     return _first_order(work, by_block) if left is None else -left.shared
 
 
