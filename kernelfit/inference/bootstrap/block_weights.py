@@ -28,6 +28,7 @@ from kernelfit.inference.bootstrap.refitting import (
     inverse_information,
 )
 from kernelfit.inference.bootstrap.weight_laws import WeightLaw, weight_law_from
+from kernelfit.recording.findings import number
 
 if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
@@ -61,7 +62,8 @@ class BlockWeights(BootstrapKind):
         return {"kind": self.name, "law": self.law.name}
 
     def words(self, fit: CouplingFit) -> str:
-        return f"refits with {self.law.name} weights on {fit.n_blocks} blocks of time of {fit.block_length_s:.3g} s"
+        blocks = f"{fit.n_blocks} blocks of time of {number(fit.block_length_s)} s"
+        return f"refits with {self.law.name} weights on {blocks}"
 
     def replicator(self, fit: CouplingFit, recording: Recording | None) -> WeightedReplicator:
         require_blocks(fit)
