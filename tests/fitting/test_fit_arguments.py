@@ -68,7 +68,7 @@ CALLS = {
 }
 
 
-@pytest.mark.parametrize("value", NO_NUMBERS, ids=repr)
+@pytest.mark.parametrize("value", NO_NUMBERS, ids=lambda v: type(v).__name__)
 @pytest.mark.parametrize("call", CALLS)
 def test_what_cannot_be_meant_names_the_argument(fit, call, value):
     argument = call.split()[1]
@@ -100,7 +100,7 @@ def test_true_or_false(fit, bootstrap, value):
         fit.after_spike_band("u01", [0.01], simultaneous=value)
 
 
-@pytest.mark.parametrize("value", [None, *NO_NUMBERS], ids=repr)
+@pytest.mark.parametrize("value", [None, *NO_NUMBERS], ids=lambda v: type(v).__name__)
 def test_calls_of_a_bootstrap(bootstrap, value):
     with pytest.raises(ArgumentError, match=r"^distances_um"):
         bootstrap.kernel_band(value)
@@ -115,7 +115,7 @@ def test_calls_of_a_bootstrap(bootstrap, value):
             call(value)
 
 
-@pytest.mark.parametrize("value", [*NO_NUMBERS, pd.Series([1, 2])], ids=repr)
+@pytest.mark.parametrize("value", [*NO_NUMBERS, pd.Series([1, 2])], ids=lambda v: type(v).__name__)
 def test_calls_of_a_goodness(goodness, value):
     for call in (goodness.z, goodness.ks_curve):
         with pytest.raises(RecordingError, match=r"^unit.* is not in this fit"):
