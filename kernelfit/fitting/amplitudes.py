@@ -14,8 +14,19 @@ from kernelfit.fitting.arrow import Arrow, eliminate, solve_symmetric
 from kernelfit.fitting.problem import FASTEST_LEAK_BINS, Problem
 
 GONE = 20.0  # exp(-20) of a rate is no rate: no recording holds the spikes to tell one from the other
-FAR = GONE * float(np.exp(FASTEST_LEAK_BINS))  # even of the fastest leak, a jump beyond -FAR leaves GONE after a bin
 STRONG = 5.0  # suppression to under 1 %: strong enough to ask whether anything holds it
+
+
+def far_off(problem: Problem) -> float:
+    """A jump beyond minus this leaves `GONE` after a bin, whatever the leak: the fastest one fitted, or the stated."""
+    stated = 0.0 if problem.model.leak_rate is None else problem.model.leak_rate * problem.data.bin_width
+    return GONE * float(np.exp(max(FASTEST_LEAK_BINS, stated)))
+
+
+def strong_enough(problem: Problem) -> float:
+    """A jump beyond minus this leaves `STRONG` after a bin at a stated leak, and at once where the leak is fitted."""
+    stated = 0.0 if problem.model.leak_rate is None else problem.model.leak_rate * problem.data.bin_width
+    return STRONG * float(np.exp(stated))
 
 
 def linear_mask(problem: Problem) -> BoolArray:
@@ -42,17 +53,17 @@ def suppressing(problem: Problem, shared: FloatArray, driven_um: FloatArray, thr
     threshold : above 0, on the scale of J
     """
     linear, n = linear_mask(problem), problem.n_kernel
-    strong = np.zeros(problem.n_shared, dtype=bool)
+    found = np.zeros(problem.n_shared, dtype=bool)
     if n and driven_um.size:
         value = problem.kernel.value(shared[:n], driven_um, problem.span)
-        far = value < -threshold
-        if far.any():
-            slope = problem.kernel.gradient(shared[:n], driven_um[far], problem.span)
-            share = value[far] / max(int(linear[:n].sum()), 1)  # of several that add up, one at least reaches its share
-            strong[:n] = linear[:n] & (shared[:n, None] * slope <= share).any(axis=1)
+        beyond = value < -threshold
+        if beyond.any():
+            slope = problem.kernel.gradient(shared[:n], driven_um[beyond], problem.span)
+            share = value[beyond] / max(int(linear[:n].sum()), 1)  # of several, one at least reaches it
+            found[:n] = linear[:n] & (shared[:n, None] * slope <= share).any(axis=1)
     if problem.has_same_site:
-        strong[n] = shared[n] < -threshold
-    return strong
+        found[n] = shared[n] < -threshold
+    return found
 
 
 def tied(problem: Problem, information: Arrow, run_off: BoolArray, free: BoolArray) -> BoolArray:
@@ -73,7 +84,7 @@ def tied(problem: Problem, information: Arrow, run_off: BoolArray, free: BoolArr
     try:
         schur = eliminate(information).schur
         inverse = solve_symmetric(schur[np.ix_(free, free)], np.eye(int(free.sum())))
-        moved = np.abs(inverse @ schur[np.ix_(free, run_off)]) * 0.5 * FAR
+        moved = np.abs(inverse @ schur[np.ix_(free, run_off)]) * 0.5 * far_off(problem)
         result[free] = (moved > np.sqrt(np.diag(inverse))[:, None]).any(axis=1)
     except np.linalg.LinAlgError:  # without information there is no standard error to be misled by
         result[free] = linear[free]

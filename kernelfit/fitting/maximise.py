@@ -18,7 +18,7 @@ import scipy.linalg
 
 from kernelfit._typing import BoolArray, FloatArray
 from kernelfit.engine.evaluate import Evaluation, TimeBlocks
-from kernelfit.fitting.amplitudes import FAR, suppressing, tied
+from kernelfit.fitting.amplitudes import far_off, suppressing, tied
 from kernelfit.fitting.arrow import Arrow, eliminate
 from kernelfit.fitting.by_block import BlockSums, sums_by_block
 from kernelfit.fitting.problem import Estimate, Problem
@@ -273,9 +273,9 @@ def _run_off(problem: Problem, local: Local, before: BoolArray, driven_um: Float
     x, g = local.estimate.shared, local.score_shared
     if x.size == 0:
         return before
-    far = suppressing(problem, x, driven_um, FAR)
+    far = suppressing(problem, x, driven_um, far_off(problem))
     if before.any():
-        far |= before & suppressing(problem, x, driven_um, 0.5 * FAR)
+        far |= before & suppressing(problem, x, driven_um, 0.5 * far_off(problem))
     return np.asarray(far & (g * x > -RIDGE_GAIN), dtype=bool)
 
 

@@ -7,7 +7,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from kernelfit._typing import BoolArray, FloatArray
-from kernelfit.fitting.amplitudes import FAR, STRONG, strongest_suppression, suppressing
+from kernelfit.fitting.amplitudes import far_off, strong_enough, strongest_suppression, suppressing
 from kernelfit.fitting.maximise import (
     LOOSE,
     RIDGE_GAIN,
@@ -137,11 +137,11 @@ def held_by_nothing(problem: Problem, top: Optimum, held: BoolArray | None = Non
 
     Returns
     -------
-    Optimum : `top` itself where something holds its amplitudes; else they stand at a suppression of `FAR` and are
+    Optimum : `top` itself where something holds its amplitudes; else they stand at a suppression of `far_off` and are
         marked in `at_bound`, and the rest is at its maximum given them
     """
     driven_um = problem.driven_um
-    strong = suppressing(problem, top.estimate.shared, driven_um, STRONG)
+    strong = suppressing(problem, top.estimate.shared, driven_um, strong_enough(problem))
     strong = strong if held is None else strong & ~held
     if not strong.any() or not np.isfinite(top.local.objective):
         return top
@@ -149,9 +149,9 @@ def held_by_nothing(problem: Problem, top: Optimum, held: BoolArray | None = Non
     n = problem.n_kernel
     if strong[:n].any():
         worst, _ = strongest_suppression(problem, shared, driven_um)
-        shared[:n][strong[:n]] *= FAR / -worst
+        shared[:n][strong[:n]] *= far_off(problem) / -worst
     if strong[n:].any():
-        shared[n] = -FAR
+        shared[n] = -far_off(problem)
     fixed = strong if held is None else held | strong
     there = maximise(problem, Estimate(top.estimate.own, shared), held=fixed, tolerance=TIGHT)
     if not there.converged or there.local.objective < top.local.objective - RIDGE_GAIN:

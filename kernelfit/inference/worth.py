@@ -26,7 +26,8 @@ def worth_table(fit: CouplingFit) -> pd.DataFrame:
 
     NaN for lengths, exponents and the leak where no coupling was found: they mean nothing.
     """
-    ratio = np.sqrt(np.diag(fit.uncertainty.shared("robust")) / np.diag(fit.uncertainty.shared("model")))
+    with np.errstate(invalid="ignore", divide="ignore"):  # no variance, no ratio
+        ratio = np.sqrt(np.diag(fit.uncertainty.shared("robust")) / np.diag(fit.uncertainty.shared("model")))
     share = 1.0 / np.maximum(ratio, 1.0) ** 2
     influence = fit.uncertainty.block_influence
     names = shared_names(fit)

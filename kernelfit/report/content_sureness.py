@@ -341,7 +341,7 @@ def _flat_beyond(curve: BlockCurve) -> bool | None:
 def stretches_sentence(fit: CouplingFit) -> str:
     """What the recording is worth for the headline parameter, beside what was counted."""
     worth = fit.worth
-    names = [n for n in worth.index if np.isfinite(worth.loc[n, "independent_stretches"])]
+    names = list(worth.index[np.isfinite(worth.to_numpy(dtype=np.float64)).all(axis=1)])
     if not names:
         return ""
     name = next((n for n in names if n == "length_um"), names[0])

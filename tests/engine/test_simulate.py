@@ -303,7 +303,9 @@ def test_every_choice_is_refused_by_name(name, value):
         simulate_recording(**{**SIMULATION, **MAY_BE_NONE, name: value})
 
 
-@pytest.mark.parametrize("gives", ["x", None, [1.0, 2.0], np.zeros((2, 2)), [np.nan] * 12, {}], ids=lambda v: type(v).__name__)
+@pytest.mark.parametrize(
+    "gives", ["x", None, [1.0, 2.0], np.zeros((2, 2)), [np.nan] * 12, {}], ids=lambda v: type(v).__name__
+)
 def test_functions_that_give_no_numbers(gives):
     """4 units have 12 coupled pairs, and a second 1000 bins."""
     with pytest.raises(ArgumentError, match=r"^kernel( |=|\(distances_um\)).*Give a function of distances"):

@@ -7,7 +7,7 @@ import pytest
 from worlds import NOTHING, array, model, simulated
 
 import kernelfit as kf
-from kernelfit.fitting.amplitudes import FAR, GONE, STRONG, linear_mask, suppressing
+from kernelfit.fitting.amplitudes import GONE, STRONG, far_off, linear_mask, suppressing
 from kernelfit.fitting.maximise import MAX_ITERATIONS, RIDGE_GAIN, maximise
 from kernelfit.fitting.null import fit_null
 from kernelfit.fitting.problem import Estimate, make_problem
@@ -73,7 +73,7 @@ def test_the_reason_is_true(turns):
     problem = make_problem(model("flat"), turns, threads=1)
     top = search(problem, fit_null(problem)).best
     amplitude, log_leak = top.estimate.shared
-    assert amplitude <= -0.5 * FAR
+    assert amplitude <= -0.5 * far_off(problem)
     lasts = np.log(-amplitude / GONE) / np.exp(log_leak)  # s until the suppression has fallen to e^-20
     spikes = np.sort(np.concatenate(turns.trains))
     assert np.diff(spikes).min() > lasts > 0.5 * PAUSE_S
@@ -146,10 +146,19 @@ def test_which_amplitudes_suppress(turns, name):
 
 def test_only_the_coefficients_of_the_silent_distances_suppress(turns):
     problem = make_problem(model(kf.kernels.Spline(n_basis=6), leak_rate=20.0), turns, threads=1)
-    shared = np.array([-2.0 * FAR, 0.1, 0.1, 0.0, 0.0, 0.0])
+    shared = np.array([-2.0 * far_off(problem), 0.1, 0.1, 0.0, 0.0, 0.0])
     np.testing.assert_array_equal(
         suppressing(problem, shared, problem.driven_um, STRONG), [True, False, False, False, False, False]
     )
+
+
+def test_a_stated_leak_that_passes_in_a_bin_asks_for_larger_jumps(turns):
+    """At alpha D = 10 a jump of -20 e^10 leaves -20 after a bin: no less than that is off."""
+    fast = make_problem(model("flat", leak_rate=10.0 / 0.005), turns, threads=1)
+    assert fast.data.bin_width == 0.005
+    assert far_off(fast) == pytest.approx(20.0 * np.exp(10.0))
+    slow = make_problem(model("flat", leak_rate=20.0), turns, threads=1)
+    assert far_off(slow) == far_off(make_problem(model("flat"), turns, threads=1)) == pytest.approx(20.0 * np.exp(3.0))
 
 
 # --- many tiny recordings ------------------------------------------------------------------------------------
@@ -166,7 +175,7 @@ def test_tiny_recordings_end_at_a_top(name):
         assert fit.converged, fit.solver.message
         assert fit.solver.n_iterations < MAX_ITERATIONS
         suppression = -fit.kernel(fit.distinct_um).min()
-        if suppression >= 0.5 * FAR:
+        if suppression >= 0.5 * far_off(fit.problem(threads=1)):
             amplitudes = fit.parameters[fit.parameters["unit"] == "per spike"]
             assert amplitudes["estimate"].isna().any()
 
