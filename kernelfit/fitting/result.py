@@ -41,8 +41,6 @@ if TYPE_CHECKING:
     from kernelfit.diagnostics.goodness import Goodness
 
 SAME_LIKELIHOOD = 1e-9  # relative: sums in another order differ by less, another recording by more
-SAME_SITE_NAME = "same_site"
-LEAK_NAME = "leak_rate"
 
 
 @dataclass(frozen=True, eq=False)

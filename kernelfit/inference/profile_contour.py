@@ -28,8 +28,6 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
     from kernelfit.recording.recording import Recording
 
-N_GRID = 11  # points along each side
-
 
 @dataclass(frozen=True, eq=False)
 class ProfileContour:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import os
 from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING, TypeVar
+from typing import TYPE_CHECKING, Protocol, TypeVar
 
 import pandas as pd
 from matplotlib.figure import Figure
@@ -42,6 +42,16 @@ if TYPE_CHECKING:
     from kernelfit.fitting.result import CouplingFit
 
 REPORT = "report.html"
+
+
+class FigureData(Protocol):
+    """What is drawn, with the numbers behind it."""
+
+    def numbers(self) -> pd.DataFrame:
+        """The table behind the figure."""
+        ...
+
+
 D = TypeVar("D")
 
 
@@ -153,8 +163,11 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
         files = (f"figures/{name}.svg", f"figures/{name}.png", *((numbers,) if numbers else ()))
         drawn[name] = picture(figure, name, alt=alt, caption=caption, wide=wide, files=files)
 
-    def numbers_of(name: str, table: pd.DataFrame, what: str) -> str:
-        table.to_csv(results.file(name, what), index=False, encoding="utf-8", lineterminator="\n")
+    def numbers_of(data: FigureData | Unavailable, name: str, what: str) -> str:
+        """Write the table behind a figure; its name, "" where there is no figure."""
+        if isinstance(data, Unavailable):
+            return ""
+        data.numbers().to_csv(results.file(name, what), index=False, encoding="utf-8", lineterminator="\n")
         return name
 
     figures, texts = content.figures, content.captions
@@ -175,9 +188,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
         "time course of one spike's effect",
         texts.course,
         alt=f"{_title(course)}. Curves that fall from their value at the spike towards zero.",
-        numbers=""
-        if isinstance(course, Unavailable)
-        else numbers_of("figures/time-course.csv", course.numbers(), "numbers of the time course"),
+        numbers=numbers_of(course, "figures/time-course.csv", "numbers of the time course"),
     )
     own = figures.after_spike
     add(
@@ -187,9 +198,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
         "after-spike curves",
         texts.after_spike,
         alt=f"{_title(own)}. Rate multiplier against the time since a unit's own spike.",
-        numbers=""
-        if isinstance(own, Unavailable)
-        else numbers_of("figures/after-spike.csv", own.numbers(), "numbers of the after-spike curves"),
+        numbers=numbers_of(own, "figures/after-spike.csv", "numbers of the after-spike curves"),
     )
     add(
         "array",
@@ -219,9 +228,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
         texts.raster,
         alt=f"{_title(raster)}. Spike raster above, observed and fitted rate below.",
         wide=True,
-        numbers=""
-        if isinstance(raster, Unavailable)
-        else numbers_of("figures/raster.csv", raster.numbers(), "observed and fitted rate of the raster"),
+        numbers=numbers_of(raster, "figures/raster.csv", "observed and fitted rate of the raster"),
     )
     if content.sureness is not None:
         sure = content.sureness.figures
@@ -232,9 +239,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
             "the kernel with the distances read off it",
             sure_captions.marked(content.sureness),
             alt=f"{_title(sure.marked)}. The kernel with distances marked, each with its interval.",
-            numbers=""
-            if isinstance(sure.marked, Unavailable)
-            else numbers_of("figures/distances.csv", sure.marked.numbers(), "distances read off the kernel"),
+            numbers=numbers_of(sure.marked, "figures/distances.csv", "distances read off the kernel"),
         )
         add(
             "intervals",
@@ -244,7 +249,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
             sure_captions.kinds(content.sureness),
             alt=f"{_title(sure.kinds)}. For each parameter a row of intervals, one of each kind.",
             wide=True,
-            numbers="" if isinstance(sure.kinds, Unavailable) else "intervals.csv",
+            numbers="intervals.csv",
         )
         profiles = sure.profiles
         if profiles is not None:
@@ -256,9 +261,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
                 "" if isinstance(profiles, Unavailable) else profiles.caption,
                 alt=f"{_title(profiles)}. Fall of the log-likelihood against the value of each parameter.",
                 wide=True,
-                numbers=""
-                if isinstance(profiles, Unavailable)
-                else numbers_of("figures/profiles.csv", profiles.numbers(), "numbers of the profiles"),
+                numbers=numbers_of(profiles, "figures/profiles.csv", "numbers of the profiles"),
             )
         add(
             "blocks",
@@ -267,9 +270,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
             "standard errors against the length of blocks of time",
             sure_captions.blocks(content.sureness),
             alt=f"{_title(sure.blocks)}. Curves of standard errors against the length of a block.",
-            numbers=""
-            if isinstance(sure.blocks, Unavailable)
-            else numbers_of("figures/blocks.csv", sure.blocks.numbers(), "numbers of the block lengths"),
+            numbers=numbers_of(sure.blocks, "figures/blocks.csv", "numbers of the block lengths"),
         )
         add(
             "influence",
@@ -279,9 +280,7 @@ def _write_figures(results: ResultsFolder, content: FitContent) -> dict[str, Pic
             sure_captions.influence(content.sureness),
             alt=f"{_title(sure.influence)}. Bars over time and a map of the array for each parameter.",
             wide=True,
-            numbers=""
-            if isinstance(sure.influence, Unavailable)
-            else numbers_of("figures/influence.csv", sure.influence.numbers(), "moves by stretch and unit"),
+            numbers=numbers_of(sure.influence, "figures/influence.csv", "moves by stretch and unit"),
         )
     return drawn
 
