@@ -25,7 +25,7 @@ from kernelfit._typing import BoolArray, FloatArray
 
 FINER = 4  # parts of a block of the usual length, to show the curve to the left of it
 FEWEST_JOINED = 20  # joining goes on while at least this many are left
-LEVEL = 0.05  # of the test of correlation between neighbours
+LEVEL = 0.05  # of the tests of correlation between neighbours and of growth beyond the length used
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,6 +50,22 @@ class BlockCurve:
     threshold: FloatArray
     chosen: int
     settled: bool
+
+    @property
+    def flat_beyond(self) -> bool | None:
+        """Whether standard errors of longer blocks are no larger than those used, but for chance; None: no longer ones.
+
+        Smaller ones are no sign of anything: fewer blocks scatter more. Chance is that of all lengths and parameters
+        looked at, `LEVEL` together; a standard error from G blocks is good to 1/sqrt(2 (G - 1)) of it.
+        """
+        if self.chosen + 1 >= self.length_s.size:
+            return None
+        at_chosen = self.std_error[self.chosen]
+        known = np.isfinite(at_chosen) & (at_chosen > 0)
+        growth = self.std_error[self.chosen + 1 :, known] / at_chosen[known] - 1.0
+        error = 1.0 / np.sqrt(2.0 * (self.n_blocks[self.chosen + 1 :] - 1.0))
+        allowed = norm.ppf((1.0 - LEVEL) ** (1.0 / max(growth.size, 1))) * error
+        return bool((growth <= allowed[:, None]).all())
 
     def factor(self, usual: int) -> int:
         """How many blocks of the usual length, `usual` fine ones, go into one of the chosen length."""

@@ -103,6 +103,15 @@ class Uncertainty:
             return self._made(self.own_jackknife)
         return self.own_robust if kind == "robust" else self.own_model
 
+    @property
+    def jackknife_over_robust(self) -> float:
+        """Largest ratio of their standard errors over the shared parameters; NaN where there is none."""
+        if self.shared_jackknife is None:
+            return float("nan")
+        with np.errstate(invalid="ignore", divide="ignore"):
+            ratio = np.sqrt(np.diag(self.shared_jackknife) / np.diag(self.shared_robust))
+        return float(np.nanmax(ratio)) if np.isfinite(ratio).any() else float("nan")
+
     def degrees_of_freedom(self, kind: CovarianceKind) -> float:
         """Blocks less one, infinite for the model-based kind."""
         return np.inf if kind == "model" else float(self.n_blocks - 1)

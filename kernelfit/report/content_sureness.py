@@ -8,7 +8,6 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy.stats import norm
 
 from kernelfit._typing import FloatArray
 from kernelfit.errors import Unavailable
@@ -33,7 +32,6 @@ KINDS: tuple[CovarianceKind, ...] = ("model", "robust", "jackknife")
 BOOTSTRAP, PROFILE = "bootstrap", "profile"
 WIDER = 1.15  # jackknife over robust standard error: from here on a few stretches carry the estimate
 CARRIES = 1.0  # robust standard errors that one stretch or unit moves a parameter by: worth a warning
-BY_CHANCE = 0.05  # standard errors that grow so much over longer blocks, where nothing depends on anything
 OTHER_BLOCKS = "(The test of any coupling cuts blocks of its own, before there are estimates.)"
 SHORT = {"amplitude": "amplitude", "length_um": "length", "leak_rate": "leak rate", "exponent": "exponent"}
 
@@ -247,7 +245,7 @@ def which_to_believe(fit: CouplingFit) -> str:
     ratios = table["ratio"].to_numpy(dtype=np.float64)
     if not np.isfinite(ratios).any() or np.nanmax(ratios) < RATIO_WORTH_SAYING:
         return ""
-    wider = _jackknife_over_robust(fit)
+    wider = fit.uncertainty.jackknife_over_robust
     text = (
         "Where the two differ like that, believe the robust ones: stretches of the recording differ from each other "
         "by more than the model lets them, and the model-based interval does not know."
@@ -258,14 +256,6 @@ def which_to_believe(fit: CouplingFit) -> str:
             "the robust ones: a few stretches carry much of the estimate, and the wider interval is the safer one."
         )
     return text
-
-
-def _jackknife_over_robust(fit: CouplingFit) -> float:
-    if fit.uncertainty.shared_jackknife is None:
-        return math.nan
-    with np.errstate(invalid="ignore"):
-        ratio = np.sqrt(np.diag(fit.uncertainty.shared_jackknife) / np.diag(fit.uncertainty.shared_robust))
-    return float(np.nanmax(ratio)) if np.isfinite(ratio).any() else math.nan
 
 
 def blocks_sentence(fit: CouplingFit) -> str:
@@ -280,7 +270,7 @@ def blocks_title(curve: BlockCurve) -> str:
     """What the curve of standard errors against the length of the blocks shows, and no more."""
     if not curve.settled:
         return "Standard errors still grow with the length of the blocks"
-    longer = _flat_beyond(curve)
+    longer = curve.flat_beyond
     if longer is None:
         return f"No dependence between neighbouring blocks could be seen ({_chosen_blocks(curve)} blocks)"
     if longer:
@@ -307,7 +297,7 @@ def blocks_text(curve: BlockCurve, length: str) -> str:
         f"At blocks of {length} no dependence between neighbouring blocks could be seen ({n} blocks, which would show "
         f"a correlation above {number_text(seen, 2)})"
     )
-    longer = _flat_beyond(curve)
+    longer = curve.flat_beyond
     if longer is None:
         return f"{text}; there are too few blocks to try longer ones."
     if longer:
@@ -320,22 +310,6 @@ def blocks_text(curve: BlockCurve, length: str) -> str:
 
 def _chosen_blocks(curve: BlockCurve) -> int:
     return int(curve.n_blocks[curve.chosen])
-
-
-def _flat_beyond(curve: BlockCurve) -> bool | None:
-    """Whether standard errors of longer blocks are no larger than those used, but for chance; None: no longer ones.
-
-    Smaller ones are no sign of anything: fewer blocks scatter more. Chance is that of all lengths and parameters looked
-    at, 1 in 20 together.
-    """
-    if curve.chosen + 1 >= curve.length_s.size:
-        return None
-    at_chosen = curve.std_error[curve.chosen]
-    known = np.isfinite(at_chosen) & (at_chosen > 0)
-    growth = curve.std_error[curve.chosen + 1 :, known] / at_chosen[known] - 1.0
-    error = 1.0 / np.sqrt(2.0 * (curve.n_blocks[curve.chosen + 1 :] - 1.0))
-    allowed = norm.ppf((1.0 - BY_CHANCE) ** (1.0 / max(growth.size, 1))) * error
-    return bool((growth <= allowed[:, None]).all())
 
 
 def stretches_sentence(fit: CouplingFit) -> str:
